@@ -1,0 +1,1 @@
+"""Draws: from a state to stored series and frames."""

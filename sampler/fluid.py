@@ -1,0 +1,150 @@
+"""The fluid that is sampled: pair potential, cutoff and what is done at the cutoff; and its states."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import Literal, get_args
+
+import numpy as np
+import numpy.typing as npt
+
+from sampler.errors import BadRequest
+from sampler.potentials import lennard_jones
+
+__all__ = ["Fluid", "State", "Totals", "Truncation"]
+
+Floats = npt.NDArray[np.float64]
+Truncation = Literal["corrected", "plain", "shifted", "force-shifted"]
+
+
+@dataclass(frozen=True, order=True)
+class State:
+    """One point to sample: temperature (epsilon/k_B), number density (sigma^-3), particle count."""
+
+    temperature: float
+    density: float
+    particles: int
+
+    def __post_init__(self) -> None:
+        for name in ("temperature", "density"):
+            value = getattr(self, name)
+            if not (math.isfinite(value) and value > 0.0):
+                raise BadRequest(f"{name} must be a positive number, found {value!r}")
+        if self.particles < 2:
+            raise BadRequest(f"particles must be at least 2, found {self.particles}")
+
+    @property
+    def volume(self) -> float:
+        """Volume of the periodic cube, sigma^3."""
+        return self.particles / self.density
+
+    @property
+    def box(self) -> float:
+        """Edge of the periodic cube, sigma."""
+        return float(self.volume ** (1.0 / 3.0))
+
+
+@dataclass(frozen=True)
+class Totals:
+    """Sums over all pairs of each sample, each (n_samples,), epsilon, long-range part included where the fluid has one."""
+
+    energy: Floats
+    sampled_energy: Floats
+    virial: Floats
+    hypervirial: Floats
+
+
+@dataclass(frozen=True)
+class Fluid:
+    """Lennard-Jones fluid cut at `cutoff` (sigma).
+
+    corrected : truncated, homogeneous long-range correction for energy, virial and hypervirial
+    plain : truncated, nothing added
+    shifted : u(r) - u(r_c)
+    force-shifted : u(r) - u(r_c) - (r - r_c) u'(r_c)
+
+    Forces of `corrected` and `plain` conserve the shifted energy: that is `sampled_energy` (U_dyn), the one whose
+    canonical ensemble is drawn; averages report `energy` (U).
+    """
+
+    cutoff: float = 3.0
+    truncation: Truncation = "corrected"
+    potential: str = lennard_jones.NAME
+
+    def __post_init__(self) -> None:
+        if self.potential != lennard_jones.NAME:
+            raise BadRequest(f"potential must be '{lennard_jones.NAME}', found {self.potential!r}")
+        if self.truncation not in get_args(Truncation):
+            raise BadRequest(f"truncation must be one of {', '.join(get_args(Truncation))}, found {self.truncation!r}")
+        if not (math.isfinite(self.cutoff) and self.cutoff > 0.0):
+            raise BadRequest(f"cutoff must be a positive number, found {self.cutoff!r}")
+
+    @property
+    def energy_at_cutoff(self) -> float:
+        """u(r_c) of the untruncated potential, epsilon."""
+        return float(lennard_jones.u(np.float64(self.cutoff)))
+
+    @property
+    def slope_at_cutoff(self) -> float:
+        """u'(r_c) that a force-shifted fluid subtracts, epsilon/sigma; zero for every other truncation."""
+        if self.truncation != "force-shifted":
+            return 0.0
+        return float(lennard_jones.w(np.float64(self.cutoff))) / self.cutoff
+
+    @property
+    def _shift(self) -> float:
+        return self.energy_at_cutoff if self.truncation in ("shifted", "force-shifted") else 0.0
+
+    def pair_energy(self, r: Floats) -> Floats:
+        """u(r) as averages report it, zero beyond the cutoff."""
+        r = np.asarray(r, dtype=float)
+        inside = lennard_jones.u(r) - self._shift - (r - self.cutoff) * self.slope_at_cutoff
+        return np.where(r < self.cutoff, inside, 0.0)
+
+    def pair_virial(self, r: Floats) -> Floats:
+        """w(r) = r u'(r), zero beyond the cutoff."""
+        r = np.asarray(r, dtype=float)
+        return np.where(r < self.cutoff, lennard_jones.w(r) - r * self.slope_at_cutoff, 0.0)
+
+    def pair_hypervirial(self, r: Floats) -> Floats:
+        """x(r) = r d/dr (r u'(r)), zero beyond the cutoff; the jump of the force there is `surface_hypervirial`."""
+        r = np.asarray(r, dtype=float)
+        return np.where(r < self.cutoff, lennard_jones.x(r) - r * self.slope_at_cutoff, 0.0)
+
+    def totals(self, sums: Floats, state: State) -> Totals:
+        """Energies and virials from the bare sums a kernel records.
+
+        sums : (n_samples, 4): S12, S6, number of pairs inside the cutoff, sum of their distances
+        """
+        powers, pairs, distances = sums[:, :2], sums[:, 2], sums[:, 3]
+        if self.truncation == "corrected":
+            powers = powers + state.particles * lennard_jones.tail_sums(self.cutoff, state.density)
+        slope = self.slope_at_cutoff
+        energy = powers @ lennard_jones.ENERGY - pairs * (self._shift - slope * self.cutoff) - slope * distances
+        unshifted = self.energy_at_cutoff - self._shift
+        return Totals(
+            energy=energy,
+            sampled_energy=energy - pairs * unshifted,
+            virial=powers @ lennard_jones.VIRIAL + slope * distances / 3.0,
+            hypervirial=powers @ lennard_jones.HYPERVIRIAL - slope * distances / 9.0,
+        )
+
+    def tail(self, density: float) -> tuple[float, float, float]:
+        """Long-range part of U, W and X per particle, epsilon; zeros unless `corrected`."""
+        if self.truncation != "corrected":
+            return 0.0, 0.0, 0.0
+        sums = lennard_jones.tail_sums(self.cutoff, density)
+        parts = (lennard_jones.ENERGY, lennard_jones.VIRIAL, lennard_jones.HYPERVIRIAL)
+        energy, virial, hypervirial = (float(sums @ part) for part in parts)
+        return energy, virial, hypervirial
+
+    def surface_hypervirial(self, density: float) -> float:
+        """Mean of X per particle and per unit of g(r_c) from the jump of the force at the cutoff, epsilon.
+
+        -(2 pi/9) rho r_c^3 w(r_c) for `shifted` and `plain`; zero where the force is continuous or the tail holds it.
+        """
+        if self.truncation not in ("shifted", "plain"):
+            return 0.0
+        edge = float(lennard_jones.w(np.float64(self.cutoff)))
+        return -2.0 * math.pi / 9.0 * density * self.cutoff**3 * edge

@@ -1,0 +1,1 @@
+"""Pair potentials, one small module each: u, w, x, tail, source."""

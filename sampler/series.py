@@ -1,0 +1,64 @@
+"""What one repeat of a rung recorded: the record that estimates are made from."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+import numpy.typing as npt
+
+from sampler.fluid import Fluid, State
+
+__all__ = ["Series"]
+
+Floats = npt.NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class Series:
+    """Samples of one repeat, equally spaced in time, extensive and in reduced units.
+
+    energy : (n,), U, long-range part included
+    sampled_energy : (n,), U_dyn, whose canonical ensemble is drawn
+    virial : (n,), W = -1/3 sum r u'
+    hypervirial : (n,), X = 1/9 sum r d/dr (r u')
+    kinetic : (n,), K
+    ledger : (n,), kinetic energy that the bath has taken out so far; K + U_dyn + ledger is conserved
+    frames : (m, particles, 3), positions inside [0, box); frame k belongs to sample (k + 1) * frame_stride - 1
+    interval : time between samples
+    bath : whether a thermostat acted; without one the ensemble has constant energy
+    """
+
+    fluid: Fluid
+    state: State
+    repeat: int
+    bath: bool
+    interval: float
+    energy: Floats
+    sampled_energy: Floats
+    virial: Floats
+    hypervirial: Floats
+    kinetic: Floats
+    ledger: Floats
+    frames: Floats
+    frame_stride: int
+
+    def __len__(self) -> int:
+        return len(self.energy)
+
+    @property
+    def times(self) -> Floats:
+        """(n,), time of each sample since the stated equilibration ended."""
+        return self.interval * np.arange(1, len(self) + 1)
+
+    @property
+    def kinetic_freedom(self) -> int:
+        """Kinetic degrees of freedom: 3N with a bath, 3N - 3 without (the total momentum is zero and stays so)."""
+        return 3 * self.state.particles - (0 if self.bath else 3)
+
+    def after(self, n_samples: int) -> Series:
+        """The series without its first n_samples, rounded up to a whole number of frame strides; frames are cut alike."""
+        n_frames = -(-n_samples // self.frame_stride)
+        keep = slice(n_frames * self.frame_stride, None)
+        names = ("energy", "sampled_energy", "virial", "hypervirial", "kinetic", "ledger")
+        return replace(self, frames=self.frames[n_frames:], **{name: getattr(self, name)[keep] for name in names})
