@@ -1,1 +1,1 @@
-"""Placeholder docstring."""
+"""Estimates: from series to values with error bars that hold."""

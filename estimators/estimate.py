@@ -2,13 +2,287 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+import math
+from collections import defaultdict
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass, field
+from functools import cached_property
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
 
-__all__ = ["Chain", "Estimate", "combine", "mean"]
+from estimators.errors import BadSeries
+from estimators.gamma import Scatter, block_scatter, scatter
+
+__all__ = ["Chain", "Estimate", "combine", "covariance", "covariance_matrix", "exact", "mean"]
 
 Floats = npt.NDArray[np.float64]
 Chain = tuple[float, float, int, int]  # temperature, density, particles, repeat
+State = tuple[float, float, int]
+
+FEWEST_SAMPLES = 50.0  # effective; fewer do not tell their own error
+COMFORTABLE_SAMPLES = 200.0
+SHORTEST_SERIES = 50.0  # autocorrelation times
+WEIGHTY = 0.1  # share of the variance from which a state's own length matters
+BLOCK_TOLERANCE = 3.0  # combined errors between the two error bars
+STEP = 1e-20
+
+
+@dataclass(frozen=True, eq=False)
+class Estimate:
+    """A value and what every sample contributes to its error.
+
+    value : the estimate
+    influence : chain -> (n_chain,), scaled so that estimate - truth is to first order the sum of all entries
+    method : "average", "fluctuation", "derived", "reweighted" or "surface"
+
+    Error bars come from the autocorrelation of the influences: repeats of one state are pooled, states are independent.
+    Estimates add, multiply and so on with one another and with numbers; samples they share stay correlated.
+    """
+
+    value: float
+    influence: Mapping[Chain, Floats] = field(repr=False)
+    method: str = "average"
+
+    @cached_property
+    def _states(self) -> dict[State, list[Floats]]:
+        """Influence series of each state, one a repeat."""
+        states: dict[State, list[Floats]] = defaultdict(list)
+        for chain, values in self.influence.items():
+            states[chain[:3]].append(values)
+        return dict(states)
+
+    @cached_property
+    def _scatters(self) -> dict[State, Scatter]:
+        return {state: scatter(repeats) for state, repeats in self._states.items()}
+
+    @property
+    def _variance(self) -> float:
+        return sum(each.variance for each in self._scatters.values())
+
+    @property
+    def standard_error(self) -> float:
+        """Standard error of the value; infinite if a state holds too few samples to have one."""
+        return math.sqrt(self._variance)
+
+    @property
+    def error_of_error(self) -> float:
+        """Standard error of `standard_error`."""
+        if not 0.0 < self._variance < math.inf:
+            return self._variance
+        spread = math.hypot(*(each.variance * each.relative_error for each in self._scatters.values()))
+        return 0.5 * spread / self.standard_error
+
+    @property
+    def effective_samples(self) -> float:
+        """Independent samples behind the value; of several states, those weigh that carry its error (Satterthwaite)."""
+        if self._variance == 0.0:
+            return math.inf
+        if math.isinf(self._variance):
+            return 0.0
+        shares = [(each.variance / self._variance, each.effective_samples) for each in self._scatters.values()]
+        return 1.0 / sum(share**2 / samples for share, samples in shares)
+
+    @property
+    def trust(self) -> str:
+        """ "ok", "caution" or "no": whether the error bar can be believed."""
+        return self._judgement[0]
+
+    @property
+    def reason(self) -> str:
+        """Why trust is not "ok"; empty if it is."""
+        return self._judgement[1]
+
+    @cached_property
+    def _judgement(self) -> tuple[str, str]:
+        if not math.isfinite(self.value):
+            return "no", "not a finite number"
+        if self.effective_samples < FEWEST_SAMPLES or self._series_too_short:
+            return "no", "too short to tell"
+        if self.effective_samples < COMFORTABLE_SAMPLES:
+            return "caution", f"only {self.effective_samples:.0f} effective samples"
+        if self._blocks_disagree:
+            return "caution", "error bars from autocorrelation and from blocks disagree"
+        return "ok", ""
+
+    @property
+    def _series_too_short(self) -> bool:
+        weighty = (each for each in self._scatters.values() if each.variance >= WEIGHTY * self._variance > 0.0)
+        return any(each.longest < SHORTEST_SERIES * each.tau for each in weighty)
+
+    @property
+    def _blocks_disagree(self) -> bool:
+        if self._variance == 0.0:
+            return False
+        blocks = [block_scatter(repeats) for repeats in self._states.values()]
+        variance = sum(each for each, _ in blocks)
+        block_error = math.sqrt(variance)
+        block_spread = 0.5 * math.hypot(*(each * relative for each, relative in blocks)) / max(block_error, 1e-300)
+        gap = abs(block_error - self.standard_error)
+        return not gap <= BLOCK_TOLERANCE * math.hypot(block_spread, self.error_of_error)
+
+    def __neg__(self) -> Estimate:
+        return _linear(-self.value, [(-1.0, self)], self.method)
+
+    def __add__(self, other: Estimate | float) -> Estimate:
+        if isinstance(other, Estimate):
+            return _linear(self.value + other.value, [(1.0, self), (1.0, other)], _common_method(self, other))
+        return _linear(self.value + other, [(1.0, self)], self.method)
+
+    def __radd__(self, other: float) -> Estimate:
+        return self + other
+
+    def __sub__(self, other: Estimate | float) -> Estimate:
+        return self + -other
+
+    def __rsub__(self, other: float) -> Estimate:
+        return -self + other
+
+    def __mul__(self, other: Estimate | float) -> Estimate:
+        if isinstance(other, Estimate):
+            parts = [(other.value, self), (self.value, other)]
+            return _linear(self.value * other.value, parts, _common_method(self, other))
+        return _linear(self.value * other, [(other, self)], self.method)
+
+    def __rmul__(self, other: float) -> Estimate:
+        return self * other
+
+    def __truediv__(self, other: Estimate | float) -> Estimate:
+        if isinstance(other, Estimate):
+            return self * other**-1.0
+        return self * (1.0 / other)
+
+    def __rtruediv__(self, other: float) -> Estimate:
+        return self**-1.0 * other
+
+    def __pow__(self, power: float) -> Estimate:
+        return _linear(self.value**power, [(power * self.value ** (power - 1.0), self)], self.method)
+
+
+def exact(value: float, *, method: str = "average") -> Estimate:
+    """A value without error, to combine with others."""
+    return Estimate(float(value), {}, method)
+
+
+def mean(observables: Mapping[Chain, Floats]) -> Estimate:
+    """Mean over all samples of all chains, each sample with the same weight.
+
+    observables : chain -> (n_chain,)
+    Raises BadSeries when there is no sample at all or one is not finite.
+    """
+    value, centred = _centred(observables)
+    samples = sum(map(len, centred.values()))
+    return Estimate(value, {chain: values / samples for chain, values in centred.items()})
+
+
+def covariance(first: Mapping[Chain, Floats], second: Mapping[Chain, Floats]) -> Estimate:
+    """Covariance of two observables recorded on the same samples, free of the bias that their sample means cause.
+
+    first, second : chain -> (n_chain,), equal chains and lengths
+    Deviations from sample means lack the covariance of these means, 2 tau / samples of the whole; the Gamma method
+    knows it and it is added back. Raises BadSeries as `mean` does.
+    """
+    _, a = _centred(first)
+    _, b = _centred(second)
+    samples = sum(map(len, a.values()))
+    products = {chain: a[chain] * b[chain] for chain in a}
+    biased = sum(float(np.sum(values)) for values in products.values()) / samples
+    influence = {chain: (values - biased) / samples for chain, values in products.items()}
+    return Estimate(biased + _covariance_of_means(a, b, samples), influence, "fluctuation")
+
+
+def _covariance_of_means(a: Mapping[Chain, Floats], b: Mapping[Chain, Floats], samples: int) -> float:
+    """By polarisation of the variances of sum and difference, each observable in its own standard deviation."""
+    widths = [math.sqrt(sum(float(np.sum(v**2)) for v in each.values()) / samples) for each in (a, b)]
+    if min(widths) == 0.0:
+        return 0.0
+    variances = [
+        Estimate(0.0, {chain: a[chain] / widths[0] + sign * b[chain] / widths[1] for chain in a})._variance
+        for sign in (1.0, -1.0)
+    ]
+    if not all(map(math.isfinite, variances)):
+        return 0.0
+    return 0.25 * (variances[0] - variances[1]) * widths[0] * widths[1] / samples**2
+
+
+def combine(function: Callable[..., Any], *estimates: Estimate, method: str = "derived") -> Estimate:
+    """Smooth function of estimates, to first order, with all correlations kept.
+
+    function : of as many numbers; must take complex ones and be analytic (the gradient is a complex step: numpy ufuncs
+    and arithmetic do, abs() and comparisons do not)
+    """
+    values = [estimate.value for estimate in estimates]
+    parts = []
+    for index, estimate in enumerate(estimates):
+        shifted: list[complex] = [*values]
+        shifted[index] += 1j * STEP
+        parts.append((float(np.imag(function(*shifted))) / STEP, estimate))
+    return _linear(float(np.real(function(*values))), parts, method)
+
+
+def covariance_matrix(estimates: Sequence[Estimate]) -> Floats:
+    """Covariance of the errors of several estimates, (n, n), positive semidefinite.
+
+    Diagonal: squared standard errors. Correlations: from block sums over blocks at least twice the longest window, as
+    the Gamma method alone need not give a positive matrix.
+    """
+    errors = np.array([estimate.standard_error for estimate in estimates])
+    chains = sorted({chain for estimate in estimates for chain in estimate.influence})
+    rows: list[Floats] = [np.zeros((len(estimates), 0))]
+    for chain in chains:
+        carriers = [estimate for estimate in estimates if chain in estimate.influence]
+        lengths = [len(estimate.influence[chain]) for estimate in carriers]
+        blocks = min(
+            max(length // (2 * estimate._scatters[chain[:3]].window + 1), 1)
+            for estimate, length in zip(carriers, lengths, strict=True)
+        )
+        zero = np.zeros(blocks)
+        rows.append(
+            np.array([_coarsened(e.influence[chain], blocks) if chain in e.influence else zero for e in estimates])
+        )
+    sums = np.concatenate(rows, axis=1)
+    norms = np.sqrt(np.sum(sums**2, axis=1))
+    unit = sums / np.where(norms > 0.0, norms, 1.0)[:, None]
+    correlations = unit @ unit.T
+    np.fill_diagonal(correlations, 1.0)
+    return np.asarray(errors[:, None] * correlations * errors, dtype=float)
+
+
+def _centred(observables: Mapping[Chain, Floats]) -> tuple[float, dict[Chain, Floats]]:
+    samples = sum(map(len, observables.values()))
+    if samples == 0:
+        raise BadSeries("no samples to average: every series is empty; sample longer or cut less")
+    value = sum(float(np.sum(values)) for values in observables.values()) / samples
+    if not math.isfinite(value):
+        raise BadSeries("a series holds entries that are not finite numbers; leave those samples out or repair them")
+    return value, {chain: np.asarray(values, dtype=float) - value for chain, values in observables.items()}
+
+
+def _common_method(first: Estimate, second: Estimate) -> str:
+    return first.method if first.method == second.method else "derived"
+
+
+def _linear(value: float, parts: Sequence[tuple[float, Estimate]], method: str) -> Estimate:
+    """The estimate whose influence is the weighted sum of those of its parts."""
+    influence: dict[Chain, Floats] = {}
+    for weight, estimate in parts:
+        for chain, values in estimate.influence.items():
+            share = weight * values
+            influence[chain] = _sum_on_coarser(influence[chain], share) if chain in influence else share
+    return Estimate(value, influence, method)
+
+
+def _sum_on_coarser(first: Floats, second: Floats) -> Floats:
+    if len(first) == len(second):
+        return np.asarray(first + second, dtype=float)
+    length = min(len(first), len(second))
+    return np.asarray(_coarsened(first, length) + _coarsened(second, length), dtype=float)
+
+
+def _coarsened(values: Floats, length: int) -> Floats:
+    """Sums over `length` consecutive blocks, as equal as they can be, (length,)."""
+    if len(values) == length:
+        return values
+    starts = np.arange(length) * len(values) // length
+    return np.asarray(np.add.reduceat(values, starts), dtype=float)
