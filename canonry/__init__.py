@@ -1,1 +1,1 @@
-"""Placeholder docstring."""
+"""Assembles: study file, command line, comparison, report."""

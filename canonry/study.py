@@ -1,0 +1,272 @@
+"""The study: everything one study file asks for, fully checked."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Literal, get_args
+
+from canonry import keys
+from canonry.keys import Table
+from canonry.quantities import NotAccepted, percent, rounded
+from canonry.units import PROPERTIES, Kind, Scale
+from canonry.writing import study_text
+from sampler.fluid import Fluid, State, Truncation
+
+__all__ = ["COMPARED", "Compare", "Sampling", "Scheme", "Study", "Tolerance", "load"]
+
+Scheme = Literal["baoab", "obabo", "velocity-verlet"]
+COMPARED = (
+    "residual_energy",
+    "residual_heat_capacity",
+    "heat_capacity",
+    "pressure",
+    "compressibility_factor",
+    "thermal_pressure",
+    "bulk_modulus",
+)
+_LIQUID = 0.5  # sigma^-3: at and above this density the defaults are those of a liquid
+
+
+@dataclass(frozen=True)
+class Sampling:
+    """How every rung is sampled, in reduced units; friction 0 where the scheme has no bath; counts are steps."""
+
+    seed: int
+    repeats: int
+    time_step: float
+    friction: float
+    scheme: Scheme
+    equilibration: int
+    steps: int
+    record_every: int
+    frame_every: int
+
+    @property
+    def bath(self) -> bool:
+        """Whether a thermostat acts."""
+        return self.scheme != "velocity-verlet"
+
+
+@dataclass(frozen=True)
+class Tolerance:
+    """A difference that does not matter: a fraction of the reference value, or a reduced value."""
+
+    value: float
+    relative: bool
+
+
+@dataclass(frozen=True)
+class Compare:
+    """Names of the references to hold the estimates against, and tolerances by property."""
+
+    against: tuple[str, ...] = ()
+    tolerance: Mapping[str, Tolerance] = field(default_factory=dict)
+
+
+@dataclass(frozen=True)
+class Study:
+    """One study file, in reduced units.
+
+    units : the kind the file was written in: SI when a temperature or a density carries a unit
+    scale : SI size of the reduced units, None in a study that has none
+    ideal_heat_capacity : c_v of the ideal gas, k_B per particle; None when the file says it is unknown
+    states : every rung, by density, then by temperature
+    """
+
+    title: str
+    units: Kind
+    fluid: Fluid
+    scale: Scale | None
+    ideal_heat_capacity: float | None
+    states: tuple[State, ...]
+    sampling: Sampling
+    compare: Compare
+
+    @property
+    def epsilon(self) -> float | None:
+        """J; None in a study that has no SI scale."""
+        return self.scale and self.scale.epsilon
+
+    @property
+    def sigma(self) -> float | None:
+        """m; None in a study that has no SI scale."""
+        return self.scale and self.scale.sigma
+
+    @property
+    def mass(self) -> float | None:
+        """Of one particle, kg; None in a study that has no SI scale."""
+        return self.scale and self.scale.mass
+
+    @property
+    def isochores(self) -> dict[float, tuple[State, ...]]:
+        """The states of each density, by temperature."""
+        densities = dict.fromkeys(state.density for state in self.states)
+        return {rho: tuple(state for state in self.states if state.density == rho) for rho in densities}
+
+    def to_toml(self) -> str:
+        """The study file, complete with defaults; loading it gives an equal study."""
+        return study_text(self)
+
+
+def load(path: str | Path) -> Study:
+    """The study a file asks for. Raises UserError, which names the file, the key and what is accepted."""
+    path = Path(path)
+    top = keys.open_table(path).only(("title", "fluid", "state", "sampling", "compare"), later=("until",))
+    fluid = top.table("fluid").only(
+        ("potential", "epsilon", "sigma", "mass", "cutoff", "truncation", "ideal_heat_capacity")
+    )
+    scale = _scale(fluid)
+    states = _states(top.table("state"), scale)
+    return Study(
+        title=top.read("title", keys.line, "".join(filter(str.isprintable, path.stem))[:200].strip() or "study"),
+        units=_kind(top.table("state")),
+        fluid=_fluid(fluid, scale, states),
+        scale=scale,
+        ideal_heat_capacity=_ideal_heat_capacity(fluid, scale),
+        states=states,
+        sampling=_sampling(top.table("sampling"), scale, states),
+        compare=_compare(top.table("compare"), scale),
+    )
+
+
+def _scale(table: Table) -> Scale | None:
+    names = ("epsilon", "sigma", "mass")
+    given = [name for name in names if name in table]
+    if not given:
+        return None
+    for name in names:
+        if name not in given:
+            reason = "missing; epsilon, sigma and mass are given all three, or none to work in reduced units only"
+            raise table.refusal(name, reason)
+    return Scale(
+        epsilon=table.read("epsilon", keys.parameter("epsilon", 1e-24, 1e-17)),
+        sigma=table.read("sigma", keys.parameter("sigma", 1e-11, 1e-6)),
+        mass=table.read("mass", keys.parameter("mass", 1e-28, 1e-15)),
+    )
+
+
+def _states(table: Table, scale: Scale | None) -> tuple[State, ...]:
+    table.only(("density", "temperatures", "points", "particles"))
+    particles = table.read("particles", keys.whole(2, 10_000_000), 500)
+    if "points" in table:
+        for name in ("density", "temperatures"):
+            if name in table:
+                raise table.refusal(name, "points are given too; what is needed is either, not both")
+        points = table.read("points", keys.one_or_more(_point(scale)))
+    else:
+        densities = table.read("density", keys.one_or_more(_density(scale)))
+        points = tuple((temperature, density) for density in densities for temperature in _temperatures(table, scale))
+    return tuple(State(*point, particles) for point in sorted(points, key=lambda point: (point[1], point[0])))
+
+
+def _temperature(scale: Scale | None) -> keys.Reader[float]:
+    return keys.quantity("temperature", 0.01, 100.0, scale)
+
+
+def _density(scale: Scale | None) -> keys.Reader[float]:
+    return keys.quantity("density", 1e-6, 2.0, scale)
+
+
+def _point(scale: Scale | None) -> keys.Reader[tuple[float, float]]:
+    def read(value: object) -> tuple[float, float]:
+        if not (isinstance(value, list) and len(value) == 2):
+            raise NotAccepted("what is needed is a pair [temperature, density]")
+        return _temperature(scale)(value[0]), _density(scale)(value[1])
+
+    return read
+
+
+def _temperatures(table: Table, scale: Scale | None) -> tuple[float, ...]:
+    """A list as it stands, or from, to and rungs: evenly spaced in 1/T, so that neighbours overlap about equally."""
+    if not isinstance(table.content.get("temperatures"), dict):
+        return table.read("temperatures", keys.one_or_more(_temperature(scale)))
+    ladder = table.table("temperatures").only(("from", "to", "rungs"), later=("overlap",))
+    first, last = (ladder.read(name, _temperature(scale)) for name in ("from", "to"))
+    rungs = ladder.read("rungs", keys.whole(2, 1000))
+    if first == last:
+        raise ladder.refusal("to", "the same as from; what is needed are two different temperatures")
+    step = (1.0 / last - 1.0 / first) / (rungs - 1)
+    return (first, *(rounded(1.0 / (1.0 / first + k * step)) for k in range(1, rungs - 1)), last)
+
+
+def _kind(table: Table) -> Kind:
+    def has_unit(value: object) -> bool:
+        if isinstance(value, list | dict):
+            return any(map(has_unit, value.values() if isinstance(value, dict) else value))
+        return isinstance(value, str)
+
+    return "SI" if any(has_unit(table.content.get(key)) for key in ("density", "temperatures", "points")) else "reduced"
+
+
+def _is_liquid(states: tuple[State, ...]) -> bool:
+    return min(state.density for state in states) >= _LIQUID
+
+
+def _fluid(table: Table, scale: Scale | None, states: tuple[State, ...]) -> Fluid:
+    potential = table.read("potential", keys.choice(("lennard-jones",)))
+    cutoff = table.read("cutoff", keys.quantity("length", 1.0, 100.0, scale), 3.0 if _is_liquid(states) else 5.0)
+    truncation: Truncation = table.read("truncation", keys.choice(get_args(Truncation)), "corrected")
+    smallest = min(states, key=lambda state: state.box)
+    if cutoff > smallest.box / 2:
+        largest = math.floor(smallest.box / 2 * 1000) / 1000
+        particles = math.ceil((2 * cutoff) ** 3 * smallest.density)
+        raise table.refusal(
+            "cutoff",
+            f"the cutoff {'' if 'cutoff' in table else 'by default '}{cutoff:g} sigma is beyond half the box of "
+            f"{smallest.particles} particles at density {smallest.density:g} sigma^-3; what is accepted is a cutoff of "
+            f"at most {largest:g} sigma, or state.particles of at least {particles}",
+        )
+    return Fluid(cutoff=cutoff, truncation=truncation, potential=potential)
+
+
+def _ideal_heat_capacity(table: Table, scale: Scale | None) -> float | None:
+    if table.content.get("ideal_heat_capacity") == "unknown":
+        return None
+    return table.read("ideal_heat_capacity", keys.quantity("heat_capacity", 1.5, 1000.0, scale), 1.5)
+
+
+def _sampling(table: Table, scale: Scale | None, states: tuple[State, ...]) -> Sampling:
+    table.only(tuple(Sampling.__dataclass_fields__))
+    scheme: Scheme = table.read("scheme", keys.choice(get_args(Scheme), later=("metropolised",)), "baoab")
+    if scheme == "velocity-verlet" and "friction" in table:
+        raise table.refusal("friction", 'the scheme "velocity-verlet" has no bath; leave the key out, or take "baoab"')
+    friction = table.read("friction", keys.quantity("friction", 1e-3, 1e3, scale), 2.0 if _is_liquid(states) else 1.0)
+    record_every = table.read("record_every", keys.whole(1, 1_000_000), 10)
+    sampling = Sampling(
+        seed=table.read("seed", keys.whole(0, 2**32 - 1), 1),
+        repeats=table.read("repeats", keys.whole(1, 10_000), 1),
+        time_step=table.read("time_step", keys.quantity("time", 1e-6, 0.1, scale), 0.005),
+        friction=0.0 if scheme == "velocity-verlet" else friction,
+        scheme=scheme,
+        equilibration=table.read("equilibration", keys.whole(0, 10**12), 20_000),
+        steps=table.read("steps", keys.whole(1, 10**12), 200_000),
+        record_every=record_every,
+        frame_every=table.read("frame_every", keys.whole(1, 1_000_000_000), record_every * -(-500 // record_every)),
+    )
+    for name in ("steps", "frame_every"):
+        if getattr(sampling, name) % record_every:
+            raise table.refusal(name, f"what is needed is a multiple of record_every, which is {record_every}")
+    return sampling
+
+
+def _compare(table: Table, scale: Scale | None) -> Compare:
+    table.only(("against", "tolerance"))
+    tolerance = table.table("tolerance").only(COMPARED, later=[name for name in PROPERTIES if name not in COMPARED])
+    return Compare(
+        against=() if table.content.get("against") == [] else table.read("against", keys.one_or_more(keys.line), ()),
+        tolerance={name: tolerance.read(name, _tolerance(name, scale)) for name in tolerance.content},
+    )
+
+
+def _tolerance(name: str, scale: Scale | None) -> keys.Reader[Tolerance]:
+    absolute = keys.quantity(name, 1e-12, 1e6, scale)
+
+    def read(value: object) -> Tolerance:
+        if isinstance(value, str) and value.strip().endswith("%"):
+            return Tolerance(percent(value), relative=True)
+        return Tolerance(absolute(value), relative=False)
+
+    return read

@@ -1,0 +1,93 @@
+"""A study as the text of its study file, complete with defaults."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Callable
+from typing import TYPE_CHECKING
+
+from canonry.quantities import shortest_text
+
+if TYPE_CHECKING:
+    from canonry.study import Study, Tolerance
+
+__all__ = ["study_text"]
+
+_UNITS = {
+    "epsilon": ("K", "kJ/mol", "J"),
+    "sigma": ("angstrom", "m"),
+    "mass": ("u", "g/mol", "kg"),
+    "temperature": ("K",),
+    "density": ("g/cm3", "mol/L", "1/nm3"),
+}
+
+
+def study_text(study: Study) -> str:
+    """The study file that loads to an equal study."""
+    tolerances = ", ".join(f"{name} = {_tolerance(entry)}" for name, entry in study.compare.tolerance.items())
+    return "\n".join(
+        [
+            f"title = {_quoted(study.title)}",
+            "\n[fluid]",
+            *_fluid(study),
+            "\n[state]",
+            *_states(study),
+            "\n[sampling]",
+            *_sampling(study),
+            "\n[compare]",
+            f"against = [{', '.join(map(_quoted, study.compare.against))}]",
+            f"tolerance = {{ {tolerances} }}" if tolerances else "tolerance = {}",
+            "",
+        ]
+    )
+
+
+def _quoted(text: str) -> str:
+    return json.dumps(text, ensure_ascii=False)
+
+
+def _fluid(study: Study) -> list[str]:
+    lines = [f"potential = {_quoted(study.fluid.potential)}"]
+    if study.scale is not None:
+        for name in ("epsilon", "sigma", "mass"):
+            lines.append(f"{name} = {_quoted(shortest_text(getattr(study.scale, name), name, None, _UNITS[name]))}")
+    ideal = study.ideal_heat_capacity
+    return [
+        *lines,
+        f"cutoff = {study.fluid.cutoff!r}",
+        f"truncation = {_quoted(study.fluid.truncation)}",
+        f"ideal_heat_capacity = {_quoted('unknown') if ideal is None else repr(ideal)}",
+    ]
+
+
+def _states(study: Study) -> list[str]:
+    temperature, density = _writer(study, "temperature"), _writer(study, "density")
+    ladders = {rho: [state.temperature for state in states] for rho, states in study.isochores.items()}
+    first = next(iter(ladders.values()))
+    if all(ladder == first for ladder in ladders.values()):
+        densities = ", ".join(map(density, ladders))
+        lines = [
+            f"density = {densities if len(ladders) == 1 else f'[{densities}]'}",
+            f"temperatures = [{', '.join(map(temperature, first))}]",
+        ]
+    else:
+        pairs = (f"[{temperature(state.temperature)}, {density(state.density)}]" for state in study.states)
+        lines = [f"points = [{', '.join(pairs)}]"]
+    return [*lines, f"particles = {study.states[0].particles}"]
+
+
+def _writer(study: Study, quantity: str) -> Callable[[float], str]:
+    if study.units == "reduced":
+        return repr
+    return lambda value: _quoted(shortest_text(value, quantity, study.scale, _UNITS[quantity]))
+
+
+def _sampling(study: Study) -> list[str]:
+    values = {name: getattr(study.sampling, name) for name in type(study.sampling).__dataclass_fields__}
+    if not study.sampling.bath:
+        del values["friction"]
+    return [f"{name} = {_quoted(value) if isinstance(value, str) else repr(value)}" for name, value in values.items()]
+
+
+def _tolerance(tolerance: Tolerance) -> str:
+    return f'"{tolerance.value * 100:.12g} %"' if tolerance.relative else repr(tolerance.value)
