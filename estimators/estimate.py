@@ -15,7 +15,7 @@ import numpy.typing as npt
 from estimators.errors import BadSeries
 from estimators.gamma import Scatter, block_scatter, scatter
 
-__all__ = ["Chain", "Estimate", "combine", "covariance", "covariance_matrix", "exact", "mean"]
+__all__ = ["Chain", "Estimate", "centred", "coarsened", "combine", "exact", "mean"]
 
 Floats = npt.NDArray[np.float64]
 Chain = tuple[float, float, int, int]  # temperature, density, particles, repeat
@@ -54,34 +54,36 @@ class Estimate:
         return dict(states)
 
     @cached_property
-    def _scatters(self) -> dict[State, Scatter]:
+    def scatters(self) -> dict[State, Scatter]:
+        """How far each state's influences scatter: autocorrelation time, window and their share of the variance."""
         return {state: scatter(repeats) for state, repeats in self._states.items()}
 
     @property
-    def _variance(self) -> float:
-        return sum(each.variance for each in self._scatters.values())
+    def variance(self) -> float:
+        """Square of the standard error."""
+        return sum(each.variance for each in self.scatters.values())
 
     @property
     def standard_error(self) -> float:
         """Standard error of the value; infinite if a state holds too few samples to have one."""
-        return math.sqrt(self._variance)
+        return math.sqrt(self.variance)
 
     @property
     def error_of_error(self) -> float:
         """Standard error of `standard_error`."""
-        if not 0.0 < self._variance < math.inf:
-            return self._variance
-        spread = math.hypot(*(each.variance * each.relative_error for each in self._scatters.values()))
+        if not 0.0 < self.variance < math.inf:
+            return self.variance
+        spread = math.hypot(*(each.variance * each.relative_error for each in self.scatters.values()))
         return 0.5 * spread / self.standard_error
 
     @property
     def effective_samples(self) -> float:
         """Independent samples behind the value; of several states, those weigh that carry its error (Satterthwaite)."""
-        if self._variance == 0.0:
+        if self.variance == 0.0:
             return math.inf
-        if math.isinf(self._variance):
+        if math.isinf(self.variance):
             return 0.0
-        shares = [(each.variance / self._variance, each.effective_samples) for each in self._scatters.values()]
+        shares = [(each.variance / self.variance, each.effective_samples) for each in self.scatters.values()]
         return 1.0 / sum(share**2 / samples for share, samples in shares)
 
     @property
@@ -108,12 +110,12 @@ class Estimate:
 
     @property
     def _series_too_short(self) -> bool:
-        weighty = (each for each in self._scatters.values() if each.variance >= WEIGHTY * self._variance > 0.0)
+        weighty = (each for each in self.scatters.values() if each.variance >= WEIGHTY * self.variance > 0.0)
         return any(each.longest < SHORTEST_SERIES * each.tau for each in weighty)
 
     @property
     def _blocks_disagree(self) -> bool:
-        if self._variance == 0.0:
+        if self.variance == 0.0:
             return False
         blocks = [block_scatter(repeats) for repeats in self._states.values()]
         variance = sum(each for each, _ in blocks)
@@ -171,39 +173,20 @@ def mean(observables: Mapping[Chain, Floats]) -> Estimate:
     observables : chain -> (n_chain,)
     Raises BadSeries when there is no sample at all or one is not finite.
     """
-    value, centred = _centred(observables)
-    samples = sum(map(len, centred.values()))
-    return Estimate(value, {chain: values / samples for chain, values in centred.items()})
+    value, deviations = centred(observables)
+    samples = sum(map(len, deviations.values()))
+    return Estimate(value, {chain: values / samples for chain, values in deviations.items()})
 
 
-def covariance(first: Mapping[Chain, Floats], second: Mapping[Chain, Floats]) -> Estimate:
-    """Covariance of two observables recorded on the same samples, free of the bias that their sample means cause.
-
-    first, second : chain -> (n_chain,), equal chains and lengths
-    Deviations from sample means lack the covariance of these means, 2 tau / samples of the whole; the Gamma method
-    knows it and it is added back. Raises BadSeries as `mean` does.
-    """
-    _, a = _centred(first)
-    _, b = _centred(second)
-    samples = sum(map(len, a.values()))
-    products = {chain: a[chain] * b[chain] for chain in a}
-    biased = sum(float(np.sum(values)) for values in products.values()) / samples
-    influence = {chain: (values - biased) / samples for chain, values in products.items()}
-    return Estimate(biased + _covariance_of_means(a, b, samples), influence, "fluctuation")
-
-
-def _covariance_of_means(a: Mapping[Chain, Floats], b: Mapping[Chain, Floats], samples: int) -> float:
-    """By polarisation of the variances of sum and difference, each observable in its own standard deviation."""
-    widths = [math.sqrt(sum(float(np.sum(v**2)) for v in each.values()) / samples) for each in (a, b)]
-    if min(widths) == 0.0:
-        return 0.0
-    variances = [
-        Estimate(0.0, {chain: a[chain] / widths[0] + sign * b[chain] / widths[1] for chain in a})._variance
-        for sign in (1.0, -1.0)
-    ]
-    if not all(map(math.isfinite, variances)):
-        return 0.0
-    return 0.25 * (variances[0] - variances[1]) * widths[0] * widths[1] / samples**2
+def centred(observables: Mapping[Chain, Floats]) -> tuple[float, dict[Chain, Floats]]:
+    """Mean over all samples of all chains, and the deviations from it; raises BadSeries as `mean` does."""
+    samples = sum(map(len, observables.values()))
+    if samples == 0:
+        raise BadSeries("no samples to average: every series is empty; sample longer or cut less")
+    value = sum(float(np.sum(values)) for values in observables.values()) / samples
+    if not math.isfinite(value):
+        raise BadSeries("a series holds entries that are not finite numbers; leave those samples out or repair them")
+    return value, {chain: np.asarray(values, dtype=float) - value for chain, values in observables.items()}
 
 
 def combine(function: Callable[..., Any], *estimates: Estimate, method: str = "derived") -> Estimate:
@@ -219,44 +202,6 @@ def combine(function: Callable[..., Any], *estimates: Estimate, method: str = "d
         shifted[index] += 1j * STEP
         parts.append((float(np.imag(function(*shifted))) / STEP, estimate))
     return _linear(float(np.real(function(*values))), parts, method)
-
-
-def covariance_matrix(estimates: Sequence[Estimate]) -> Floats:
-    """Covariance of the errors of several estimates, (n, n), positive semidefinite.
-
-    Diagonal: squared standard errors. Correlations: from block sums over blocks at least twice the longest window, as
-    the Gamma method alone need not give a positive matrix.
-    """
-    errors = np.array([estimate.standard_error for estimate in estimates])
-    chains = sorted({chain for estimate in estimates for chain in estimate.influence})
-    rows: list[Floats] = [np.zeros((len(estimates), 0))]
-    for chain in chains:
-        carriers = [estimate for estimate in estimates if chain in estimate.influence]
-        lengths = [len(estimate.influence[chain]) for estimate in carriers]
-        blocks = min(
-            max(length // (2 * estimate._scatters[chain[:3]].window + 1), 1)
-            for estimate, length in zip(carriers, lengths, strict=True)
-        )
-        zero = np.zeros(blocks)
-        rows.append(
-            np.array([_coarsened(e.influence[chain], blocks) if chain in e.influence else zero for e in estimates])
-        )
-    sums = np.concatenate(rows, axis=1)
-    norms = np.sqrt(np.sum(sums**2, axis=1))
-    unit = sums / np.where(norms > 0.0, norms, 1.0)[:, None]
-    correlations = unit @ unit.T
-    np.fill_diagonal(correlations, 1.0)
-    return np.asarray(errors[:, None] * correlations * errors, dtype=float)
-
-
-def _centred(observables: Mapping[Chain, Floats]) -> tuple[float, dict[Chain, Floats]]:
-    samples = sum(map(len, observables.values()))
-    if samples == 0:
-        raise BadSeries("no samples to average: every series is empty; sample longer or cut less")
-    value = sum(float(np.sum(values)) for values in observables.values()) / samples
-    if not math.isfinite(value):
-        raise BadSeries("a series holds entries that are not finite numbers; leave those samples out or repair them")
-    return value, {chain: np.asarray(values, dtype=float) - value for chain, values in observables.items()}
 
 
 def _common_method(first: Estimate, second: Estimate) -> str:
@@ -277,10 +222,10 @@ def _sum_on_coarser(first: Floats, second: Floats) -> Floats:
     if len(first) == len(second):
         return np.asarray(first + second, dtype=float)
     length = min(len(first), len(second))
-    return np.asarray(_coarsened(first, length) + _coarsened(second, length), dtype=float)
+    return np.asarray(coarsened(first, length) + coarsened(second, length), dtype=float)
 
 
-def _coarsened(values: Floats, length: int) -> Floats:
+def coarsened(values: Floats, length: int) -> Floats:
     """Sums over `length` consecutive blocks, as equal as they can be, (length,)."""
     if len(values) == length:
         return values

@@ -137,7 +137,7 @@ def block_scatter(repeats: Sequence[Floats], *, blocks: int = BLOCKS) -> tuple[f
     Returns (nan, inf) if fewer than four blocks fit.
     """
     samples = sum(map(len, repeats))
-    length = max(samples // blocks, 1)
+    length = max(min(samples // blocks, max(map(len, repeats), default=0)), 1)
     sums = np.concatenate(
         [values[: len(values) // length * length].reshape(-1, length).sum(axis=1) for values in repeats]
     )
