@@ -1,0 +1,48 @@
+"""How kernels are compiled: once per machine and version of the sources, kept in the user's cache folder."""
+
+from __future__ import annotations
+
+import hashlib
+from collections.abc import Callable
+from functools import cache
+from pathlib import Path
+from typing import Any, TypeVar
+
+import numba
+import platformdirs
+
+__all__ = ["cache_folder", "is_cached", "kernel", "piece"]
+
+Function = TypeVar("Function", bound=Callable[..., Any])
+
+
+@cache
+def cache_folder() -> Path:
+    """Folder of compiled kernels; its name changes with any source file here, since a kernel's callers are cached with it."""
+    digest = hashlib.sha256(numba.__version__.encode())
+    for source in sorted(Path(__file__).parent.rglob("*.py")):
+        digest.update(source.read_bytes())
+    return Path(platformdirs.user_cache_dir("canonry", appauthor=False)) / f"kernels-{digest.hexdigest()[:12]}"
+
+
+def is_cached() -> bool:
+    """Whether kernels of this version have been compiled on this machine."""
+    return any(cache_folder().rglob("*.nbc"))
+
+
+_OPTIONS = {"nogil": True, "error_model": "numpy", "fastmath": {"contract", "nsz", "arcp"}}
+
+
+def kernel(function: Function) -> Function:
+    """Compile, cached on disk, without the interpreter lock; sums keep their written order (products may fuse)."""
+    elsewhere, numba.config.CACHE_DIR = numba.config.CACHE_DIR, str(cache_folder())
+    try:
+        compiled = numba.njit(cache=True, **_OPTIONS)(function)
+    finally:
+        numba.config.CACHE_DIR = elsewhere
+    return compiled  # type: ignore[no-any-return]
+
+
+def piece(function: Function) -> Function:
+    """A part of kernels, always inlined where it is called."""
+    return numba.njit(forceinline=True, **_OPTIONS)(function)  # type: ignore[no-any-return]
