@@ -88,17 +88,17 @@ class Study:
     @property
     def epsilon(self) -> float | None:
         """J; None in a study that has no SI scale."""
-        return self.scale and self.scale.epsilon
+        return None if self.scale is None else self.scale.epsilon
 
     @property
     def sigma(self) -> float | None:
         """m; None in a study that has no SI scale."""
-        return self.scale and self.scale.sigma
+        return None if self.scale is None else self.scale.sigma
 
     @property
     def mass(self) -> float | None:
         """Of one particle, kg; None in a study that has no SI scale."""
-        return self.scale and self.scale.mass
+        return None if self.scale is None else self.scale.mass
 
     @property
     def isochores(self) -> dict[float, tuple[State, ...]]:

@@ -47,13 +47,12 @@ def _quoted(text: str) -> str:
 
 
 def _fluid(study: Study) -> list[str]:
-    lines = [f"potential = {_quoted(study.fluid.potential)}"]
+    ideal, sizes = study.ideal_heat_capacity, {}
     if study.scale is not None:
-        for name in ("epsilon", "sigma", "mass"):
-            lines.append(f"{name} = {_quoted(shortest_text(getattr(study.scale, name), name, None, _UNITS[name]))}")
-    ideal = study.ideal_heat_capacity
+        sizes = {"epsilon": study.scale.epsilon, "sigma": study.scale.sigma, "mass": study.scale.mass}
     return [
-        *lines,
+        f"potential = {_quoted(study.fluid.potential)}",
+        *(f"{name} = {_quoted(shortest_text(size, name, None, _UNITS[name]))}" for name, size in sizes.items()),
         f"cutoff = {study.fluid.cutoff!r}",
         f"truncation = {_quoted(study.fluid.truncation)}",
         f"ideal_heat_capacity = {_quoted('unknown') if ideal is None else repr(ideal)}",
