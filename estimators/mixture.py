@@ -1,0 +1,131 @@
+"""The mixture of several canonical ensembles that their pooled samples are drawn from.
+
+Of ensembles k with N_k samples each, a sample of energy E has the density D(E) = sum_k N_k exp(f_k - beta_k E), and
+p_k = N_k exp(f_k - beta_k E) / D is the share of it that ensemble k claims. The f_k (beta_k times the Helmholtz energy,
+up to one constant) are those for which every ensemble claims as many samples as it has: M. R. Shirts and J. D. Chodera,
+J. Chem. Phys. 129, 124105 (2008); of two ensembles: C. H. Bennett, J. Comput. Phys. 22, 245 (1976).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+from scipy.optimize import brentq
+from scipy.special import expit
+
+from estimators.errors import NotSolved
+
+__all__ = ["Mixture", "bennett", "polished", "slices"]
+
+Floats = npt.NDArray[np.float64]
+
+CHUNK = 2**14  # samples worked on at once: the matrices of a chunk stay in cache
+STEPS = 30
+SOLVED = 1e-9  # last Newton step; what remains after it is of the order of its square
+FAR = 50.0  # exp(-FAR) is nothing
+
+
+@dataclass(frozen=True)
+class Mixture:
+    """Ensembles at inverse temperatures beta (K,) with `counts` (K,) samples and free energies (K,), the first one 0.
+
+    response : (K, K), inverse of diag(counts) - sum p p^T with the first row and column zero: how far the free energies
+    move when claims do
+    overlap : (K, K), sum p_i p_j / N_i: chance that a sample of i might as well be one of j; rows sum to 1
+    """
+
+    beta: Floats
+    counts: Floats
+    free_energies: Floats
+    response: Floats
+    overlap: Floats
+
+    @property
+    def _offsets(self) -> Floats:
+        return np.log(self.counts) + self.free_energies
+
+    def log_density(self, energies: Floats) -> Floats:
+        """log D, (n,), at the energies (n,)."""
+        chunks = [_claims(self.beta, self._offsets, energies[part])[1] for part in slices(len(energies))]
+        return np.concatenate(chunks)
+
+    def claims(self, energies: Floats, log_density: Floats) -> Floats:
+        """Shares p, (K, n), of samples whose energies (n,) and log D (n,) are known."""
+        exponents = np.multiply.outer(-self.beta, energies)
+        exponents += self._offsets[:, None]
+        exponents -= log_density
+        return np.exp(exponents, out=exponents)
+
+
+def slices(length: int) -> Iterator[slice]:
+    """Consecutive chunks of a series."""
+    for start in range(0, length, CHUNK):
+        yield slice(start, min(start + CHUNK, length))
+
+
+def _claims(beta: Floats, offsets: Floats, energies: Floats) -> tuple[Floats, Floats]:
+    exponents = offsets[:, None] - np.multiply.outer(beta, energies)
+    top = np.max(exponents, axis=0)
+    exponents -= top
+    shares = np.exp(exponents, out=exponents)
+    total = np.sum(shares, axis=0)
+    shares /= total
+    return shares, top + np.log(total)
+
+
+def polished(beta: Floats, counts: Floats, start: Floats, energies: Sequence[Floats]) -> Mixture:
+    """The mixture whose free energies solve the equations on all samples, by Newton steps from a good start.
+
+    start : (K,), free energies, good to about 1
+    energies : each (n,), all samples of all ensembles
+    Raises NotSolved when the steps do not die out.
+    """
+    free_energies = start - start[0]
+    for _ in range(STEPS):
+        claimed, products = _claim_sums(beta, np.log(counts) + free_energies, energies)
+        step = np.zeros(len(beta))
+        try:
+            step[1:] = np.linalg.solve((np.diag(claimed) - products)[1:, 1:], (counts - claimed)[1:])
+        except np.linalg.LinAlgError:
+            break
+        if not np.all(np.isfinite(step)):
+            break
+        largest = float(np.max(np.abs(step), initial=0.0))
+        free_energies = free_energies + step / max(largest, 1.0)
+        if largest < SOLVED:
+            response = np.zeros_like(products)
+            response[1:, 1:] = np.linalg.inv((np.diag(counts) - products)[1:, 1:])
+            return Mixture(beta, counts, free_energies, response, products / counts[:, None])
+    raise NotSolved(
+        f"the free energies of the {len(beta)} rungs at temperatures {', '.join(f'{1.0 / b:g}' for b in beta)} could "
+        "not be found from their samples; sample them longer or set rungs between them"
+    )
+
+
+def _claim_sums(beta: Floats, offsets: Floats, energies: Sequence[Floats]) -> tuple[Floats, Floats]:
+    """Sums over all samples of p, (K,), and of p p^T, (K, K)."""
+    claimed, products = np.zeros(len(beta)), np.zeros((len(beta), len(beta)))
+    for series in energies:
+        for part in slices(len(series)):
+            shares, _ = _claims(beta, offsets, series[part])
+            claimed += np.sum(shares, axis=1)
+            products += shares @ shares.T
+    return claimed, products
+
+
+def bennett(beta: tuple[float, float], first: Floats, second: Floats) -> tuple[float, Floats, Floats]:
+    """Free energy of the second ensemble less that of the first, and how evenly both claim each sample.
+
+    first, second : (n,), (m,), energies sampled at the inverse temperatures beta
+    Returns the difference and 4 p_1 p_2 of the samples of the first (n,) and of the second (m,): 1 where both claim a
+    sample alike, 0 where only one does.
+    """
+    works = (beta[1] - beta[0]) * np.concatenate([first, second]) + np.log(len(first) / len(second))
+    unclaimed = lambda difference: float(np.sum(expit(difference - works))) - len(second)  # noqa: E731
+    difference = brentq(unclaimed, np.min(works) - FAR, np.max(works) + FAR, xtol=1e-6)
+    shares = expit(difference - works)
+    evenness = 4.0 * shares * (1.0 - shares)
+    return float(difference), evenness[: len(first)], evenness[len(first) :]

@@ -1,0 +1,220 @@
+"""Multistate reweighting over all rungs of one isochore: properties at temperatures between and beside the rungs.
+
+A sample of dynamical energy E weighs exp(-E/T)/D(E) at temperature T, with D the density of the mixture of all rungs:
+M. R. Shirts and J. D. Chodera, J. Chem. Phys. 129, 124105 (2008), solved with pymbar. Rungs that share too few samples
+are solved apart. The solution of these equations has an influence series like any mean, so its error bars come from the
+correlated samples themselves; influences are centred rung by rung, as a rung's samples scatter about that rung's mean.
+"""
+
+from __future__ import annotations
+
+import logging
+import math
+import warnings
+from collections import defaultdict
+from collections.abc import Iterator, Sequence
+from contextlib import contextmanager
+from dataclasses import dataclass
+from functools import cached_property
+
+import numpy as np
+import numpy.typing as npt
+from scipy.sparse.csgraph import connected_components
+
+from estimators.errors import BadSeries
+from estimators.estimate import FEWEST_SAMPLES, Chain, Estimate, mean
+from estimators.group import Group, Run, Rung
+from estimators.mixture import bennett, polished
+from sampler.series import Series
+
+__all__ = ["Pooled", "Reweighted", "pool"]
+
+Floats = npt.NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class Reweighted:
+    """Properties at a temperature, or why there are none.
+
+    effective_samples : independent samples of the target ensemble that the weights are worth:
+        1 / sum_n g_n w_n^2, weights w of sum 1 (Kish), g the statistical inefficiency (2 tau) of the energy at the
+        rung that sample n comes from
+    properties : by name, empty if refused
+    refused : the reason, empty if there are properties
+    """
+
+    temperature: float
+    effective_samples: float
+    properties: dict[str, Estimate]
+    refused: str = ""
+
+
+@dataclass(frozen=True)
+class Pooled:
+    """All rungs of one isochore, solved; build it with `pool`.
+
+    temperatures : (K,), of the rungs, rising
+    gaps : neighbouring temperatures that no chain of overlapping rungs connects
+    """
+
+    temperatures: list[float]
+    gaps: list[tuple[float, float]]
+    _groups: list[Group]
+    _reference_energy: float
+
+    @cached_property
+    def overlap(self) -> Floats:
+        """(K, K), chance that a sample of rung i might as well be one of rung j; rows sum to 1, 0 between groups."""
+        overlap = np.zeros((len(self.temperatures), len(self.temperatures)))
+        for group in self._groups:
+            members = [self.temperatures.index(rung.temperature) for rung in group.rungs]
+            overlap[np.ix_(members, members)] = group.mixture.overlap
+        return overlap
+
+    @cached_property
+    def free_energies(self) -> list[Estimate]:
+        """Configurational F/T of each rung less that of the coldest rung it is connected with."""
+        by_temperature = {
+            rung.temperature: estimate
+            for group in self._groups
+            for rung, estimate in zip(group.rungs, group.free_energies(self._reference_energy), strict=True)
+        }
+        return [by_temperature[temperature] for temperature in self.temperatures]
+
+    def at(self, temperature: float) -> Reweighted:
+        """Properties at a temperature (epsilon/k_B), refused where fewer than 50 effective samples support them."""
+        if not (math.isfinite(temperature) and temperature > 0.0):
+            return Reweighted(temperature, 0.0, {}, f"a temperature must be a positive number, found {temperature!r}")
+        candidates = [(group, group.weights(temperature)) for group in self._groups]
+        group, weights = max(candidates, key=lambda candidate: candidate[1].effective_samples)
+        samples = weights.effective_samples
+        if samples < FEWEST_SAMPLES:
+            return Reweighted(temperature, samples, {}, self._refusal(temperature, samples))
+        return Reweighted(temperature, samples, group.properties(temperature, weights))
+
+    def _refusal(self, temperature: float, samples: float) -> str:
+        reason = f"{samples:.0f} effective samples support temperature {temperature:g}, {FEWEST_SAMPLES:.0f} are needed"
+        for low, high in self.gaps:
+            if low < temperature < high:
+                return f"{reason}; the rungs at {low:g} and {high:g} do not overlap, set one between them"
+        nearest = min(self.temperatures, key=lambda each: abs(each - temperature))
+        return f"{reason}; the nearest rung is at {nearest:g}, set one closer or sample it longer"
+
+
+def pool(series: Sequence[Series]) -> Pooled:
+    """All repeats of all rungs of one isochore, pooled; series without samples are left out.
+
+    Raises BadSeries if nothing is left, the series differ in fluid, density or particles, hold entries that are not
+    finite, come twice, or have no bath; NotSolved if the free energies of overlapping rungs cannot be found.
+    """
+    series = [each for each in series if len(each)]
+    _check(series)
+    reference_energy = float(np.mean([np.mean(each.sampled_energy) for each in series]))
+    by_temperature: dict[float, list[Series]] = defaultdict(list)
+    for each in series:
+        by_temperature[each.state.temperature].append(each)
+    rungs = [_rung(*item, reference_energy) for item in sorted(by_temperature.items(), key=lambda item: item[0])]
+    labels = _connected(rungs)
+    groups = [
+        _solved([rung for rung, own in zip(rungs, labels, strict=True) if own == label]) for label in np.unique(labels)
+    ]
+    temperatures = [rung.temperature for rung in rungs]
+    gaps = [(temperatures[i], temperatures[i + 1]) for i in np.flatnonzero(np.diff(labels))]
+    return Pooled(temperatures, gaps, groups, reference_energy)
+
+
+def _check(series: Sequence[Series]) -> None:
+    if not series:
+        raise BadSeries("no samples to reweight: every series is empty; sample longer or cut less")
+    first = series[0]
+    isochore = (first.fluid, first.state.density, first.state.particles)
+    for each in series:
+        if not each.bath:
+            raise BadSeries(f"the series at {each.state} has no bath: only canonical samples can be reweighted")
+        if (each.fluid, each.state.density, each.state.particles) != isochore:
+            raise BadSeries(f"only one fluid at one density is reweighted together, found {first.state}, {each.state}")
+        columns = (each.energy, each.sampled_energy, each.virial, each.hypervirial)
+        if not all(np.all(np.isfinite(column)) for column in columns):
+            raise BadSeries(f"the series at {each.state}, repeat {each.repeat}, holds entries that are not finite")
+    if len({_chain(each) for each in series}) < len(series):
+        raise BadSeries("the same repeat of a rung was given twice")
+
+
+def _chain(series: Series) -> Chain:
+    state = series.state
+    return (state.temperature, state.density, state.particles, series.repeat)
+
+
+def _rung(temperature: float, repeats: list[Series], reference_energy: float) -> Rung:
+    energies = [each.sampled_energy - reference_energy for each in repeats]
+    samples = sum(map(len, energies))
+    effective = mean({_chain(each): values for each, values in zip(repeats, energies, strict=True)}).effective_samples
+    return Rung(temperature, repeats, energies, max(samples / max(effective, 1.0), 1.0))
+
+
+def _connected(rungs: list[Rung]) -> npt.NDArray[np.int32]:
+    """(K,), equal labels for rungs that share 50 effective samples or are connected through others that do."""
+    links = np.zeros((len(rungs), len(rungs)))
+    for i, cold in enumerate(rungs):
+        for j in range(i + 1, len(rungs)):
+            hot = rungs[j]
+            _, *evenness = bennett((1.0 / cold.temperature, 1.0 / hot.temperature), cold.thinned, hot.thinned)
+            shared = sum(
+                float(np.mean(even)) * rung.samples / rung.inefficiency
+                for even, rung in zip(evenness, (cold, hot), strict=True)
+            )
+            links[i, j] = shared >= FEWEST_SAMPLES
+    return np.asarray(connected_components(links, directed=False)[1], dtype=np.int32)
+
+
+def _solved(rungs: list[Rung]) -> Group:
+    beta = np.array([1.0 / rung.temperature for rung in rungs])
+    mixture = polished(
+        beta,
+        np.array([float(rung.samples) for rung in rungs]),
+        _thinned_solution(beta, [rung.thinned for rung in rungs]),
+        [energies for rung in rungs for energies in rung.energies],
+    )
+    runs = [
+        Run(index, _chain(series), series, energies, mixture.log_density(energies))
+        for index, rung in enumerate(rungs)
+        for series, energies in zip(rung.repeats, rung.energies, strict=True)
+    ]
+    return Group(rungs, mixture, runs)
+
+
+def _thinned_solution(beta: Floats, energies: list[Floats]) -> Floats:
+    """Free energies (K,) solved on thinned samples, from the sum of the neighbours' pairwise differences.
+
+    Where that fails the start itself is returned: whether it is good enough shows when it is polished.
+    """
+    pairs = zip(beta, beta[1:], energies, energies[1:], strict=False)
+    steps = [bennett((low, high), first, second)[0] for low, high, first, second in pairs]
+    start = np.concatenate([[0.0], np.cumsum(steps)])
+    if len(beta) == 1:
+        return start
+    with _quiet():
+        from pymbar import MBAR
+        from pymbar.utils import ParameterError
+
+        reduced = np.multiply.outer(beta, np.concatenate(energies))
+        protocol = ({"method": "adaptive", "options": {"min_sc_iter": 0}},)
+        try:
+            solution = MBAR(reduced, list(map(len, energies)), initial_f_k=start, solver_protocol=protocol).f_k
+        except (ParameterError, ArithmeticError, ValueError):
+            return start
+    return np.asarray(solution, dtype=float)
+
+
+@contextmanager
+def _quiet() -> Iterator[None]:
+    """Keeps the notices of a library out of the user's sight."""
+    logger = logging.getLogger("pymbar")
+    level = logger.level
+    logger.setLevel(logging.CRITICAL + 1)
+    try:
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore")
+            yield
+    finally:
+        logger.setLevel(level)
