@@ -14,7 +14,7 @@ from numba.core import cgutils, types
 from numba.core.typing.templates import ConcreteTemplate, infer_global, signature
 from numba.extending import intrinsic, lower_builtin, models, register_model
 
-__all__ = ["WIDTH", "any_of", "both", "count", "later_lanes", "load", "select", "smaller", "splat", "square_root", "store", "total"]
+__all__ = ["WIDTH", "any_of", "both", "count", "larger", "largest", "later_lanes", "load", "select", "smaller", "splat", "square_root", "store", "total"]
 
 WIDTH = 4
 _FUSE = ("contract",)
@@ -179,6 +179,30 @@ def square_root(typing: Any, value: Any) -> Any:
         return builder.call(cgutils.get_or_insert_function(builder.module, kind, f"llvm.sqrt.v{WIDTH}f64"), args)
 
     return _lanes(_lanes), build
+
+
+@intrinsic
+def larger(typing: Any, left: Any, right: Any) -> Any:
+    """The larger of two numbers in every lane."""
+
+    def build(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        return builder.select(builder.fcmp_ordered(">", *args), *args)
+
+    return _lanes(_lanes, _lanes), build
+
+
+@intrinsic
+def largest(typing: Any, value: Any) -> Any:
+    """The largest number of the lanes."""
+
+    def build(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        result = builder.extract_element(args[0], _index(0))
+        for lane in range(1, WIDTH):
+            other = builder.extract_element(args[0], _index(lane))
+            result = builder.select(builder.fcmp_ordered(">", result, other), result, other)
+        return result
+
+    return types.float64(_lanes), build
 
 
 @intrinsic
