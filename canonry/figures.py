@@ -1,0 +1,278 @@
+"""Figures as inline SVG: points with bars, lines, bands and areas in a pair of axes, with a legend.
+
+Colours are CSS classes of the page (`measured`, `reference`, `accent`, `quiet`); shape and dash carry the same
+distinction without them.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass
+from html import escape
+from typing import Literal
+
+import numpy as np
+import numpy.typing as npt
+
+from canonry.axes import Axis, Scale, scale
+from canonry.notation import as_svg
+
+__all__ = ["Area", "Axis", "Band", "Figure", "Line", "Note", "Points", "Span", "draw"]
+
+Floats = npt.NDArray[np.float64]
+Tone = Literal["measured", "reference", "accent", "quiet"]
+_MOST_POINTS = 400
+_LETTER = 6.9
+_ROW = 19
+
+
+@dataclass(frozen=True)
+class Points:
+    """Symbols at (x, y), each (n,), with bars of half length `error` where given."""
+
+    x: Floats
+    y: Floats
+    error: Floats | None = None
+    label: str = ""
+    shape: Literal["disc", "ring", "cross"] = "disc"
+    tone: Tone = "measured"
+
+
+@dataclass(frozen=True)
+class Line:
+    """A line through (x, y), each (n,), broken where y is not finite; `dash` as in SVG."""
+
+    x: Floats
+    y: Floats
+    label: str = ""
+    dash: str = ""
+    tone: Tone = "measured"
+
+
+@dataclass(frozen=True)
+class Band:
+    """The strip between low and high, each (n,), broken where either is not finite."""
+
+    x: Floats
+    low: Floats
+    high: Floats
+    label: str = ""
+    tone: Tone = "measured"
+
+
+@dataclass(frozen=True)
+class Area:
+    """The surface between (x, y), each (n,), and y = 0, with its outline."""
+
+    x: Floats
+    y: Floats
+    dash: str = ""
+    tone: Tone = "measured"
+
+
+@dataclass(frozen=True)
+class Span:
+    """A range of x marked over the full height."""
+
+    start: float
+    end: float
+    label: str = ""
+
+
+@dataclass(frozen=True)
+class Note:
+    """A text centred at (x, y), lifted above it."""
+
+    x: float
+    y: float
+    text: str
+
+
+Mark = Points | Line | Band | Area | Span | Note
+
+
+@dataclass(frozen=True)
+class Figure:
+    """Marks in a pair of axes; title and description are read aloud instead of the picture."""
+
+    title: str
+    description: str
+    x: Axis
+    y: Axis
+    marks: Sequence[Mark]
+    width: int = 440
+    height: int = 300
+    ticks: int = 6
+
+
+def draw(figure: Figure) -> str:
+    """The figure as one SVG element, its texts escaped; axes span all finite data of the marks."""
+    legend, rows = _legend(figure)
+    left, right, top, bottom = 50, figure.width - 10, 26 + rows * _ROW, figure.height - 40
+    x = scale(_extent(figure.marks, 0), left, right, figure.ticks, margin=0.03)
+    y = scale(_extent(figure.marks, 1), bottom, top, max(2, figure.ticks * (bottom - top) // 250), margin=0.06)
+    order = (Span, Band, Area, Line, Points, Note)
+    body = [_draw_mark(mark, x, y) for kind in order for mark in figure.marks if isinstance(mark, kind)]
+    return "\n".join(
+        [
+            f'<svg role="img" viewBox="0 0 {figure.width} {figure.height}">',
+            f"<title>{escape(figure.title)}</title><desc>{escape(figure.description)}</desc>",
+            *_grid(x, y),
+            *body,
+            _text(4, 14, y.caption(figure.y), "axis-label", "start"),
+            _text(right, figure.height - 6, x.caption(figure.x), "axis-label", "end"),
+            *legend,
+            "</svg>",
+        ]
+    )
+
+
+def _extent(marks: Sequence[Mark], axis: int) -> tuple[float, float]:
+    values = np.concatenate([np.zeros(0), *(np.ravel(part) for mark in marks for part in _reach(mark)[axis])])
+    values = values[np.isfinite(values)]
+    return (float(values.min()), float(values.max())) if len(values) else (0.0, 1.0)
+
+
+def _reach(mark: Mark) -> tuple[list[Floats], list[Floats]]:
+    """All x and all y that a mark must have room for."""
+    match mark:
+        case Span(start, end):
+            return [np.array([start, end])], []
+        case Note(x, y):
+            return [np.array([x])], [np.array([y])]
+        case Band(x, low, high):
+            return [x], [low, high]
+        case Area(x, y):
+            return [x], [y, np.zeros(1)]
+        case Points(x, y, error) if error is not None:
+            bars = np.where(np.isfinite(error), error, 0.0)
+            return [x], [y - bars, y + bars]
+        case _:
+            return [mark.x], [mark.y]
+
+
+def _grid(x: Scale, y: Scale) -> Iterable[str]:
+    for at, label in y.labels():
+        yield f'<path class="grid" d="M{_n(x.start)},{_n(at)}H{_n(x.end)}"/>'
+        yield _text(x.start - 6, at + 4, label, "tick", "end")
+    yield f'<path class="frame" d="M{_n(x.start)},{_n(y.start)}H{_n(x.end)}"/>'
+    for at, label in x.labels():
+        yield f'<path class="frame" d="M{_n(at)},{_n(y.start)}v4"/>'
+        yield _text(at, y.start + 17, label, "tick", "middle")
+
+
+def _draw_mark(mark: Mark, x: Scale, y: Scale) -> str:
+    match mark:
+        case Points():
+            return _points(mark, x, y)
+        case Line():
+            keep = _extremes(mark.y)
+            path = _path(x(mark.x[keep]), y(mark.y[keep]))
+            return f'<path class="line {mark.tone}"{_dash(mark.dash)} d="{path}"/>'
+        case Band():
+            keep = _extremes(mark.high)
+            path = _ring(x(mark.x[keep]), y(mark.low[keep]), y(mark.high[keep]))
+            return f'<path class="band {mark.tone}" d="{path}"/>'
+        case Area():
+            keep = _extremes(mark.y)
+            across, height = x(mark.x[keep]), y(mark.y[keep])
+            fill = f'<path class="band {mark.tone}" d="{_ring(across, y(np.zeros(len(keep))), height)}"/>'
+            return f'{fill}<path class="line {mark.tone}"{_dash(mark.dash)} d="{_path(across, height)}"/>'
+        case Span():
+            start, end = float(x(mark.start)), float(x(mark.end))
+            size = f'width="{_n(max(end - start, 2.0))}" height="{_n(y.start - y.end)}"'
+            return f'<rect class="span" x="{_n(start)}" y="{_n(y.end)}" {size}/>'
+        case Note():
+            return _text(float(x(mark.x)), float(y(mark.y)) - 6, mark.text, "note", "middle")
+
+
+def _points(mark: Points, x: Scale, y: Scale) -> str:
+    parts = []
+    for k in np.flatnonzero(np.isfinite(mark.x) & np.isfinite(mark.y)):
+        across = float(x(mark.x[k]))
+        if mark.error is not None and np.isfinite(mark.error[k]) and mark.error[k] > 0.0:
+            low, high = float(y(mark.y[k] - mark.error[k])), float(y(mark.y[k] + mark.error[k]))
+            parts.append(f'<path class="bar {mark.tone}" d="M{_n(across)},{_n(low)}V{_n(high)}"/>')
+        parts.append(_symbol(across, float(y(mark.y[k])), mark, "point"))
+    return "".join(parts)
+
+
+def _symbol(x: float, y: float, mark: Points, kind: str) -> str:
+    if mark.shape == "cross":
+        return f'<path class="{kind} cross {mark.tone}" d="M{_n(x - 4)},{_n(y - 4)}l8,8m0,-8l-8,8"/>'
+    return f'<circle class="{kind} {mark.shape} {mark.tone}" cx="{_n(x)}" cy="{_n(y)}" r="3.6"/>'
+
+
+def _legend(figure: Figure) -> tuple[list[str], int]:
+    """Samples with their labels, set in rows under the label of the vertical axis; and the number of rows."""
+    parts: list[str] = []
+    x, row = 8.0, 0
+    for mark in figure.marks:
+        if isinstance(mark, (Area, Note)) or not mark.label:
+            continue
+        width = 32 + _LETTER * len(mark.label)
+        if parts and x + width > figure.width:
+            x, row = 8.0, row + 1
+        y = 31.0 + row * _ROW
+        parts += [_sample(mark, x, y), _text(x + 26, y + 4, mark.label, "legend", "start")]
+        x += width + 8
+    return parts, row + 1 if parts else 0
+
+
+def _sample(mark: Points | Line | Band | Span, x: float, y: float) -> str:
+    match mark:
+        case Points():
+            return _symbol(x + 10, y, mark, "sample")
+        case Line():
+            return f'<path class="line {mark.tone}"{_dash(mark.dash)} d="M{_n(x)},{_n(y)}h20"/>'
+        case Band():
+            return f'<rect class="band {mark.tone}" x="{_n(x)}" y="{_n(y - 5)}" width="20" height="10"/>'
+        case Span():
+            return f'<rect class="span" x="{_n(x)}" y="{_n(y - 5)}" width="20" height="10"/>'
+
+
+def _extremes(values: Floats) -> npt.NDArray[np.intp]:
+    """Indices that keep the outline of a long curve: lowest and highest of each stretch, and every break."""
+    n = len(values)
+    if n <= _MOST_POINTS:
+        return np.arange(n)
+    keep = {0, n - 1}
+    for stretch in np.array_split(np.arange(n), _MOST_POINTS // 2):
+        finite = np.isfinite(values[stretch])
+        if finite.any():
+            keep |= {stretch[np.nanargmin(values[stretch])], stretch[np.nanargmax(values[stretch])]}
+        if not finite.all():
+            keep.add(stretch[np.argmin(finite)])
+    return np.array(sorted(keep))
+
+
+def _runs(*columns: Floats) -> Iterable[slice]:
+    """The unbroken stretches in which every column is finite."""
+    finite = np.all(np.isfinite(np.vstack(columns)), axis=0)
+    edges = np.flatnonzero(np.diff(np.concatenate([[False], finite, [False]])))
+    return (slice(start, end) for start, end in zip(edges[::2], edges[1::2], strict=True))
+
+
+def _pairs(x: Floats, y: Floats) -> str:
+    return "L".join(f"{_n(a)},{_n(b)}" for a, b in zip(x, y, strict=True))
+
+
+def _path(x: Floats, y: Floats) -> str:
+    return "".join(f"M{_pairs(x[run], y[run])}h0" for run in _runs(x, y))
+
+
+def _ring(x: Floats, low: Floats, high: Floats) -> str:
+    there_and_back = ((run, np.concatenate([x[run], x[run][::-1]])) for run in _runs(x, low, high))
+    return "".join(f"M{_pairs(way, np.concatenate([high[run], low[run][::-1]]))}Z" for run, way in there_and_back)
+
+
+def _dash(dash: str) -> str:
+    return f' stroke-dasharray="{dash}"' if dash else ""
+
+
+def _n(pixels: float) -> str:
+    return f"{pixels:.1f}".removesuffix(".0")
+
+
+def _text(x: float, y: float, text: str, kind: str, anchor: str) -> str:
+    return f'<text class="{kind}" x="{_n(x)}" y="{_n(y)}" text-anchor="{anchor}">{as_svg(text)}</text>'

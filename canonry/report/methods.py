@@ -1,0 +1,186 @@
+"""The methods paragraph: what was done, in sentences that can go into a paper, with the works they rest on."""
+
+from __future__ import annotations
+
+import tomllib
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any
+
+from canonry.notation import unit_text
+from canonry.numbers import plain
+from canonry.results import Results
+from reference import find
+from reference import names as references
+
+__all__ = ["Setup", "citations", "paragraph", "standing_caveats"]
+
+_WORKS = {
+    "baoab": "B. Leimkuhler, C. Matthews, J. Chem. Phys. 138, 174102 (2013)",
+    "obabo": "G. Bussi, M. Parrinello, Phys. Rev. E 75, 056707 (2007)",
+    "velocity-verlet": "W. C. Swope, H. C. Andersen, P. H. Berens, K. R. Wilson, J. Chem. Phys. 76, 637 (1982)",
+    "constant-energy": "J. L. Lebowitz, J. K. Percus, L. Verlet, Phys. Rev. 153, 250 (1967)",
+    "gamma": "U. Wolff, Comput. Phys. Commun. 156, 143 (2004); erratum 176, 383 (2007)",
+    "reweighting": "M. R. Shirts, J. D. Chodera, J. Chem. Phys. 129, 124105 (2008)",
+}
+_SCHEMES = {
+    "baoab": "with Langevin dynamics in the BAOAB splitting [baoab]",
+    "obabo": "with Langevin dynamics in the OBABO splitting, a thermostat half step on either side of velocity Verlet "
+    "[obabo]",
+    "velocity-verlet": "at constant energy with the velocity Verlet scheme [velocity-verlet]",
+}
+_TRUNCATIONS = {
+    "corrected": "truncated at {cutoff}, with a homogeneous long-range correction to energy, pressure and their "
+    "derivatives",
+    "plain": "truncated at {cutoff} without correction",
+    "shifted": "truncated and shifted at {cutoff}",
+    "force-shifted": "truncated at {cutoff} with energy and force shifted to zero there",
+}
+_TRUNCATION_CAVEATS = {
+    "corrected": "Beyond the cutoff of {cutoff} the fluid is taken as homogeneous (g = 1). That is poor in a dilute or "
+    "near-critical fluid, where a larger cutoff is needed.",
+    "plain": "The potential ends at {cutoff} without correction; configurations are those of the shifted potential, "
+    "the energy is that of the plain one. Values differ from those of the full potential.",
+    "shifted": "The potential is shifted to zero at {cutoff}: a fluid of its own, whose values are not those of the "
+    "full potential.",
+    "force-shifted": "Energy and force are shifted to zero at {cutoff}: a fluid of its own, whose values are not those "
+    "of the full potential.",
+}
+
+
+@dataclass(frozen=True)
+class Setup:
+    """What the text needs of a study file; quantities as text with their unit."""
+
+    potential: str
+    truncation: str
+    cutoff: str
+    particles: int
+    scheme: str
+    sampling: Mapping[str, Any]
+    against: Sequence[str]
+
+    @classmethod
+    def of(cls, results: Results) -> Setup:
+        """Read the study of these results, complete with defaults; KeyError where it is not."""
+        study = tomllib.loads(results.study_toml)
+        fluid, sampling = study["fluid"], study["sampling"]
+        return cls(
+            potential=fluid["potential"].replace("lennard-jones", "Lennard-Jones"),
+            truncation=fluid["truncation"],
+            cutoff=_quantity(fluid["cutoff"], "σ"),
+            particles=study["state"]["particles"],
+            scheme=sampling["scheme"],
+            sampling=sampling,
+            against=study.get("compare", {}).get("against", []),
+        )
+
+    @property
+    def bath(self) -> bool:
+        """Whether a thermostat acted."""
+        return self.scheme != "velocity-verlet"
+
+    @property
+    def cut(self) -> str:
+        """What is done at the cutoff, in words."""
+        return _TRUNCATIONS[self.truncation].format(cutoff=self.cutoff)
+
+
+def paragraph(results: Results) -> str:
+    """One paragraph; works in brackets are numbered as `citations` lists them."""
+    text = " ".join(_sentences(results, Setup.of(results)))
+    for number, key in enumerate(_cited(text), start=1):
+        text = text.replace(f"[{key}]", f"[{number}]")
+    return text
+
+
+def citations(results: Results) -> list[str]:
+    """The works that `paragraph` cites, in its order."""
+    return list(_cited(" ".join(_sentences(results, Setup.of(results)))).values())
+
+
+def standing_caveats(results: Results) -> list[str]:
+    """What holds for every study of such a model, whatever its numbers."""
+    setup = Setup.of(results)
+    return [
+        "All values are results of a model. They are not for the design of pressure equipment or for safety decisions "
+        "without checked data, local codes and licensed practice.",
+        f"The {setup.potential} fluid is a model: particles interact in pairs; no real substance follows it exactly. "
+        "Agreement with a reference for the same model says that the sampling is right, not that the model is.",
+        _TRUNCATION_CAVEATS[setup.truncation].format(cutoff=setup.cutoff),
+        f"The system holds {setup.particles} particles in a periodic box. The finite size is not corrected for; it "
+        "matters most near a critical point, and inside a two-phase region the sample is not a bulk phase.",
+        "The particles move classically. Light atoms at low temperature (hydrogen, helium, neon) show quantum effects "
+        "that are absent here.",
+    ]
+
+
+def _sentences(results: Results, setup: Setup) -> list[str]:
+    return [
+        f"The {setup.potential} fluid, {setup.cut}, was sampled with {setup.particles} particles in a periodic cube.",
+        *_dynamics(results, setup),
+        *_estimates(results, setup),
+        *_comparison(results),
+        *([f"Computed with {results.provenance['canonry']}."] if "canonry" in results.provenance else []),
+    ]
+
+
+def _dynamics(results: Results, setup: Setup) -> list[str]:
+    sampling = setup.sampling
+    friction = f", friction {_quantity(sampling['friction'], '√(ε/m)/σ')}" if setup.bath else ""
+    repeats = _counted(max(sampling["repeats"], results.equilibration["repeat"].nunique()), "independent repeat")
+    lengths = f"{sampling['equilibration']} steps of equilibration and {sampling['steps']} steps"
+    states = len(results.properties[["temperature", "density"]].drop_duplicates())
+    ensemble = "The canonical ensemble was sampled" if setup.bath else "Trajectories were run"
+    return [
+        f"{ensemble} at {_counted(states, 'state')} {_SCHEMES[setup.scheme]} "
+        f"(time step {_quantity(sampling['time_step'], 'σ √(m/ε)')}{friction}; {lengths} in each of "
+        f"{repeats} a state, recorded every {sampling['record_every']} steps).",
+        "The end of equilibration was found from the data.",
+    ]
+
+
+def _estimates(results: Results, setup: Setup) -> list[str]:
+    fluctuations = (
+        "Heat capacity, thermal pressure coefficient and bulk modulus are from fluctuations in the canonical ensemble, "
+        "with the energy whose ensemble the forces sample."
+        if setup.bath
+        else "Temperature is from the mean kinetic energy, heat capacity from kinetic fluctuations at constant energy "
+        "[constant-energy]."
+    )
+    errors = (
+        "Standard errors are from the integrated autocorrelation of the linearised fluctuation of each estimate, with "
+        "an automatic summation window and pooled over repeats (Gamma method) [gamma]."
+    )
+    reweighted = (results.curve["trust"] != "no").any() or (results.properties["method"] == "reweighted").any()
+    pooled = (
+        "Values between the sampled temperatures are from multistate reweighting over all temperatures of an isochore "
+        "[reweighting]; states with fewer than 50 effective samples behind them are refused."
+    )
+    return [fluctuations, errors, *([pooled] if reweighted else [])]
+
+
+def _comparison(results: Results) -> list[str]:
+    names = list(dict.fromkeys(map(str, results.verdict["reference"])))
+    if not names:
+        return []
+    cited = " and ".join(f"{name} [{name}]" if name in references() else name for name in names)
+    return [
+        f"Results were held against {cited} in combined standard errors; the stated accuracy of a reference was read "
+        "as 95 %."
+    ]
+
+
+def _cited(text: str) -> dict[str, str]:
+    """Key and full citation of every work that the text names in brackets, in the order of the text."""
+    works = _WORKS | {name: str(find(name).source) for name in references()}
+    found = sorted((text.index(f"[{key}]"), key) for key in works if f"[{key}]" in text)
+    return {key: works[key] for _, key in found}
+
+
+def _quantity(value: float | str, unit: str) -> str:
+    return unit_text(value) if isinstance(value, str) else f"{plain(value)} {unit}"
+
+
+def _counted(number: int, noun: str) -> str:
+    return f"{number} {noun}{'' if number == 1 else 's'}"

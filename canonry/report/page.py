@@ -1,0 +1,171 @@
+"""The page: one HTML file that says what a study gave, how far it can be trusted and how it was made."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Iterator
+from html import escape
+from pathlib import Path
+
+from canonry.figures import Figure, draw
+from canonry.notation import as_html, unit_text
+from canonry.numbers import plain
+from canonry.report import methods, plots, tables, words
+from canonry.report.rows import at_densities, headline
+from canonry.report.style import CSS
+from canonry.results import Results
+from canonry.units import unit_label
+
+__all__ = ["html", "write"]
+
+_OUTCOMES = {
+    "agrees": "✓ Agrees with the reference",
+    "disagrees": "✗ Disagrees with the reference",
+    "undecided": "? Undecided",
+    "": "Not compared with a reference",
+}
+_UNCERTAINTY = (
+    "Numbers in parentheses are one standard error in units of the last digits: 1.234(56) is 1.234 ± 0.056. Twice the "
+    "standard error is the 95 % interval; bars and bands in figures show that interval, and bars shorter than their "
+    "symbol are hidden by it. Standard errors come from the autocorrelation of each estimate's own fluctuation (Gamma "
+    "method) and cover chance only, not the limits of the model. The stated accuracy of a reference is read as 95 %, "
+    "so half of it enters a deviation as its standard uncertainty."
+)
+
+
+def write(results: Results, path: Path) -> None:
+    """Write the report of these results to one file that needs no network and no scripts. Raises OSError."""
+    path.write_text(html(results), encoding="utf-8")
+
+
+def html(results: Results) -> str:
+    """The report as one HTML document."""
+    sets = list(_sets(results))
+    title = escape(results.title)
+    return "\n".join(
+        [
+            '<!doctype html><html lang="en"><head><meta charset="utf-8">',
+            '<meta name="viewport" content="width=device-width,initial-scale=1">',
+            f"<title>{title}</title><style>{CSS}</style></head><body><main>",
+            f'<header><p class="kind">Canonical sampling of a model fluid</p><h1>{title}</h1></header>',
+            *_verdict(results),
+            *_contents(sets),
+            *(part for number, (where, own) in enumerate(sets) for part in _set(number, where, own)),
+            *_caveats(results),
+            *_methods(results),
+            *_provenance(results),
+            "</main></body></html>",
+        ]
+    )
+
+
+def _sets(results: Results) -> Iterator[tuple[str, Results]]:
+    """The isochores, each with its density in words; states that share their density with no other come as one set."""
+    states = results.properties[["density", "temperature"]].drop_duplicates()
+    sizes = states.groupby("density").size()
+    unit = unit_text(unit_label("density", results.units))
+    for density in sizes.index[sizes > 1]:
+        yield f"density {plain(float(density))} {unit}", at_densities(results, [float(density)])
+    single = [float(density) for density in sizes.index[sizes == 1]]
+    if single:
+        where = f"density {plain(single[0])} {unit}" if len(single) == 1 else "single states"
+        yield where, at_densities(results, single)
+
+
+def _verdict(results: Results) -> Iterator[str]:
+    outcome = words.outcome(results)
+    yield f'<section class="verdict {outcome or "none"}"><p class="word">{_OUTCOMES[outcome]}</p>'
+    yield from _paragraphs([words.question(results), *words.answers(results), *words.agreement(results)])
+    doubts = words.doubts(results)
+    if doubts:
+        yield f"<h3>What should not be trusted</h3>{_list(doubts)}"
+    else:
+        yield from _paragraphs(["The checks mark no value of this study as doubtful; the caveats below still hold."])
+    yield "</section>"
+
+
+def _contents(sets: list[tuple[str, Results]]) -> Iterator[str]:
+    links = [(f"set-{number}", where.capitalize()) for number, (where, _) in enumerate(sets)]
+    links += [("caveats", "Caveats"), ("methods", "Methods"), ("provenance", "Provenance")]
+    items = "".join(f'<li><a href="#{to}">{as_html(text)}</a></li>' for to, text in links)
+    yield f"<nav><ul>{items}</ul></nav>"
+    yield f'<p class="fine">{as_html(_UNCERTAINTY)}</p>'
+
+
+def _set(number: int, where: str, results: Results) -> Iterator[str]:
+    several = results.properties["density"].nunique() > 1
+    isochore = results.properties["temperature"].nunique() > 1 and not several
+    yield f'<section id="set-{number}"><h2>{as_html(where.capitalize())}</h2>'
+    yield tables.values(results, with_density=several)
+    yield _legend_of_marks(results)
+    if isochore:
+        names = [words.heat_capacity_name(results), "pressure", "residual_energy"]
+        figures = [plots.curves(results, where, name) for name in names]
+        figures += [plots.deviations(results, where, names)] if len(results.verdict) else []
+        yield _plots(figures)
+    yield from _tabled("Further properties", tables.derived(results, with_density=several))
+    yield from _tabled("Comparison, value by value", tables.comparison(results), "comparison")
+    yield from _sampled(where, results, isochore)
+    yield "</section>"
+
+
+def _sampled(where: str, results: Results, isochore: bool) -> Iterator[str]:
+    bath = methods.Setup.of(results).bath
+    figures = [plots.histograms(results, where)] if isochore and len(results.histograms) else []
+    figures += [plots.ledger(results, where, bath)] if len(results.ledger) else []
+    yield from _tabled("How it was sampled", tables.sampling(results), "wide")
+    yield _plots(figures)
+    if len(results.structure):
+        yield "<h3>Structure: pair distribution g(r)</h3>"
+        yield '<p class="fine">Each rung with its 95 % band; the dashed line repeats the coldest rung.</p>'
+        yield _plots(plots.structure(results, where), "small plots", captions=False)
+
+
+def _caveats(results: Results) -> Iterator[str]:
+    yield '<section id="caveats"><h2>Caveats</h2>'
+    yield _list([*results.caveats, *methods.standing_caveats(results)])
+    yield "</section>"
+
+
+def _methods(results: Results) -> Iterator[str]:
+    yield '<section id="methods"><h2>Methods, ready to paste</h2>'
+    yield from _paragraphs([methods.paragraph(results)])
+    yield f"<ol>{''.join(f'<li>{as_html(work)}.</li>' for work in methods.citations(results))}</ol></section>"
+
+
+def _provenance(results: Results) -> Iterator[str]:
+    entries = "".join(f"<dt>{escape(key)}</dt><dd>{escape(text)}</dd>" for key, text in results.provenance.items())
+    yield f'<section id="provenance"><h2>Provenance</h2><dl>{entries}</dl>'
+    yield f"<h3>The study, complete with defaults</h3><pre>{escape(results.study_toml)}</pre>"
+    table = escape(results.summary.to_csv(index=False))
+    yield f"<details><summary>Headline values as comma-separated text</summary><pre>{table}</pre></details>"
+    yield "</section>"
+
+
+def _legend_of_marks(results: Results) -> str:
+    used = set(headline(results)["trust"])
+    texts = {"caution": "† with caution", "no": "‡ not to be trusted"}
+    shown = [text for trust, text in texts.items() if trust in used]
+    return f'<p class="fine">{"; ".join(shown)}: reasons above.</p>' if shown else ""
+
+
+def _tabled(title: str, table: str, kind: str = "") -> Iterator[str]:
+    if table:
+        yield f'<h3>{title}</h3><div class="{kind}">{table}</div>'
+
+
+def _plots(figures: Iterable[Figure], kind: str = "plots", *, captions: bool = True) -> str:
+    drawn = "".join(_figure(figure, captions) for figure in figures)
+    return f'<div class="{kind}">{drawn}</div>' if drawn else ""
+
+
+def _figure(figure: Figure, caption: bool) -> str:
+    text = f"<figcaption>{as_html(figure.description)}</figcaption>" if caption else ""
+    return f"<figure>{draw(figure)}{text}</figure>"
+
+
+def _paragraphs(texts: Iterable[str]) -> Iterator[str]:
+    return (f"<p>{as_html(text)}</p>" for text in texts)
+
+
+def _list(texts: Iterable[str]) -> str:
+    return f"<ul>{''.join(f'<li>{as_html(text)}</li>' for text in texts)}</ul>"

@@ -1,0 +1,171 @@
+"""Which figures a set of states gets, and what is drawn in each."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from canonry.figures import Area, Axis, Band, Figure, Line, Note, Points, Span
+from canonry.notation import name_of, symbol_of, unit_text
+from canonry.numbers import plain
+from canonry.report.rows import floats, grouped
+from canonry.results import Results
+from canonry.units import unit_label
+
+if TYPE_CHECKING:
+    from canonry.figures import Mark
+
+__all__ = ["curves", "deviations", "histograms", "ledger", "structure"]
+
+_DASHES = ("7 4", "2 3", "9 3 2 3")
+_SHAPES = {"ok": "disc", "caution": "ring", "no": "cross"}
+_TRUST = {"ok": "rungs", "caution": "rungs, with caution", "no": "rungs, not to be trusted"}
+
+
+def curves(results: Results, where: str, name: str) -> Figure:
+    """One property over temperature: rungs, reweighted curve, references; bars and bands are 95 % intervals.
+
+    results : of one isochore only, like for all functions here; where : its density in words
+    """
+    return Figure(
+        title=f"{name_of(name).capitalize()} over temperature, {where}",
+        description=f"Sampled values of {name_of(name)} with 95 % bars, the curve reweighted from all rungs with its "
+        "95 % band, and the reference where there is one.",
+        x=_temperature_axis(results),
+        y=Axis(f"{name_of(name).capitalize()} {symbol_of(name)}", unit_text(unit_label(name, results.units))),
+        marks=[*_references(results, name), *_reweighted(results, name), *_rungs(results, name)],
+    )
+
+
+def deviations(results: Results, where: str, names: list[str]) -> Figure:
+    """Estimate minus reference in combined standard errors; the first reference only, others are in the table."""
+    rows = results.verdict[results.verdict["property"].isin(names) & np.isfinite(results.verdict["z"])]
+    rows = rows[rows["reference"] == rows["reference"].iloc[0]] if len(rows) else rows
+    span = floats(rows, "temperature")
+    edge = np.array([span.min(), span.max()]) if len(span) else np.zeros(0)
+    marks: list[Mark] = [Band(edge, 0 * edge - 2.0, 0 * edge + 2.0, label="within 2", tone="quiet")]
+    styles = (("disc", "measured"), ("ring", "accent"), ("cross", "reference"))
+    for name, (shape, tone) in zip(names, styles, strict=False):
+        own = rows[rows["property"] == name]
+        if len(own):
+            marks.append(Points(floats(own, "temperature"), floats(own, "z"), None, symbol_of(name), shape, tone))  # type: ignore[arg-type]
+    return Figure(
+        title=f"Deviation from the reference, {where}",
+        description="Estimate minus reference over temperature, in combined standard errors; about 95 % of the points "
+        "should lie within two.",
+        x=_temperature_axis(results),
+        y=Axis("Deviation", "combined standard errors"),
+        marks=marks,
+    )
+
+
+def histograms(results: Results, where: str) -> Figure:
+    """Distribution of the energy per particle in each rung: neighbours must overlap for the curve to be supported."""
+    marks: list[Mark] = []
+    groups = list(grouped(results.histograms, "temperature"))
+    every = -(-len(groups) // 8)
+    for k, ((temperature,), rows) in enumerate(groups):
+        energy, probability = floats(rows, "energy"), floats(rows, "probability")
+        marks.append(Area(energy, probability, *(("5 3", "accent") if k % 2 else ("", "measured"))))
+        if k % every == 0:
+            peak = int(np.argmax(probability))
+            marks.append(Note(float(energy[peak]), float(probability[peak]), plain(temperature)))
+    unit = unit_text(unit_label("residual_energy", results.units))
+    return Figure(
+        title=f"Energy distributions of neighbouring rungs, {where}",
+        description="Probability density of the residual energy per particle in each rung, with its temperature.",
+        x=Axis("Residual energy u", unit),
+        y=Axis("Probability density", f"1/({unit})" if "/" in unit else f"1/{unit}"),
+        marks=marks,
+    )
+
+
+def structure(results: Results, where: str) -> Iterator[Figure]:
+    """One small figure a rung and pair of species; the coldest rung stays in each as a thin dashed line."""
+    table = results.structure
+    coldest = table[table["temperature"] == table["temperature"].min()]
+    temperature_unit = unit_text(unit_label("temperature", results.units))
+    for (temperature, a, b), rows in grouped(table, "temperature", "species_a", "species_b"):
+        first = coldest[(coldest["species_a"] == a) & (coldest["species_b"] == b)]
+        r, g, error = (floats(rows, column) for column in ("r", "g", "standard_error"))
+        pair = f" {a}-{b}" if a != b or table["species_a"].nunique() > 1 else ""
+        at = f"T = {plain(temperature)} {temperature_unit}"
+        yield Figure(
+            title=f"Pair distribution{pair} at {at}, {where}",
+            description="g(r) with its 95 % band; dashed: the coldest rung.",
+            x=Axis("r", unit_text(str(rows["r_unit"].iloc[0]))),
+            y=Axis(f"g(r){pair}, {at}"),
+            marks=[
+                Band(r, g - 2.0 * error, g + 2.0 * error),
+                Line(r, g),
+                Line(floats(first, "r"), floats(first, "g"), dash="3 3", tone="quiet"),
+            ],
+            width=236,
+            height=168,
+            ticks=4,
+        )
+
+
+def ledger(results: Results, where: str, bath: bool) -> Figure:
+    """The conserved quantity over time in every repeat; the one that ends farthest from its start stands out."""
+    conserved = "K + U_dyn + ledger" if bath else "K + U_dyn"
+    marks: list[Mark] = []
+    groups = list(grouped(results.ledger, "temperature", "density", "repeat"))
+    farthest = max(groups, key=lambda group: abs(group[1]["drift"].iloc[-1]), default=None)
+    for key, rows in groups:
+        if farthest is None or key != farthest[0]:
+            label = "" if marks else "other repeats"
+            marks.append(Line(floats(rows, "time"), floats(rows, "drift"), label, tone="quiet"))
+    if farthest is not None:
+        (temperature, _, repeat), rows = farthest
+        label = f"largest change: T = {plain(temperature)}, repeat {repeat}"
+        marks.append(Line(floats(rows, "time"), floats(rows, "drift"), label))
+    return Figure(
+        title=f"Conserved quantity over time, {where}",
+        description=f"Change of {conserved} per particle since the first sample, one line a repeat; a slope would be a "
+        "drift of the integration.",
+        x=Axis("Time", unit_text(unit_label("time", results.units))),
+        y=Axis(f"Change of {conserved} per particle", unit_text(unit_label("residual_energy", results.units))),
+        marks=marks,
+    )
+
+
+def _rungs(results: Results, name: str) -> Iterator[Mark]:
+    """The rungs' own values, independent of the curve; the headline value where a rung has none of its own."""
+    rows = results.properties[results.properties["property"] == name]
+    own = rows[rows["method"] != "reweighted"]
+    own = own[~own["temperature"].duplicated() | own["headline"].astype(bool)]
+    rest = rows[rows["headline"].astype(bool) & ~rows["temperature"].isin(own["temperature"])]
+    for part in (own, rest):
+        chosen = part.sort_values("headline").drop_duplicates("temperature", keep="last")
+        for trust, shape in _SHAPES.items():
+            these = chosen[chosen["trust"] == trust].sort_values("temperature")
+            if len(these):
+                x, y, error = (floats(these, column) for column in ("temperature", "value", "standard_error"))
+                yield Points(x, y, 2.0 * error, _TRUST[trust], shape)  # type: ignore[arg-type]
+
+
+def _reweighted(results: Results, name: str) -> Iterator[Mark]:
+    rows = results.curve[results.curve["property"] == name].sort_values("temperature")
+    x, y, error = (floats(rows, column) for column in ("temperature", "value", "standard_error"))
+    if np.isfinite(y).any():
+        yield Band(x, y - 2.0 * error, y + 2.0 * error)
+        yield Line(x, y, "reweighted")
+    refused = np.concatenate([[False], ~np.isfinite(y), [False]])
+    edges = np.flatnonzero(np.diff(refused))
+    for k, (start, end) in enumerate(zip(edges[::2], edges[1::2], strict=True)):
+        yield Span(float(x[start]), float(x[end - 1]), "" if k else "refused")
+
+
+def _references(results: Results, name: str) -> Iterator[Mark]:
+    rows = results.reference_curve[results.reference_curve["property"] == name].sort_values("temperature")
+    for k, ((reference,), own) in enumerate(grouped(rows, "reference", sort=False)):
+        x, y, error = (floats(own, column) for column in ("temperature", "value", "uncertainty"))
+        yield Band(x, y - 2.0 * error, y + 2.0 * error, tone="reference")
+        yield Line(x, y, reference, dash=_DASHES[k % len(_DASHES)], tone="reference")
+
+
+def _temperature_axis(results: Results) -> Axis:
+    return Axis("Temperature T", unit_text(unit_label("temperature", results.units)))

@@ -1,0 +1,54 @@
+"""Rows of the result tables: picked and grouped."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import replace
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+import numpy.typing as npt
+
+from canonry.results import Results
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+__all__ = ["at_densities", "floats", "grouped", "headline"]
+
+
+def floats(rows: pd.DataFrame, column: str) -> npt.NDArray[np.float64]:
+    """A column as an array, (n,)."""
+    return rows[column].to_numpy(dtype=float)
+
+
+def grouped(table: pd.DataFrame, *columns: str, sort: bool = True) -> Iterator[tuple[tuple[Any, ...], pd.DataFrame]]:
+    """The values of these columns, as a tuple, with the rows that share them; else in the order of the table."""
+    return ((tuple(key), rows) for key, rows in table.groupby(list(columns), sort=sort))
+
+
+def headline(results: Results) -> pd.DataFrame:
+    """The one row per property and state that counts."""
+    return results.properties[results.properties["headline"].astype(bool)]
+
+
+def at_densities(results: Results, densities: list[float]) -> Results:
+    """The same results with the rows of these densities only."""
+
+    def own(table: pd.DataFrame) -> pd.DataFrame:
+        found = floats(table, "density")[:, np.newaxis]
+        return table.iloc[np.flatnonzero(np.isclose(found, densities, rtol=1e-9, atol=0.0).any(axis=1))]
+
+    return replace(
+        results,
+        properties=own(results.properties),
+        curve=own(results.curve),
+        structure=own(results.structure),
+        verdict=own(results.verdict),
+        summary=own(results.summary),
+        histograms=own(results.histograms),
+        ledger=own(results.ledger),
+        overlap=own(results.overlap),
+        reference_curve=own(results.reference_curve),
+        equilibration=own(results.equilibration),
+    )

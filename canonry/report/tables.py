@@ -1,0 +1,151 @@
+"""The tables of the report as HTML."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Sequence
+from html import escape
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from canonry.notation import as_html, name_of, symbol_of, unit_text
+from canonry.numbers import plain, with_error
+from canonry.report.rows import grouped, headline
+from canonry.results import Results
+from canonry.units import PROPERTIES, unit_label
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+__all__ = ["MARKS", "comparison", "derived", "sampling", "values"]
+
+MARKS = {"ok": "", "caution": "†", "no": "‡"}
+_FIRST = (
+    "heat_capacity",
+    "residual_heat_capacity",
+    "pressure",
+    "residual_energy",
+    "compressibility_factor",
+    "thermal_pressure",
+    "bulk_modulus",
+)
+_OUTCOMES = {"agrees": "✓ agrees", "disagrees": "✗ disagrees", "undecided": "? undecided"}
+_STRIP = 4.0
+
+
+def values(results: Results, *, with_density: bool = False) -> str:
+    """Headline values of the main properties, one row a state; residual heat capacity only without a full one."""
+    known = set(results.properties["property"])
+    spare = "residual_heat_capacity" if "heat_capacity" in known else ""
+    names = [name for name in _FIRST if name in known and name != spare]
+    return _states(results, names, with_density)
+
+
+def derived(results: Results, *, with_density: bool = False) -> str:
+    """Headline values of every other property; empty if there is none."""
+    known = set(results.properties["property"])
+    names = [name for name in PROPERTIES if name in known and name not in _FIRST]
+    if "heat_capacity" in known and "residual_heat_capacity" in known:
+        names.insert(0, "residual_heat_capacity")
+    return _states(results, names, with_density) if names else ""
+
+
+def comparison(results: Results) -> str:
+    """Every compared value beside its reference, with a strip that shows the deviation; empty if none."""
+    rows = results.verdict[results.verdict["temperature"].notna()]
+    if rows.empty:
+        return ""
+    several = rows["density"].nunique() > 1
+    head = [*_state_heads(results, several), "this study", "reference", "deviation, in combined standard errors", ""]
+    body: list[str] = []
+    for (reference, name), own in grouped(rows, "reference", "property", sort=False):
+        unit = _unit(results, name)
+        title = f"{name_of(name).capitalize()} {symbol_of(name)}{f' ({unit})' if unit else ''}, {reference}"
+        body.append(f'<tr class="group"><th colspan="{len(head)}" scope="rowgroup">{as_html(title)}</th></tr>')
+        body += [_row(_compared(row, several)) for _, row in own.sort_values(["density", "temperature"]).iterrows()]
+    return _table(head, body)
+
+
+def sampling(results: Results) -> str:
+    """One row a rung: repeats, samples, cut, effective samples, overlap with the next warmer rung."""
+    several = results.equilibration["density"].nunique() > 1
+    counts = ["repeats", "samples", "cut as equilibration, at most", "effective samples", "overlap with next rung"]
+    body = []
+    for (density, temperature), rows in grouped(results.equilibration, "density", "temperature"):
+        cells = [plain(temperature), *([plain(density)] if several else [])]
+        cells += [str(rows["repeat"].nunique()), f"{int(rows['samples'].sum())}", f"{int(rows['cut'].max())}"]
+        cells += [f"{rows['effective_samples'].sum():.0f}", _next_overlap(results, density, temperature)]
+        body.append(_row(cells))
+    return _table([*_state_heads(results, several), *counts], body)
+
+
+def _states(results: Results, names: Sequence[str], with_density: bool) -> str:
+    heads = [f"{symbol_of(name)}|{_unit(results, name)}" for name in names]
+    body = []
+    for (density, temperature), state in grouped(headline(results), "density", "temperature"):
+        cells = [plain(temperature), *([plain(density)] if with_density else [])]
+        found = {row["property"]: row for _, row in state.iterrows()}
+        body.append(_row([*cells, *(_estimate(found[name]) if name in found else "" for name in names)]))
+    return _table([*_state_heads(results, with_density), *heads], body)
+
+
+def _state_heads(results: Results, with_density: bool) -> list[str]:
+    density = [f"density|{_unit(results, 'density')}"] if with_density else []
+    return [f"T|{_unit(results, 'temperature')}", *density]
+
+
+def _estimate(row: pd.Series) -> str:
+    return f"{_typeset(with_error(row['value'], row['standard_error']))}{MARKS[row['trust']]}"
+
+
+def _compared(row: pd.Series, several: bool) -> list[str]:
+    return [
+        plain(row["temperature"]),
+        *([plain(row["density"])] if several else []),
+        _typeset(with_error(row["value"], row["standard_error"])),
+        _typeset(with_error(row["reference_value"], row["reference_uncertainty"])),
+        _deviation(float(row["z"])),
+        _OUTCOMES[row["outcome"]],
+    ]
+
+
+def _next_overlap(results: Results, density: float, temperature: float) -> str:
+    table = results.overlap
+    own = table[(table["density"] == density) & (table["temperature_a"] == temperature)]
+    own = own[own["temperature_b"] > temperature].sort_values("temperature_b")
+    return f"{own['overlap'].iloc[0]:.2f}" if len(own) else "-"
+
+
+def _deviation(z: float) -> str:
+    """The deviation beside a small scale from -4 to 4: thick within two, the dot hollow beyond the ends."""
+    if not np.isfinite(z):
+        return "-"
+    at = 30.0 + 28.0 * max(-_STRIP, min(_STRIP, z)) / _STRIP
+    reach = "beyond" if abs(z) > _STRIP else "inside"
+    return (
+        '<svg class="strip" viewBox="0 0 60 12" aria-hidden="true"><path class="axis" d="M2,6h56"/>'
+        f'<path class="within" d="M16,6h28"/><circle class="{reach}" cx="{at:.1f}" cy="6" r="3"/></svg>'
+        f"{_typeset(f'{z:+.1f}')}"
+    )
+
+
+def _typeset(number: str) -> str:
+    return escape(number).replace("-", "−") if number != "-" else number
+
+
+def _row(cells: Iterable[str]) -> str:
+    return f"<tr>{''.join(f'<td>{cell}</td>' for cell in cells)}</tr>"
+
+
+def _table(heads: Sequence[str], body: Sequence[str]) -> str:
+    titles = "".join(f'<th scope="col">{_head(head)}</th>' for head in heads)
+    return f'<div class="scroll"><table><thead><tr>{titles}</tr></thead><tbody>{"".join(body)}</tbody></table></div>'
+
+
+def _head(head: str) -> str:
+    name, _, unit = head.partition("|")
+    return f"{as_html(name)}<small>{as_html(unit)}</small>" if unit else as_html(name)
+
+
+def _unit(results: Results, quantity: str) -> str:
+    return unit_text(unit_label(quantity, results.units))
