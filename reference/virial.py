@@ -27,17 +27,18 @@ def pair_second_virial(pair_energy: Callable[[float], float], *, temperature: fl
         raise OutOfRange(f"temperature and cutoff must be positive, found {temperature!r} and {cutoff!r}")
 
     def integrand(r: float) -> float:
-        return -2.0 * math.pi * math.expm1(-float(pair_energy(r)) / temperature) * r * r
+        return -2.0 * math.pi * float(np.expm1(-float(pair_energy(r)) / temperature)) * r * r
 
     edges = [0.0, *(edge for edge in (0.5, 0.9, 1.0, 1.2, 1.5, 2.5, 5.0) if edge < cutoff), cutoff]
     total = error = 0.0
-    for start, end in pairwise(edges):
-        part, part_error, *_ = quad(integrand, start, end, epsabs=1e-13, epsrel=1e-12, limit=400, full_output=1)
-        total, error = total + part, error + part_error
-    if not error <= max(1e-11, 1e-10 * abs(total)):
+    with np.errstate(over="ignore", invalid="ignore"):
+        for start, end in pairwise(edges):
+            part, part_error, *_ = quad(integrand, start, end, epsabs=1e-13, epsrel=1e-12, limit=400, full_output=1)
+            total, error = total + part, error + part_error
+    if not (math.isfinite(total) and error <= max(1e-11, 1e-10 * abs(total))):
         raise NotConverged(
             f"second virial coefficient at temperature {temperature} is uncertain by {error:.1e}; "
-            "the pair energy needs to be smooth up to its cutoff and to fall faster than r^-3"
+            "the pair energy must be bounded from below, smooth up to its cutoff and fall faster than r^-3"
         )
     return total
 
