@@ -1,1 +1,23 @@
 """Assembles: study file, command line, comparison, report."""
+
+from __future__ import annotations
+
+from importlib.util import find_spec
+from pathlib import Path
+
+__all__: list[str] = []
+
+
+def _refuse_strangers() -> None:
+    """ImportError when a sampler, estimators or reference other than the one beside this package would be imported."""
+    home = Path(__file__).resolve().parent.parent
+    for name in ("sampler", "estimators", "reference"):
+        spec = find_spec(name)
+        if spec is None:
+            raise ImportError(f"canonry is installed without its package {name}: install it again")
+        found = Path(spec.origin or next(iter(spec.submodule_search_locations or [name]))).resolve()
+        if found != home / name / "__init__.py":
+            raise ImportError(f"{found} stands in the way of canonry's own package {name}: rename it or move it away")
+
+
+_refuse_strangers()

@@ -59,14 +59,12 @@ class Table:
 
     def read(self, key: str, reader: Reader[T], default: T | EllipsisType = ...) -> T:
         """The value under a key as the reader understands it; without a default the key must be there."""
-        if key in self.content:
-            try:
-                return reader(self.content[key])
-            except NotAccepted as problem:
-                raise self.refusal(key, str(problem)) from None
-        if isinstance(default, EllipsisType):
-            raise self.refusal(key, "missing, and it has no default")
-        return default
+        if key not in self.content and not isinstance(default, EllipsisType):
+            return default
+        try:
+            return reader(self.content.get(key))
+        except NotAccepted as problem:
+            raise self.refusal(key, str(problem) if key in self.content else f"missing; {problem}") from None
 
     def _dotted(self, key: str) -> str:
         plain = key if re.fullmatch(r"[\w-]+", key) else shown(key)

@@ -63,7 +63,7 @@ def from_text(text: str, quantity: str, scale: Scale | None) -> float:
             target = _registry().Unit(accepted)
             if found.check(target.dimensionality):
                 return float(found.to(target).magnitude) * factor
-    except PintError:
+    except (PintError, ArithmeticError):
         raise NotAccepted(f"'{unit}' is not a unit known here; {wanted}") from None
     raise NotAccepted(f"'{unit}' is not a unit of {name}; {wanted}")
 

@@ -4,12 +4,11 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Literal, get_args
 
-from canonry import keys
-from canonry.keys import Table
+from canonry.keys import Reader, Table, choice, line, one_or_more, open_table, parameter, quantity, whole
 from canonry.quantities import NotAccepted, percent, rounded
 from canonry.units import PROPERTIES, Kind, Scale
 from canonry.writing import study_text
@@ -27,6 +26,7 @@ COMPARED = (
     "thermal_pressure",
     "bulk_modulus",
 )
+_SMALLEST_CUTOFF = 1.0  # sigma
 _LIQUID = 0.5  # sigma^-3: at and above this density the defaults are those of a liquid
 
 
@@ -114,21 +114,22 @@ class Study:
 def load(path: str | Path) -> Study:
     """The study a file asks for. Raises UserError, which names the file, the key and what is accepted."""
     path = Path(path)
-    top = keys.open_table(path).only(("title", "fluid", "state", "sampling", "compare"), later=("until",))
+    top = open_table(path).only(("title", "fluid", "state", "sampling", "compare"), later=("until",))
     fluid = top.table("fluid").only(
         ("potential", "epsilon", "sigma", "mass", "cutoff", "truncation", "ideal_heat_capacity")
     )
     scale = _scale(fluid)
     states = _states(top.table("state"), scale)
+    sampled = _fluid(fluid, scale, states)
     return Study(
-        title=top.read("title", keys.line, "".join(filter(str.isprintable, path.stem))[:200].strip() or "study"),
+        title=top.read("title", line, "".join(filter(str.isprintable, path.stem))[:200].strip() or "study"),
         units=_kind(top.table("state")),
-        fluid=_fluid(fluid, scale, states),
+        fluid=sampled,
         scale=scale,
         ideal_heat_capacity=_ideal_heat_capacity(fluid, scale),
         states=states,
         sampling=_sampling(top.table("sampling"), scale, states),
-        compare=_compare(top.table("compare"), scale),
+        compare=_compare(top.table("compare"), scale, sampled),
     )
 
 
@@ -142,35 +143,35 @@ def _scale(table: Table) -> Scale | None:
             reason = "missing; epsilon, sigma and mass are given all three, or none to work in reduced units only"
             raise table.refusal(name, reason)
     return Scale(
-        epsilon=table.read("epsilon", keys.parameter("epsilon", 1e-24, 1e-17)),
-        sigma=table.read("sigma", keys.parameter("sigma", 1e-11, 1e-6)),
-        mass=table.read("mass", keys.parameter("mass", 1e-28, 1e-15)),
+        epsilon=table.read("epsilon", parameter("epsilon", 1e-24, 1e-17)),
+        sigma=table.read("sigma", parameter("sigma", 1e-11, 1e-6)),
+        mass=table.read("mass", parameter("mass", 1e-28, 1e-15)),
     )
 
 
 def _states(table: Table, scale: Scale | None) -> tuple[State, ...]:
     table.only(("density", "temperatures", "points", "particles"))
-    particles = table.read("particles", keys.whole(2, 10_000_000), 500)
+    particles = table.read("particles", whole(2, 10_000_000), 500)
     if "points" in table:
         for name in ("density", "temperatures"):
             if name in table:
                 raise table.refusal(name, "points are given too; what is needed is either, not both")
-        points = table.read("points", keys.one_or_more(_point(scale)))
+        points = table.read("points", one_or_more(_point(scale)))
     else:
-        densities = table.read("density", keys.one_or_more(_density(scale)))
+        densities = table.read("density", one_or_more(_density(scale)))
         points = tuple((temperature, density) for density in densities for temperature in _temperatures(table, scale))
     return tuple(State(*point, particles) for point in sorted(points, key=lambda point: (point[1], point[0])))
 
 
-def _temperature(scale: Scale | None) -> keys.Reader[float]:
-    return keys.quantity("temperature", 0.01, 100.0, scale)
+def _temperature(scale: Scale | None) -> Reader[float]:
+    return quantity("temperature", 0.01, 100.0, scale)
 
 
-def _density(scale: Scale | None) -> keys.Reader[float]:
-    return keys.quantity("density", 1e-6, 2.0, scale)
+def _density(scale: Scale | None) -> Reader[float]:
+    return quantity("density", 1e-6, 2.0, scale)
 
 
-def _point(scale: Scale | None) -> keys.Reader[tuple[float, float]]:
+def _point(scale: Scale | None) -> Reader[tuple[float, float]]:
     def read(value: object) -> tuple[float, float]:
         if not (isinstance(value, list) and len(value) == 2):
             raise NotAccepted("what is needed is a pair [temperature, density]")
@@ -182,14 +183,15 @@ def _point(scale: Scale | None) -> keys.Reader[tuple[float, float]]:
 def _temperatures(table: Table, scale: Scale | None) -> tuple[float, ...]:
     """A list as it stands, or from, to and rungs: evenly spaced in 1/T, so that neighbours overlap about equally."""
     if not isinstance(table.content.get("temperatures"), dict):
-        return table.read("temperatures", keys.one_or_more(_temperature(scale)))
+        return table.read("temperatures", one_or_more(_temperature(scale)))
     ladder = table.table("temperatures").only(("from", "to", "rungs"), later=("overlap",))
     first, last = (ladder.read(name, _temperature(scale)) for name in ("from", "to"))
-    rungs = ladder.read("rungs", keys.whole(2, 1000))
-    if first == last:
-        raise ladder.refusal("to", "the same as from; what is needed are two different temperatures")
-    step = (1.0 / last - 1.0 / first) / (rungs - 1)
-    return (first, *(rounded(1.0 / (1.0 / first + k * step)) for k in range(1, rungs - 1)), last)
+    rungs = ladder.read("rungs", whole(2, 1000))
+    shares = (k / (rungs - 1) for k in range(rungs))
+    temperatures = tuple(rounded(1.0 / ((1.0 - share) / first + share / last)) for share in shares)
+    if len(set(temperatures)) < rungs:
+        raise ladder.refusal("to", "too close to from; what is needed are different temperatures for all rungs")
+    return temperatures
 
 
 def _kind(table: Table) -> Kind:
@@ -206,45 +208,55 @@ def _is_liquid(states: tuple[State, ...]) -> bool:
 
 
 def _fluid(table: Table, scale: Scale | None, states: tuple[State, ...]) -> Fluid:
-    potential = table.read("potential", keys.choice(("lennard-jones",)))
-    cutoff = table.read("cutoff", keys.quantity("length", 1.0, 100.0, scale), 3.0 if _is_liquid(states) else 5.0)
-    truncation: Truncation = table.read("truncation", keys.choice(get_args(Truncation)), "corrected")
-    smallest = min(states, key=lambda state: state.box)
-    if cutoff > smallest.box / 2:
-        largest = math.floor(smallest.box / 2 * 1000) / 1000
-        particles = math.ceil((2 * cutoff) ** 3 * smallest.density)
-        raise table.refusal(
-            "cutoff",
-            f"the cutoff {'' if 'cutoff' in table else 'by default '}{cutoff:g} sigma is beyond half the box of "
-            f"{smallest.particles} particles at density {smallest.density:g} sigma^-3; what is accepted is a cutoff of "
-            f"at most {largest:g} sigma, or state.particles of at least {particles}",
-        )
+    potential = table.read("potential", choice(("lennard-jones",)))
+    cutoff = table.read(
+        "cutoff", quantity("length", _SMALLEST_CUTOFF, 100.0, scale), 3.0 if _is_liquid(states) else 5.0
+    )
+    truncation: Truncation = table.read("truncation", choice(get_args(Truncation)), "corrected")
+    _check_box(table, cutoff, states)
     return Fluid(cutoff=cutoff, truncation=truncation, potential=potential)
+
+
+def _check_box(table: Table, cutoff: float, states: tuple[State, ...]) -> None:
+    tightest = min(states, key=lambda state: state.box)
+    if cutoff <= tightest.box / 2:
+        return
+    enough = math.ceil((2 * cutoff) ** 3 * tightest.density)
+    while replace(tightest, particles=enough).box / 2 < cutoff:
+        enough += 1
+    largest = math.floor(tightest.box / 2 * 1000) / 1000
+    smaller = f"a cutoff of at most {largest:g} sigma, or " if largest >= _SMALLEST_CUTOFF else ""
+    raise table.refusal(
+        "cutoff",
+        f"the {'' if 'cutoff' in table else 'default '}cutoff {cutoff:g} sigma is beyond half the box of "
+        f"{tightest.particles} particles at density {tightest.density:g} sigma^-3; what is accepted is {smaller}"
+        f"state.particles of at least {enough}",
+    )
 
 
 def _ideal_heat_capacity(table: Table, scale: Scale | None) -> float | None:
     if table.content.get("ideal_heat_capacity") == "unknown":
         return None
-    return table.read("ideal_heat_capacity", keys.quantity("heat_capacity", 1.5, 1000.0, scale), 1.5)
+    return table.read("ideal_heat_capacity", quantity("heat_capacity", 1.5, 1000.0, scale), 1.5)
 
 
 def _sampling(table: Table, scale: Scale | None, states: tuple[State, ...]) -> Sampling:
     table.only(tuple(Sampling.__dataclass_fields__))
-    scheme: Scheme = table.read("scheme", keys.choice(get_args(Scheme), later=("metropolised",)), "baoab")
+    scheme: Scheme = table.read("scheme", choice(get_args(Scheme), later=("metropolised",)), "baoab")
     if scheme == "velocity-verlet" and "friction" in table:
         raise table.refusal("friction", 'the scheme "velocity-verlet" has no bath; leave the key out, or take "baoab"')
-    friction = table.read("friction", keys.quantity("friction", 1e-3, 1e3, scale), 2.0 if _is_liquid(states) else 1.0)
-    record_every = table.read("record_every", keys.whole(1, 1_000_000), 10)
+    friction = table.read("friction", quantity("friction", 1e-3, 1e3, scale), 2.0 if _is_liquid(states) else 1.0)
+    record_every = table.read("record_every", whole(1, 1_000_000), 10)
     sampling = Sampling(
-        seed=table.read("seed", keys.whole(0, 2**32 - 1), 1),
-        repeats=table.read("repeats", keys.whole(1, 10_000), 1),
-        time_step=table.read("time_step", keys.quantity("time", 1e-6, 0.1, scale), 0.005),
+        seed=table.read("seed", whole(0, 2**32 - 1), 1),
+        repeats=table.read("repeats", whole(1, 10_000), 1),
+        time_step=table.read("time_step", quantity("time", 1e-6, 0.1, scale), 0.005),
         friction=0.0 if scheme == "velocity-verlet" else friction,
         scheme=scheme,
-        equilibration=table.read("equilibration", keys.whole(0, 10**12), 20_000),
-        steps=table.read("steps", keys.whole(1, 10**12), 200_000),
+        equilibration=table.read("equilibration", whole(0, 10**12), 20_000),
+        steps=table.read("steps", whole(1, 10**12), 200_000),
         record_every=record_every,
-        frame_every=table.read("frame_every", keys.whole(1, 1_000_000_000), record_every * -(-500 // record_every)),
+        frame_every=table.read("frame_every", whole(1, 1_000_000_000), record_every * -(-500 // record_every)),
     )
     for name in ("steps", "frame_every"):
         if getattr(sampling, name) % record_every:
@@ -252,17 +264,26 @@ def _sampling(table: Table, scale: Scale | None, states: tuple[State, ...]) -> S
     return sampling
 
 
-def _compare(table: Table, scale: Scale | None) -> Compare:
+def _compare(table: Table, scale: Scale | None, fluid: Fluid) -> Compare:
+    from reference import find, names
+
     table.only(("against", "tolerance"))
+    against = () if table.content.get("against") == [] else table.read("against", one_or_more(choice(names())), ())
+    for name in against:
+        if not find(name).same_model(fluid.truncation, fluid.cutoff):
+            cut = f'truncation "{fluid.truncation}" and cutoff {fluid.cutoff:g} sigma'
+            fitting = [f'"{other}"' for other in names() if find(other).same_model(fluid.truncation, fluid.cutoff)]
+            reason = f"{name} describes another fluid than the one of {cut}; what is accepted here is "
+            raise table.refusal("against", reason + (" or ".join(fitting) if fitting else "an empty list"))
     tolerance = table.table("tolerance").only(COMPARED, later=[name for name in PROPERTIES if name not in COMPARED])
     return Compare(
-        against=() if table.content.get("against") == [] else table.read("against", keys.one_or_more(keys.line), ()),
+        against=against,
         tolerance={name: tolerance.read(name, _tolerance(name, scale)) for name in tolerance.content},
     )
 
 
-def _tolerance(name: str, scale: Scale | None) -> keys.Reader[Tolerance]:
-    absolute = keys.quantity(name, 1e-12, 1e6, scale)
+def _tolerance(name: str, scale: Scale | None) -> Reader[Tolerance]:
+    absolute = quantity(name, 1e-12, 1e6, scale)
 
     def read(value: object) -> Tolerance:
         if isinstance(value, str) and value.strip().endswith("%"):
