@@ -7,6 +7,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Literal
 
+import numpy as np
 import numpy.typing as npt
 
 from reference import coexistence as equilibrium
@@ -58,7 +59,8 @@ class Reference:
             return reason
         if self.density_maximum is not None and density > self.density_maximum:
             return f"{self.name} holds up to density {self.density_maximum:g}, found {density:g}"
-        pressure = density * temperature * (1.0 + float(self.derivatives(temperature, density)[0, 1]))
+        with np.errstate(over="ignore", invalid="ignore"):
+            pressure = density * temperature * (1.0 + float(self.derivatives(temperature, density)[0, 1]))
         if self.pressure_maximum is not None and not pressure <= self.pressure_maximum:
             return (
                 f"{self.name} holds up to pressure {self.pressure_maximum:g}, and temperature {temperature:g} at "

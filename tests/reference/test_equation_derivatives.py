@@ -130,3 +130,16 @@ def test_derivatives_broadcast_and_leave_higher_orders_blank(name: str) -> None:
     empty = reference.derivatives(1.1, 0.0)
     for m, n in ORDERS:
         assert empty[m, n] == 0.0
+
+
+@pytest.mark.parametrize(("name", "curvature"), [("thol-2016", 1e-4), ("thol-2015", 1e-6)])
+def test_isotherm_is_flat_at_the_published_critical_point(name: str, curvature: float) -> None:
+    """dP/d rho = d2P/d rho2 = 0 was imposed in both fits, so eight printed digits leave 1e-7 in the slope.
+
+    A wrong digit in nearly any coefficient shows here; the bound on the curvature is what the printed digits leave.
+    """
+    reference = find(name)
+    a = reference.derivatives(reference.critical_temperature, reference.critical_density + 1j * STEP)
+    slope = 1.0 + 2.0 * a[0, 1] + a[0, 2]
+    assert abs(slope.real) < 1e-7
+    assert abs(slope.imag / STEP) < curvature

@@ -239,6 +239,11 @@ def test_the_range_includes_its_ends_and_metastable_states(state: tuple[float, f
     assert find("thol-2016").covers(*state) == ""
 
 
+def test_an_absurd_density_is_refused_without_a_warning() -> None:
+    with np.errstate(all="raise"):
+        assert "holds up to pressure 65" in find("thol-2016").covers(1.0, 1e300)
+
+
 def test_a_property_it_does_not_give_is_refused() -> None:
     with pytest.raises(UnknownProperty, match="thol-2016 does not give 'viscosity'; it gives residual_energy, "):
         find("thol-2016").value("viscosity", temperature=1.0, density=0.8)
