@@ -44,6 +44,7 @@ class Estimate:
     value: float
     influence: Mapping[Chain, Floats] = field(repr=False)
     method: str = "average"
+    __array_ufunc__ = None  # numpy numbers leave the arithmetic to us
 
     @cached_property
     def _states(self) -> dict[State, list[Floats]]:
@@ -215,7 +216,7 @@ def _linear(value: float, parts: Sequence[tuple[float, Estimate]], method: str) 
         for chain, values in estimate.influence.items():
             share = weight * values
             influence[chain] = _sum_on_coarser(influence[chain], share) if chain in influence else share
-    return Estimate(value, influence, method)
+    return Estimate(float(value), influence, method)
 
 
 def _sum_on_coarser(first: Floats, second: Floats) -> Floats:

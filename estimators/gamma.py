@@ -99,8 +99,8 @@ def scatter(repeats: Sequence[Floats], *, window: int | None = None) -> Scatter:
     total = gamma0 + 2.0 * float(np.sum(covariances[1 : window + 1]))
     if total <= 0.0:
         total, window = gamma0, 0
-    tau = 0.5 * total / gamma0
     total *= 1.0 + (2 * window + 1) / samples
+    tau = 0.5 * total / (gamma0 * (1.0 + 1.0 / samples))
     return Scatter(samples * total, 2.0 * math.sqrt((window + 0.5) / samples), tau, window, samples, longest)
 
 
