@@ -18,10 +18,11 @@ Floats = npt.NDArray[np.float64]
 
 @dataclass(frozen=True)
 class Axis:
-    """What an axis shows and in which unit ('' if none)."""
+    """What an axis shows, in which unit ('' if none), and the values it must reach in any case."""
 
     name: str
     unit: str = ""
+    reach: tuple[float, ...] = ()
 
 
 @dataclass(frozen=True)

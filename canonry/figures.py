@@ -47,6 +47,7 @@ class Line:
     label: str = ""
     dash: str = ""
     tone: Tone = "measured"
+    thin: bool = False
 
 
 @dataclass(frozen=True)
@@ -109,8 +110,8 @@ def draw(figure: Figure) -> str:
     """The figure as one SVG element, its texts escaped; axes span all finite data of the marks."""
     legend, rows = _legend(figure)
     left, right, top, bottom = 50, figure.width - 10, 26 + rows * _ROW, figure.height - 40
-    x = scale(_extent(figure.marks, 0), left, right, figure.ticks, margin=0.03)
-    y = scale(_extent(figure.marks, 1), bottom, top, max(2, figure.ticks * (bottom - top) // 250), margin=0.06)
+    x = scale(_extent(figure, 0), left, right, figure.ticks, margin=0.03)
+    y = scale(_extent(figure, 1), bottom, top, max(2, figure.ticks * (bottom - top) // 250), margin=0.06)
     order = (Span, Band, Area, Line, Points, Note)
     body = [_draw_mark(mark, x, y) for kind in order for mark in figure.marks if isinstance(mark, kind)]
     return "\n".join(
@@ -127,8 +128,9 @@ def draw(figure: Figure) -> str:
     )
 
 
-def _extent(marks: Sequence[Mark], axis: int) -> tuple[float, float]:
-    values = np.concatenate([np.zeros(0), *(np.ravel(part) for mark in marks for part in _reach(mark)[axis])])
+def _extent(figure: Figure, axis: int) -> tuple[float, float]:
+    parts = [part for mark in figure.marks for part in _reach(mark)[axis]]
+    values = np.concatenate([np.array((figure.x, figure.y)[axis].reach, dtype=float), *map(np.ravel, parts)])
     values = values[np.isfinite(values)]
     return (float(values.min()), float(values.max())) if len(values) else (0.0, 1.0)
 
@@ -168,7 +170,8 @@ def _draw_mark(mark: Mark, x: Scale, y: Scale) -> str:
         case Line():
             keep = _extremes(mark.y)
             path = _path(x(mark.x[keep]), y(mark.y[keep]))
-            return f'<path class="line {mark.tone}"{_dash(mark.dash)} d="{path}"/>'
+            weight = " thin" if mark.thin else ""
+            return f'<path class="line {mark.tone}{weight}"{_dash(mark.dash)} d="{path}"/>'
         case Band():
             keep = _extremes(mark.high)
             path = _ring(x(mark.x[keep]), y(mark.low[keep]), y(mark.high[keep]))

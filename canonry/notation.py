@@ -25,6 +25,8 @@ _PROPERTIES = {
 }
 _GREEK = {"epsilon": "ε", "sigma": "σ", "angstrom": "Å"}
 _SUPERSCRIPT = str.maketrans("-0123456789", "⁻⁰¹²³⁴⁵⁶⁷⁸⁹")
+_PLAIN = {power: digit for digit, power in zip("−0123456789", _SUPERSCRIPT.values(), strict=True)}
+_POWER = re.compile("[⁻⁰¹²³⁴⁵⁶⁷⁸⁹]+")
 _INDEX = re.compile(r"(?<![A-Za-z0-9])([A-Za-zγμ])_((?:B|T|V|v|p|JT|dyn|res)(?:,res)?)(?![A-Za-z])")
 
 
@@ -47,8 +49,9 @@ def unit_text(unit: str) -> str:
 
 
 def as_html(text: str) -> str:
-    """Text escaped for a page, symbols such as k_B and c_v with their index set low."""
-    return _INDEX.sub(r"\1<sub>\2</sub>", escape(text))
+    """Text escaped for a page, symbols such as k_B and c_v with their index set low, powers set high."""
+    low = _INDEX.sub(r"\1<sub>\2</sub>", escape(text))
+    return _POWER.sub(lambda power: f"<sup>{power[0].translate(_PLAIN)}</sup>", low)
 
 
 def as_svg(text: str) -> str:

@@ -30,6 +30,10 @@ _UNCERTAINTY = (
     "method) and cover chance only, not the limits of the model. The stated accuracy of a reference is read as 95 %, "
     "so half of it enters a deviation as its standard uncertainty."
 )
+_CURVES = (
+    "Points are the rungs' own values, which the curve does not pass through by construction. A reference is dashed; "
+    "where no curve is drawn, too few samples support it."
+)
 
 
 def write(results: Results, path: Path) -> None:
@@ -102,8 +106,9 @@ def _set(number: int, where: str, results: Results) -> Iterator[str]:
         figures = [plots.curves(results, where, name) for name in names]
         figures += [plots.deviations(results, where, names)] if len(results.verdict) else []
         yield _plots(figures)
+        yield f'<p class="fine">{_CURVES}</p>'
     yield from _tabled("Further properties", tables.derived(results, with_density=several))
-    yield from _tabled("Comparison, value by value", tables.comparison(results), "comparison")
+    yield from _tabled("Comparison, value by value", "".join(tables.comparison(results)), "plots comparison")
     yield from _sampled(where, results, isochore)
     yield "</section>"
 

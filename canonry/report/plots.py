@@ -31,8 +31,7 @@ def curves(results: Results, where: str, name: str) -> Figure:
     """
     return Figure(
         title=f"{name_of(name).capitalize()} over temperature, {where}",
-        description=f"Sampled values of {name_of(name)} with 95 % bars, the curve reweighted from all rungs with its "
-        "95 % band, and the reference where there is one.",
+        description=f"{name_of(name).capitalize()} of each rung with reweighted curve and reference, where given.",
         x=_temperature_axis(results),
         y=Axis(f"{name_of(name).capitalize()} {symbol_of(name)}", unit_text(unit_label(name, results.units))),
         marks=[*_references(results, name), *_reweighted(results, name), *_rungs(results, name)],
@@ -56,7 +55,7 @@ def deviations(results: Results, where: str, names: list[str]) -> Figure:
         description="Estimate minus reference over temperature, in combined standard errors; about 95 % of the points "
         "should lie within two.",
         x=_temperature_axis(results),
-        y=Axis("Deviation", "combined standard errors"),
+        y=Axis("Deviation", "combined standard errors", reach=(-3.5, 3.5)),
         marks=marks,
     )
 
@@ -71,7 +70,7 @@ def histograms(results: Results, where: str) -> Figure:
         marks.append(Area(energy, probability, *(("5 3", "accent") if k % 2 else ("", "measured"))))
         if k % every == 0:
             peak = int(np.argmax(probability))
-            marks.append(Note(float(energy[peak]), float(probability[peak]), plain(temperature)))
+            marks.append(Note(float(energy[peak]), float(probability[peak]), plain(temperature, 4)))
     unit = unit_text(unit_label("residual_energy", results.units))
     return Figure(
         title=f"Energy distributions of neighbouring rungs, {where}",
@@ -85,6 +84,7 @@ def histograms(results: Results, where: str) -> Figure:
 def structure(results: Results, where: str) -> Iterator[Figure]:
     """One small figure a rung and pair of species; the coldest rung stays in each as a thin dashed line."""
     table = results.structure
+    highest = float(table["g"].max())
     coldest = table[table["temperature"] == table["temperature"].min()]
     temperature_unit = unit_text(unit_label("temperature", results.units))
     for (temperature, a, b), rows in grouped(table, "temperature", "species_a", "species_b"):
@@ -96,11 +96,11 @@ def structure(results: Results, where: str) -> Iterator[Figure]:
             title=f"Pair distribution{pair} at {at}, {where}",
             description="g(r) with its 95 % band; dashed: the coldest rung.",
             x=Axis("r", unit_text(str(rows["r_unit"].iloc[0]))),
-            y=Axis(f"g(r){pair}, {at}"),
+            y=Axis(f"g(r){pair}, {at}", reach=(0.0, highest)),
             marks=[
                 Band(r, g - 2.0 * error, g + 2.0 * error),
                 Line(r, g),
-                Line(floats(first, "r"), floats(first, "g"), dash="3 3", tone="quiet"),
+                Line(floats(first, "r"), floats(first, "g"), dash="3 3", tone="quiet", thin=True),
             ],
             width=236,
             height=168,
@@ -117,11 +117,11 @@ def ledger(results: Results, where: str, bath: bool) -> Figure:
     for key, rows in groups:
         if farthest is None or key != farthest[0]:
             label = "" if marks else "other repeats"
-            marks.append(Line(floats(rows, "time"), floats(rows, "drift"), label, tone="quiet"))
+            marks.append(Line(floats(rows, "time"), floats(rows, "drift"), label, tone="quiet", thin=True))
     if farthest is not None:
         (temperature, _, repeat), rows = farthest
         label = f"largest change: T = {plain(temperature)}, repeat {repeat}"
-        marks.append(Line(floats(rows, "time"), floats(rows, "drift"), label))
+        marks.append(Line(floats(rows, "time"), floats(rows, "drift"), label, thin=True))
     return Figure(
         title=f"Conserved quantity over time, {where}",
         description=f"Change of {conserved} per particle since the first sample, one line a repeat; a slope would be a "

@@ -32,14 +32,14 @@ nav ul{list-style:none;padding:0;display:flex;flex-wrap:wrap;gap:.2rem 1.3rem;ma
 .verdict .word{font-size:1.5rem;font-weight:600;margin:.1rem 0 .5rem;line-height:1.25}
 .scroll{overflow-x:auto;margin:.8rem 0;-webkit-overflow-scrolling:touch}
 table{border-collapse:collapse;font-size:.86rem;font-variant-numeric:tabular-nums lining-nums}
-th,td{padding:.28rem 1.1rem .28rem 0;text-align:right;white-space:nowrap}
+th,td{padding:.26rem 1.3rem .26rem 0;text-align:right;white-space:nowrap}
 th:last-child,td:last-child{padding-right:.2rem}
 thead th{vertical-align:bottom;border-bottom:1.5px solid var(--ink);font-weight:600}
 thead small{display:block;font-weight:400;color:var(--soft);font-size:.92em}
 tbody tr{border-bottom:1px solid var(--rule)}
-.group th{text-align:left;padding-top:1rem;font-weight:600;white-space:normal}
+caption{text-align:left;font-weight:600;padding:.2rem 0}
 .wide thead th{white-space:normal;max-width:9rem}
-.comparison td:last-child,.comparison thead th:last-child{text-align:left}
+.comparison td:last-child{text-align:left}.comparison .scroll{margin:0}
 .strip{width:60px;height:12px;vertical-align:-1px;margin-right:.6rem}
 .strip .axis{stroke:var(--quiet);stroke-width:1}.strip .within{stroke:var(--rule);stroke-width:6}
 .strip circle{fill:var(--measured);stroke:var(--measured);stroke-width:1.4}
@@ -56,7 +56,7 @@ svg .note{font-size:11px;fill:var(--ink);paint-order:stroke;stroke:var(--paper);
 .grid{stroke:var(--rule);stroke-width:.8;fill:none}
 .frame{stroke:var(--ink);stroke-width:1;fill:none}
 .line{fill:none;stroke-width:1.7;stroke-linejoin:round;stroke-linecap:round}
-.line.quiet{stroke-width:1.1}
+.line.thin{stroke-width:.9}
 .band{fill-opacity:.17;stroke:none}
 .bar{stroke-width:1.4;fill:none}
 .span{fill:var(--wash);stroke:var(--quiet);stroke-width:.8;stroke-dasharray:2 2}
@@ -81,6 +81,5 @@ h2{break-after:avoid;page-break-after:avoid;margin-top:2rem}h3{break-after:avoid
 .plots{grid-template-columns:1fr 1fr;gap:1rem}.small.plots{grid-template-columns:repeat(4,1fr);gap:.7rem}
 .scroll{overflow:visible}table{font-size:8.2pt}th,td{padding-right:.7rem}tr,.verdict,li{break-inside:avoid;page-break-inside:avoid}
 thead{display:table-header-group}pre{white-space:pre-wrap;overflow-wrap:anywhere;background:none;padding:0}
-.group{break-after:avoid;page-break-after:avoid}
 *{-webkit-print-color-adjust:exact;print-color-adjust:exact}}
 """

@@ -50,20 +50,17 @@ def derived(results: Results, *, with_density: bool = False) -> str:
     return _states(results, names, with_density) if names else ""
 
 
-def comparison(results: Results) -> str:
-    """Every compared value beside its reference, with a strip that shows the deviation; empty if none."""
+def comparison(results: Results) -> list[str]:
+    """One table a reference and property: each value beside its reference, with a strip that shows the deviation."""
     rows = results.verdict[results.verdict["temperature"].notna()]
-    if rows.empty:
-        return ""
     several = rows["density"].nunique() > 1
-    head = [*_state_heads(results, several), "this study", "reference", "deviation, in combined standard errors", ""]
-    body: list[str] = []
+    found = []
     for (reference, name), own in grouped(rows, "reference", "property", sort=False):
         unit = _unit(results, name)
-        title = f"{name_of(name).capitalize()} {symbol_of(name)}{f' ({unit})' if unit else ''}, {reference}"
-        body.append(f'<tr class="group"><th colspan="{len(head)}" scope="rowgroup">{as_html(title)}</th></tr>')
-        body += [_row(_compared(row, several)) for _, row in own.sort_values(["density", "temperature"]).iterrows()]
-    return _table(head, body)
+        head = [*_state_heads(results, several), f"{symbol_of(name)}|{unit}", f"{reference}|{unit}", "deviation|errors"]
+        body = [_row(_compared(row, several)) for _, row in own.sort_values(["density", "temperature"]).iterrows()]
+        found.append(_table([*head, ""], body, title=name_of(name).capitalize()))
+    return found
 
 
 def sampling(results: Results) -> str:
@@ -125,7 +122,7 @@ def _deviation(z: float) -> str:
     return (
         '<svg class="strip" viewBox="0 0 60 12" aria-hidden="true"><path class="axis" d="M2,6h56"/>'
         f'<path class="within" d="M16,6h28"/><circle class="{reach}" cx="{at:.1f}" cy="6" r="3"/></svg>'
-        f"{_typeset(f'{z:+.1f}')}"
+        f"{_typeset(f'{z:+.1f}').replace('−0.0', '0.0')}"
     )
 
 
@@ -137,9 +134,11 @@ def _row(cells: Iterable[str]) -> str:
     return f"<tr>{''.join(f'<td>{cell}</td>' for cell in cells)}</tr>"
 
 
-def _table(heads: Sequence[str], body: Sequence[str]) -> str:
+def _table(heads: Sequence[str], body: Sequence[str], title: str = "") -> str:
+    caption = f"<caption>{as_html(title)}</caption>" if title else ""
     titles = "".join(f'<th scope="col">{_head(head)}</th>' for head in heads)
-    return f'<div class="scroll"><table><thead><tr>{titles}</tr></thead><tbody>{"".join(body)}</tbody></table></div>'
+    head, rows = f"<thead><tr>{titles}</tr></thead>", f"<tbody>{''.join(body)}</tbody>"
+    return f'<div class="scroll"><table>{caption}{head}{rows}</table></div>'
 
 
 def _head(head: str) -> str:

@@ -67,7 +67,7 @@ def answers(results: Results) -> list[str]:
     sentences = [_answer(results, density, own, names) for (density,), own in groups[:_ANSWERS_SHOWN]]
     rest = len(groups) - _ANSWERS_SHOWN
     more = [f"{_counted(rest, 'more density', 'more densities')} below."] if rest > 0 else []
-    return [*(sentence for sentence in sentences if sentence), *more]
+    return [*sentences, *more]
 
 
 def agreement(results: Results) -> list[str]:
@@ -99,15 +99,11 @@ def _answer(results: Results, density: float, rows: pd.DataFrame, names: tuple[s
     parts = []
     for name in names:
         own = rows[(rows["property"] == name) & np.isfinite(rows["value"])].sort_values("temperature")
-        ends = [own.iloc[k] for k in (0, -1)[: min(len(own), 2)]]
-        values = [
-            f"{with_error(end['value'], end['standard_error'])} at T = {plain(end['temperature'])}" for end in ends
-        ]
-        unit = unit_text(unit_label(name, results.units))
-        if values:
-            verb = f"goes from {values[0]} to {values[1]}" if len(values) == 2 else f"is {values[0]}"
-            parts.append(f"{name_of(name)} {symbol_of(name)} {verb}{f' ({unit})' if unit else ''}")
-    return f"At density {plain(density)} {_unit(results, 'density')}: {'; '.join(parts)}." if parts else ""
+        ends = [with_error(own.iloc[k]["value"], own.iloc[k]["standard_error"]) for k in (0, -1) if len(own)]
+        values = " to ".join(dict.fromkeys(ends)) or "without value,"
+        parts.append(f"{name_of(name)} {symbol_of(name)} {values} {_unit(results, name)}")
+    span = f"T = {_between(sorted(rows['temperature']))} {_unit(results, 'temperature')}"
+    return f"At density {plain(density)} {_unit(results, 'density')} and {span}: {'; '.join(parts)}."
 
 
 def _agreement(results: Results, name: str, rows: pd.DataFrame) -> str:
