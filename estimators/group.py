@@ -49,16 +49,20 @@ class Rung:
 
 @dataclass(frozen=True)
 class Run:
-    """One repeat inside a group: the group's index of its rung, its chain, records, energies and log D(E)."""
+    """One repeat inside a group.
+
+    rung : index of its rung in the group
+    energies : (n,), dynamical, less the constant
+    claims : (K, n), share of each rung in each sample; error bars alone need them
+    log_density : (n,), log D(E)
+    """
 
     rung: int
     chain: Chain
     series: Series
     energies: Floats
+    claims: npt.NDArray[np.float32]
     log_density: Floats
-
-    def claims(self, mixture: Mixture, part: slice) -> Floats:
-        return mixture.claims(self.energies[part], self.log_density[part])
 
 
 @dataclass(frozen=True)
@@ -101,10 +105,9 @@ class Group:
             for part in slices(len(run.energies)):
                 weight = weights.runs[index][part]
                 weighted = weight * target.integrands(run.series, part)
-                shares = run.claims(self.mixture, part)
                 values += np.sum(weighted, axis=1)
-                coupled += weighted @ shares.T
-                claimed += shares @ weight
+                coupled += weighted @ run.claims[:, part].T
+                claimed += run.claims[:, part] @ weight
 
         def own(index: int, part: slice) -> Floats:
             deviations = target.integrands(self.runs[index].series, part) - values[:, None]
@@ -124,10 +127,10 @@ class Group:
         for index, run in enumerate(self.runs):
             influence = np.empty((len(values), len(run.energies)))
             for part in slices(len(run.energies)):
-                shares = run.claims(self.mixture, part)
-                influence[:, part] = own(index, part) + pull @ shares
+                influence[:, part] = own(index, part) + pull @ run.claims[:, part]
             centres[run.rung] += np.sum(influence, axis=1) / self.rungs[run.rung].samples
-            sums.append(np.add.reduceat(influence, self._starts(run), axis=1))
+            starts = self._starts(run)
+            sums.append(influence if len(starts) == len(run.energies) else np.add.reduceat(influence, starts, axis=1))
         for run, each in zip(self.runs, sums, strict=True):
             each -= np.multiply.outer(centres[run.rung], np.diff(self._starts(run), append=len(run.energies)))
         return [

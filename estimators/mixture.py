@@ -43,21 +43,14 @@ class Mixture:
     response: Floats
     overlap: Floats
 
-    @property
-    def _offsets(self) -> Floats:
-        return np.log(self.counts) + self.free_energies
-
-    def log_density(self, energies: Floats) -> Floats:
-        """log D, (n,), at the energies (n,)."""
-        chunks = [_claims(self.beta, self._offsets, energies[part])[1] for part in slices(len(energies))]
-        return np.concatenate(chunks)
-
-    def claims(self, energies: Floats, log_density: Floats) -> Floats:
-        """Shares p, (K, n), of samples whose energies (n,) and log D (n,) are known."""
-        exponents = np.multiply.outer(-self.beta, energies)
-        exponents += self._offsets[:, None]
-        exponents -= log_density
-        return np.exp(exponents, out=exponents)
+    def claims(self, energies: Floats) -> tuple[npt.NDArray[np.float32], Floats]:
+        """Shares p, (K, n), in single precision, and log D, (n,), of samples at the energies (n,)."""
+        shares = np.empty((len(self.beta), len(energies)), dtype=np.float32)
+        log_density = np.empty(len(energies))
+        offsets = np.log(self.counts) + self.free_energies
+        for part in slices(len(energies)):
+            shares[:, part], log_density[part] = _claims(self.beta, offsets, energies[part])
+        return shares, log_density
 
 
 def slices(length: int) -> Iterator[slice]:

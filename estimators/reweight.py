@@ -176,7 +176,7 @@ def _solved(rungs: list[Rung]) -> Group:
         [energies for rung in rungs for energies in rung.energies],
     )
     runs = [
-        Run(index, _chain(series), series, energies, mixture.log_density(energies))
+        Run(index, _chain(series), series, energies, *mixture.claims(energies))
         for index, rung in enumerate(rungs)
         for series, energies in zip(rung.repeats, rung.energies, strict=True)
     ]

@@ -1,0 +1,276 @@
+"""Pair structure of one state from its stored frames: g(r), coordination, and what follows from g alone."""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Callable, Sequence
+from concurrent.futures import ThreadPoolExecutor
+from dataclasses import dataclass, replace
+from functools import cached_property
+
+import numba
+import numpy as np
+import numpy.typing as npt
+from scipy.signal import savgol_coeffs
+
+from estimators.canonical import kinetic_temperature
+from estimators.errors import BadSeries
+from estimators.estimate import Chain, Estimate, exact, mean
+from sampler.fluid import Fluid, State
+from sampler.series import Series
+
+__all__ = ["Structure", "pair_structure"]
+
+Floats = npt.NDArray[np.float64]
+
+CONTACT_REACH = 0.1  # sigma, to either side of the cutoff
+MINIMUM_REACH = 0.15  # sigma, to either side of the first minimum
+CLEAR = 5.0  # standard errors by which a minimum must be curved upwards
+POINTS = 8  # Gauss-Legendre points in a bin
+
+
+@dataclass(frozen=True, eq=False)
+class Structure:
+    """Pair structure of one state; lengths in sigma, energies in epsilon.
+
+    r : (n,), centres of the bins, up to half the box
+    g : (n,), pairs over those of an ideal gas of as many particles (N - 1 neighbours each)
+    standard_error : (n,), of g; infinite for fewer than four frames
+    coordination : (n,), mean number of neighbours up to the outer edge of the bin
+    first_minimum : r of the first minimum of g behind its main peak; None where noise hides it or there is none
+    first_shell : mean number of neighbours up to there
+    contact : g at the cutoff, from a straight line through g exp(u_dyn/T), which is smooth there, over the bins within
+        0.1 sigma on both sides; of those inside alone if the cutoff is half the box
+    energy : U/N recomputed from g
+    pressure : recomputed from g
+    """
+
+    r: Floats
+    g: Floats
+    standard_error: Floats
+    coordination: Floats
+    first_minimum: Estimate | None
+    first_shell: Estimate | None
+    contact: Estimate
+    energy: Estimate
+    pressure: Estimate
+
+
+def pair_structure(series: Sequence[Series], *, bin_width: float = 0.02) -> Structure | None:
+    """Pair structure from the frames of all repeats of one rung; None if there are no frames.
+
+    bin_width : sigma; changed a little so that the cutoff is the edge of a bin
+
+    Inside a bin pairs are taken to lie as r^2 exp(-u/T) does when u and r u' are averaged over it, which leaves the
+    cross-checks of energy and pressure free of most of the error of binning.
+    Raises BadSeries if the series are not repeats of one state or a position is not finite.
+    """
+    series = [each for each in series if len(each.frames)]
+    if not series:
+        return None
+    _check(series, bin_width)
+    first = series[0]
+    bins = _Bins.of(first.fluid, first.state, bin_width)
+    counts = {_chain(each): _pair_counts(each.frames, first.state.box, bins) for each in series}
+    return _Pairs(series, bins, counts).structure()
+
+
+def _check(series: Sequence[Series], bin_width: float) -> None:
+    first = series[0]
+    if not 0.0 < bin_width <= 0.5 * first.fluid.cutoff:
+        raise BadSeries(f"bin_width must be positive and at most half the cutoff, found {bin_width!r}")
+    if any((each.fluid, each.state, each.bath) != (first.fluid, first.state, first.bath) for each in series):
+        raise BadSeries("series of different fluids, states or baths given; repeats of one rung share all three")
+    if len({each.repeat for each in series}) < len(series):
+        raise BadSeries("two series carry the same repeat number; give each repeat once")
+    for each in series:
+        if not np.all(np.isfinite(each.frames)):
+            raise BadSeries(f"a frame at {each.state}, repeat {each.repeat}, holds positions that are not finite")
+
+
+def _chain(series: Series) -> Chain:
+    state = series.state
+    return (state.temperature, state.density, state.particles, series.repeat)
+
+
+@dataclass(frozen=True)
+class _Bins:
+    """Equal bins from 0 to half the box, one edge at the cutoff; `inside` of them lie within the cutoff."""
+
+    width: float
+    number: int
+    inside: int
+
+    @staticmethod
+    def of(fluid: Fluid, state: State, bin_width: float) -> _Bins:
+        inside = round(fluid.cutoff / bin_width)
+        width = fluid.cutoff / inside
+        return _Bins(width, int(0.5 * state.box / width * (1.0 + 1e-12)), inside)
+
+    @cached_property
+    def edges(self) -> Floats:
+        return self.width * np.arange(self.number + 1, dtype=float)
+
+    @cached_property
+    def centres(self) -> Floats:
+        return self.edges[:-1] + 0.5 * self.width
+
+    @cached_property
+    def volumes(self) -> Floats:
+        return np.asarray(4.0 / 3.0 * np.pi * np.diff(self.edges**3), dtype=float)
+
+
+def _pair_counts(frames: Floats, box: float, bins: _Bins) -> Floats:
+    """Pairs in each bin of each frame, (m, n)."""
+
+    def count(frame: Floats) -> npt.NDArray[np.int64]:
+        counts = np.zeros(int(np.sqrt(0.75) * box / bins.width) + 2, dtype=np.int64)
+        x, y, z = np.ascontiguousarray((frame - box * np.floor(frame / box)).T)
+        _add_pairs(x, y, z, box, 1.0 / bins.width, counts)
+        return counts[: bins.number]
+
+    with ThreadPoolExecutor(os.cpu_count()) as threads:
+        return np.array(list(threads.map(count, frames)), dtype=float)
+
+
+@numba.njit(cache=True, nogil=True)
+def _add_pairs(x, y, z, box, per_width, counts):  # type: ignore[no-untyped-def]
+    """Counts every pair once by its nearest-image distance; bins reach to the corner of the box."""
+    places = np.empty(x.size, np.int32)
+    for i in range(x.size - 1):
+        others = places[: x.size - 1 - i]
+        _places(x[i + 1 :], y[i + 1 :], z[i + 1 :], x[i], y[i], z[i], box, per_width, others)
+        for place in others:
+            counts[place] += 1
+
+
+@numba.njit(cache=True, nogil=True, fastmath=True)
+def _places(x, y, z, x0, y0, z0, box, per_width, places):  # type: ignore[no-untyped-def]
+    """Bin of each distance; slices that start at zero and no branches let the loop be vectorised."""
+    half = 0.5 * box
+    for j in range(x.size):
+        dx = half - abs(abs(x[j] - x0) - half)
+        dy = half - abs(abs(y[j] - y0) - half)
+        dz = half - abs(abs(z[j] - z0) - half)
+        places[j] = np.int32(np.sqrt(dx * dx + dy * dy + dz * dz) * per_width)
+
+
+@dataclass(frozen=True, eq=False)
+class _Pairs:
+    """Counted pairs; everything derived is linear in the counts of a frame, so it has an influence over frames."""
+
+    series: Sequence[Series]
+    bins: _Bins
+    counts: dict[Chain, Floats]
+
+    @property
+    def fluid(self) -> Fluid:
+        return self.series[0].fluid
+
+    @property
+    def state(self) -> State:
+        return self.series[0].state
+
+    @cached_property
+    def ideal(self) -> Floats:
+        """Pairs per frame that an ideal gas would have, (n,)."""
+        particles = self.state.particles
+        return 0.5 * particles * (particles - 1) / self.state.volume * self.bins.volumes
+
+    @cached_property
+    def g(self) -> Floats:
+        return np.asarray(np.concatenate(list(self.counts.values())).mean(axis=0) / self.ideal, dtype=float)
+
+    @cached_property
+    def standard_error(self) -> Floats:
+        unit = np.eye(self.bins.number) / self.ideal
+        return np.array([self.linear(row).standard_error for row in unit])
+
+    def linear(self, weights: Floats) -> Estimate:
+        """Mean of the weighted sum of a frame's counts."""
+        return mean({chain: counts @ weights for chain, counts in self.counts.items()})
+
+    def structure(self) -> Structure:
+        minimum, shell = self.first_shell() or (None, None)
+        return Structure(
+            r=self.bins.centres,
+            g=self.g,
+            standard_error=self.standard_error,
+            coordination=np.cumsum(self.g * self.ideal) * 2.0 / self.state.particles,
+            first_minimum=minimum,
+            first_shell=shell,
+            contact=self.contact(),
+            energy=self.energy(),
+            pressure=self.pressure(),
+        )
+
+    @cached_property
+    def _nodes(self) -> tuple[Floats, Floats]:
+        """Points of each bin, (n, POINTS), and their parts of its volume, rows of sum 1."""
+        points, parts = np.polynomial.legendre.leggauss(POINTS)
+        r = self.bins.centres[:, None] + 0.5 * self.bins.width * points
+        parts = parts * r**2
+        return r, parts / np.sum(parts, axis=1, keepdims=True)
+
+    def bin_means(self, function: Callable[[Floats], Floats]) -> Floats:
+        """Means of a pair function over each bin, weighted by r^2 exp(-u/T), (n,)."""
+        r, parts = self._nodes
+        energies = self.fluid.pair_energy(r)
+        parts = parts * np.exp((np.min(energies, axis=1, keepdims=True) - energies) / self.state.temperature)
+        return np.asarray(np.sum(parts * function(r), axis=1) / np.sum(parts, axis=1), dtype=float)
+
+    def energy(self) -> Estimate:
+        tail, _, _ = self.fluid.tail(self.state.density)
+        return self.linear(self.bin_means(self.fluid.pair_energy) / self.state.particles) + tail
+
+    def pressure(self) -> Estimate:
+        _, tail, _ = self.fluid.tail(self.state.density)
+        first = self.series[0]
+        temperature = exact(self.state.temperature) if first.bath else kinetic_temperature(self.series)
+        virial = self.linear(self.bin_means(self.fluid.pair_virial) / (-3.0 * self.state.volume))
+        return (temperature + tail) * self.state.density + virial
+
+    def contact(self) -> Estimate:
+        """g at the cutoff; the pair energy sampled there is u(r) - u(r_c), zero from the cutoff on."""
+        r, parts = self._nodes
+        cutoff = self.fluid.cutoff
+        edge = float(self.fluid.pair_energy(np.nextafter(cutoff, 0.0)))
+        reach = max(round(CONTACT_REACH / self.bins.width), 2)
+        near = slice(max(self.bins.inside - reach, 0), self.bins.inside + reach)
+        energies = np.where(r < cutoff, self.fluid.pair_energy(r) - edge, 0.0)[near]
+        boltzmann = np.sum(parts[near] * np.exp(-energies / self.state.temperature), axis=1)
+        line = np.vander(self.bins.centres[near] - cutoff, 2, increasing=True)
+        weights = np.zeros(self.bins.number)
+        weights[near] = np.linalg.pinv(line)[0] / (boltzmann * self.ideal[near])
+        return self.linear(weights)
+
+    def first_shell(self) -> tuple[Estimate, Estimate] | None:
+        """First minimum of g behind its main peak, and the neighbours up to there; from a parabola around it."""
+        half = max(round(MINIMUM_REACH / self.bins.width), 2)
+        smoothing = savgol_coeffs(2 * half + 1, 2)
+        smooth = np.convolve(self.g, smoothing, mode="valid")  # from bin `half` on
+        peak = int(np.argmax(self.g))
+        search = smooth[max(peak - half, 0) : 2 * peak - half]
+        lowest = int(np.argmin(search)) if len(search) else 0
+        if not 0 < lowest < len(search) - 1:
+            return None
+        middle = max(peak, half) + lowest
+        near = slice(middle - half, middle + half + 1)
+        centre = float(self.bins.centres[middle])
+        fit = np.zeros((3, self.bins.number))
+        fit[:, near] = np.linalg.pinv(np.vander(self.bins.centres[near] - centre, 3, increasing=True))
+        fit /= self.ideal
+        level, slope, curvature = (self.linear(row) for row in fit)
+        if not curvature.value > CLEAR * curvature.standard_error:
+            return None
+        shift = -0.5 * slope.value / curvature.value
+        if abs(shift) > MINIMUM_REACH:
+            return None
+        by_count = -0.5 * (fit[1] + 2.0 * shift * fit[2]) / curvature.value
+        minimum = replace(self.linear(by_count), value=centre + shift)
+        within = np.clip((minimum.value - self.bins.edges[:-1]) / self.bins.width, 0.0, 1.0)
+        neighbours = within * (2.0 / self.state.particles)
+        depth = level.value + shift * (slope.value + shift * curvature.value)
+        growth = 4.0 * np.pi * self.state.density * minimum.value**2 * depth
+        shell = replace(self.linear(neighbours + growth * by_count), value=self.linear(neighbours).value)
+        return minimum, shell
