@@ -265,21 +265,29 @@ def _sampling(table: Table, scale: Scale | None, states: tuple[State, ...]) -> S
 
 
 def _compare(table: Table, scale: Scale | None, fluid: Fluid) -> Compare:
-    from reference import find, names
-
     table.only(("against", "tolerance"))
-    against = () if table.content.get("against") == [] else table.read("against", one_or_more(choice(names())), ())
-    for name in against:
-        if not find(name).same_model(fluid.truncation, fluid.cutoff):
-            cut = f'truncation "{fluid.truncation}" and cutoff {fluid.cutoff:g} sigma'
-            fitting = [f'"{other}"' for other in names() if find(other).same_model(fluid.truncation, fluid.cutoff)]
-            reason = f"{name} describes another fluid than the one of {cut}; what is accepted here is "
-            raise table.refusal("against", reason + (" or ".join(fitting) if fitting else "an empty list"))
     tolerance = table.table("tolerance").only(COMPARED, later=[name for name in PROPERTIES if name not in COMPARED])
     return Compare(
-        against=against,
+        against=_against(table, fluid),
         tolerance={name: tolerance.read(name, _tolerance(name, scale)) for name in tolerance.content},
     )
+
+
+def _against(table: Table, fluid: Fluid) -> tuple[str, ...]:
+    from reference import find, names
+
+    if table.content.get("against", []) == []:
+        return ()
+    against = table.read("against", one_or_more(choice(names())))
+    fitting = [name for name in names() if find(name).same_model(fluid.truncation, fluid.cutoff)]
+    for name in against:
+        if name not in fitting:
+            raise table.refusal(
+                "against",
+                f'{name} describes another fluid than truncation "{fluid.truncation}", cutoff {fluid.cutoff:g} sigma; '
+                f"what is accepted for this one is {' or '.join(fitting) or 'an empty list'}",
+            )
+    return against
 
 
 def _tolerance(name: str, scale: Scale | None) -> Reader[Tolerance]:
