@@ -17,17 +17,17 @@ from sampler.compiled import kernel
 from sampler.forces import fold_images, pair_forces, place_images
 from sampler.groups import BLOCK, FAR, LANES, group, prune, scatter
 from sampler.noise import normals
+from sampler.protocol import SUBSTEPS, Scheme
 from sampler.vector import larger, largest, load, splat, store, total
 
-__all__ = ["COLUMNS", "DONE", "DIVERGED", "SCHEMES", "STOPPED", "Scheme", "has_bath", "propagate", "substeps"]
+__all__ = ["COLUMNS", "DIVERGED", "DONE", "STOPPED", "Steps", "propagate", "substeps"]
 
-SCHEMES = {"baoab": "BAOAB", "obabo": "OBABO", "velocity-verlet": "BAB"}
 COLUMNS = ("s12", "s6", "pairs", "distances", "kinetic", "ledger")  # what is recorded of a sample
 DONE, STOPPED, DIVERGED = 0, 1, 2
 _A, _B, _O = 0, 1, 2
 
 
-class Scheme(NamedTuple):
+class Steps(NamedTuple):
     """One step as a kernel reads it: letters as numbers, the part of the time step each takes, and the bath."""
 
     letters: npt.NDArray[np.int64]
@@ -36,16 +36,11 @@ class Scheme(NamedTuple):
     temperature: float
 
 
-def has_bath(scheme: str) -> bool:
-    """Whether the scheme exchanges heat."""
-    return "O" in SCHEMES[scheme]
-
-
-def substeps(scheme: str, *, time_step: float, friction: float, temperature: float) -> Scheme:
+def substeps(scheme: Scheme, *, time_step: float, friction: float, temperature: float) -> Steps:
     """The scheme's substeps: a letter that stands n times takes time_step/n each time."""
-    letters = SCHEMES[scheme]
+    letters = SUBSTEPS[scheme]
     durations = np.array([time_step / letters.count(letter) for letter in letters])
-    return Scheme(np.array(["ABO".index(letter) for letter in letters]), durations, friction, temperature)
+    return Steps(np.array(["ABO".index(letter) for letter in letters]), durations, friction, temperature)
 
 
 @kernel

@@ -1,0 +1,107 @@
+"""One repeat of a rung: start, settle, advance a segment; and its series once segments are there."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import numpy as np
+import numpy.typing as npt
+
+from sampler.errors import DamagedSegment, DivergedRun
+from sampler.forces import pair_function
+from sampler.noise import chain_key
+from sampler.protocol import Scheme
+from sampler.schemes import COLUMNS, DIVERGED, STOPPED, propagate, substeps
+from sampler.series import Series
+from sampler.start import first_positions, first_velocities
+from sampler.store import Chain, Segment, read
+
+__all__ = ["advance", "assemble", "sampled_segments"]
+
+Stop = npt.NDArray[np.uint8]
+_INNER_SKIN = 0.2  # sigma; beyond the cutoff: measured best for dense fluids, harmless in gases
+_OUTER_SKIN = 0.9
+_ROOM = 0.999  # of the box edge that cutoff and skin may span
+
+
+def advance(chain: Chain, index: int, before: Segment | None, stop: Stop) -> Segment | None:
+    """Sample segment `index`; None if `stop`, (1,), was set from another thread before it was finished.
+
+    before : the segment before it, None for the first
+    Raises DivergedRun if the trajectory leaves the finite numbers.
+    """
+    protocol, state = chain.protocol, chain.state
+    key = chain_key(protocol.seed, state.temperature, state.density, chain.repeat)
+    first, last = chain.segments[index]
+    if before is None:
+        where, velocity, ledger = first_positions(chain.fluid, state, key), first_velocities(state, key), 0.0
+    else:
+        where, velocity, ledger = before.positions.copy(), before.velocities.copy(), before.ledger
+    settling = last <= protocol.settling
+    scheme: Scheme = "baoab" if settling else protocol.scheme
+    if not protocol.bath and first == protocol.settling:
+        velocity -= velocity.mean(axis=0)
+    samples = np.empty(((last - first) // protocol.record_every, len(COLUMNS)))
+    frames = np.empty((0 if settling else (last - first) // protocol.frame_every, state.particles, 3))
+    heat = np.array([ledger])
+    outcome, step = propagate(
+        pair_function(chain.fluid),
+        where,
+        velocity,
+        state.box,
+        (_INNER_SKIN, min(_OUTER_SKIN, _ROOM * state.box - chain.fluid.cutoff)),
+        substeps(scheme, time_step=protocol.time_step, friction=protocol.friction, temperature=state.temperature),
+        key,
+        first,
+        last - first,
+        protocol.record_every,
+        protocol.frame_every,
+        samples,
+        frames,
+        heat,
+        stop,
+    )
+    if outcome == STOPPED:
+        return None
+    if outcome == DIVERGED or not np.isfinite(samples).all():
+        raise DivergedRun(
+            f"the run at temperature {state.temperature:g}, density {state.density:g}, repeat {chain.repeat} flew apart "
+            f"by step {step}; take a time_step smaller than {protocol.time_step:g}"
+        )
+    return Segment(first, last, samples, frames, where, velocity, float(heat[0]))
+
+
+def sampled_segments(chain: Chain) -> list[Segment]:
+    """The finished segments after settling, in order, up to the first that is missing or damaged."""
+    found = []
+    for index, (first, _) in enumerate(chain.segments):
+        if first < chain.protocol.settling:
+            continue
+        try:
+            found.append(read(chain.path(index), chain.identity))
+        except DamagedSegment:
+            break
+    return found
+
+
+def assemble(chain: Chain, segments: list[Segment]) -> Series:
+    """The series of one repeat from its segments after settling; possibly empty."""
+    protocol, particles = chain.protocol, chain.state.particles
+    samples = np.concatenate([np.empty((0, len(COLUMNS))), *(segment.samples for segment in segments)])
+    frames = np.concatenate([np.empty((0, particles, 3)), *(segment.frames for segment in segments)])
+    totals = chain.fluid.totals(samples, chain.state)
+    return Series(
+        fluid=chain.fluid,
+        state=chain.state,
+        repeat=chain.repeat,
+        bath=protocol.bath,
+        interval=protocol.time_step * protocol.record_every,
+        energy=totals.energy,
+        sampled_energy=totals.sampled_energy,
+        virial=totals.virial,
+        hypervirial=totals.hypervirial,
+        kinetic=samples[:, COLUMNS.index("kinetic")],
+        ledger=samples[:, COLUMNS.index("ledger")],
+        frames=frames,
+        frame_stride=protocol.frame_every // protocol.record_every,
+    )
