@@ -35,8 +35,8 @@ PairFunction = Truncated | ForceShifted
 def pair_function(fluid: Fluid) -> PairFunction:
     """What the kernels need of a fluid."""
     if fluid.truncation == "force-shifted":
-        return ForceShifted(fluid.cutoff, fluid.slope_at_cutoff)
-    return Truncated(fluid.cutoff)
+        return ForceShifted(float(fluid.cutoff), fluid.slope_at_cutoff)
+    return Truncated(float(fluid.cutoff))
 
 
 def _force(pair, square, inverse, inverse6):  # type: ignore[no-untyped-def]
