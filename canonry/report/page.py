@@ -31,9 +31,10 @@ _UNCERTAINTY = (
     "so half of it enters a deviation as its standard uncertainty."
 )
 _CURVES = (
-    "Points are the rungs' own values, which the curve does not pass through by construction. A reference is dashed; "
-    "where no curve is drawn, too few samples support it."
+    "Points are the rungs' own values, which the curve does not pass through by construction; where no curve is drawn, "
+    "too few samples support it. A reference is dashed."
 )
+_NO_CURVES = "Points are the rungs' own values; rungs of constant energy are not reweighted. A reference is dashed."
 
 
 def write(results: Results, path: Path) -> None:
@@ -106,7 +107,7 @@ def _set(number: int, where: str, results: Results) -> Iterator[str]:
         figures = [plots.curves(results, where, name) for name in names]
         figures += [plots.deviations(results, where, names)] if len(results.verdict) else []
         yield _plots(figures)
-        yield f'<p class="fine">{_CURVES}</p>'
+        yield f'<p class="fine">{escape(_CURVES if methods.Setup.of(results).bath else _NO_CURVES)}</p>'
     yield from _tabled("Further properties", tables.derived(results, with_density=several))
     yield from _tabled("Comparison, value by value", "".join(tables.comparison(results)), "plots comparison")
     yield from _sampled(where, results, isochore)
@@ -121,7 +122,7 @@ def _sampled(where: str, results: Results, isochore: bool) -> Iterator[str]:
     yield _plots(figures)
     if len(results.structure):
         yield "<h3>Structure: pair distribution g(r)</h3>"
-        yield '<p class="fine">Each rung with its 95 % band; the dashed line repeats the coldest rung.</p>'
+        yield '<p class="fine">Each rung with its 95 % band; the dashed line repeats the coldest rung of its density.</p>'
         yield _plots(plots.structure(results, where), "small plots", captions=False)
 
 

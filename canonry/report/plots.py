@@ -34,7 +34,7 @@ def curves(results: Results, where: str, name: str) -> Figure:
         description=f"{name_of(name).capitalize()} of each rung with reweighted curve and reference, where given.",
         x=_temperature_axis(results),
         y=Axis(f"{name_of(name).capitalize()} {symbol_of(name)}", unit_text(unit_label(name, results.units))),
-        marks=[*_references(results, name), *_reweighted(results, name), *_rungs(results, name)],
+        marks=[*_reweighted(results, name), *_references(results, name), *_rungs(results, name)],
     )
 
 
@@ -82,16 +82,15 @@ def histograms(results: Results, where: str) -> Figure:
 
 
 def structure(results: Results, where: str) -> Iterator[Figure]:
-    """One small figure a rung and pair of species; the coldest rung stays in each as a thin dashed line."""
+    """One small figure a rung and pair of species; the coldest rung of its density is in each, thin and dashed."""
     table = results.structure
     highest = float(table["g"].max())
-    coldest = table[table["temperature"] == table["temperature"].min()]
-    temperature_unit = unit_text(unit_label("temperature", results.units))
-    for (temperature, a, b), rows in grouped(table, "temperature", "species_a", "species_b"):
-        first = coldest[(coldest["species_a"] == a) & (coldest["species_b"] == b)]
+    for (density, temperature, a, b), rows in grouped(table, "density", "temperature", "species_a", "species_b"):
+        alike = table[(table["density"] == density) & (table["species_a"] == a) & (table["species_b"] == b)]
+        coldest = alike[alike["temperature"] == alike["temperature"].min()]
         r, g, error = (floats(rows, column) for column in ("r", "g", "standard_error"))
         pair = f" {a}-{b}" if a != b or table["species_a"].nunique() > 1 else ""
-        at = f"T = {plain(temperature)} {temperature_unit}"
+        at = _state(results, temperature, density)
         yield Figure(
             title=f"Pair distribution{pair} at {at}, {where}",
             description="g(r) with its 95 % band; dashed: the coldest rung.",
@@ -100,7 +99,7 @@ def structure(results: Results, where: str) -> Iterator[Figure]:
             marks=[
                 Band(r, g - 2.0 * error, g + 2.0 * error),
                 Line(r, g),
-                Line(floats(first, "r"), floats(first, "g"), dash="3 3", tone="quiet", thin=True),
+                Line(floats(coldest, "r"), floats(coldest, "g"), dash="3 3", tone="quiet", thin=True),
             ],
             width=236,
             height=168,
@@ -119,8 +118,8 @@ def ledger(results: Results, where: str, bath: bool) -> Figure:
             label = "" if marks else "other repeats"
             marks.append(Line(floats(rows, "time"), floats(rows, "drift"), label, tone="quiet", thin=True))
     if farthest is not None:
-        (temperature, _, repeat), rows = farthest
-        label = f"largest change: T = {plain(temperature)}, repeat {repeat}"
+        (temperature, density, repeat), rows = farthest
+        label = f"largest change: {_state(results, temperature, density)}, repeat {repeat}"
         marks.append(Line(floats(rows, "time"), floats(rows, "drift"), label, thin=True))
     return Figure(
         title=f"Conserved quantity over time, {where}",
@@ -165,6 +164,12 @@ def _references(results: Results, name: str) -> Iterator[Mark]:
         x, y, error = (floats(own, column) for column in ("temperature", "value", "uncertainty"))
         yield Band(x, y - 2.0 * error, y + 2.0 * error, tone="reference")
         yield Line(x, y, reference, dash=_DASHES[k % len(_DASHES)], tone="reference")
+
+
+def _state(results: Results, temperature: float, density: float) -> str:
+    """The temperature, with the density where these results hold several."""
+    text = f"T = {plain(temperature)} {unit_text(unit_label('temperature', results.units))}"
+    return f"{text}, density {plain(density)}" if results.properties["density"].nunique() > 1 else text
 
 
 def _temperature_axis(results: Results) -> Axis:

@@ -36,11 +36,13 @@ th,td{padding:.26rem 1.3rem .26rem 0;text-align:right;white-space:nowrap}
 th:last-child,td:last-child{padding-right:.2rem}
 thead th{vertical-align:bottom;border-bottom:1.5px solid var(--ink);font-weight:600}
 thead small{display:block;font-weight:400;color:var(--soft);font-size:.92em}
+th:first-child,td:first-child{position:sticky;left:0;background:var(--paper)}
 tbody tr{border-bottom:1px solid var(--rule)}
 caption{text-align:left;font-weight:600;padding:.2rem 0}
 .wide thead th{white-space:normal;max-width:9rem}
 .comparison td:last-child{text-align:left}.comparison .scroll{margin:0}
-.strip{width:60px;height:12px;vertical-align:-1px;margin-right:.6rem}
+.z{display:inline-block;min-width:2.6em}
+.strip{width:60px;height:12px;vertical-align:-1px;margin-right:.2rem}
 .strip .axis{stroke:var(--quiet);stroke-width:1}.strip .within{stroke:var(--rule);stroke-width:6}
 .strip circle{fill:var(--measured);stroke:var(--measured);stroke-width:1.4}
 .strip .beyond{fill:var(--paper);stroke:var(--reference)}

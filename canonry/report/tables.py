@@ -57,9 +57,9 @@ def comparison(results: Results) -> list[str]:
     found = []
     for (reference, name), own in grouped(rows, "reference", "property", sort=False):
         unit = _unit(results, name)
-        head = [*_state_heads(results, several), f"{symbol_of(name)}|{unit}", f"{reference}|{unit}", "deviation|errors"]
+        compared = [f"{symbol_of(name)}|{unit}", f"{reference}|{unit}", "deviation|combined errors", ""]
         body = [_row(_compared(row, several)) for _, row in own.sort_values(["density", "temperature"]).iterrows()]
-        found.append(_table([*head, ""], body, title=name_of(name).capitalize()))
+        found.append(_table([*_state_heads(results, several), *compared], body, title=name_of(name).capitalize()))
     return found
 
 
@@ -122,7 +122,7 @@ def _deviation(z: float) -> str:
     return (
         '<svg class="strip" viewBox="0 0 60 12" aria-hidden="true"><path class="axis" d="M2,6h56"/>'
         f'<path class="within" d="M16,6h28"/><circle class="{reach}" cx="{at:.1f}" cy="6" r="3"/></svg>'
-        f"{_typeset(f'{z:+.1f}').replace('−0.0', '0.0')}"
+        f'<span class="z">{_typeset(f"{z:+.1f}")}</span>'
     )
 
 

@@ -1,0 +1,479 @@
+"""The report page, from invented results."""
+
+import re
+from dataclasses import replace
+from html.parser import HTMLParser
+from itertools import pairwise
+from xml.etree import ElementTree
+
+import numpy as np
+import pandas as pd
+import pytest
+
+from canonry.report.methods import citations, paragraph
+from canonry.report.page import html, write
+from canonry.report.words import doubts, outcome
+from canonry.results import COLUMNS, Results
+from canonry.units import unit_label
+
+STUDY = """title = "Isochore"
+
+[fluid]
+potential = "lennard-jones"
+cutoff = 3.0
+truncation = "{truncation}"
+
+[state]
+density = 0.8
+temperatures = [0.9, 1.0]
+particles = 500
+
+[sampling]
+seed = 1
+repeats = 2
+time_step = 0.005
+{friction}scheme = "{scheme}"
+equilibration = 20000
+steps = 200000
+record_every = 10
+frame_every = 500
+
+[compare]
+against = ["thol-2016"]
+"""
+PROPERTIES = {
+    "heat_capacity": (lambda t, rho: 1.5 + 0.9 * rho + 0.35 * rho / t, 0.012),
+    "residual_heat_capacity": (lambda t, rho: 0.9 * rho + 0.35 * rho / t, 0.012),
+    "pressure": (lambda t, rho: rho * t + 7.5 * rho**3 * (t - 0.75), 0.011),
+    "residual_energy": (lambda t, rho: -7.6 * rho + 0.9 * (t - 1.0), 0.0016),
+    "compressibility_factor": (lambda t, rho: 1.0 + 7.5 * rho**2 * (t - 0.75) / t, 0.013),
+    "thermal_pressure": (lambda t, rho: rho + 7.5 * rho**3, 0.04),
+    "bulk_modulus": (lambda t, rho: 25.0 * rho**3 + 4.0 * t, 0.2),
+    "sound_speed": (lambda t, rho: 5.0 * rho + t, 0.03),
+}
+
+
+class Page(HTMLParser):
+    """Checks that elements nest, and collects tags, attributes, text and drawings."""
+
+    VOID = ("meta", "br")
+
+    def __init__(self, text):
+        super().__init__(convert_charrefs=True)
+        self.open, self.tags, self.links, self.words = [], [], [], []
+        self.feed(text)
+        assert self.open == []
+        self.figures = [ElementTree.fromstring(part) for part in re.findall(r'<svg role="img".*?</svg>', text, re.S)]
+
+    def handle_starttag(self, tag, attrs):
+        self.tags.append(tag)
+        self.links += [(tag, key, value) for key, value in attrs if key in ("href", "src", "srcset", "data")]
+        if tag not in self.VOID and self.get_starttag_text()[-2] != "/":
+            self.open.append(tag)
+
+    def handle_startendtag(self, tag, attrs):
+        self.tags.append(tag)
+
+    def handle_endtag(self, tag):
+        assert self.open.pop() == tag
+
+    def handle_data(self, data):
+        self.words.append(data)
+
+    @property
+    def text(self):
+        return " ".join(" ".join(self.words).split())
+
+    def figure(self, title):
+        return next(figure for figure in self.figures if figure.findtext("title").startswith(title))
+
+
+def invented(densities=(0.8,), rungs=6, units="reduced", samples=300, scheme="baoab", truncation="corrected"):
+    rng = np.random.default_rng(11)
+    ladder = np.round(1.0 / np.linspace(1.0 / 0.9, 1.0 / 1.5, rungs), 6)
+    states = [(t, rho) for rho in densities for t in ladder]
+    grid = [(t, rho) for rho in densities for t in np.linspace(0.9, 1.5, 61)]
+
+    def estimate(t, rho, name, noise, **rest):
+        formula, error = PROPERTIES[name]
+        return {
+            "temperature": t,
+            "temperature_unit": unit_label("temperature", units),
+            "density": rho,
+            "density_unit": unit_label("density", units),
+            "particles": 500,
+            "property": name,
+            "value": formula(t, rho) + noise * error * rng.standard_normal(),
+            "standard_error": error,
+            "unit": unit_label(name, units),
+            "effective_samples": 4000.0,
+            "trust": "ok",
+            "reason": "",
+            **rest,
+        }
+
+    own = {"method": "fluctuation", "headline": False}
+    pooled = {"method": "reweighted", "headline": True}
+    properties = [
+        estimate(t, rho, name, 1.0, **kind) for t, rho in states for name in PROPERTIES for kind in (own, pooled)
+    ]
+    curve = [
+        estimate(t, rho, name, 0.0, **pooled)
+        for t, rho in grid
+        for name in ("heat_capacity", "pressure", "residual_energy")
+    ]
+    verdict = []
+    for row in properties:
+        if row["headline"] and row["property"] in ("heat_capacity", "pressure", "residual_energy"):
+            truth, error = PROPERTIES[row["property"]][0](row["temperature"], row["density"]), row["standard_error"]
+            z = (row["value"] - truth) / np.hypot(error, 0.002)
+            verdict.append(
+                {key: row[key] for key in ("temperature", "density", "property", "value", "standard_error")}
+                | {"reference": "thol-2016", "reference_value": truth, "reference_uncertainty": 0.002, "z": z}
+                | {"outcome": "agrees" if abs(z) < 2.0 else "undecided"}
+            )
+    repeats = [(t, rho, repeat) for t, rho in states for repeat in (1, 2)]
+    times = np.linspace(0.0, 1000.0, samples)
+    r = np.arange(0.51, 3.99, 0.02)
+    shape = np.where(r > 0.9, 1.0 + 1.8 * np.exp(-1.2 * (r - 1.1)) * np.cos(6.2 * (r - 1.1)), 0.0)
+    spread = np.linspace(-3.5, 3.5, 60)
+    return Results(
+        title="Isochore of an invented coolant",
+        study_toml=STUDY.format(
+            scheme=scheme, truncation=truncation, friction="" if scheme == "velocity-verlet" else "friction = 2.0\n"
+        ),
+        units=units,
+        properties=pd.DataFrame(properties),
+        curve=pd.DataFrame(curve),
+        structure=pd.concat(
+            pd.DataFrame(
+                {
+                    "temperature": t,
+                    "density": rho,
+                    "species_a": "1",
+                    "species_b": "1",
+                    "r": r,
+                    "r_unit": unit_label("length", units),
+                    "g": shape + 0.2 * (1.2 - t) * shape * (shape > 1.5),
+                    "standard_error": 0.01,
+                    "coordination": 4.0 * np.pi / 3.0 * rho * r**3,
+                }
+            )
+            for t, rho in states
+        ),
+        verdict=pd.DataFrame(verdict),
+        summary=pd.DataFrame({"temperature": ladder[0], "density": densities, "heat_capacity": 2.6, "pressure": 1.2}),
+        histograms=pd.concat(
+            pd.DataFrame(
+                {
+                    "temperature": t,
+                    "density": rho,
+                    "energy": PROPERTIES["residual_energy"][0](t, rho) + 0.04 * t * spread,
+                    "probability": np.exp(-0.5 * spread**2) / (0.04 * t * np.sqrt(2.0 * np.pi)),
+                }
+            )
+            for t, rho in states
+        ),
+        ledger=pd.concat(
+            pd.DataFrame(
+                {
+                    "temperature": t,
+                    "density": rho,
+                    "repeat": repeat,
+                    "time": times,
+                    "drift": 2e-4 * rng.standard_normal(samples) + 3e-7 * t * times,
+                }
+            )
+            for t, rho, repeat in repeats
+        ),
+        overlap=pd.DataFrame(
+            [
+                {"density": rho, "temperature_a": a, "temperature_b": b, "overlap": 0.27}
+                for rho in densities
+                for a, b in pairwise(ladder)
+            ],
+            columns=COLUMNS["overlap"],
+        ),
+        reference_curve=pd.DataFrame(
+            [
+                {"density": rho, "temperature": t, "property": name, "value": PROPERTIES[name][0](t, rho)}
+                | {"uncertainty": 0.004, "reference": "thol-2016"}
+                for t, rho in grid
+                for name in ("heat_capacity", "pressure", "residual_energy")
+            ]
+        ),
+        equilibration=pd.DataFrame(
+            [
+                {"temperature": t, "density": rho, "repeat": repeat, "cut": 120, "samples": 20000}
+                | {"effective_samples": 2000.0}
+                for t, rho, repeat in repeats
+            ]
+        ),
+        caveats=("Two repeats are few for the agreement between repeats to mean much.",),
+        provenance={"canonry": "canonry 0.1.0", "seed": "1", "machine": "x86-64, 2 cores", "wall time": "4 min 10 s"},
+    )
+
+
+def empty(name):
+    return pd.DataFrame({column: [] for column in COLUMNS[name]})
+
+
+def test_page_is_one_file_without_scripts_or_loads(tmp_path):
+    write(invented(densities=(0.7, 0.8)), tmp_path / "report.html")
+    source = (tmp_path / "report.html").read_text(encoding="utf-8")
+    page = Page(source)
+    assert not {"script", "img", "link", "iframe", "object"} & set(page.tags)
+    assert all(tag == "a" and value.startswith("#") for tag, _, value in page.links)
+    assert all(f'id="{value[1:]}"' in source for _, _, value in page.links)
+    assert not re.search(r"https?:|@import|url\(|\son\w+=", source)
+    assert len(re.findall(r'id="([^"]*)"', source)) == len(set(re.findall(r'id="([^"]*)"', source)))
+
+
+def test_every_figure_speaks_and_has_labelled_axes():
+    page = Page(html(invented()))
+    assert len(page.figures) == 4 + 2 + 6
+    titles = [figure.findtext("title") for figure in page.figures]
+    assert len(set(titles)) == len(titles)
+    for figure in page.figures:
+        assert figure.findtext("desc")
+        labels = ["".join(text.itertext()) for text in figure.iter("text") if text.get("class") == "axis-label"]
+        assert len(labels) == 2
+        assert len([text for text in figure.iter("text") if text.get("class") == "tick"]) >= 4
+        assert any("(" in label for label in labels)
+
+
+@pytest.mark.parametrize(
+    ("units", "labels"),
+    [("reduced", ("Heat capacity cv\u200b (kB\u200b)", "ε/σ³", "σ √(m/ε)")), ("SI", ("(J/(mol K))", "(MPa)", "(ps)"))],
+)
+def test_axes_carry_the_units_of_the_study(units, labels):
+    page = Page(html(invented(units=units)))
+    text = [label for figure in page.figures for label in map("".join, map(ElementTree.Element.itertext, figure))]
+    for label in labels:
+        assert any(label in shown for shown in text), label
+
+
+def points(figure, shape=None):
+    found = [mark for mark in figure if mark.get("class", "").startswith("point")]
+    return [mark for mark in found if shape is None or shape in mark.get("class").split()]
+
+
+def test_rungs_and_deviations_are_drawn_once_each():
+    page = Page(html(invented(rungs=7)))
+    for title in ("Heat capacity over", "Pressure over", "Residual energy over"):
+        figure = page.figure(title)
+        assert len(points(figure, "disc")) == 7
+        assert len([mark for mark in figure if mark.get("class") == "bar measured"]) == 7
+        assert len([mark for mark in figure if mark.get("stroke-dasharray")]) == 2, "reference and its legend"
+    assert len(points(page.figure("Deviation"))) == 3 * 7
+
+
+def test_bars_are_two_standard_errors():
+    figure = Page(html(invented())).figure("Heat capacity over")
+    ticks = [mark for mark in figure if mark.get("class") == "tick" and mark.get("text-anchor") == "end"]
+    values, pixels = ([float(get(mark)) for mark in ticks] for get in (lambda m: m.text, lambda m: m.get("y")))
+    per_pixel = (values[-1] - values[0]) / (pixels[0] - pixels[-1])
+    for bar in (mark for mark in figure if mark.get("class") == "bar measured"):
+        _, low, high = (float(number) for number in re.findall(r"[\d.]+", bar.get("d")))
+        assert (low - high) * per_pixel == pytest.approx(2 * 2 * 0.012, rel=0.02)
+
+
+def test_doubtful_rungs_look_different_and_are_named_with_their_reason():
+    results = invented()
+    rows = results.properties.copy()
+    first = (rows["temperature"] == 0.9) & (rows["property"] == "pressure")
+    rows.loc[first, ["trust", "reason"]] = ["no", "the series is shorter than 50 correlation times"]
+    page = Page(html(replace(results, properties=rows)))
+    assert len(points(page.figure("Pressure over"), "cross")) == 1
+    assert len(points(page.figure("Pressure over"), "disc")) == 5
+    assert "Do not use: pressure at T = 0.9" in page.text.replace(" k B", "")
+    assert "the series is shorter than 50 correlation times." in page.text
+    assert "1.290(11)‡" in page.text
+
+
+def test_verdict_and_tables_show_value_error_reference_and_deviation():
+    results = invented()
+    row = results.verdict[results.verdict["property"] == "heat_capacity"].iloc[0]
+    page = Page(html(results))
+    assert "✓ Agrees with the reference" in page.text
+    assert "Of 18 values, 18 agree." in page.text
+    assert f"{row['value']:.3f}(12)" in page.text
+    assert f"{row['reference_value']:.4f}(20)" in page.text
+    assert f"{row['z']:+.1f}".replace("-", "−") in page.text
+    largest = results.verdict["z"].abs().max()
+    assert f"the largest {largest:.1f}: pressure at T = 1.5" in page.text
+
+
+@pytest.mark.parametrize(("overall", "word"), [("disagrees", "✗ Disagrees"), ("undecided", "? Undecided")])
+def test_overall_row_decides(overall, word):
+    results = invented()
+    row = pd.DataFrame([{"reference": "thol-2016", "outcome": overall}])
+    verdict = pd.concat([results.verdict, row], ignore_index=True)
+    page = Page(html(replace(results, verdict=verdict)))
+    assert word in page.text
+    assert "Of 18 values, 18 agree." in page.text
+
+
+def test_without_overall_row_the_worst_row_decides():
+    results = invented()
+    verdict = results.verdict.copy()
+    assert outcome(results) == "agrees"
+    verdict.loc[3, "outcome"] = "undecided"
+    assert outcome(replace(results, verdict=verdict)) == "undecided"
+    verdict.loc[4, "outcome"] = "disagrees"
+    assert outcome(replace(results, verdict=verdict)) == "disagrees"
+
+
+def test_refused_stretch_breaks_the_curve_and_is_named():
+    results = invented()
+    curve = results.curve.copy()
+    thin = curve["temperature"].between(1.2, 1.28)
+    curve.loc[thin, ["value", "standard_error"]] = np.nan
+    curve.loc[thin, ["trust", "reason"]] = ["no", "31 effective samples, 50 are needed"]
+    cut = replace(results, curve=curve)
+    figure = Page(html(cut)).figure("Heat capacity over")
+    line = next(mark for mark in figure if mark.get("class") == "line measured")
+    assert line.get("d").count("M") == 2
+    assert len([mark for mark in figure if mark.get("class") == "span"]) == 2, "the stretch and its legend"
+    assert doubts(cut) == [
+        "No reweighted value at density 0.8 σ⁻³ between T = 1.2 and 1.28. Reason: 31 effective samples, 50 are needed."
+    ]
+
+
+def test_study_whose_whole_curve_is_refused():
+    results = invented()
+    curve = results.curve.assign(value=np.nan, standard_error=np.nan, trust="no", reason="no overlap")
+    page = Page(html(replace(results, curve=curve)))
+    assert "No reweighted value at density 0.8 σ -3 . Reason: no overlap." in page.text.replace("−", "-")
+    assert not [mark for mark in page.figure("Pressure over") if mark.get("class") == "line measured"]
+    assert len(points(page.figure("Pressure over"))) == 6
+
+
+def test_study_without_reference():
+    results = invented()
+    page = Page(html(replace(results, verdict=empty("verdict"), reference_curve=empty("reference_curve"))))
+    assert "Not compared with a reference" in page.text
+    assert "thol-2016" not in paragraph(replace(results, verdict=empty("verdict")))
+    assert not [figure for figure in page.figures if figure.findtext("title").startswith("Deviation")]
+
+
+def test_study_that_has_rung_values_only():
+    names = ("curve", "structure", "verdict", "histograms", "ledger", "overlap", "reference_curve")
+    page = Page(html(replace(invented(scheme="velocity-verlet"), **{name: empty(name) for name in names})))
+    assert [figure.findtext("title").split(",")[0] for figure in page.figures] == [
+        "Heat capacity over temperature",
+        "Pressure over temperature",
+        "Residual energy over temperature",
+    ]
+    assert "rungs of constant energy are not reweighted" in page.text
+
+
+def test_states_without_neighbours_come_as_one_set():
+    page = Page(html(invented(densities=(0.6, 0.7, 0.8), rungs=1)))
+    assert page.text.count("Single states") == 2, "contents and heading"
+    assert page.figures[0].findtext("title") == "Conserved quantity over time, single states"
+    assert [figure.findtext("title").split(",")[1] for figure in page.figures[1:]] == [
+        f" density {density}" for density in (0.6, 0.7, 0.8)
+    ]
+
+
+def test_unknown_ideal_part_leaves_the_residual_heat_capacity():
+    results = invented()
+    rows = results.properties[results.properties["property"] != "heat_capacity"]
+    page = Page(html(replace(results, properties=rows, verdict=empty("verdict"))))
+    assert len(points(page.figure("Residual heat capacity over"))) == 6
+    assert "Asked: residual heat capacity and pressure" in page.text
+
+
+def test_hostile_texts_are_shown_not_obeyed():
+    nasty = '</title><script>alert("1")</script>&<b onload=x>'
+    results = invented()
+    rows = results.properties.assign(reason=nasty, trust="caution")
+    page = Page(
+        html(
+            replace(
+                results,
+                title=nasty,
+                properties=rows,
+                verdict=results.verdict.assign(reference=nasty),
+                reference_curve=results.reference_curve.assign(reference=nasty),
+                caveats=(nasty,),
+                provenance={nasty: nasty},
+                study_toml=f"# {nasty}\n{results.study_toml}",
+                summary=results.summary.assign(note=nasty),
+            )
+        )
+    )
+    assert not {"script", "b"} & set(page.tags)
+    assert page.text.count('alert("1")') >= 8
+    assert page.tags.count("title") == 1 + len(page.figures)
+
+
+def test_forty_rungs_on_three_isochores_stay_small():
+    results = invented(densities=(0.6, 0.7, 0.8), rungs=14, samples=20_000)
+    source = html(results)
+    assert len(source.encode()) < 5e6
+    page = Page(source)
+    assert len(page.figures) == 3 * (4 + 2 + 14)
+    drawn = [mark.get("d").count(",") for figure in page.figures for mark in figure if mark.get("d")]
+    assert max(drawn) <= 2 * 402
+
+
+def test_ledger_keeps_extremes_and_names_the_farthest_repeat():
+    results = invented(samples=20_000)
+    rows = results.ledger.reset_index(drop=True)
+    rows.loc[7777, "drift"] = 1.0
+    ends = rows.groupby(["temperature", "repeat"])["drift"].last()
+    temperature, repeat = ends.abs().idxmax()
+    figure = Page(html(replace(results, ledger=rows))).figure("Conserved quantity")
+    texts = ["".join(text.itertext()) for text in figure.iter("text")]
+    assert f"largest change: T = {temperature:g} ε/kB\u200b, repeat {repeat}" in texts
+    height = [float(y) for mark in figure if mark.get("d") for y in re.findall(r",(-?[\d.]+)", mark.get("d"))]
+    assert min(height) < 0.3 * max(height), "the one high sample sets the scale"
+
+
+@pytest.mark.parametrize(
+    ("scheme", "authors", "absent"),
+    [
+        ("baoab", "Leimkuhler", "Bussi"),
+        ("obabo", "Bussi", "Leimkuhler"),
+        ("velocity-verlet", "Lebowitz", "Leimkuhler"),
+    ],
+)
+def test_methods_and_citations_follow_the_scheme(scheme, authors, absent):
+    results = invented(scheme=scheme)
+    text, works = paragraph(results), citations(results)
+    assert any(authors in work for work in works)
+    assert not any(absent in work for work in works)
+    assert any("Thol" in work and "(2016)" in work for work in works)
+    assert [int(number) for number in re.findall(r"\[(\d+)\]", text)] == list(range(1, len(works) + 1))
+    assert "[baoab]" not in text
+    assert ("friction" in text) == (scheme != "velocity-verlet")
+
+
+@pytest.mark.parametrize(
+    ("truncation", "words"),
+    [
+        ("corrected", "taken as homogeneous"),
+        ("plain", "without correction"),
+        ("shifted", "shifted to zero at 3 σ"),
+        ("force-shifted", "Energy and force are shifted"),
+    ],
+)
+def test_standing_caveats_are_named(truncation, words):
+    text = Page(html(invented(truncation=truncation))).text
+    for caveat in (words, "pressure equipment", "licensed practice", "500 particles", "classically", "Two repeats"):
+        assert caveat in text
+
+
+def test_provenance_holds_the_whole_study():
+    results = invented()
+    text = Page(html(results)).text
+    assert " ".join(results.study_toml.split()) in text
+    for key, value in results.provenance.items():
+        assert f"{key} {value}" in text
+
+
+def test_table_without_a_column_is_refused():
+    with pytest.raises(ValueError, match="table 'overlap' lacks the columns overlap"):
+        replace(invented(), overlap=empty("overlap").drop(columns="overlap"))
