@@ -67,8 +67,7 @@ class Table:
             raise self.refusal(key, str(problem) if key in self.content else f"missing; {problem}") from None
 
     def _dotted(self, key: str) -> str:
-        plain = key if re.fullmatch(r"[\w-]+", key) else shown(key)
-        return f"{self.name}.{plain}" if self.name else plain
+        return f"{self.name}.{_bare(key)}" if self.name else _bare(key)
 
 
 def open_table(path: Path) -> Table:
@@ -99,7 +98,7 @@ def shown(value: object) -> str:
     elif isinstance(value, list):
         text = f"[{', '.join(map(shown, value))}]"
     elif isinstance(value, dict):
-        text = f"{{ {', '.join(f'{key} = {shown(entry)}' for key, entry in value.items())} }}"
+        text = f"{{ {', '.join(f'{_bare(key)} = {shown(entry)}' for key, entry in value.items())} }}"
     else:
         text = str(value)
     return text if len(text) <= 60 else f"{text[:57]}..."
@@ -145,12 +144,12 @@ def parameter(name: str, low: float, high: float) -> Reader[float]:
     def read(value: object) -> float:
         if not isinstance(value, str):
             raise NotAccepted(f'what is needed is a text with a unit, such as "{example(name)}"')
-        found = from_text(value, name, None)
+        found = rounded(from_text(value, name, None))
         if not low <= found <= high:
             raise NotAccepted(
                 f'what is needed is a value of the size of an atom or molecule, such as "{example(name)}"'
             )
-        return rounded(found)
+        return found
 
     return read
 
@@ -170,7 +169,7 @@ def quantity(name: str, low: float, high: float, scale: Scale | None) -> Reader[
                     "a value with a unit needs fluid.epsilon, fluid.sigma and fluid.mass; "
                     f"without them what is needed is a bare number ({label})"
                 )
-            value = from_text(value, name, scale)
+            value = rounded(from_text(value, name, scale))
             if not low <= value <= high:
                 raise NotAccepted(f"this is {value:.6g} {label}; {wanted}")
         if not low <= value <= high:
@@ -202,6 +201,10 @@ def one_or_more(reader: Reader[T]) -> Reader[tuple[T, ...]]:
         return tuple(found)
 
     return read
+
+
+def _bare(key: str) -> str:
+    return key if re.fullmatch(r"[A-Za-z0-9_-]+", key) else shown(key)
 
 
 def _either(options: Collection[str]) -> str:
