@@ -1,0 +1,104 @@
+"""Equilibration cut and split R-hat: against known transients and an independent library."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+import pytest
+from arviz_stats.base import array_stats
+from scipy.signal import lfilter
+
+from estimators.errors import BadSeries
+from estimators.settle import rank_normalised_split_rhat, settled_start
+
+
+def autoregressive(generator, n, tau):
+    """(n,) normal AR(1) series of unit variance with integrated autocorrelation time tau."""
+    memory = (2.0 * tau - 1.0) / (2.0 * tau + 1.0)
+    start = generator.normal(size=1)
+    rest = generator.normal(size=n - 1) * math.sqrt(1.0 - memory**2)
+    return lfilter([1.0], [1.0, -memory], np.concatenate([start, rest]))
+
+
+@pytest.mark.parametrize("tau", [0.5, 10.0, 40.0])
+def test_settled_series_keep_nearly_everything(tau):
+    generator = np.random.default_rng(21)
+    cuts = np.array([settled_start(autoregressive(generator, 5000, tau)) for _ in range(200)]) / 5000
+    # White noise: the first block survives in most series, and the mean cut costs little precision.
+    assert np.median(cuts) == 0.0
+    assert cuts.mean() < 0.05
+
+
+@pytest.mark.parametrize(("height", "relaxation"), [(10.0, 50.0), (10.0, 200.0), (-3.0, 300.0), (1.0, 500.0)])
+@pytest.mark.parametrize("tau", [0.5, 10.0])
+def test_transients_are_cut_until_they_no_longer_matter(height, relaxation, tau):
+    generator = np.random.default_rng(22)
+    n = 10_000
+    transient = height * np.exp(-np.arange(n) / relaxation)
+    errors, shifts, kept = [], [], []
+    for _ in range(100):
+        start = settled_start(autoregressive(generator, n, tau) + transient)
+        errors.append(math.sqrt(2.0 * tau / (n - start)))
+        shifts.append(transient[start:].mean())
+        kept.append((n - start) / n)
+    # What is left shifts the mean by well under its standard error, at the price of a fifth of the samples at most.
+    assert abs(np.mean(shifts)) < 0.6 * np.mean(errors)
+    assert np.mean(kept) > 0.8
+
+
+def test_series_that_never_settles_is_cut_by_half():
+    drift = np.linspace(0.0, 30.0, 4001) + np.random.default_rng(23).normal(size=4001)
+    assert 1900 <= settled_start(drift) <= 2000
+
+
+def test_offset_does_not_hide_a_transient():
+    generator = np.random.default_rng(24)
+    values = generator.normal(size=5000) + 5.0 * np.exp(-np.arange(5000) / 100.0)
+    assert settled_start(values) == settled_start(values - 1e6) > 0
+
+
+def test_short_series_are_left_alone():
+    assert settled_start(np.array([5.0, 1.0, 1.0, 1.0, 1.0])) == 0
+    assert settled_start(np.empty(0)) == 0
+    assert settled_start(np.full(1000, 3.0)) == 0
+    with pytest.raises(BadSeries, match="not finite"):
+        settled_start(np.array([1.0] * 20 + [math.nan]))
+
+
+@pytest.mark.parametrize("n_chains", [2, 5])
+@pytest.mark.parametrize("n", [4, 501, 2000])
+@pytest.mark.parametrize("story", ["same", "location", "scale", "drift", "ties"])
+def test_rhat_against_arviz(n_chains, n, story):
+    generator = np.random.default_rng(25)
+    chains = generator.standard_t(2, size=(n_chains, n))
+    if story == "location":
+        chains += 0.5 * np.arange(n_chains)[:, None]
+    elif story == "scale":
+        chains *= 1.0 + np.arange(n_chains)[:, None]
+    elif story == "drift":
+        chains += np.linspace(0.0, 1.0, n)
+    elif story == "ties":
+        chains = np.round(chains)
+    found = rank_normalised_split_rhat(list(chains))
+    assert found == pytest.approx(float(array_stats.rhat(chains, method="rank")), rel=1e-10)
+
+
+def test_rhat_tells_agreement_from_disagreement_in_location_and_in_scale():
+    generator = np.random.default_rng(26)
+    agree = [autoregressive(generator, n, 3.0) for n in (9000, 7001)]
+    assert rank_normalised_split_rhat(agree) < 1.01
+    assert rank_normalised_split_rhat([agree[0], agree[1] + 0.5]) > 1.02
+    assert rank_normalised_split_rhat([agree[0], 2.0 * agree[1]]) > 1.05
+    assert rank_normalised_split_rhat([agree[0] + np.linspace(0.0, 2.0, 9000)]) > 1.05
+
+
+def test_rhat_of_constants_and_of_nothing():
+    assert rank_normalised_split_rhat([np.ones(10), np.ones(10)]) == 1.0
+    assert rank_normalised_split_rhat([np.ones(10), np.zeros(10)]) == math.inf
+    with pytest.raises(BadSeries, match="at least 4 samples"):
+        rank_normalised_split_rhat([np.ones(3)])
+    with pytest.raises(BadSeries, match="finite"):
+        rank_normalised_split_rhat([np.array([1.0, 2.0, math.nan, 1.0])])
+    with pytest.raises(BadSeries, match="at least one"):
+        rank_normalised_split_rhat([])
