@@ -24,7 +24,7 @@ __all__ = ["Structure", "pair_structure"]
 Floats = npt.NDArray[np.float64]
 
 CONTACT_REACH = 0.1  # sigma, to either side of the cutoff
-MINIMUM_REACH = 0.15  # sigma, to either side of the first minimum
+MINIMUM_REACH = 0.2  # sigma, to either side of the first minimum
 CLEAR = 5.0  # standard errors by which a minimum must be curved upwards
 POINTS = 8  # Gauss-Legendre points in a bin
 
@@ -122,26 +122,29 @@ class _Bins:
 
 def _pair_counts(frames: Floats, box: float, bins: _Bins) -> Floats:
     """Pairs in each bin of each frame, (m, n)."""
-
-    def count(frame: Floats) -> npt.NDArray[np.int64]:
-        counts = np.zeros(int(np.sqrt(0.75) * box / bins.width) + 2, dtype=np.int64)
-        x, y, z = np.ascontiguousarray((frame - box * np.floor(frame / box)).T)
-        _add_pairs(x, y, z, box, 1.0 / bins.width, counts)
-        return counts[: bins.number]
-
-    with ThreadPoolExecutor(os.cpu_count()) as threads:
-        return np.array(list(threads.map(count, frames)), dtype=float)
+    counts = np.zeros((len(frames), int(np.sqrt(0.75) * box / bins.width) + 2), dtype=np.int32)
+    workers = os.cpu_count() or 1
+    stretches = zip(np.array_split(frames, workers), np.array_split(counts, workers), strict=True)
+    with ThreadPoolExecutor(workers) as threads:
+        list(threads.map(lambda stretch: _add_pairs(stretch[0], box, 1.0 / bins.width, stretch[1]), stretches))
+    return counts[:, : bins.number].astype(float)
 
 
 @numba.njit(cache=True, nogil=True)
-def _add_pairs(x, y, z, box, per_width, counts):  # type: ignore[no-untyped-def]
-    """Counts every pair once by its nearest-image distance; bins reach to the corner of the box."""
-    places = np.empty(x.size, np.int32)
-    for i in range(x.size - 1):
-        others = places[: x.size - 1 - i]
-        _places(x[i + 1 :], y[i + 1 :], z[i + 1 :], x[i], y[i], z[i], box, per_width, others)
-        for place in others:
-            counts[place] += 1
+def _add_pairs(frames, box, per_width, counts):  # type: ignore[no-untyped-def]
+    """Counts every pair of each frame once by its nearest-image distance; bins reach to the corner of the box."""
+    m, n, _ = frames.shape
+    where = np.empty((3, n))
+    places = np.empty(n, np.int32)
+    for f in range(m):
+        for k in range(3):
+            where[k] = frames[f, :, k] - box * np.floor(frames[f, :, k] / box)
+        x, y, z = where[0], where[1], where[2]
+        for i in range(n - 1):
+            others = places[: n - 1 - i]
+            _places(x[i + 1 :], y[i + 1 :], z[i + 1 :], x[i], y[i], z[i], box, per_width, others)
+            for place in others:
+                counts[f, place] += 1
 
 
 @numba.njit(cache=True, nogil=True, fastmath=True)
