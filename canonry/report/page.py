@@ -98,6 +98,7 @@ def _contents(sets: list[tuple[str, Results]]) -> Iterator[str]:
 
 def _set(number: int, where: str, results: Results) -> Iterator[str]:
     several = results.properties["density"].nunique() > 1
+    side = "" if several else "plots"
     isochore = results.properties["temperature"].nunique() > 1 and not several
     yield f'<section id="set-{number}"><h2>{as_html(where.capitalize())}</h2>'
     yield tables.values(results, with_density=several)
@@ -109,7 +110,7 @@ def _set(number: int, where: str, results: Results) -> Iterator[str]:
         yield _plots(figures)
         yield f'<p class="fine">{escape(_CURVES if methods.Setup.of(results).bath else _NO_CURVES)}</p>'
     yield from _tabled("Further properties", tables.derived(results, with_density=several))
-    yield from _tabled("Comparison, value by value", "".join(tables.comparison(results)), "plots comparison")
+    yield from _tabled("Comparison, value by value", "".join(tables.comparison(results)), f"{side} comparison")
     yield from _sampled(where, results, isochore)
     yield "</section>"
 
@@ -122,7 +123,7 @@ def _sampled(where: str, results: Results, isochore: bool) -> Iterator[str]:
     yield _plots(figures)
     if len(results.structure):
         yield "<h3>Structure: pair distribution g(r)</h3>"
-        yield '<p class="fine">Each rung with its 95 % band; the dashed line repeats the coldest rung of its density.</p>'
+        yield '<p class="fine">Each rung with its 95 % band; dashed: the coldest rung of its density.</p>'
         yield _plots(plots.structure(results, where), "small plots", captions=False)
 
 

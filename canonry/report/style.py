@@ -40,7 +40,8 @@ th:first-child,td:first-child{position:sticky;left:0;background:var(--paper)}
 tbody tr{border-bottom:1px solid var(--rule)}
 caption{text-align:left;font-weight:600;padding:.2rem 0}
 .wide thead th{white-space:normal;max-width:9rem}
-.comparison td:last-child{text-align:left}.comparison .scroll{margin:0}
+.comparison td:last-child{text-align:left}.comparison .scroll{margin:0 0 .8rem}
+.comparison th,.comparison td{padding-right:.8rem}
 .z{display:inline-block;min-width:2.6em}
 .strip{width:60px;height:12px;vertical-align:-1px;margin-right:.2rem}
 .strip .axis{stroke:var(--quiet);stroke-width:1}.strip .within{stroke:var(--rule);stroke-width:6}
@@ -81,7 +82,7 @@ dl{grid-template-columns:1fr}dd{margin-bottom:.4rem}}
 main{max-width:none;padding:0}nav,details{display:none}a{color:inherit;text-decoration:none}
 h2{break-after:avoid;page-break-after:avoid;margin-top:2rem}h3{break-after:avoid;page-break-after:avoid}
 .plots{grid-template-columns:1fr 1fr;gap:1rem}.small.plots{grid-template-columns:repeat(4,1fr);gap:.7rem}
-.scroll{overflow:visible}table{font-size:8.2pt}th,td{padding-right:.7rem}tr,.verdict,li{break-inside:avoid;page-break-inside:avoid}
+.scroll{overflow:visible}.comparison table{break-inside:avoid;page-break-inside:avoid}table{font-size:8.2pt}th,td{padding-right:.7rem}tr,.verdict,li{break-inside:avoid;page-break-inside:avoid}
 thead{display:table-header-group}pre{white-space:pre-wrap;overflow-wrap:anywhere;background:none;padding:0}
 *{-webkit-print-color-adjust:exact;print-color-adjust:exact}}
 """

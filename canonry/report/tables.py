@@ -122,7 +122,7 @@ def _deviation(z: float) -> str:
     return (
         '<svg class="strip" viewBox="0 0 60 12" aria-hidden="true"><path class="axis" d="M2,6h56"/>'
         f'<path class="within" d="M16,6h28"/><circle class="{reach}" cx="{at:.1f}" cy="6" r="3"/></svg>'
-        f'<span class="z">{_typeset(f"{z:+.1f}")}</span>'
+        f'<span class="z">{_typeset(f"{z:+.1f}") if abs(z) >= 0.05 else "0.0"}</span>'
     )
 
 

@@ -57,6 +57,9 @@ def test_points_stand_where_their_values_are():
     assert (across[2] - across[0]) / (across[1] - across[0]) == pytest.approx(3.0, abs=0.01)
     assert (down[2] - down[0]) / (down[1] - down[0]) == pytest.approx(0.5, abs=0.01)
     assert down[1] < down[2] < down[0], "upwards is larger"
+    assert 50 < across.min() < 80
+    assert 400 < across.max() < 430
+    assert 40 < down.min() < down.max() < 260
     bars = [[float(v) for v in re.findall(r"-?[\d.]+", bar.get("d"))] for bar in kinds(svg, "bar")]
     assert len(bars) == 2, "no bar without error"
     per_unit = (down[0] - down[1]) / 20.0

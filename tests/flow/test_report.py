@@ -300,7 +300,8 @@ def test_verdict_and_tables_show_value_error_reference_and_deviation():
     assert f"{row['value']:.3f}(12)" in page.text
     assert f"{row['reference_value']:.4f}(20)" in page.text
     assert f"{row['z']:+.1f}".replace("-", "−") in page.text
-    largest = results.verdict["z"].abs().max()
+    median, largest = results.verdict["z"].abs().median(), results.verdict["z"].abs().max()
+    assert f"The median deviation is {median:.1f} combined standard errors" in page.text
     assert f"the largest {largest:.1f}: pressure at T = 1.5" in page.text
 
 
@@ -312,6 +313,14 @@ def test_overall_row_decides(overall, word):
     page = Page(html(replace(results, verdict=verdict)))
     assert word in page.text
     assert "Of 18 values, 18 agree." in page.text
+
+
+def test_overall_row_outweighs_single_rows():
+    results = invented()
+    verdict = results.verdict.copy()
+    verdict.loc[3, "outcome"] = "disagrees"
+    row = pd.DataFrame([{"reference": "thol-2016", "outcome": "agrees"}])
+    assert outcome(replace(results, verdict=pd.concat([verdict, row], ignore_index=True))) == "agrees"
 
 
 def test_without_overall_row_the_worst_row_decides():
