@@ -92,7 +92,7 @@ def test_every_package_is_installed() -> None:
 
 @pytest.mark.parametrize("name", PACKAGES)
 def test_the_installed_distribution_owns_its_names(name: str) -> None:
-    assert packages_distributions().get(name) == ["canonry"]
+    assert set(packages_distributions()[name]) == {"canonry"}  # needs an installed canonry: pip install -e .
 
 
 def python(code: str, *, directory: Path) -> subprocess.CompletedProcess[str]:
