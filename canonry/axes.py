@@ -54,7 +54,7 @@ class Scale:
     def caption(self, axis: Axis) -> str:
         factor = unit_text(f"10^{self.exponent}") if self.exponent else ""
         unit = " ".join(part for part in (factor, axis.unit) if part)
-        return f"{axis.name} ({unit})" if unit else axis.name
+        return f"{axis.name}, {unit}" if unit else axis.name
 
 
 def round_ticks(low: float, high: float, at_most: int) -> list[float]:

@@ -76,7 +76,7 @@ def histograms(results: Results, where: str) -> Figure:
         title=f"Energy distributions of neighbouring rungs, {where}",
         description="Probability density of the residual energy per particle in each rung, with its temperature.",
         x=Axis("Residual energy u", unit),
-        y=Axis("Probability density", f"1/({unit})" if "/" in unit else f"1/{unit}"),
+        y=Axis("Probability density", "/".join(reversed(unit.split("/"))) if "/" in unit else f"1/{unit}"),
         marks=marks,
     )
 

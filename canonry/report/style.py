@@ -82,7 +82,9 @@ dl{grid-template-columns:1fr}dd{margin-bottom:.4rem}}
 main{max-width:none;padding:0}nav,details{display:none}a{color:inherit;text-decoration:none}
 h2{break-after:avoid;page-break-after:avoid;margin-top:2rem}h3{break-after:avoid;page-break-after:avoid}
 .plots{grid-template-columns:1fr 1fr;gap:1rem}.small.plots{grid-template-columns:repeat(4,1fr);gap:.7rem}
-.scroll{overflow:visible}.comparison table{break-inside:avoid;page-break-inside:avoid}table{font-size:8.2pt}th,td{padding-right:.7rem}tr,.verdict,li{break-inside:avoid;page-break-inside:avoid}
+.scroll{overflow:visible}
+.comparison table{break-inside:avoid;page-break-inside:avoid}
+table{font-size:8.2pt}th,td{padding-right:.7rem}tr,.verdict,li{break-inside:avoid;page-break-inside:avoid}
 thead{display:table-header-group}pre{white-space:pre-wrap;overflow-wrap:anywhere;background:none;padding:0}
 *{-webkit-print-color-adjust:exact;print-color-adjust:exact}}
 """

@@ -115,7 +115,7 @@ def test_labels_carry_units_powers_and_indices():
     x = np.array([0.0, 1.0])
     svg = drawn(Line(x, 2e-5 * x), y=Axis("Change of U_dyn", "k_B"))
     labels = [text(label).replace("\u200b", "") for label in kinds(svg, "axis-label")]
-    assert labels == ["Change of Udyn (10⁻⁵ kB)", "Temperature T (K)"]
+    assert labels == ["Change of Udyn, 10⁻⁵ kB", "Temperature T, K"]
     plain = drawn(Line(x, x), y=Axis("Compressibility factor Z"))
     assert text(kinds(plain, "axis-label")[0]) == "Compressibility factor Z"
 
