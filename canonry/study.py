@@ -4,19 +4,19 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field, fields, replace
 from pathlib import Path
-from typing import Literal, get_args
+from typing import get_args
 
 from canonry.keys import Reader, Table, choice, line, one_or_more, open_table, parameter, quantity, whole
 from canonry.quantities import NotAccepted, percent, rounded
 from canonry.units import PROPERTIES, Kind, Scale
 from canonry.writing import study_text
 from sampler.fluid import Fluid, State, Truncation
+from sampler.protocol import Protocol, Scheme
 
-__all__ = ["COMPARED", "Compare", "Sampling", "Scheme", "Study", "Tolerance", "load"]
+__all__ = ["COMPARED", "Compare", "Study", "Tolerance", "load"]
 
-Scheme = Literal["baoab", "obabo", "velocity-verlet"]
 COMPARED = (
     "residual_energy",
     "residual_heat_capacity",
@@ -28,26 +28,6 @@ COMPARED = (
 )
 _SMALLEST_CUTOFF = 1.0  # sigma
 _LIQUID = 0.5  # sigma^-3: at and above this density the defaults are those of a liquid
-
-
-@dataclass(frozen=True)
-class Sampling:
-    """How every rung is sampled, in reduced units; friction 0 where the scheme has no bath; counts are steps."""
-
-    seed: int
-    repeats: int
-    time_step: float
-    friction: float
-    scheme: Scheme
-    equilibration: int
-    steps: int
-    record_every: int
-    frame_every: int
-
-    @property
-    def bath(self) -> bool:
-        """Whether a thermostat acts."""
-        return self.scheme != "velocity-verlet"
 
 
 @dataclass(frozen=True)
@@ -82,7 +62,7 @@ class Study:
     scale: Scale | None
     ideal_heat_capacity: float | None
     states: tuple[State, ...]
-    sampling: Sampling
+    sampling: Protocol
     compare: Compare
 
     @property
@@ -240,28 +220,26 @@ def _ideal_heat_capacity(table: Table, scale: Scale | None) -> float | None:
     return table.read("ideal_heat_capacity", quantity("heat_capacity", 1.5, 1000.0, scale), 1.5)
 
 
-def _sampling(table: Table, scale: Scale | None, states: tuple[State, ...]) -> Sampling:
-    table.only(tuple(Sampling.__dataclass_fields__))
-    scheme: Scheme = table.read("scheme", choice(get_args(Scheme), later=("metropolised",)), "baoab")
-    if scheme == "velocity-verlet" and "friction" in table:
-        raise table.refusal("friction", 'the scheme "velocity-verlet" has no bath; leave the key out, or take "baoab"')
-    friction = table.read("friction", quantity("friction", 1e-3, 1e3, scale), 2.0 if _is_liquid(states) else 1.0)
+def _sampling(table: Table, scale: Scale | None, states: tuple[State, ...]) -> Protocol:
+    table.only(tuple(entry.name for entry in fields(Protocol)))
     record_every = table.read("record_every", whole(1, 1_000_000), 10)
-    sampling = Sampling(
+    counts = {
+        "record_every": record_every,
+        "frame_every": table.read("frame_every", whole(1, 10**9), math.ceil(500 / record_every) * record_every),
+        "steps": table.read("steps", whole(1, 10**12), math.ceil(200_000 / record_every) * record_every),
+    }
+    for name, count in counts.items():
+        if count % record_every:
+            raise table.refusal(name, f"what is needed is a multiple of record_every, which is {record_every}")
+    return Protocol(
         seed=table.read("seed", whole(0, 2**32 - 1), 1),
         repeats=table.read("repeats", whole(1, 10_000), 1),
         time_step=table.read("time_step", quantity("time", 1e-6, 0.1, scale), 0.005),
-        friction=0.0 if scheme == "velocity-verlet" else friction,
-        scheme=scheme,
+        friction=table.read("friction", quantity("friction", 1e-3, 1e3, scale), 2.0 if _is_liquid(states) else 1.0),
+        scheme=table.read("scheme", choice(get_args(Scheme), later=("metropolised",)), "baoab"),
         equilibration=table.read("equilibration", whole(0, 10**12), 20_000),
-        steps=table.read("steps", whole(1, 10**12), 200_000),
-        record_every=record_every,
-        frame_every=table.read("frame_every", whole(1, 1_000_000_000), record_every * -(-500 // record_every)),
+        **counts,
     )
-    for name in ("steps", "frame_every"):
-        if getattr(sampling, name) % record_every:
-            raise table.refusal(name, f"what is needed is a multiple of record_every, which is {record_every}")
-    return sampling
 
 
 def _compare(table: Table, scale: Scale | None, fluid: Fluid) -> Compare:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 from collections.abc import Callable
+from dataclasses import asdict
 from typing import TYPE_CHECKING
 
 from canonry.quantities import shortest_text
@@ -82,10 +83,8 @@ def _writer(study: Study, quantity: str) -> Callable[[float], str]:
 
 
 def _sampling(study: Study) -> list[str]:
-    values = {name: getattr(study.sampling, name) for name in type(study.sampling).__dataclass_fields__}
-    if not study.sampling.bath:
-        del values["friction"]
-    return [f"{name} = {_quoted(value) if isinstance(value, str) else repr(value)}" for name, value in values.items()]
+    values = asdict(study.sampling).items()
+    return [f"{name} = {_quoted(value) if isinstance(value, str) else repr(value)}" for name, value in values]
 
 
 def _tolerance(tolerance: Tolerance) -> str:
