@@ -18,7 +18,7 @@ Function = TypeVar("Function", bound=Callable[..., Any])
 
 @cache
 def cache_folder() -> Path:
-    """Folder of compiled kernels; its name changes with any source file here, since a kernel's callers are cached with it."""
+    """Folder of compiled kernels; a change to any source file here starts a new one, as callers are cached too."""
     digest = hashlib.sha256(numba.__version__.encode())
     for source in sorted(Path(__file__).parent.rglob("*.py")):
         digest.update(source.read_bytes())

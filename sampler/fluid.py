@@ -47,7 +47,7 @@ class State:
 
 @dataclass(frozen=True)
 class Totals:
-    """Sums over all pairs of each sample, each (n_samples,), epsilon, long-range part included where the fluid has one."""
+    """Sums over all pairs of each sample, (n_samples,), epsilon, long-range part included where the fluid has one."""
 
     energy: Floats
     sampled_energy: Floats
@@ -83,14 +83,14 @@ class Fluid:
     @property
     def energy_at_cutoff(self) -> float:
         """u(r_c) of the untruncated potential, epsilon."""
-        return float(lennard_jones.u(np.float64(self.cutoff)))
+        return float(lennard_jones.u(self.cutoff))
 
     @property
     def slope_at_cutoff(self) -> float:
         """u'(r_c) that a force-shifted fluid subtracts, epsilon/sigma; zero for every other truncation."""
         if self.truncation != "force-shifted":
             return 0.0
-        return float(lennard_jones.w(np.float64(self.cutoff))) / self.cutoff
+        return float(lennard_jones.w(self.cutoff)) / self.cutoff
 
     @property
     def _shift(self) -> float:
@@ -146,5 +146,5 @@ class Fluid:
         """
         if self.truncation not in ("shifted", "plain"):
             return 0.0
-        edge = float(lennard_jones.w(np.float64(self.cutoff)))
+        edge = float(lennard_jones.w(self.cutoff))
         return -2.0 * math.pi / 9.0 * density * self.cutoff**3 * edge

@@ -47,9 +47,7 @@ def _force(pair, square, inverse, inverse6):  # type: ignore[no-untyped-def]
 @overload(_force, jit_options={"forceinline": True})
 def _force_by_type(pair, square, inverse, inverse6):  # type: ignore[no-untyped-def]
     if pair.instance_class is Truncated:
-        return lambda pair, square, inverse, inverse6: (
-            (splat(48.0) * inverse6 - splat(24.0)) * inverse6 * inverse
-        )
+        return lambda pair, square, inverse, inverse6: (splat(48.0) * inverse6 - splat(24.0)) * inverse6 * inverse
     return lambda pair, square, inverse, inverse6: (
         (splat(48.0) * inverse6 - splat(24.0)) * inverse6 * inverse + splat(pair.slope) * square_root(inverse)
     )
@@ -69,7 +67,7 @@ def _distance_by_type(pair, square, inverse):  # type: ignore[no-untyped-def]
 
 @piece
 def _meet(pair, position, force, x, y, z, other, mask, limit):  # type: ignore[no-untyped-def]
-    """One particle with the lanes of one group that are in the mask and within the cutoff; the group feels the reaction."""
+    """One particle with those lanes of a group that are in the mask and within the cutoff; the group is pushed back."""
     dx, dy, dz = x - load(position, other), y - load(position, other + 4), z - load(position, other + 8)
     square = dx * dx + dy * dy + dz * dz
     inside = both(smaller(square, limit), mask)

@@ -43,7 +43,7 @@ class Groups(NamedTuple):
 
 
 class Inner(NamedTuple):
-    """Offsets in the slot layout of the groups that slot i meets: offsets[start[i]:start[i + 1]], its own group aside."""
+    """Offsets in the slot layout of the groups that slot i meets, offsets[start[i]:start[i + 1]], but its own."""
 
     start: npt.NDArray[np.int64]
     offsets: npt.NDArray[np.int32]
@@ -162,7 +162,7 @@ def _columns_bounds(bounds, column, first_image, n_groups, n_columns, margin):  
         low, high = 0, 0
         if ex < n_columns and 0 <= ey < n_columns:
             low, high = column[ex * n_columns + ey], column[ex * n_columns + ey + 1]
-        for part in range(2):
+        for _ in range(2):
             for g in range(low, high):
                 for c in range(3):
                     out[e, c] = min(out[e, c], bounds[g, c])
@@ -199,7 +199,7 @@ def _partners(bounds, column, first_image, n_columns, margin, box, reach):  # ty
                     if ex < n_columns and 0 <= ey < n_columns:
                         low = max(g + 1, column[ex * n_columns + ey])
                         high = column[ex * n_columns + ey + 1]
-                    for part in range(2):
+                    for _ in range(2):
                         if count + high - low > partners.size:
                             larger = np.empty(2 * partners.size + high - low, np.int32)
                             larger[:count] = partners[:count]

@@ -52,7 +52,7 @@ def load(chain: Chain) -> Series:
 
 
 def unfinished(chain: Chain) -> tuple[list[int], list[Path]]:
-    """Numbers of the segments that are missing, too short or damaged; damaged ones are set aside, their new paths follow.
+    """Numbers of the segments that are missing, too short or damaged; and where damaged ones were set aside.
 
     Raises ForeignDirectory if a segment is of another study.
     """

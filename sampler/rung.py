@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-from dataclasses import replace
-
 import numpy as np
 import numpy.typing as npt
 
@@ -65,8 +63,8 @@ def advance(chain: Chain, index: int, before: Segment | None, stop: Stop) -> Seg
         return None
     if outcome == DIVERGED or not np.isfinite(samples).all():
         raise DivergedRun(
-            f"the run at temperature {state.temperature:g}, density {state.density:g}, repeat {chain.repeat} flew apart "
-            f"by step {step}; take a time_step smaller than {protocol.time_step:g}"
+            f"the run at temperature {state.temperature:g}, density {state.density:g}, repeat {chain.repeat} flew "
+            f"apart by step {step}; take a time_step smaller than {protocol.time_step:g}"
         )
     return Segment(first, last, samples, frames, where, velocity, float(heat[0]))
 

@@ -138,7 +138,7 @@ def _forces(pair, position, force, groups, inner, sums):  # type: ignore[no-unty
 def propagate(  # type: ignore[no-untyped-def]
     pair, where, velocity, box, skins, scheme, key, first, n_steps, every, frame_every, samples, frames, ledger, stop
 ):
-    """Advance one trajectory from step `first` by n_steps, in place; returns DONE, STOPPED or DIVERGED and the last step.
+    """Advance a trajectory from step `first` by n_steps, in place; returns DONE, STOPPED or DIVERGED and the step.
 
     where, velocity : (n, 3), by label
     skins : (inner, outer), lengths beyond the cutoff at which the two lists are cut
@@ -177,7 +177,10 @@ def propagate(  # type: ignore[no-untyped-def]
                 if not moved <= box:
                     return DIVERGED, step
                 outgrown = moved > inner_skin
-                if outgrown and inner_skin + 2.0 * math.sqrt(_largest_move(position, at_group, speed.size)) > outer_skin:
+                if (
+                    outgrown
+                    and inner_skin + 2.0 * math.sqrt(_largest_move(position, at_group, speed.size)) > outer_skin
+                ):
                     _gather(position, groups, where)
                     _gather(speed, groups, velocity)
                     _wrap(where, box)

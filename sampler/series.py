@@ -49,7 +49,7 @@ class Series:
     @property
     def times(self) -> Floats:
         """(n,), time of each sample since the stated equilibration ended."""
-        return self.interval * np.arange(1, len(self) + 1)
+        return self.interval * np.arange(1.0, len(self) + 1)
 
     @property
     def kinetic_freedom(self) -> int:
@@ -57,7 +57,7 @@ class Series:
         return 3 * self.state.particles - (0 if self.bath else 3)
 
     def after(self, n_samples: int) -> Series:
-        """The series without its first n_samples, rounded up to a whole number of frame strides; frames are cut alike."""
+        """The series without its first n_samples, made up to whole frame strides, and without their frames."""
         n_frames = -(-n_samples // self.frame_stride)
         keep = slice(n_frames * self.frame_stride, None)
         names = ("energy", "sampled_energy", "virial", "hypervirial", "kinetic", "ledger")

@@ -19,7 +19,7 @@ _BASES = (
     np.array([[0.0, 0.0, 0.0], [0.5, 0.5, 0.5]]),
     np.array([[0.0, 0.0, 0.0], [0.0, 0.5, 0.5], [0.5, 0.0, 0.5], [0.5, 0.5, 0.0]]),
 )
-_DISORDER = 0.3  # displacement in units of the site spacing: enough that no crystal survives
+_DISORDER = 0.4  # displacement in units of the site spacing: enough that no crystal survives
 _LONGEST_MOVE = 0.05  # sigma
 _GAIN = 5e-4  # sigma^2/epsilon
 _GENTLE = 200.0  # epsilon/sigma: a force that a usual time step follows
@@ -27,7 +27,7 @@ _ROUNDS = 2000
 
 
 def _lattice(n: int) -> Floats:
-    """n of the sites of the cubic lattice (one, two or four sites a cell) that has fewest to spare, unit box, (n, 3)."""
+    """n sites of the cubic lattice (one, two or four sites a cell) that has fewest to spare, unit box, (n, 3)."""
     cells = [int(np.ceil((n / len(basis)) ** (1.0 / 3.0) - 1e-9)) for basis in _BASES]
     m, basis = min(zip(cells, _BASES, strict=True), key=lambda choice: len(choice[1]) * choice[0] ** 3)
     corners = np.stack(np.meshgrid(*[np.arange(m)] * 3, indexing="ij"), axis=-1).reshape(-1, 1, 3)
@@ -48,7 +48,7 @@ def first_positions(fluid: Fluid, state: State, key: Key) -> Floats:
         forces, _ = evaluate(fluid, where, box=box)
         size = np.sqrt((forces * forces).sum(axis=1))
         if size.max() < _GENTLE:
-            return np.mod(where, box)
+            return np.asarray(np.mod(where, box), dtype=float)
         where = where + forces * np.minimum(_GAIN, _LONGEST_MOVE / np.maximum(size, 1e-300))[:, None]
     raise BadRequest(
         f"{n} particles at density {state.density:g} sigma^-3 could not be freed of overlaps; take a lower density"
@@ -57,4 +57,4 @@ def first_positions(fluid: Fluid, state: State, key: Key) -> Floats:
 
 def first_velocities(state: State, key: Key) -> Floats:
     """Maxwell velocities of the set temperature, (particles, 3)."""
-    return np.sqrt(state.temperature) * draw(key, START + np.uint64(1), state.particles)
+    return float(np.sqrt(state.temperature)) * draw(key, START + np.uint64(1), state.particles)

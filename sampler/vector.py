@@ -14,7 +14,22 @@ from numba.core import cgutils, types
 from numba.core.typing.templates import ConcreteTemplate, infer_global, signature
 from numba.extending import intrinsic, lower_builtin, models, register_model
 
-__all__ = ["WIDTH", "any_of", "both", "count", "larger", "largest", "later_lanes", "load", "select", "smaller", "splat", "square_root", "store", "total"]
+__all__ = [
+    "WIDTH",
+    "any_of",
+    "both",
+    "count",
+    "larger",
+    "largest",
+    "later_lanes",
+    "load",
+    "select",
+    "smaller",
+    "splat",
+    "square_root",
+    "store",
+    "total",
+]
 
 WIDTH = 4
 _FUSE = ("contract",)
@@ -23,12 +38,12 @@ _lanes_ir = ir.VectorType(ir.DoubleType(), WIDTH)
 _mask_ir = ir.VectorType(ir.IntType(1), WIDTH)
 
 
-class _Lanes(types.Type):  # type: ignore[misc]
+class _Lanes(types.Type):
     def __init__(self) -> None:
         super().__init__(name="Lanes")
 
 
-class _Mask(types.Type):  # type: ignore[misc]
+class _Mask(types.Type):
     def __init__(self) -> None:
         super().__init__(name="Mask")
 

@@ -9,7 +9,7 @@ from __future__ import annotations
 import numpy as np
 import numpy.typing as npt
 
-__all__ = ["EXPONENTS", "HYPERVIRIAL", "ENERGY", "NAME", "VIRIAL", "tail_sums", "u", "w", "x"]
+__all__ = ["ENERGY", "EXPONENTS", "HYPERVIRIAL", "NAME", "VIRIAL", "tail_sums", "u", "w", "x"]
 
 Floats = npt.NDArray[np.float64]
 
@@ -20,21 +20,21 @@ VIRIAL = np.array([16.0, -8.0])  # W = -1/3 sum w
 HYPERVIRIAL = np.array([64.0, -16.0])  # X = 1/9 sum x
 
 
-def u(r: Floats) -> Floats:
+def u(r: npt.ArrayLike) -> Floats:
     """Pair energy at distance r (sigma), epsilon."""
-    s6 = np.asarray(r, dtype=float) ** -6
+    s6: Floats = np.asarray(r, dtype=float) ** -6.0
     return 4.0 * (s6 * s6 - s6)
 
 
-def w(r: Floats) -> Floats:
+def w(r: npt.ArrayLike) -> Floats:
     """r u'(r), epsilon."""
-    s6 = np.asarray(r, dtype=float) ** -6
+    s6: Floats = np.asarray(r, dtype=float) ** -6.0
     return -48.0 * s6 * s6 + 24.0 * s6
 
 
-def x(r: Floats) -> Floats:
+def x(r: npt.ArrayLike) -> Floats:
     """r d/dr (r u'(r)), epsilon."""
-    s6 = np.asarray(r, dtype=float) ** -6
+    s6: Floats = np.asarray(r, dtype=float) ** -6.0
     return 576.0 * s6 * s6 - 144.0 * s6
 
 
