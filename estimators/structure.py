@@ -186,8 +186,8 @@ class _Pairs:
 
     @cached_property
     def standard_error(self) -> Floats:
-        unit = np.eye(self.bins.number) / self.ideal
-        return np.array([self.linear(row).standard_error for row in unit])
+        columns = ({chain: counts[:, i] for chain, counts in self.counts.items()} for i in range(self.bins.number))
+        return np.array([mean(column).standard_error for column in columns]) / self.ideal
 
     def linear(self, weights: Floats) -> Estimate:
         """Mean of the weighted sum of a frame's counts."""

@@ -88,7 +88,8 @@ def pair_forces(pair, position, force, n_groups, inner, sums):  # type: ignore[n
     position, force : slot layout, images included
     sums : None leaves them out, and the work for them
     """
-    force[:] = 0.0
+    for at in range(0, force.size, LANES):
+        store(force, at, splat(0.0))
     limit, zero, everyone = splat(pair.cutoff * pair.cutoff), splat(0.0), later_lanes(-1)
     s12, s6, pairs, distances = zero, zero, zero, zero
     for slot in range(LANES * n_groups):

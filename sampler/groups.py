@@ -29,13 +29,11 @@ class Groups(NamedTuple):
     """Groups and their outer list.
 
     labels : (4 n_groups,), particle in each slot, -1 for padding
-    padding : slots that hold no particle
     image_source, image_shift : (n_images,), (n_images, 3), groups repeated by periodicity, counted on from n_groups
     start, partners : group g may touch the groups partners[start[g]:start[g + 1]]
     """
 
     labels: npt.NDArray[np.int64]
-    padding: npt.NDArray[np.int64]
     image_source: npt.NDArray[np.int64]
     image_shift: npt.NDArray[np.float64]
     start: npt.NDArray[np.int64]
@@ -68,7 +66,9 @@ def _sort(where, box, n_columns, n_bins):  # type: ignore[no-untyped-def]
     for c in range(n_columns * n_columns):
         size = first[(c + 1) * n_bins] - first[c * n_bins]
         column[c + 1] = column[c] + (size + LANES - 1) // LANES
-    labels = np.full(LANES * column[-1], -1, np.int64)
+    labels = np.empty(LANES * column[-1], np.int64)
+    for slot in range(labels.size):
+        labels[slot] = -1
     taken = np.zeros(n_keys, np.int64)
     for i in range(n):
         c = key[i] // n_bins
@@ -131,7 +131,8 @@ def _images(bounds, column, n_columns, margin, box, reach):  # type: ignore[no-u
                         if _is_image_needed(bounds, g, shift, box, reach):
                             if filling == 1:
                                 source[count] = g
-                                shifts[count] = shift * box
+                                for c in range(3):
+                                    shifts[count, c] = shift[c] * box
                             count += 1
                 first[ex * width + ey + margin + 1] = count
         if filling == 0:
@@ -156,8 +157,8 @@ def _columns_bounds(bounds, column, first_image, n_groups, n_columns, margin):  
     width = n_columns + 2 * margin
     out = np.empty((first_image.size - 1, 6))
     for e in range(out.shape[0]):
-        out[e, :3] = np.inf
-        out[e, 3:] = -np.inf
+        for c in range(3):
+            out[e, c], out[e, 3 + c] = np.inf, -np.inf
         ex, ey = e // width, e % width - margin
         low, high = 0, 0
         if ex < n_columns and 0 <= ey < n_columns:
@@ -202,7 +203,8 @@ def _partners(bounds, column, first_image, n_columns, margin, box, reach):  # ty
                     for _ in range(2):
                         if count + high - low > partners.size:
                             larger = np.empty(2 * partners.size + high - low, np.int32)
-                            larger[:count] = partners[:count]
+                            for k in range(count):
+                                larger[k] = partners[k]
                             partners = larger
                         for b in range(low, high):
                             partners[count] = b
@@ -226,12 +228,11 @@ def group(where, box, reach):  # type: ignore[no-untyped-def]
     source, shift, first_image = _images(real, column, n_columns, margin, box, reach)
     n_groups = real.shape[0]
     bounds = np.empty((n_groups + source.size, 6))
-    bounds[:n_groups] = real
-    for k in range(source.size):
-        bounds[n_groups + k, :3] = real[source[k], :3] + shift[k]
-        bounds[n_groups + k, 3:] = real[source[k], 3:] + shift[k]
+    for g in range(bounds.shape[0]):
+        for c in range(6):
+            bounds[g, c] = real[g, c] if g < n_groups else real[source[g - n_groups], c] + shift[g - n_groups, c % 3]
     start, partners = _partners(bounds, column, first_image, n_columns, margin, box, reach)
-    return Groups(labels, np.flatnonzero(labels < 0), source, shift, start, partners)
+    return Groups(labels, source, shift, start, partners)
 
 
 @kernel

@@ -137,19 +137,20 @@ def _turn(fraction):  # type: ignore[no-untyped-def]
 
 @kernel
 def normals(k0, k1, step, substep, labels, out):  # type: ignore[no-untyped-def]
-    """Three standard normals for each particle.
+    """Three standard normals for each particle, zeros where there is none.
 
-    labels : (n,), uint64
+    labels : (n,), int64, negative where there is no particle
     out : (3, n), overwritten
     """
     low, high = step & _LOW, step >> _HALF
     for i in range(labels.size):
-        a, b, c, d = scramble(labels[i], substep, low, high, k0, k1)
-        radius = math.sqrt(-2.0 * _logarithm((_number(a) + 0.5) * _UNIT))
+        a, b, c, d = scramble(np.uint64(labels[i]) & _LOW, substep, low, high, k0, k1)
+        there = 1.0 if labels[i] >= 0 else 0.0
+        radius = there * math.sqrt(-2.0 * _logarithm((_number(a) + 0.5) * _UNIT))
         cosine, sine = _turn(_number(b) * _UNIT)
         out[0, i] = radius * cosine
         out[1, i] = radius * sine
-        radius = math.sqrt(-2.0 * _logarithm((_number(c) + 0.5) * _UNIT))
+        radius = there * math.sqrt(-2.0 * _logarithm((_number(c) + 0.5) * _UNIT))
         cosine, sine = _turn(_number(d) * _UNIT)
         out[2, i] = radius * cosine
 
@@ -157,5 +158,5 @@ def normals(k0, k1, step, substep, labels, out):  # type: ignore[no-untyped-def]
 def draw(key: Key, step: np.uint64, n: int) -> npt.NDArray[np.float64]:
     """Standard normals of particles 0 to n - 1 at a step, (n, 3)."""
     out = np.empty((3, n))
-    normals(key[0], key[1], step, np.uint64(0), np.arange(n, dtype=np.uint64), out)
+    normals(key[0], key[1], step, np.uint64(0), np.arange(n), out)
     return np.ascontiguousarray(out.T)

@@ -122,9 +122,8 @@ def _regroup(where, velocity, box, reach):  # type: ignore[no-untyped-def]
     """Groups of wrapped label-ordered positions, and positions and velocities in their slots."""
     groups = group(where, box, reach)
     position = scatter(where, groups, FAR)
-    speed = scatter(velocity, groups, 0.0)[: BLOCK * (groups.labels.size // LANES)].copy()
-    labels = np.where(groups.labels < 0, 0, groups.labels).astype(np.uint64)
-    return groups, position, speed, labels, np.empty((3, labels.size)), np.empty_like(position)
+    speed = scatter(velocity, groups, 0.0)[: BLOCK * (groups.labels.size // LANES)]
+    return groups, position, speed, np.empty((3, groups.labels.size)), np.empty_like(position)
 
 
 @kernel
@@ -149,11 +148,13 @@ def propagate(  # type: ignore[no-untyped-def]
     stop : (1,), uint8; set by another thread to leave early
     """
     inner_skin, outer_skin = skins
-    last_drift = np.flatnonzero(scheme.letters == _A)[-1]
+    last_drift = 0
+    for s in range(scheme.letters.size):
+        last_drift = s if scheme.letters[s] == _A else last_drift
     sums = np.empty(4)
     n_samples, n_frames = 0, 0
     _wrap(where, box)
-    groups, position, speed, labels, noise, force = _regroup(where, velocity, box, pair.cutoff + outer_skin)
+    groups, position, speed, noise, force = _regroup(where, velocity, box, pair.cutoff + outer_skin)
     place_images(position, groups.labels.size // LANES, groups)
     inner = prune(position, groups, pair.cutoff + inner_skin)
     at_group, at_prune = position.copy(), position.copy()
@@ -165,9 +166,7 @@ def propagate(  # type: ignore[no-untyped-def]
             if letter == _B:
                 _kick(speed, force, duration)
             elif letter == _O:
-                normals(key[0], key[1], np.uint64(step), np.uint64(s), labels, noise)
-                for slot in groups.padding:
-                    noise[:, slot] = 0.0
+                normals(key[0], key[1], np.uint64(step), np.uint64(s), groups.labels, noise)
                 ledger[0] += _relax(speed, noise, duration, scheme.friction, scheme.temperature)
             else:
                 _drift(position, speed, duration)
@@ -184,9 +183,7 @@ def propagate(  # type: ignore[no-untyped-def]
                     _gather(position, groups, where)
                     _gather(speed, groups, velocity)
                     _wrap(where, box)
-                    groups, position, speed, labels, noise, force = _regroup(
-                        where, velocity, box, pair.cutoff + outer_skin
-                    )
+                    groups, position, speed, noise, force = _regroup(where, velocity, box, pair.cutoff + outer_skin)
                     at_group = position.copy()
                 place_images(position, groups.labels.size // LANES, groups)
                 if outgrown:
@@ -197,7 +194,8 @@ def propagate(  # type: ignore[no-untyped-def]
                 else:
                     _forces(pair, position, force, groups, inner, None)
         if recorded:
-            samples[n_samples, :4] = sums
+            for c in range(4):
+                samples[n_samples, c] = sums[c]
             samples[n_samples, 4] = _kinetic(speed)
             samples[n_samples, 5] = ledger[0]
             n_samples += 1

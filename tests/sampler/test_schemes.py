@@ -65,7 +65,7 @@ def test_steps_are_those_of_a_plain_evaluation(scheme):
                 v = v + part * force
             else:
                 noise = np.empty((3, n))
-                normals(*compiled.key, np.uint64(step), np.uint64(s), np.arange(n, dtype=np.uint64), noise)
+                normals(*compiled.key, np.uint64(step), np.uint64(s), np.arange(n), noise)
                 kept = np.exp(-friction * part)
                 new = kept * v + np.sqrt((1 - kept**2) * state.temperature) * noise.T
                 heat += 0.5 * ((v * v).sum() - (new * new).sum())
