@@ -160,7 +160,7 @@ def test_liquid_has_its_first_shell(liquid: Floats) -> None:
 def test_influence_of_a_frame_is_what_its_absence_does(liquid: Floats) -> None:
     """Without frame k of m an estimate moves by -m/(m - 1) of the frame's influence; second order is 1/m of that.
 
-    The number of neighbours up to the minimum moves with the minimum too: without this its influences are half as large.
+    The number of neighbours up to the minimum moves with the minimum too: without this its influences are far smaller.
     """
     whole = structure_of(liquid, LIQUID)
     chain = (LIQUID.temperature, LIQUID.density, LIQUID.particles, 0)
