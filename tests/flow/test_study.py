@@ -148,7 +148,7 @@ VARIANTS = [
     COOLANT.replace("39.948 u", "39.948 g/mol").replace("119.8 K", "0.996 kJ/mol"),
     COOLANT.replace('["108 K", "120 K"]', '{ from = "108 K", to = "150 K", rungs = 7 }'),
     COOLANT.replace('["1.36 g/cm3", "1300 kg/m3"]', '"33.3 mol/L"'),
-    COOLANT.replace('["1.36 g/cm3", "1300 kg/m3"]', "[1.0, 2.0]").replace("[state]", "cutoff = 2.5\n[state]"),
+    COOLANT.replace('["1.36 g/cm3", "1300 kg/m3"]', "2.0").replace("3.405", "3.4").replace("39.948 u", "40 u"),
     SHORTEST.replace("[state]", 'truncation = "shifted"\ncutoff = 2.5\n[state]') + '[compare]\nagainst = "thol-2015"',
     SHORTEST + '[sampling]\nscheme = "velocity-verlet"\nseed = 7\nrepeats = 3',
     SHORTEST.replace("density = 0.8\ntemperatures = [1.0]", "points = [[1.2, 0.8], [1.5, 0.6], [1.0, 0.8]]"),
