@@ -7,6 +7,7 @@ together: a rung's samples scatter about that rung's mean.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable
 from dataclasses import dataclass
 from functools import cached_property
@@ -45,6 +46,25 @@ class Rung:
     def thinned(self) -> Floats:
         stride = -(-self.samples // THINNED)
         return np.concatenate([energies[::stride] for energies in self.energies])
+
+    @cached_property
+    def heat_capacity(self) -> float:
+        """var(E)/T^2 of the whole system."""
+        mean = sum(float(np.sum(energies)) for energies in self.energies) / self.samples
+        squares = sum(float(np.sum((energies - mean) ** 2)) for energies in self.energies)
+        return squares / self.samples / self.temperature**2
+
+    def surviving(self, temperature: float) -> float:
+        """Independent samples of the rung that survive reweighting to a temperature, at constant heat capacity C.
+
+        The partition function then goes as T^C, so that <w>^2/<w^2> = ((1 + d)^2/(1 + 2d))^-C with d = T_rung/T - 1;
+        nothing survives to twice the rung's temperature.
+        """
+        d = self.temperature / temperature - 1.0
+        if 1.0 + 2.0 * d <= 0.0:
+            return 0.0
+        survival = math.exp(-self.heat_capacity * (2.0 * math.log1p(d) - math.log1p(2.0 * d)))
+        return self.samples / self.inefficiency * survival
 
 
 @dataclass(frozen=True)
@@ -89,7 +109,16 @@ class Group:
         weights = [each / total for each in raw]
         inefficiencies = [self.rungs[run.rung].inefficiency for run in self.runs]
         spread = sum(factor * float(each @ each) for factor, each in zip(inefficiencies, weights, strict=True))
-        return Weights(weights, 1.0 / spread)
+        return Weights(weights, min(1.0 / spread, self._reach(temperature)))
+
+    def _reach(self, temperature: float) -> float:
+        """Most effective samples there can be: beyond the outermost rungs, what should survive of every rung.
+
+        There the weights themselves tell too much, as the heaviest are those of samples that nobody drew.
+        """
+        if self.rungs[0].temperature <= temperature <= self.rungs[-1].temperature:
+            return math.inf
+        return sum(rung.surviving(temperature) for rung in self.rungs)
 
     def free_energies(self, reference_energy: float) -> list[Estimate]:
         """F/T less that of the group's first rung."""

@@ -38,7 +38,7 @@ class Reweighted:
 
     effective_samples : independent samples of the target ensemble that the weights are worth:
         1 / sum_n g_n w_n^2, weights w of sum 1 (Kish), g the statistical inefficiency (2 tau) of the energy at the
-        rung that sample n comes from
+        rung that sample n comes from; beyond the outermost rungs at most what survives at constant heat capacity
     properties : by name, empty if refused
     refused : the reason, empty if there are properties
     """

@@ -1,0 +1,305 @@
+"""Reweighting of a harmonic system, known exactly at every temperature, and against pymbar's own answers."""
+
+from __future__ import annotations
+
+import logging
+import math
+import subprocess
+import sys
+from collections.abc import Callable, Sequence
+from dataclasses import replace
+from typing import Any
+
+import numpy as np
+import numpy.typing as npt
+import pytest
+from scipy.signal import lfilter
+
+from estimators import group
+from estimators.errors import BadSeries, NotSolved
+from estimators.mixture import polished
+from estimators.reweight import Pooled, pool
+from sampler.fluid import Fluid, State
+from sampler.series import Series
+
+Floats = npt.NDArray[np.float64]
+
+PARTICLES, DENSITY = 8, 0.5
+FLUID = Fluid(cutoff=1.0, truncation="corrected")
+EXACT: dict[str, Callable[[float], float]] = {
+    "residual_energy": lambda t: 1.875 * t,
+    "residual_heat_capacity": lambda t: 1.875,
+    "pressure": lambda t: 1.3 * DENSITY * t,
+    "compressibility_factor": lambda t: 1.3,
+    "thermal_pressure": lambda t: 1.3 * DENSITY,
+    "bulk_modulus": lambda t: 1.78 * DENSITY * t,
+}
+
+
+def harmonic(
+    rng: np.random.Generator, temperature: float, samples: int, *, memory: float = 0.0, repeat: int = 0
+) -> Series:
+    """3N modes, each an autoregressive Gaussian of variance T, with energy U_dyn = sum x^2 / 2.
+
+    H is the energy of half of them: U = U_dyn + H/2, W = 0.4 H and X = 2 W, so that with h = <H>/(NT) = 3/4
+    U/N = (3/2 + h/2) T, c_v = 3/2 + h/2, Z = gamma_V/rho = 1 + 0.4 h and B_T/(rho T) = 1 + 1.2 h - 0.16 h: EXACT.
+    """
+    modes = 3 * PARTICLES
+    noise = rng.standard_normal((samples, modes))
+    noise[1:] *= math.sqrt(1.0 - memory**2)
+    energies = 0.5 * temperature * lfilter([1.0], [1.0, -memory], noise, axis=0) ** 2
+    half, whole, nothing = np.sum(energies[:, : modes // 2], axis=1), np.sum(energies, axis=1), np.zeros(samples)
+    state = State(temperature, DENSITY, PARTICLES)
+    recorded = (whole + 0.5 * half, whole, 0.4 * half, 0.8 * half, nothing, nothing)
+    return Series(FLUID, state, repeat, True, 1.0, *recorded, frames=np.zeros((0, PARTICLES, 3)), frame_stride=1)
+
+
+def free_energy(temperature: float, start: float) -> float:
+    """F/T less that at `start`: the partition function goes as T^(3N/2)."""
+    return 1.5 * PARTICLES * math.log(start / temperature)
+
+
+@pytest.fixture(scope="module")
+def independent() -> list[Series]:
+    """Rungs of unequal length without correlation, the second one in two repeats."""
+    rng = np.random.default_rng(21)
+    plan = [(1.0, 3000, 0), (1.3, 2000, 0), (1.3, 1000, 1), (1.7, 4000, 0), (2.2, 2500, 0)]
+    return [harmonic(rng, temperature, samples, repeat=repeat) for temperature, samples, repeat in plan]
+
+
+def solved_by_pymbar(series: Sequence[Series]) -> tuple[Any, Floats, Floats]:
+    """pymbar's solution, and U_dyn and U of all samples, in the order of `series`, which is that of the rungs."""
+    logging.getLogger("pymbar").setLevel(logging.ERROR)
+    from pymbar import MBAR
+
+    temperatures = sorted({each.state.temperature for each in series})
+    counts = [sum(len(each) for each in series if each.state.temperature == t) for t in temperatures]
+    sampled = np.concatenate([each.sampled_energy for each in series])
+    beta = 1.0 / np.array(temperatures)
+    solver = MBAR(np.multiply.outer(beta, sampled), counts, relative_tolerance=1e-13, maximum_iterations=1000)
+    return solver, sampled, np.concatenate([each.energy for each in series])
+
+
+def test_values_are_those_of_pymbar_and_so_are_errors_of_independent_samples(independent: list[Series]) -> None:
+    """Values to 1e-8; standard errors within 7 %.
+
+    10^4 samples give a variance to about 2 % and the Gamma method's window adds a few; centring the influences over all
+    rungs at once would make the errors a quarter too large.
+    """
+    pooled = pool(independent)
+    solver, sampled, energy = solved_by_pymbar(independent)
+    differences = solver.compute_free_energy_differences()
+    ours = pooled.free_energies
+    np.testing.assert_allclose([each.value for each in ours], differences["Delta_f"][0], atol=1e-8)
+    np.testing.assert_allclose([each.standard_error for each in ours], differences["dDelta_f"][0], rtol=0.07)
+    np.testing.assert_allclose(pooled.overlap, solver.compute_overlap()["matrix"], atol=1e-8)
+    for temperature in (1.15, 1.7, 2.4):
+        theirs = solver.compute_multiple_expectations(energy[None], sampled / temperature)
+        estimate = pooled.at(temperature).properties["residual_energy"]
+        assert abs(estimate.value - theirs["mu"][0] / PARTICLES) < 1e-8
+        assert abs(estimate.standard_error / (theirs["sigma"][0] / PARTICLES) - 1.0) < 0.07
+
+
+def test_influences_are_those_of_the_estimating_equations(independent: list[Series]) -> None:
+    """Written out in full matrices; single precision of the claims leaves 1e-6. Sums over a rung vanish."""
+    temperature = 1.5
+    beta = 1.0 / np.array([1.0, 1.3, 1.7, 2.2])
+    rungs = [0, 1, 1, 2, 3]
+    pooled = pool(independent)
+    state = np.concatenate([np.full(len(each), rung) for rung, each in zip(rungs, independent, strict=True)])
+    sampled = np.concatenate([each.sampled_energy for each in independent])
+    counts = np.bincount(state).astype(float)
+    f = np.array([each.value for each in pooled.free_energies])
+    terms = counts[:, None] * np.exp(f[:, None] - np.multiply.outer(beta, sampled))
+    density = np.sum(terms, axis=0)
+    p = terms / density
+    hessian = (np.diag(counts) - p @ p.T)[1:, 1:]
+    w = np.exp(-sampled / temperature) / density
+    w /= np.sum(w)
+
+    def centred(values: Floats) -> Floats:
+        return values - (np.bincount(state, values) / counts)[state]
+
+    psi = -np.linalg.solve(hessian, np.array([centred(row) for row in p[1:]]))
+    energy, virial, hypervirial = (
+        np.concatenate([getattr(each, name) for each in independent]) for name in ("energy", "virial", "hypervirial")
+    )
+    e, u, v = (each - w @ each for each in (sampled, energy, virial))
+    volume, correction = PARTICLES / DENSITY, 1.0 / (1.0 - np.sum(w**2))
+    integrands = {
+        "residual_energy": energy / PARTICLES,
+        "residual_heat_capacity": u * e / (PARTICLES * temperature**2),
+        "pressure": virial / volume,
+        "thermal_pressure": v * e / (volume * temperature**2),
+        "bulk_modulus": (virial + hypervirial - v**2 / temperature) / volume,
+    }
+    properties = pooled.at(temperature).properties
+    for name, values in integrands.items():
+        deviations = values - w @ values
+        phi = centred(w * deviations) - (p[1:] @ (w * deviations)) @ psi
+        found = np.concatenate(list(properties[name].influence.values()))
+        assert np.linalg.norm(found - phi) < 0.01 * np.linalg.norm(phi)  # the corrections of covariances scale some
+        assert np.max(np.abs(np.bincount(state, found))) < 1e-9 * np.sum(np.abs(found))
+        if name in ("residual_energy", "pressure"):
+            np.testing.assert_allclose(found, phi, atol=1e-5 * np.max(np.abs(phi)))
+    assert abs(properties["residual_heat_capacity"].value / (w @ integrands["residual_heat_capacity"]) - 1.0) < 0.01
+    assert correction < 1.01
+    for index, estimate in enumerate(pooled.free_energies[1:]):
+        found = np.concatenate([estimate.influence[chain] for chain in estimate.influence])
+        np.testing.assert_allclose(found, psi[index], atol=1e-5 * np.max(np.abs(psi[index])))
+
+
+def test_values_and_error_bars_of_correlated_samples_hold() -> None:
+    """120 replicas of four rungs of unequal length, memory 0.7: each value's mean within 4 of its standard errors.
+
+    The scatter of 120 is known to 6.5 %, so the error bars lie within 4 times that of it; without the correlation they
+    would be too small by 1.7. Targets: a rung, between two, and beyond the last.
+    """
+    rng = np.random.default_rng(22)
+    targets = (1.3, 1.5, 2.4)
+    plan = [(1.0, 1200, 0), (1.3, 700, 0), (1.3, 500, 1), (1.7, 1600, 0), (2.2, 1000, 0)]
+    found: dict[tuple[float, str], list[tuple[float, float]]] = {}
+    for _ in range(120):
+        pooled = pool([harmonic(rng, t, samples, memory=0.7, repeat=repeat) for t, samples, repeat in plan])
+        assert pooled.gaps == []
+        for target in targets:
+            for name, estimate in pooled.at(target).properties.items():
+                found.setdefault((target, name), []).append((estimate.value, estimate.standard_error))
+        for temperature, estimate in zip(pooled.temperatures[1:], pooled.free_energies[1:], strict=True):
+            found.setdefault((temperature, "F"), []).append((estimate.value, estimate.standard_error))
+    assert len(found) == len(targets) * len(EXACT) + 3
+    for (temperature, name), pairs in found.items():
+        values, errors = np.array(pairs).T
+        assert len(values) == 120
+        truth = free_energy(temperature, 1.0) if name == "F" else EXACT[name](temperature)
+        scatter = float(np.std(values, ddof=1))
+        assert abs(float(np.mean(values)) - truth) < 4.0 * scatter / math.sqrt(120), (temperature, name)
+        claimed = math.sqrt(np.mean(errors**2))
+        assert abs(claimed / scatter - 1.0) < 0.26, (temperature, name, claimed / scatter)
+
+
+def test_effective_samples_count_correlation() -> None:
+    """A rung at its own temperature: n (1 - m^2)/(1 + m^2), as squares of the modes forget with m^2; within 12 %."""
+    series = harmonic(np.random.default_rng(23), 1.0, 20_000, memory=0.8)
+    expected = 20_000 * (1.0 - 0.64) / (1.0 + 0.64)
+    assert abs(pool([series]).at(1.0).effective_samples / expected - 1.0) < 0.12
+
+
+def test_temperatures_that_samples_do_not_support_are_refused() -> None:
+    """Of 4000 samples at T 1, 4000 ((1 + d)^2/(1 + 2 d))^-12, d = 1/T - 1, survive: 87 at T 1.5, 19 at T 1.6.
+
+    The weights alone claim 226 at T 1.6, where the heat capacity is then too small by more than its standard error.
+    """
+    pooled = pool([harmonic(np.random.default_rng(24), 1.0, 4000)])
+    near, far = pooled.at(1.4), pooled.at(1.6)
+    assert near.refused == ""
+    assert set(near.properties) == set(EXACT)
+    assert far.effective_samples < 50.0
+    assert far.properties == {}
+    assert "50 are needed" in far.refused
+    assert "nearest rung is at 1," in far.refused
+    assert pooled.at(2.5).effective_samples == 0.0
+    assert pooled.at(0.2).properties == {}
+    assert "positive number" in pooled.at(-1.0).refused
+    assert "positive number" in pooled.at(math.nan).refused
+
+
+def test_rungs_that_do_not_overlap_are_solved_apart() -> None:
+    rng = np.random.default_rng(25)
+    cold = [harmonic(rng, temperature, 1000) for temperature in (1.0, 1.2)]
+    hot = [harmonic(rng, temperature, 1000) for temperature in (8.0, 9.5)]
+    pooled = pool([*hot, *cold])
+    assert pooled.temperatures == [1.0, 1.2, 8.0, 9.5]
+    assert pooled.gaps == [(1.2, 8.0)]
+    assert np.all(pooled.overlap[:2, 2:] == 0.0)
+    np.testing.assert_allclose(np.sum(pooled.overlap, axis=1), 1.0, rtol=1e-8)
+    assert pooled.free_energies[2].value == 0.0
+    for alone, temperature in ((pool(cold), 1.1), (pool(hot), 8.8)):
+        for name, estimate in alone.at(temperature).properties.items():
+            assert abs(pooled.at(temperature).properties[name].value / estimate.value - 1.0) < 1e-8
+    gap = pooled.at(3.0)
+    assert gap.properties == {}
+    assert "the rungs at 1.2 and 8 do not overlap" in gap.refused
+
+
+def test_a_short_rung_between_does_not_part_its_neighbours() -> None:
+    rng = np.random.default_rng(26)
+    series = [harmonic(rng, 1.0, 1000), harmonic(rng, 1.2, 10), harmonic(rng, 1.3, 1000)]
+    pooled = pool(series)
+    assert pooled.overlap[0, 2] > 0.1
+    assert pooled.overlap[0, 1] == 0.0
+    assert pooled.at(1.2).effective_samples > 500.0
+
+
+def test_long_series_enter_as_block_sums(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Values equal pymbar's on all samples though a start was found on fewer; the error bar is that of full influences.
+
+    Blocks of 2 to 20 samples change a Gamma error bar by its own error, 2-3 %.
+    """
+    rng = np.random.default_rng(27)
+    series = [harmonic(rng, temperature, 50_000, memory=0.5) for temperature in (1.0, 1.2)]
+    solver, _, _ = solved_by_pymbar(series)
+    full = pool(series)
+    assert abs(full.free_energies[1].value - solver.compute_free_energy_differences()["Delta_f"][0, 1]) < 1e-8
+    short = full.at(1.1).properties
+    assert {len(each) for each in short["pressure"].influence.values()} == {25_000}
+    monkeypatch.setattr(group, "INFLUENCES", 10**6)
+    long = full.at(1.1).properties
+    assert {len(each) for each in long["pressure"].influence.values()} == {50_000}
+    for name in EXACT:
+        assert abs(short[name].standard_error / long[name].standard_error - 1.0) < 0.08
+        assert short[name].value == long[name].value
+
+
+def test_a_fluid_whose_force_jumps_has_no_reweighted_bulk_modulus() -> None:
+    series = harmonic(np.random.default_rng(28), 1.0, 1000)
+    shifted = replace(series, fluid=Fluid(cutoff=1.2, truncation="shifted"))
+    assert set(pool([shifted]).at(1.0).properties) == set(EXACT) - {"bulk_modulus"}
+
+
+def test_what_cannot_be_pooled_is_refused() -> None:
+    rng = np.random.default_rng(29)
+    series = harmonic(rng, 1.0, 100)
+    other = harmonic(rng, 1.1, 100)
+    with pytest.raises(BadSeries, match="no samples"):
+        pool([series.after(100)])
+    with pytest.raises(BadSeries, match="bath"):
+        pool([replace(series, bath=False)])
+    with pytest.raises(BadSeries, match="one density"):
+        pool([series, replace(other, state=State(1.1, 0.6, PARTICLES))])
+    with pytest.raises(BadSeries, match="twice"):
+        pool([series, series])
+    with pytest.raises(BadSeries, match="not finite"):
+        pool([series, replace(other, virial=np.full(100, np.nan))])
+
+
+def test_equations_without_a_solution_are_reported_in_our_words() -> None:
+    energies = [np.linspace(0.0, 1.0, 50), np.linspace(1e6, 1e6 + 1.0, 50)]
+    with pytest.raises(NotSolved, match="2 rungs at temperatures 1, 2 could not be found"):
+        polished(np.array([1.0, 0.5]), np.array([50.0, 50.0]), np.zeros(2), energies)
+
+
+def test_no_notice_of_a_library_reaches_the_user() -> None:
+    program = (
+        "import numpy as np\n"
+        "from sampler.fluid import Fluid, State\n"
+        "from sampler.series import Series\n"
+        "from estimators.reweight import pool\n"
+        "rng = np.random.default_rng(1)\n"
+        "def series(t):\n"
+        "    columns = [t * rng.gamma(12.0, size=500)] * 6\n"
+        "    return Series(Fluid(1.0), State(t, 0.5, 8), 0, True, 1.0, *columns, np.zeros((0, 8, 3)), 1)\n"
+        "assert pool([series(1.0), series(1.2)]).at(1.1).properties\n"
+        "import sys; assert 'pymbar' in sys.modules\n"
+    )
+    done = subprocess.run([sys.executable, "-c", program], capture_output=True, text=True, check=False)
+    assert (done.returncode, done.stdout, done.stderr) == (0, "", "")
+
+
+def test_single_rung_is_its_own_average() -> None:
+    series = harmonic(np.random.default_rng(30), 1.0, 2000, memory=0.5)
+    pooled: Pooled = pool([series])
+    at_rung = pooled.at(1.0).properties
+    assert abs(at_rung["residual_energy"].value - float(np.mean(series.energy)) / PARTICLES) < 1e-10
+    assert [each.value for each in pooled.free_energies] == [0.0]
+    assert pooled.overlap.tolist() == [[pytest.approx(1.0)]]
