@@ -1,0 +1,275 @@
+"""The command line."""
+
+from __future__ import annotations
+
+import json
+import sys
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from pathlib import Path
+from typing import TYPE_CHECKING, Any, TypeVar
+
+import click
+
+if TYPE_CHECKING:
+    from canonry.border import Border
+    from canonry.study import Study
+
+__all__ = ["main"]
+
+Command = TypeVar("Command", bound=Callable[..., Any])
+_EXITS = {"agrees": 0, "disagrees": 3, "undecided": 4}
+
+
+class _Commands(click.Group):
+    """Commands whose refusals are one paragraph and exit code 2."""
+
+    def invoke(self, ctx: click.Context) -> Any:
+        try:
+            return super().invoke(ctx)
+        except KeyboardInterrupt:
+            click.echo("Interrupted. Finished segments are kept; the same command goes on from there.", err=True)
+            ctx.exit(130)
+        except BrokenPipeError:
+            raise
+        except _refusals() as problem:
+            click.echo(f"Error: {_paragraph(problem)}", err=True)
+            ctx.exit(2)
+
+
+def _refusals() -> tuple[type[Exception], ...]:
+    """What a user can mend; loaded only when something has gone wrong."""
+    from canonry.errors import UserError
+    from estimators.errors import EstimatorsError
+    from reference.errors import ReferenceRefusal
+    from sampler.errors import SamplerError
+
+    return UserError, SamplerError, EstimatorsError, ReferenceRefusal, OSError
+
+
+def _paragraph(problem: Exception) -> str:
+    if isinstance(problem, OSError) and problem.filename is not None and problem.strerror:
+        return f"{problem.filename}: {problem.strerror}; what is needed is a file or directory that can be used"
+    return " ".join(str(problem).split())
+
+
+def _path(name: str) -> Callable[[Command], Command]:
+    return click.argument(name, type=click.Path(path_type=Path))
+
+
+_into = click.option(
+    "--into", type=click.Path(path_type=Path), help="Study directory; else the study file's name, in the current one."
+)
+_workers = click.option("--workers", type=click.IntRange(min=1), help="Threads; else one for every core.")
+_units = click.option("--units", type=click.Choice(["reduced", "SI"]), help="Units of results; else the study's.")
+_json = click.option("--json", "as_json", is_flag=True, help="Print JSON.")
+
+
+@click.group(cls=_Commands, context_settings={"help_option_names": ["-h", "--help"]})
+@click.version_option(package_name="canonry")
+def main() -> None:
+    """Heat capacity and pressure curves of a model fluid from canonical sampling, with error bars that hold."""
+
+
+@main.command()
+@_path("file")
+@click.option("--fluid", help="A fluid with published parameters, such as argon.")
+def new(file: Path, fluid: str | None) -> None:
+    """Write a commented study file to start from."""
+    from canonry.errors import UserError
+    from canonry.starter import starter_text
+
+    text = starter_text(fluid)
+    try:
+        with file.open("x", encoding="utf-8") as stream:
+            stream.write(text)
+    except FileExistsError:
+        raise UserError(f"{file}: it exists and is left as it is; what is accepted is the name of a new file") from None
+    click.echo(f"{file} is written. Next: canonry check {file}")
+
+
+@main.command()
+@_path("study")
+@_workers
+@_json
+def check(study: Path, workers: int | None, as_json: bool) -> None:
+    """Validate a study and show its plan: cost, overlaps, warnings. Samples nothing."""
+    from dataclasses import asdict
+
+    from canonry.border import Border
+    from canonry.directory import locate
+    from canonry.plan import plan
+    from canonry.terminal import plan_text
+
+    found, _ = locate(study)
+    _tell_if_compiling()
+    planned = plan(found, workers=workers)
+    click.echo(json.dumps(asdict(planned), indent=1) if as_json else plan_text(found, planned, Border.of(found)))
+
+
+@main.command()
+@_path("study")
+@_into
+@_workers
+@_units
+def run(study: Path, into: Path | None, workers: int | None, units: Any) -> None:
+    """Sample, estimate, compare and report in one go; again: resume, extend, or say that all is there."""
+    from canonry.border import Border
+    from canonry.directory import locate
+    from canonry.job import is_finished
+
+    found, directory = locate(study, into)
+    border = Border.of(found, units)
+    if is_finished(found, directory, units):
+        click.echo(f"{directory} is finished: nothing is missing.\n")
+    else:
+        _sample(found, directory, workers, border)
+        from canonry.job import report
+
+        with _working() as watch:
+            report(directory, units=units, watch=watch)
+    _close(directory)
+
+
+@main.command()
+@_path("study")
+@_into
+@_workers
+def sample(study: Path, into: Path | None, workers: int | None) -> None:
+    """Sample what a study lacks, without estimating anything."""
+    from canonry.border import Border
+    from canonry.directory import locate
+
+    found, directory = locate(study, into)
+    _sample(found, directory, workers, Border.of(found))
+    click.echo(f"{directory} holds all samples. Next: canonry run {directory}")
+
+
+@main.command()
+@_path("study")
+@_into
+@_units
+def estimate(study: Path, into: Path | None, units: Any) -> None:
+    """Write the tables from what has been sampled so far."""
+    from canonry import job
+    from canonry.directory import locate
+
+    _, directory = locate(study, into)
+    with _working() as watch:
+        job.estimate(directory, units=units, watch=watch)
+    _close(directory)
+
+
+@main.command()
+@_path("study")
+@_into
+@click.option("--against", multiple=True, help="Name of a reference, see `canonry reference`; may be repeated.")
+@_units
+@_json
+def compare(study: Path, into: Path | None, against: tuple[str, ...], units: Any, as_json: bool) -> None:
+    """Hold the estimates against references; exit code 0 agrees, 3 disagrees, 4 undecided. Writes nothing."""
+    from canonry import job
+    from canonry.border import Border
+    from canonry.directory import locate, stored
+    from canonry.terminal import verdict_text
+
+    _, directory = locate(study, into)
+    with _working() as watch:
+        table = job.compare(directory, against=against or None, units=units, watch=watch)
+    if as_json:
+        click.echo(table.to_json(orient="records", indent=1))
+    else:
+        records = [dict(zip(table.columns, row, strict=True)) for row in table.itertuples(index=False)]
+        click.echo(verdict_text(records, Border.of(stored(directory), units)))
+    sys.exit(max((_EXITS[outcome] for outcome in table["outcome"][table["temperature"].isna()]), key=[0, 4, 3].index))
+
+
+@main.command()
+@_path("study")
+@_into
+@_units
+def report(study: Path, into: Path | None, units: Any) -> None:
+    """Write tables and report.html from what has been sampled so far."""
+    from canonry import job
+    from canonry.directory import locate
+
+    _, directory = locate(study, into)
+    with _working() as watch:
+        job.report(directory, units=units, watch=watch)
+    click.echo(f"{directory / 'report.html'} is written.")
+
+
+@main.command()
+@click.argument("name", required=False)
+@click.option("-T", "--temperature", "temperatures", type=float, multiple=True, help="epsilon/k_B; may be repeated.")
+@click.option("--density", "densities", type=float, multiple=True, help="sigma^-3; may be repeated.")
+@_json
+def reference(name: str | None, temperatures: tuple[float, ...], densities: tuple[float, ...], as_json: bool) -> None:
+    """Show which references exist, or the values of one at given states, in reduced units."""
+    from canonry import known
+
+    if name is None:
+        if temperatures or densities:
+            raise click.UsageError("values at a state need the NAME of a reference")
+        names = known.names()
+        records = [known.described(each) for each in names]
+        click.echo(json.dumps(records, indent=1) if as_json else "\n\n".join(map(known.as_text, records)))
+    elif not (temperatures or densities):
+        record = known.described(name)
+        click.echo(json.dumps(record, indent=1) if as_json else known.as_text(record))
+    elif not (temperatures and densities):
+        raise click.UsageError("values at a state need both -T and --density")
+    else:
+        rows = known.values(name, temperatures=temperatures, densities=densities)
+        click.echo(json.dumps(rows, indent=1) if as_json else known.values_text(rows))
+
+
+def _sample(study: Study, directory: Path, workers: int | None, border: Border) -> None:
+    from canonry.directory import claim
+    from canonry.plan import plan
+    from canonry.progress import display
+    from canonry.sampling import outstanding
+    from canonry.sampling import sample as fill
+    from canonry.terminal import plan_text
+
+    claim(study, directory)
+    todo = outstanding(study, directory)
+    for path in todo.aside:
+        click.echo(f"A damaged segment is put aside as {path} and sampled again.", err=True)
+    if not todo.particle_steps:
+        return
+    _tell_if_compiling()
+    planned = plan(study, workers=workers)
+    click.echo(f"{plan_text(study, planned, border)}\n", err=True)
+    if todo.particle_steps < planned.particle_steps:
+        share = 100.0 * todo.particle_steps / planned.particle_steps
+        click.echo(f"{directory} holds a part already; {share:.0f} % is still to be sampled.", err=True)
+    with display(study, todo, border) as watch:
+        fill(study, directory, workers=workers, watch=watch, todo=todo)
+
+
+def _tell_if_compiling() -> None:
+    from sampler.compiled import is_cached
+
+    if not is_cached():
+        click.echo("Compiling for this machine, once: about half a minute.", err=True)
+
+
+@contextmanager
+def _working() -> Iterator[Any]:
+    """Says what is worked on, on a terminal only."""
+    if not sys.stderr.isatty():
+        yield None
+        return
+    from rich.console import Console
+
+    with Console(stderr=True).status("reading the samples") as status:
+        yield status.update
+
+
+def _close(directory: Path) -> None:
+    from canonry.terminal import closing_text
+
+    click.echo(closing_text(directory))
+    page = directory / "report.html"
+    click.echo(f"\nTables{' and report.html' if page.exists() else ''} are in {directory}.")

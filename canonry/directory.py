@@ -1,0 +1,104 @@
+"""The study directory: where it is, whose it is, and files that are written whole or not at all."""
+
+from __future__ import annotations
+
+import os
+from dataclasses import asdict
+from pathlib import Path
+
+from canonry.errors import UserError
+from canonry.study import Study, load
+
+__all__ = ["STUDY", "claim", "locate", "stored", "write"]
+
+STUDY = "study.toml"
+
+
+def locate(path: Path, into: Path | None = None) -> tuple[Study, Path]:
+    """A study and its directory, from a study file or from the directory itself.
+
+    into : the directory; by default the name of the study file without its suffix, in the current directory
+    Raises UserError if there is no such study, or `into` contradicts the directory given.
+    """
+    if not path.is_dir():
+        return load(path), into or Path(path.stem)
+    if into is not None and into.resolve() != path.resolve():
+        raise UserError(f"--into {into}: {path} is a study directory itself; what is accepted is its study file")
+    return stored(path), path
+
+
+def stored(directory: Path) -> Study:
+    """The study that a directory holds. Raises UserError if it holds none."""
+    file = directory / STUDY
+    if not file.is_file():
+        raise UserError(
+            f"{directory}: this is no study directory, there is no {STUDY} in it; what is needed is a study file, or a "
+            "directory that `canonry run` has made of one"
+        )
+    return load(file)
+
+
+def claim(study: Study, directory: Path) -> None:
+    """Make a directory that of a study: create it, or see that what it holds may stay, and write its study.toml.
+
+    Raises UserError if the directory belongs to another study, holds other things or cannot be written.
+    """
+    try:
+        directory.mkdir(parents=True, exist_ok=True)
+        _check_owner(study, directory)
+        if not _holds(directory / STUDY, study.to_toml()):
+            write(directory / STUDY, study.to_toml())
+    except OSError as problem:
+        raise UserError(
+            f"{directory}: it cannot be used as study directory ({problem.strerror or problem}); what is needed is a "
+            "directory that can be written: choose one with --into"
+        ) from None
+
+
+def write(path: Path, text: str) -> None:
+    """Write a text file under a temporary name, force it to disk, then rename. Raises OSError as the system does."""
+    temporary = path.with_name(f".{path.name}.{os.getpid()}")
+    try:
+        with temporary.open("w", encoding="utf-8", newline="") as file:
+            file.write(text)
+            file.flush()
+            os.fsync(file.fileno())
+        os.replace(temporary, path)
+    finally:
+        temporary.unlink(missing_ok=True)
+
+
+def _holds(path: Path, text: str) -> bool:
+    return path.exists() and path.read_text(encoding="utf-8") == text
+
+
+def _check_owner(study: Study, directory: Path) -> None:
+    if not (directory / STUDY).exists():
+        others = sorted(entry.name for entry in directory.iterdir() if not entry.name.startswith("."))
+        if others:
+            raise UserError(
+                f"{directory}: it holds {others[0]} but no {STUDY}, so it is no study directory; what is accepted is a "
+                "new or empty directory: choose one with --into"
+            )
+        return
+    if not any(directory.glob("rungs/*/*/segment-*.h5")):
+        return
+    found, wanted = _identity(stored(directory)), _identity(study)
+    for key, value in wanted.items():
+        if found[key] != value:
+            raise UserError(
+                f"{directory}: it belongs to another study, {key} is {found[key]} there and {value} in this one; what "
+                f"is accepted is the same {key}, or another directory with --into. Steps, temperatures, densities, "
+                "points, repeats, [compare] and title may change"
+            )
+
+
+def _identity(study: Study) -> dict[str, object]:
+    """What all samples of a study share, by key of the study file."""
+    scale = {"epsilon": study.epsilon, "sigma": study.sigma, "mass": study.mass}
+    fluid = {**asdict(study.fluid), **scale, "ideal_heat_capacity": study.ideal_heat_capacity}
+    return {
+        **{f"fluid.{name}": value for name, value in fluid.items()},
+        "state.particles": study.states[0].particles,
+        **{f"sampling.{name}": value for name, value in study.sampling.identity.items()},
+    }

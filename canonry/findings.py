@@ -1,0 +1,87 @@
+"""What the samples of a study say, in reduced units: the records between series and tables."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from estimators.estimate import Estimate
+from estimators.structure import Structure
+from sampler.fluid import State
+
+__all__ = ["Curve", "Cut", "Finding", "Findings", "Overlap"]
+
+Floats = npt.NDArray[np.float64]
+
+
+@dataclass(frozen=True, eq=False)
+class Finding:
+    """One property at one state by one method; `estimate` is None where it was refused."""
+
+    state: State
+    property: str
+    method: str
+    estimate: Estimate | None
+    effective_samples: float
+    trust: str
+    reason: str
+    headline: bool
+
+
+@dataclass(frozen=True)
+class Cut:
+    """Samples left out at the start of a repeat; `effective_samples` stand behind the energy of the rest."""
+
+    state: State
+    repeat: int
+    cut: int
+    samples: int
+    effective_samples: float
+
+
+@dataclass(frozen=True)
+class Overlap:
+    """Chance that a sample of one of two neighbouring rungs might as well be one of the other (geometric mean)."""
+
+    low: State
+    high: State
+    value: float
+
+
+@dataclass(frozen=True, eq=False)
+class Curve:
+    """A curve of one repeat of a rung, or of all (None): x and y, each (n,)."""
+
+    state: State
+    repeat: int | None
+    x: Floats
+    y: Floats
+
+
+@dataclass(frozen=True, eq=False)
+class Findings:
+    """All that the samples of a study say.
+
+    properties : by every method, one headline for each property and state
+    curve : on a temperature grid of each isochore
+    histograms : probability density of U/N
+    ledgers : change of K + U_dyn + ledger per particle over time
+    unfinished : states that lack samples the study asks for
+    """
+
+    properties: tuple[Finding, ...]
+    curve: tuple[Finding, ...]
+    structures: Mapping[State, Structure]
+    cuts: tuple[Cut, ...]
+    overlaps: tuple[Overlap, ...]
+    histograms: tuple[Curve, ...]
+    ledgers: tuple[Curve, ...]
+    unfinished: tuple[State, ...]
+
+    @property
+    def headlines(self) -> tuple[Finding, ...]:
+        """The one finding for each property and state that counts."""
+        return tuple(finding for finding in self.properties if finding.headline)

@@ -1,0 +1,118 @@
+"""The rungs of one density together: reweighted values, which of two values counts, and the curve between the rungs."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import dataclass, replace
+from itertools import pairwise
+
+import numpy as np
+
+from canonry.findings import Finding, Overlap
+from estimators.estimate import Estimate
+from estimators.reweight import Pooled, Reweighted, pool
+from sampler.fluid import State
+from sampler.series import Series
+
+__all__ = ["Isochore", "assemble"]
+
+_GRID = 61  # temperatures of a curve
+_AGREEMENT = 3.0  # combined standard errors between the reweighted value and the rung's own
+_ALONE = 1e-9  # share of its samples that a rung connected with no other has in common with others, at most
+_TRUST = ("ok", "caution", "no")
+
+Properties = Mapping[str, Estimate]
+
+
+@dataclass(frozen=True, eq=False)
+class Isochore:
+    """States by rising temperature with what each says alone, and all of them pooled.
+
+    pooled : None where there is nothing to pool: a single rung, or no bath
+    """
+
+    own: Mapping[State, Properties]
+    pooled: Pooled | None
+    ideal_heat_capacity: float | None
+
+    def overlaps(self) -> Iterator[Overlap]:
+        """Of neighbouring rungs."""
+        if self.pooled is not None:
+            states = list(self.own)
+            for index, (low, high) in enumerate(pairwise(states)):
+                shared = self.pooled.overlap[index, index + 1] * self.pooled.overlap[index + 1, index]
+                yield Overlap(low, high, float(np.sqrt(shared)))
+
+    def properties(self) -> Iterator[Finding]:
+        """Of every rung, its own values and the reweighted ones."""
+        for index, (state, properties) in enumerate(self.own.items()):
+            pooled = None if self.pooled is None else self._at_rung(self.pooled, index, state)
+            others = {} if pooled is None else self._completed(pooled.properties)
+            for name, own in self._completed(properties).items():
+                yield from _both(state, name, own, others.get(name), pooled)
+
+    def curve(self) -> Iterator[Finding]:
+        """Reweighted values from the coldest rung to the warmest; refused ones carry the reason."""
+        if self.pooled is None:
+            return
+        first, properties = next(iter(self.own.items()))
+        names = [*self._completed(properties)]
+        for temperature in np.linspace(self.pooled.temperatures[0], self.pooled.temperatures[-1], _GRID):
+            state = replace(first, temperature=float(temperature))
+            at = self.pooled.at(state.temperature)
+            for name, value in self._completed(at.properties).items():
+                yield _reweighted(state, name, value, at.effective_samples, headline=True)
+            if at.refused:
+                for name in names:
+                    yield Finding(state, name, "reweighted", None, at.effective_samples, "no", at.refused, True)
+
+    def _at_rung(self, pooled: Pooled, index: int, state: State) -> Reweighted:
+        if pooled.overlap[index, index] > 1.0 - _ALONE:
+            return Reweighted(state.temperature, 0.0, {}, "the rung overlaps with no other")
+        return pooled.at(state.temperature)
+
+    def _completed(self, properties: Properties) -> dict[str, Estimate]:
+        """With the heat capacity, where the ideal part is known."""
+        if self.ideal_heat_capacity is None or not properties:
+            return dict(properties)
+        return {**properties, "heat_capacity": properties["residual_heat_capacity"] + self.ideal_heat_capacity}
+
+
+def assemble(
+    own: Mapping[State, Properties], series: Sequence[Series], *, ideal_heat_capacity: float | None
+) -> Isochore:
+    """The rungs of one density.
+
+    own : what each rung says alone, by rising temperature
+    series : all repeats of these rungs, already cut
+    Raises NotSolved if rungs overlap and yet cannot be pooled.
+    """
+    pooled = pool(series) if len(own) > 1 and series[0].bath else None
+    return Isochore(own, pooled, ideal_heat_capacity)
+
+
+def _both(
+    state: State, name: str, own: Estimate, other: Estimate | None, pooled: Reweighted | None
+) -> Iterator[Finding]:
+    """The rung's own value and the reweighted one; exactly one of them is the headline.
+
+    That is the reweighted value where there is one and both agree within three combined standard errors, else the
+    rung's own, with caution and the reason. Where there is nothing to reweight (a rung alone at its density, no bath, a
+    bulk modulus that needs g at contact) the rung's own stands as it is.
+    """
+    doubt = "" if pooled is None else pooled.refused
+    if other is not None:
+        allowed = _AGREEMENT * float(np.hypot(other.standard_error, own.standard_error))
+        if not abs(other.value - own.value) <= allowed:
+            doubt = "the value from all rungs together lies more than three combined standard errors away"
+    trust, reason = own.trust, own.reason
+    if doubt:
+        trust, reason = max(trust, "caution", key=_TRUST.index), "; ".join(filter(None, (reason, doubt)))
+    chosen = other is not None and not doubt
+    yield Finding(state, name, own.method, own, own.effective_samples, trust, reason, not chosen)
+    if other is not None and pooled is not None:
+        yield _reweighted(state, name, other, pooled.effective_samples, headline=chosen)
+
+
+def _reweighted(state: State, name: str, value: Estimate, samples: float, *, headline: bool) -> Finding:
+    return Finding(state, name, "reweighted", value, samples, value.trust, value.reason, headline)

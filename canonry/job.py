@@ -1,0 +1,112 @@
+"""The whole job: sample what is missing, estimate, compare, report."""
+
+from __future__ import annotations
+
+import csv
+from collections.abc import Callable, Sequence
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from canonry.border import Border
+from canonry.directory import locate, write
+from canonry.sampling import is_complete, sample
+from canonry.study import Study
+from canonry.units import Kind
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+    from canonry.results import Results
+
+__all__ = ["compare", "estimate", "is_finished", "report", "run"]
+
+_FILES = ("properties.csv", "curve.csv", "structure.csv", "verdict.csv", "summary.csv", "report.html")
+
+Place = str | Path
+Tell = Callable[[str], None]
+
+
+def run(study: Place, *, into: Place | None = None, workers: int | None = None, units: Kind | None = None) -> Results:
+    """Sample what is missing, write all tables and the report, and return what they hold.
+
+    study : a study file, or its directory
+    into : the study directory, by default the name of the study file without its suffix, in the current directory
+    workers : threads, by default one for every core; results do not depend on it
+    units : of tables and report, by default those the study was written in
+    Raises UserError, or an error of sampler, estimators or reference, each of them also a built-in kind.
+    """
+    found, directory = locate(Path(study), None if into is None else Path(into))
+    Border.of(found, units)
+    sample(found, directory, workers=workers)
+    return report(directory, units=units)
+
+
+def estimate(directory: Place, *, units: Kind | None = None, watch: Tell | None = None) -> Results:
+    """Tables from what a study directory holds, also while it is being sampled; returns them and what a report needs.
+
+    watch : called with a few words on what is worked on
+    Raises UserError where there is nothing to estimate from, BadSeries or NotSolved where samples cannot be used.
+    """
+    from canonry.estimation import findings
+    from canonry.provenance import provenance
+    from canonry.tables import assemble, save
+    from canonry.verdict import against, compare
+
+    study, directory = locate(Path(directory))
+    border = Border.of(study, units)
+    found = findings(study, directory, watch=watch)
+    references = [against(name, study.fluid) for name in study.compare.against]
+    results = assemble(
+        study,
+        found,
+        [compare(found.headlines, reference, study) for reference in references],
+        border,
+        references=references,
+        provenance=provenance(study, directory),
+    )
+    save(results, directory)
+    return results
+
+
+def report(directory: Place, *, units: Kind | None = None, watch: Tell | None = None) -> Results:
+    """Tables and report.html from what a study directory holds; raises as `estimate` does."""
+    from canonry.report.page import html
+
+    results = estimate(directory, units=units, watch=watch)
+    if watch is not None:
+        watch("writing the report")
+    write(Path(directory) / "report.html", html(results))
+    return results
+
+
+def compare(
+    directory: Place, *, against: Sequence[str] | None = None, units: Kind | None = None, watch: Tell | None = None
+) -> pd.DataFrame:
+    """Headline values held against references, and a row without a state for all of them together; writes nothing.
+
+    against : names of references for the same model, by default those of the study
+    Raises UserError where there is nothing to compare or a reference describes another model.
+    """
+    from canonry.errors import UserError
+    from canonry.estimation import findings
+    from canonry.tables import verdict_table
+    from canonry.verdict import against as reference_for
+    from canonry.verdict import compare as held_against
+
+    study, directory = locate(Path(directory))
+    border = Border.of(study, units)
+    names = study.compare.against if against is None else tuple(dict.fromkeys(against))
+    if not names:
+        raise UserError(f"{directory}: the study names no reference; what is needed is --against, or compare.against")
+    references = [reference_for(name, study.fluid) for name in names]
+    headlines = findings(study, directory, watch=watch).headlines
+    return verdict_table([held_against(headlines, reference, study) for reference in references], border)
+
+
+def is_finished(study: Study, directory: Path, units: Kind | None = None) -> bool:
+    """Whether all samples, tables and the report of a study are there and in these units; takes a moment only."""
+    if not is_complete(study, directory, _FILES):
+        return False
+    with (directory / "properties.csv").open(encoding="utf-8", newline="") as file:
+        row = next(csv.DictReader(file), None)
+    return row is not None and row["temperature_unit"] == Border.of(study, units).label("temperature")

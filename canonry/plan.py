@@ -1,0 +1,217 @@
+"""What a study will cost and where it may go wrong, before anything is sampled."""
+
+from __future__ import annotations
+
+import os
+import time
+from collections.abc import Iterator, Sequence
+from concurrent.futures import ThreadPoolExecutor
+from dataclasses import dataclass, replace
+from itertools import pairwise
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+import numpy as np
+import numpy.typing as npt
+
+from canonry.border import Border
+from canonry.study import Study
+
+if TYPE_CHECKING:
+    from reference import Reference
+    from sampler.fluid import Fluid, State
+    from sampler.protocol import Protocol
+
+__all__ = ["Plan", "Rung", "plan", "predicted_overlap"]
+
+Floats = npt.NDArray[np.float64]
+
+_TRIAL = 800_000  # particle-steps of a trial run: a fraction of a second
+_MOST_TRIALS = 3
+_SPREAD = 8.0  # standard deviations
+_FINE = 24  # points a standard deviation
+_LEAST_OVERLAP = 0.03  # below it too few samples connect two rungs for reweighting between them
+_LIQUID = 0.5  # sigma^-3
+_CUTOFFS = (5.0, 3.0)  # sigma, below and above that density
+
+
+@dataclass(frozen=True)
+class Rung:
+    """What one rung will take.
+
+    steps : of each repeat, equilibration included
+    particle_steps : of all repeats
+    overlap : predicted, with the next warmer rung at this density; None for the warmest or where no reference speaks
+    """
+
+    state: State
+    steps: int
+    particle_steps: int
+    overlap: float | None
+
+
+@dataclass(frozen=True)
+class Plan:
+    """What a study will take.
+
+    seconds : wall time of the sampling on this machine with this many workers
+    guide : name of the reference behind the predicted overlaps and warnings
+    """
+
+    rungs: tuple[Rung, ...]
+    repeats: int
+    workers: int
+    seconds: float
+    guide: str
+    warnings: tuple[str, ...]
+
+    @property
+    def particle_steps(self) -> int:
+        """Of all repeats of all rungs."""
+        return sum(rung.particle_steps for rung in self.rungs)
+
+
+def plan(study: Study, *, workers: int | None = None, border: Border | None = None) -> Plan:
+    """The plan of a study; its cost from short trial runs with the compiled kernel, which write nothing.
+
+    border : the units of the warnings, by default those the study was written in
+    Raises BadRequest or DivergedRun where a trial run shows that the study cannot be sampled as asked.
+    """
+    workers = min(workers or os.cpu_count() or 1, len(study.states) * study.sampling.repeats)
+    guide = _guide(study.fluid)
+    overlaps = {state: shared for states in study.isochores.values() for state, shared in _overlaps(states, guide)}
+    steps = study.sampling.settling + study.sampling.steps
+    rungs = tuple(
+        Rung(state, steps, steps * state.particles * study.sampling.repeats, overlaps[state]) for state in study.states
+    )
+    border = border or Border.of(study)
+    warnings = [*_phases(study.states, guide, border), *_cutoffs(study, border), *_gaps(rungs, border)]
+    return Plan(rungs, study.sampling.repeats, workers, _seconds(study, steps, workers), guide.name, tuple(warnings))
+
+
+def predicted_overlap(
+    energies: Floats, heat_capacities: Floats, *, temperatures: Floats, particles: int
+) -> list[float]:
+    """Overlap of neighbouring rungs with equally many samples, (K - 1,), each between 0 and 1/2.
+
+    energies, heat_capacities, temperatures : (K,), residual, per particle
+    The energies of a rung are taken as Gaussian with variance N T^2 c_v,res. With p_i the densities and D their sum,
+    the overlap of i and j is the integral of p_i p_j / D.
+    """
+    centres = particles * energies
+    widths = np.sqrt(particles * np.maximum(heat_capacities, 1e-12)) * temperatures
+    low, high = np.min(centres - _SPREAD * widths), np.max(centres + _SPREAD * widths)
+    grid = np.linspace(low, high, int((high - low) / np.min(widths) * _FINE) + 2)
+    densities = np.exp(-0.5 * ((grid - centres[:, None]) / widths[:, None]) ** 2) / widths[:, None]
+    total = np.maximum(np.sum(densities, axis=0), 1e-300)
+    shared = np.sum(densities[:-1] * densities[1:] / total, axis=1)
+    return list(map(float, shared * (grid[1] - grid[0]) / np.sqrt(2.0 * np.pi)))
+
+
+def _guide(fluid: Fluid) -> Reference:
+    """The reference for this model, or the one for the full potential as the nearest."""
+    from reference import find, names
+
+    references = [find(name) for name in names()]
+    return next((each for each in references if each.same_model(fluid.truncation, fluid.cutoff)), references[0])
+
+
+def _overlaps(states: Sequence[State], guide: Reference) -> Iterator[tuple[State, float | None]]:
+    """Each state of one density with its overlap with the next, where the reference covers both."""
+    known = [state for state in states if not guide.covers(state.temperature, state.density)]
+    found: dict[State, float] = {}
+    if len(known) > 1:
+        values = [
+            [guide.value(name, temperature=s.temperature, density=s.density).value for s in known]
+            for name in ("residual_energy", "residual_heat_capacity")
+        ]
+        temperatures = np.array([state.temperature for state in known])
+        shared = predicted_overlap(
+            np.array(values[0]), np.array(values[1]), temperatures=temperatures, particles=known[0].particles
+        )
+        found = dict(zip(known, shared, strict=False))
+    for state, warmer in zip(states, [*states[1:], None], strict=True):
+        yield state, found.get(state) if warmer in known else None
+
+
+def _phases(states: Sequence[State], guide: Reference, border: Border) -> Iterator[str]:
+    from reference.errors import OutOfRange
+    from reference.freezing import freezing_density
+
+    for state in states:
+        try:
+            if guide.phase(state.temperature, state.density) == "two-phase":
+                pair = guide.coexistence(state.temperature)
+                yield (
+                    f"{border.state(state)}: liquid and vapour coexist here ({guide.name}: densities "
+                    f"{border.text('density', pair.vapour)} and {border.text('density', pair.liquid)}); the sample "
+                    "will be no bulk phase, and its values depend on its size."
+                )
+            if state.density > freezing_density(state.temperature):
+                yield (
+                    f"{border.state(state)}: the liquid freezes at this temperature from density "
+                    f"{border.text('density', freezing_density(state.temperature))} on (J. Chem. Phys. 113, 8142 "
+                    "(2000)); the sample may be an undercooled liquid or crystallise."
+                )
+        except OutOfRange:
+            continue
+
+
+def _cutoffs(study: Study, border: Border) -> Iterator[str]:
+    if study.fluid.truncation != "corrected":
+        return
+    for density in study.isochores:
+        wanted = _CUTOFFS[density >= _LIQUID]
+        if study.fluid.cutoff < wanted:
+            yield (
+                f"cutoff {border.text('length', study.fluid.cutoff)}: at density {border.text('density', density)} the "
+                "correction beyond the cutoff, which takes the fluid as homogeneous there, wants "
+                f"{border.text('length', wanted)} at least."
+            )
+
+
+def _gaps(rungs: Sequence[Rung], border: Border) -> Iterator[str]:
+    for rung, warmer in pairwise(rungs):
+        if rung.overlap is not None and rung.overlap < _LEAST_OVERLAP:
+            yield (
+                f"The rungs at {border.state(rung.state)} and {border.text('temperature', warmer.state.temperature)} "
+                "hardly overlap; the curve between them will be refused. Set a rung between them."
+            )
+
+
+def _seconds(study: Study, steps: int, workers: int) -> float:
+    """Wall time: repeats shared among the workers, none shorter than the longest of them."""
+    densities = sorted(study.isochores)
+    tried = [densities[round(k)] for k in np.linspace(0, len(densities) - 1, min(len(densities), _MOST_TRIALS))]
+    costs = [_seconds_per_step(study, study.isochores[density], workers) for density in tried]
+    each = [steps * float(np.interp(state.density, tried, costs)) for state in study.states]
+    repeats = study.sampling.repeats
+    return max(max(each), sum(each) * repeats / workers)
+
+
+def _seconds_per_step(study: Study, states: Sequence[State], workers: int) -> float:
+    """Of one worker, while all of them run a trial at a state in the middle of the isochore."""
+    state = states[len(states) // 2]
+    stretch = _trial(study.sampling, state.particles)
+    with ThreadPoolExecutor(workers) as threads:
+        times = list(threads.map(lambda repeat: _timed(study.fluid, state, stretch, repeat), range(workers)))
+    return float(np.mean(times)) / stretch.steps
+
+
+def _trial(protocol: Protocol, particles: int) -> Protocol:
+    """The protocol cut down to two segments, one to settle and one to be timed."""
+    record_every = min(protocol.record_every, 100)
+    steps = record_every * max(1, round(_TRIAL / (particles * record_every)))
+    return replace(protocol, record_every=record_every, frame_every=steps, equilibration=steps, steps=steps, repeats=1)
+
+
+def _timed(fluid: Fluid, state: State, protocol: Protocol, repeat: int) -> float:
+    """Wall time of the second of two segments, s."""
+    from sampler.rung import advance
+    from sampler.store import Chain
+
+    chain, stop = Chain(Path(), fluid, state, protocol, repeat), np.zeros(1, np.uint8)
+    before = advance(chain, 0, None, stop)
+    started = time.perf_counter()
+    advance(chain, 1, before, stop)
+    return time.perf_counter() - started

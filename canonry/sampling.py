@@ -1,0 +1,131 @@
+"""What a study directory still lacks, and sampling it."""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, replace
+from datetime import UTC, datetime
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from canonry.directory import STUDY, claim
+from canonry.study import Study
+
+if TYPE_CHECKING:
+    from sampler.fluid import State
+    from sampler.ladder import Progress
+    from sampler.series import Series
+    from sampler.store import Chain
+
+__all__ = ["Outstanding", "is_complete", "outstanding", "recorded", "sample"]
+
+
+@dataclass(frozen=True)
+class Outstanding:
+    """Repeats with the numbers of the segments they lack, and where damaged segments were put aside."""
+
+    work: tuple[tuple[Chain, list[int]], ...]
+    aside: tuple[Path, ...]
+
+    @property
+    def particle_steps(self) -> int:
+        """Particle-steps still to be made."""
+        return sum(
+            chain.state.particles * (chain.segments[index][1] - chain.segments[index][0])
+            for chain, missing in self.work
+            for index in missing
+        )
+
+
+def outstanding(study: Study, directory: Path) -> Outstanding:
+    """What is missing of a study; damaged segments are put aside. Raises ForeignDirectory."""
+    from sampler.ladder import chains, unfinished
+
+    work, aside = [], []
+    for chain in chains(directory, study.fluid, study.states, study.sampling):
+        missing, damaged = unfinished(chain)
+        work.append((chain, missing))
+        aside += damaged
+    return Outstanding(tuple(work), tuple(aside))
+
+
+def sample(
+    study: Study,
+    directory: Path,
+    *,
+    workers: int | None = None,
+    watch: Callable[[Progress], None] | None = None,
+    todo: Outstanding | None = None,
+) -> Outstanding:
+    """Sample what a study directory lacks, and make it the study's if it is new; returns what was lacking.
+
+    workers : threads, by default one for every core; the samples do not depend on it
+    watch : called after every segment
+    Raises UserError if the directory belongs to another study, DivergedRun, OSError; finished segments stay.
+    """
+    from canonry.provenance import book
+    from sampler import ladder
+
+    claim(study, directory)
+    todo = todo or outstanding(study, directory)
+    made = 0
+
+    def count(progress: Progress) -> None:
+        nonlocal made
+        made += progress.chain.state.particles * (progress.segment.last - progress.segment.first)
+        if watch is not None:
+            watch(progress)
+
+    started, clock = datetime.now(UTC), time.monotonic()
+    try:
+        ladder.sample([each for each in todo.work if each[1]], workers=workers, watch=count)
+    finally:
+        if made:
+            book(directory, started=started, seconds=time.monotonic() - clock, particle_steps=made)
+    return todo
+
+
+def recorded(study: Study, directory: Path, state: State) -> list[Series]:
+    """The repeats of one rung as far as they are there, none longer than the study asks; empty ones left out."""
+    from sampler.ladder import chains, load
+
+    wanted = study.sampling.steps // study.sampling.record_every
+    series = [_first(load(chain), wanted) for chain in chains(directory, study.fluid, [state], study.sampling)]
+    return [each for each in series if len(each)]
+
+
+def is_complete(study: Study, directory: Path, results: Sequence[str]) -> bool:
+    """Whether a directory holds all of a study, and result files newer than that.
+
+    Looks at file times and at the last segment of each repeat; nothing is sampled or checked in full.
+    """
+    from sampler.errors import DamagedSegment
+    from sampler.store import Chain, read
+
+    toml = directory / STUDY
+    made = [directory / name for name in results]
+    if not all(file.exists() for file in [toml, *made]) or toml.read_text(encoding="utf-8") != study.to_toml():
+        return False
+    oldest = min(file.stat().st_mtime_ns for file in made)
+    for state in study.states:
+        for repeat in range(study.sampling.repeats):
+            chain = Chain(directory, study.fluid, state, study.sampling, repeat)
+            paths = [chain.path(index) for index in range(len(chain.segments))]
+            if not all(path.exists() and path.stat().st_mtime_ns <= oldest for path in paths):
+                return False
+            try:
+                if read(paths[-1], chain.identity).last < chain.segments[-1][1]:
+                    return False
+            except DamagedSegment:
+                return False
+    return toml.stat().st_mtime_ns <= oldest
+
+
+def _first(series: Series, n_samples: int) -> Series:
+    """The first samples of a series, and the frames among them."""
+    if len(series) <= n_samples:
+        return series
+    names = ("energy", "sampled_energy", "virial", "hypervirial", "kinetic", "ledger")
+    frames = series.frames[: n_samples // series.frame_stride]
+    return replace(series, frames=frames, **{name: getattr(series, name)[:n_samples] for name in names})

@@ -1,0 +1,239 @@
+"""The tables of a study directory, in the units a reader asked for."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterable, Mapping, Sequence
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from canonry.border import Border
+from canonry.caveats import caveats
+from canonry.directory import write
+from canonry.findings import Curve, Finding, Findings
+from canonry.results import COLUMNS, Results
+from canonry.study import Study
+from canonry.units import PROPERTIES
+from canonry.verdict import Comparison, Verdict
+from sampler.fluid import State
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+    from reference import Reference
+
+__all__ = ["TABLES", "assemble", "save", "verdict_table"]
+
+TABLES = ("properties", "curve", "structure", "verdict", "summary")
+_DIGITS = "%.10g"
+_TRUST = ("ok", "caution", "no")
+_SPECIES = "1"  # the only one of a pure fluid
+
+
+def assemble(
+    study: Study,
+    findings: Findings,
+    comparisons: Sequence[Comparison],
+    border: Border,
+    *,
+    references: Sequence[Reference] = (),
+    provenance: Mapping[str, str] | None = None,
+) -> Results:
+    """Everything a report shows; `references` are drawn as curves."""
+    return Results(
+        title=study.title,
+        study_toml=study.to_toml(),
+        units=border.kind,
+        properties=_estimates("properties", findings.properties, border),
+        curve=_estimates("curve", findings.curve, border),
+        structure=_structure(findings, border),
+        verdict=verdict_table(comparisons, border),
+        summary=_summary(findings, border),
+        histograms=_histograms(findings, border),
+        ledger=_ledgers(findings, border),
+        overlap=_overlaps(findings, border),
+        reference_curve=_reference_curve(study, findings, references, border),
+        equilibration=_table(
+            "equilibration",
+            (
+                {**_state(cut.state, border), "repeat": cut.repeat, "cut": cut.cut, "samples": cut.samples}
+                | {"effective_samples": cut.effective_samples}
+                for cut in findings.cuts
+            ),
+        ),
+        caveats=tuple(caveats(findings, border)),
+        provenance=provenance or {},
+    )
+
+
+def save(results: Results, directory: Path) -> None:
+    """Write the tables of a study directory, each whole or not at all. Raises OSError."""
+    for name in TABLES:
+        table = getattr(results, name)
+        write(directory / f"{name}.csv", table.to_csv(index=False, float_format=_DIGITS, lineterminator="\n"))
+
+
+def verdict_table(comparisons: Iterable[Comparison], border: Border) -> pd.DataFrame:
+    """Every value held against every reference; the row without a state is the outcome of all together."""
+    rows: list[dict[str, Any]] = []
+    for comparison in comparisons:
+        rows += (_verdict(verdict, comparison.reference, border) for verdict in comparison.verdicts)
+        rows.append({"reference": comparison.reference, "outcome": comparison.outcome})
+    return _table("verdict", rows)
+
+
+def _table(name: str, rows: Iterable[Mapping[str, Any]]) -> pd.DataFrame:
+    import pandas as pd
+
+    return pd.DataFrame(list(rows), columns=list(COLUMNS[name]))
+
+
+def _state(state: State, border: Border) -> dict[str, float]:
+    return {name: border.coordinate(name, getattr(state, name)) for name in ("temperature", "density")}
+
+
+def _finite(value: float) -> float:
+    """The value, or nothing where it is not finite."""
+    return value if math.isfinite(value) else math.nan
+
+
+def _estimates(name: str, findings: Iterable[Finding], border: Border) -> pd.DataFrame:
+    return _table(name, (_estimate(finding, border) for finding in findings))
+
+
+def _estimate(finding: Finding, border: Border) -> dict[str, Any]:
+    kind, estimate = finding.property, finding.estimate
+    value, error = (math.nan, math.nan) if estimate is None else (estimate.value, estimate.standard_error)
+    return {
+        **_state(finding.state, border),
+        "temperature_unit": border.label("temperature"),
+        "density_unit": border.label("density"),
+        "particles": finding.state.particles,
+        "property": kind,
+        "value": border.value(kind, value),
+        "standard_error": _finite(border.value(kind, error)),
+        "unit": border.label(kind),
+        "method": finding.method,
+        "headline": finding.headline,
+        "effective_samples": _finite(finding.effective_samples),
+        "trust": finding.trust,
+        "reason": finding.reason,
+    }
+
+
+def _verdict(verdict: Verdict, reference: str, border: Border) -> dict[str, Any]:
+    row = _estimate(verdict.finding, border)
+    kind, known = verdict.finding.property, verdict.known
+    return {name: row[name] for name in ("temperature", "density", "property", "value", "standard_error")} | {
+        "reference": reference,
+        "reference_value": math.nan if known is None else border.value(kind, known.value),
+        "reference_uncertainty": math.nan if known is None else border.value(kind, known.uncertainty),
+        "z": verdict.z,
+        "outcome": verdict.outcome,
+    }
+
+
+def _summary(findings: Findings, border: Border) -> pd.DataFrame:
+    """One row a state: every headline value with its error and unit, and the least trust among them."""
+    import pandas as pd
+
+    rows: dict[State, dict[str, Any]] = {}
+    order = [name for name in PROPERTIES if any(name == finding.property for finding in findings.headlines)]
+    for finding in sorted(findings.headlines, key=lambda each: order.index(each.property)):
+        row, cells = rows.setdefault(finding.state, {}), _estimate(finding, border)
+        if not row:
+            row |= {key: cells[key] for key in ("temperature", "temperature_unit", "density", "density_unit")}
+            row |= {"particles": finding.state.particles, "trust": "ok"}
+        row["trust"] = max(row["trust"], finding.trust, key=_TRUST.index)
+        name = finding.property
+        row |= {name: cells["value"], f"{name}_error": cells["standard_error"], f"{name}_unit": cells["unit"]}
+    return pd.DataFrame(list(rows.values()))
+
+
+def _structure(findings: Findings, border: Border) -> pd.DataFrame:
+    import pandas as pd
+
+    columns = list(COLUMNS["structure"])
+    columns[1:1], columns[3:3] = ["temperature_unit"], ["density_unit"]
+    parts = [
+        pd.DataFrame(
+            {
+                **_state(state, border),
+                "temperature_unit": border.label("temperature"),
+                "density_unit": border.label("density"),
+                "species_a": _SPECIES,
+                "species_b": _SPECIES,
+                "r": border.value("length", 1.0) * structure.r,
+                "r_unit": border.label("length"),
+                "g": structure.g,
+                "standard_error": np.where(np.isfinite(structure.standard_error), structure.standard_error, np.nan),
+                "coordination": structure.coordination,
+            },
+            columns=columns,
+        )
+        for state, structure in findings.structures.items()
+    ]
+    return pd.concat(parts, ignore_index=True) if parts else pd.DataFrame(columns=columns)
+
+
+def _curves(name: str, curves: Sequence[Curve], columns: Mapping[str, Any]) -> pd.DataFrame:
+    import pandas as pd
+
+    parts = [pd.DataFrame({key: make(curve) for key, make in columns.items()}) for curve in curves]
+    return pd.concat(parts, ignore_index=True) if parts else _table(name, [])
+
+
+def _histograms(findings: Findings, border: Border) -> pd.DataFrame:
+    energy = border.value("residual_energy", 1.0)
+    return _curves(
+        "histograms",
+        findings.histograms,
+        {
+            "temperature": lambda curve: border.coordinate("temperature", curve.state.temperature),
+            "density": lambda curve: border.coordinate("density", curve.state.density),
+            "energy": lambda curve: energy * curve.x,
+            "probability": lambda curve: curve.y / energy,
+        },
+    )
+
+
+def _ledgers(findings: Findings, border: Border) -> pd.DataFrame:
+    energy, time = border.value("residual_energy", 1.0), border.value("time", 1.0)
+    return _curves(
+        "ledger",
+        findings.ledgers,
+        {
+            "temperature": lambda curve: border.coordinate("temperature", curve.state.temperature),
+            "density": lambda curve: border.coordinate("density", curve.state.density),
+            "repeat": lambda curve: curve.repeat,
+            "time": lambda curve: time * curve.x,
+            "drift": lambda curve: energy * curve.y,
+        },
+    )
+
+
+def _overlaps(findings: Findings, border: Border) -> pd.DataFrame:
+    def row(low: State, high: State, value: float) -> dict[str, float]:
+        ends = {"temperature_a": low.temperature, "temperature_b": high.temperature}
+        where = {name: border.coordinate("temperature", end) for name, end in ends.items()}
+        return {"density": border.coordinate("density", low.density), **where, "overlap": value}
+
+    return _table("overlap", (row(each.low, each.high, each.value) for each in findings.overlaps))
+
+
+def _reference_curve(study: Study, findings: Findings, references: Sequence[Reference], border: Border) -> pd.DataFrame:
+    """The references wherever they hold, at the rungs and on the grid of the curve."""
+    ideal = {} if study.ideal_heat_capacity is None else {"ideal_heat_capacity": study.ideal_heat_capacity}
+    points = dict.fromkeys((f.state, f.property) for f in (*findings.curve, *findings.headlines))
+    rows = []
+    for reference in references:
+        for state, name in sorted(points):
+            if reference.covers(state.temperature, state.density):
+                continue
+            known = reference.value(name, temperature=state.temperature, density=state.density, **ideal)
+            value, uncertainty = border.value(name, known.value), border.value(name, known.uncertainty)
+            cells = {"property": name, "value": value, "uncertainty": uncertainty, "reference": reference.name}
+            rows.append(_state(state, border) | cells)
+    return _table("reference_curve", rows)

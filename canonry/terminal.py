@@ -1,0 +1,145 @@
+"""The tables a terminal shows: the plan before, values and verdict after."""
+
+from __future__ import annotations
+
+import csv
+import math
+from collections.abc import Mapping, Sequence
+from pathlib import Path
+from typing import Any
+
+from canonry.border import Border
+from canonry.notation import symbol_of, unit_text
+from canonry.numbers import plain, with_error
+from canonry.plan import Plan
+from canonry.provenance import duration
+from canonry.study import Study
+from canonry.units import UNITS, Kind
+
+__all__ = ["aligned", "closing_text", "plan_text", "verdict_text"]
+
+_MARKS = {"ok": "", "caution": "*", "no": "!", "": ""}
+_LEGENDS = {"caution": "* with caution", "no": "! not to be trusted"}
+_DIGITS = 5  # of values without error
+
+Row = Mapping[str, Any]
+
+
+def aligned(rows: Sequence[Sequence[str]]) -> str:
+    """Rows of equal length as right-aligned columns, two spaces apart."""
+    widths = [max(map(len, column)) for column in zip(*rows, strict=True)]
+    return "\n".join("  ".join(map(str.rjust, row, widths)).rstrip() for row in rows)
+
+
+def plan_text(study: Study, plan: Plan, border: Border) -> str:
+    """The plan as a table with its cost and warnings; values in both kinds of units where the study has both."""
+    kinds: list[Kind] = ["reduced"] if study.scale is None else ["reduced", "SI"]
+    borders = [Border(kind, study.scale) for kind in kinds]
+    columns = [(name, each) for name in ("temperature", "density") for each in borders]
+    heads = [[name if each is borders[0] else "" for name, each in columns] + ["particle-steps", "overlap"]]
+    heads.append([unit_text(each.label(name)) for name, each in columns] + ["", "with next"])
+    body = [
+        [plain(each.coordinate(name, getattr(rung.state, name))) for name, each in columns]
+        + [f"{rung.particle_steps:.3g}", "-" if rung.overlap is None else f"{rung.overlap:.2f}"]
+        for rung in plan.rungs
+    ]
+    sampling, fluid = study.sampling, study.fluid
+
+    def both(name: str, value: float) -> str:
+        return " = ".join(each.text(name, value) for each in borders)
+
+    bath = f"friction {both('friction', sampling.friction)}" if sampling.bath else "no bath"
+    lines = [
+        f"{study.title}",
+        f"{study.states[0].particles} particles, cutoff {both('length', fluid.cutoff)}, {fluid.truncation}",
+        f"{sampling.scheme}, time step {both('time', sampling.time_step)}, {bath}",
+        f"{sampling.settling} + {sampling.steps} steps, repeats: {plan.repeats}",
+        "",
+        aligned([*heads, *body]),
+        "",
+        f"Cost: {plan.particle_steps:.3g} particle-steps, about {duration(plan.seconds) or '1 s'} of sampling with "
+        f"{plan.workers} worker{'' if plan.workers == 1 else 's'} on this machine.",
+        f"Overlaps are predicted from the heat capacity of {plan.guide}.",
+    ]
+    return "\n".join([*lines, *(f"Warning: {warning}" for warning in plan.warnings)])
+
+
+def _rows_of(directory: Path, table: str) -> list[Row]:
+    """The rows of one table of a study directory."""
+    with (directory / f"{table}.csv").open(encoding="utf-8", newline="") as file:
+        return list(csv.DictReader(file))
+
+
+def closing_text(directory: Path) -> str:
+    """Temperature, heat capacity and pressure with errors, reference, z and outcome, from the tables of a directory."""
+    headlines = [row for row in _rows_of(directory, "properties") if row["headline"] == "True"]
+    known = {row["property"] for row in headlines}
+    names = ["heat_capacity" if "heat_capacity" in known else "residual_heat_capacity", "pressure"]
+    values = [row for row in headlines if row["property"] in names]
+    verdicts = _rows_of(directory, "verdict")
+    references = list(dict.fromkeys(row["reference"] for row in verdicts))
+    blocks = [_block(values, names, [row for row in verdicts if row["reference"] == each]) for each in references]
+    legend = [text for trust, text in _LEGENDS.items() if any(row["trust"] == trust for row in values)]
+    return "\n\n".join([*(blocks or [_block(values, names, [])]), *([", ".join(legend)] if legend else [])])
+
+
+def verdict_text(verdicts: Sequence[Row], border: Border) -> str:
+    """Every value compared, one block a reference, under its outcome."""
+    blocks = []
+    for reference in dict.fromkeys(row["reference"] for row in verdicts):
+        own = [row for row in verdicts if row["reference"] == reference]
+        heads = ["T", "density", "property", "value", "reference", "z", "outcome"]
+        units = [unit_text(border.label(name)) for name in ("temperature", "density")]
+        body = [
+            [plain(_number(row[name])) for name in ("temperature", "density")]
+            + [symbol_of(row["property"]), _value(row), *_compared(row)]
+            for row in own
+            if row["property"] in UNITS
+        ]
+        blocks.append(f"Against {reference}: {_overall(own)}\n{aligned([heads, units + [''] * 5, *body])}")
+    return "\n\n".join(blocks)
+
+
+def _block(values: Sequence[Row], names: Sequence[str], verdicts: Sequence[Row]) -> str:
+    """One row a state: each property with error, and beside it the reference, z and outcome where there is one."""
+    compared = {(row["temperature"], row["density"], row["property"]): row for row in verdicts}
+    states = list(dict.fromkeys((row["temperature"], row["density"]) for row in values))
+    found = {(row["temperature"], row["density"], row["property"]): row for row in values}
+    first = values[0]
+    beside = ["reference", "z", "outcome"] if verdicts else []
+    heads = ["T", "density", *(cell for name in names for cell in (symbol_of(name), *beside))]
+    units = [unit_text(first[f"{name}_unit"]) for name in ("temperature", "density")]
+    for name in names:
+        unit = next((row["unit"] for row in values if row["property"] == name), "")
+        units += [unit_text(unit), *("" for _ in beside)]
+    body = []
+    for state in states:
+        cells = [plain(_number(each)) for each in state]
+        for name in names:
+            row = found.get((*state, name))
+            cells.append("-" if row is None else _value(row) + _MARKS[row["trust"]])
+            if verdicts:
+                cells += _compared(compared.get((*state, name)))
+        body.append(cells)
+    title = [f"Against {verdicts[0]['reference']}: {_overall(verdicts)}"] if verdicts else []
+    return "\n".join([*title, aligned([heads, units, *body])])
+
+
+def _value(row: Row) -> str:
+    return with_error(_number(row["value"]), _number(row["standard_error"]))
+
+
+def _compared(row: Row | None) -> list[str]:
+    if row is None:
+        return ["-", "-", "-"]
+    z = _number(row["z"])
+    return [plain(_number(row["reference_value"]), _DIGITS), f"{z:+.1f}" if math.isfinite(z) else "-", row["outcome"]]
+
+
+def _overall(verdicts: Sequence[Row]) -> str:
+    return next(str(row["outcome"]) for row in verdicts if row["property"] not in UNITS)
+
+
+def _number(cell: object) -> float:
+    """A cell of a table as a number, not a number where it is empty."""
+    return float(str(cell)) if cell not in ("", None) else math.nan

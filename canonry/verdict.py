@@ -1,0 +1,185 @@
+"""Estimates held against a reference for the same model: value by value, and all together.
+
+Value by value, with s^2 = standard error^2 + reference uncertainty^2 and z = (value - reference)/s:
+
+without tolerance, `agrees` up to |z| = 3 and `disagrees` beyond, which chance alone does to 0.3 % of all values;
+with a tolerance, equivalence: `agrees` only where the 95 % interval of the difference (two s to either side) lies
+inside the tolerance, `disagrees` where it lies outside altogether, else `undecided`;
+`undecided` in any case where the estimate is not to be trusted or the reference does not cover the state.
+
+All together, over the values without tolerance that could be decided: `disagrees` at a level of 1 %, half of it for the
+sum of squares under the covariance of the estimates and of the reference (chi-square), half for the largest |z|
+(Bonferroni). A reference's uncertainty is one and the same error at all states of a property. A value with a tolerance
+speaks for itself: one that disagrees, or leaves open what was asked, makes the whole so.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+import numpy.typing as npt
+from scipy import stats
+
+from canonry.errors import UserError
+from canonry.findings import Finding
+from canonry.study import COMPARED, Study, Tolerance
+from estimators.covariance import covariance_matrix
+from sampler.fluid import Fluid
+
+if TYPE_CHECKING:
+    from reference import Reference
+    from reference.equation_of_state import ReferenceValue
+
+__all__ = ["OUTCOMES", "Comparison", "Verdict", "against", "compare"]
+
+Floats = npt.NDArray[np.float64]
+
+OUTCOMES = ("agrees", "undecided", "disagrees")  # by weight
+_WIDEST = 3.0  # combined standard errors within which a value agrees
+_LEVEL = 0.01
+_SMALLEST_EIGENVALUE = 0.02  # of a correlation matrix known from a finite number of blocks; smaller ones are noise
+_SAME = {"residual_heat_capacity": "heat_capacity", "compressibility_factor": "pressure"}  # the same but for constants
+
+
+@dataclass(frozen=True, eq=False)
+class Verdict:
+    """One headline value held against a reference, in reduced units; `known` is None where the reference is silent."""
+
+    finding: Finding
+    known: ReferenceValue | None
+    tolerance: Tolerance | None
+
+    @property
+    def difference(self) -> float:
+        """Value less reference value; not a number where either is missing."""
+        if self.known is None or self.finding.estimate is None:
+            return math.nan
+        return self.finding.estimate.value - self.known.value
+
+    @property
+    def error(self) -> float:
+        """Combined standard error of the difference."""
+        if self.known is None or self.finding.estimate is None:
+            return math.nan
+        return math.hypot(self.finding.estimate.standard_error, self.known.uncertainty)
+
+    @property
+    def z(self) -> float:
+        """Difference in combined standard errors; not a number where there is none."""
+        return self.difference / self.error if 0.0 < self.error < math.inf else math.nan
+
+    @property
+    def outcome(self) -> str:
+        """'agrees', 'disagrees' or 'undecided'."""
+        if not math.isfinite(self.z) or self.finding.trust == "no" or self.known is None:
+            return "undecided"
+        if self.tolerance is None:
+            return "agrees" if abs(self.z) <= _WIDEST else "disagrees"
+        limit = self.tolerance.value * (abs(self.known.value) if self.tolerance.relative else 1.0)
+        if abs(self.difference) + 2.0 * self.error <= limit:
+            return "agrees"
+        return "disagrees" if abs(self.difference) - 2.0 * self.error > limit else "undecided"
+
+
+@dataclass(frozen=True, eq=False)
+class Comparison:
+    """All headline values held against one reference."""
+
+    reference: str
+    verdicts: tuple[Verdict, ...]
+
+    @property
+    def outcome(self) -> str:
+        """Of all values together, as the module says."""
+        plain = [verdict for verdict in self.verdicts if verdict.tolerance is None and verdict.outcome != "undecided"]
+        outcomes = [verdict.outcome for verdict in self.verdicts if verdict.tolerance is not None]
+        if plain:
+            outcomes.append("disagrees" if _improbable(_independent(plain)) else "agrees")
+        return max(outcomes, key=OUTCOMES.index, default="undecided")
+
+
+def compare(
+    findings: Sequence[Finding], reference: Reference, study: Study, *, tolerance: Mapping[str, Tolerance] | None = None
+) -> Comparison:
+    """Headline findings of a study held against a reference for the same model.
+
+    tolerance : by property, by default the study's
+    Raises UserError if the reference describes another model.
+    """
+    _check_model(reference, study.fluid)
+    tolerance = study.compare.tolerance if tolerance is None else tolerance
+    return Comparison(
+        reference.name,
+        tuple(
+            Verdict(finding, _known(reference, finding, study.ideal_heat_capacity), tolerance.get(finding.property))
+            for finding in findings
+            if finding.headline and finding.property in COMPARED
+        ),
+    )
+
+
+def against(name: str, fluid: Fluid) -> Reference:
+    """A reference by its name. Raises UnknownReference, or UserError if it describes another model than the fluid."""
+    from reference import find
+
+    reference = find(name)
+    _check_model(reference, fluid)
+    return reference
+
+
+def _check_model(reference: Reference, fluid: Fluid) -> None:
+    if reference.same_model(fluid.truncation, fluid.cutoff):
+        return
+    described = reference.fluid
+    needed = (
+        'truncation "corrected"'
+        if described.truncation == "full"
+        else f'truncation "{described.truncation}" at cutoff {described.cutoff:g} sigma'
+    )
+    raise UserError(
+        f"--against {reference.name}: it describes another model than the one sampled, which has truncation "
+        f'"{fluid.truncation}" at cutoff {fluid.cutoff:g} sigma; what it needs is {needed}'
+    )
+
+
+def _known(reference: Reference, finding: Finding, ideal_heat_capacity: float | None) -> ReferenceValue | None:
+    state = finding.state
+    if reference.covers(state.temperature, state.density):
+        return None
+    ideal = {} if ideal_heat_capacity is None else {"ideal_heat_capacity": ideal_heat_capacity}
+    return reference.value(finding.property, temperature=state.temperature, density=state.density, **ideal)
+
+
+def _independent(verdicts: Sequence[Verdict]) -> list[Verdict]:
+    """Without values that say the same as another one at the same state."""
+    there = {(verdict.finding.state, verdict.finding.property) for verdict in verdicts}
+    return [v for v in verdicts if (v.finding.state, _SAME.get(v.finding.property)) not in there]
+
+
+def _improbable(verdicts: Sequence[Verdict]) -> bool:
+    largest = max(abs(verdict.z) for verdict in verdicts)
+    chances = [_chance_of_squares(verdicts), min(1.0, 2.0 * stats.norm.sf(largest) * len(verdicts))]
+    return min(chances) < 0.5 * _LEVEL
+
+
+def _chance_of_squares(verdicts: Sequence[Verdict]) -> float:
+    """Chance of a larger sum of squares of the deviations, along the directions that the covariance knows."""
+    covariance = covariance_matrix([v.finding.estimate for v in verdicts if v.finding.estimate is not None])
+    covariance = covariance + _reference_covariance(verdicts)
+    errors = np.sqrt(np.diag(covariance))
+    sizes, directions = np.linalg.eigh(covariance / errors[:, None] / errors)
+    clear = sizes > _SMALLEST_EIGENVALUE
+    deviations = np.array([verdict.difference for verdict in verdicts]) / errors
+    squares = (deviations @ directions[:, clear]) ** 2 / sizes[clear]
+    return float(stats.chi2.sf(np.sum(squares), int(np.sum(clear))))
+
+
+def _reference_covariance(verdicts: Sequence[Verdict]) -> Floats:
+    """Fully correlated between the states of one property, independent between properties."""
+    uncertainty = np.array([verdict.known.uncertainty for verdict in verdicts if verdict.known is not None])
+    names = np.array([verdict.finding.property for verdict in verdicts])
+    return np.where(names[:, None] == names, np.multiply.outer(uncertainty, uncertainty), 0.0)
