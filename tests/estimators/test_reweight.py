@@ -83,8 +83,8 @@ def solved_by_pymbar(series: Sequence[Series]) -> tuple[Any, Floats, Floats]:
 def test_values_are_those_of_pymbar_and_so_are_errors_of_independent_samples(independent: list[Series]) -> None:
     """Values to 1e-8; standard errors within 7 %.
 
-    10^4 samples give a variance to about 2 % and the Gamma method's window adds a few; centring the influences over all
-    rungs at once would make the errors a quarter too large.
+    10^4 samples give a variance to about 2 % and the Gamma method's window adds a few; influences at fixed free energies
+    miss by more.
     """
     pooled = pool(independent)
     solver, sampled, energy = solved_by_pymbar(independent)
@@ -101,7 +101,10 @@ def test_values_are_those_of_pymbar_and_so_are_errors_of_independent_samples(ind
 
 
 def test_influences_are_those_of_the_estimating_equations(independent: list[Series]) -> None:
-    """Written out in full matrices; single precision of the claims leaves 1e-6. Sums over a rung vanish."""
+    """Written out in full matrices; single precision of the claims leaves 1e-6.
+
+    Sums over each rung vanish: centred over all samples at once, they would carry the differences between rungs.
+    """
     temperature = 1.5
     beta = 1.0 / np.array([1.0, 1.3, 1.7, 2.2])
     rungs = [0, 1, 1, 2, 3]
