@@ -83,8 +83,8 @@ def solved_by_pymbar(series: Sequence[Series]) -> tuple[Any, Floats, Floats]:
 def test_values_are_those_of_pymbar_and_so_are_errors_of_independent_samples(independent: list[Series]) -> None:
     """Values to 1e-8; standard errors within 7 %.
 
-    10^4 samples give a variance to about 2 % and the Gamma method's window adds a few; influences at fixed free energies
-    miss by more.
+    10^4 samples give a variance to about 2 % and the Gamma method's window adds a few; influences at fixed free
+    energies miss by more.
     """
     pooled = pool(independent)
     solver, sampled, energy = solved_by_pymbar(independent)
