@@ -2,10 +2,25 @@
 
 from __future__ import annotations
 
+from importlib import import_module
 from importlib.util import find_spec
 from pathlib import Path
+from typing import TYPE_CHECKING
 
-__all__: list[str] = []
+if TYPE_CHECKING:
+    from canonry.job import compare, estimate, run
+    from canonry.study import load
+
+__all__ = ["compare", "estimate", "load", "run"]
+
+_HOMES = {"compare": "canonry.job", "estimate": "canonry.job", "load": "canonry.study", "run": "canonry.job"}
+
+
+def __getattr__(name: str) -> object:
+    """The public functions, loaded when they are first asked for."""
+    if name not in _HOMES:
+        raise AttributeError(f"module 'canonry' has no attribute {name!r}")
+    return getattr(import_module(_HOMES[name]), name)
 
 
 def _refuse_strangers() -> None:

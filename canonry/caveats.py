@@ -48,8 +48,8 @@ def _cross_checks(findings: Findings, border: Border) -> Iterator[str]:
             if value is not None and _apart(value, again):
                 yield (
                     f"At {border.state(state)} the {name_of(name)} recomputed from g(r), "
-                    f"{_shown(again, name, border)}, is more than four combined standard errors from that of the pair sums, "
-                    f"{_shown(value, name, border)}."
+                    f"{_shown(again, name, border)}, is more than four combined standard errors from that of the "
+                    f"pair sums, {_shown(value, name, border)}."
                 )
 
 

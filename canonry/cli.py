@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import os
 import sys
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
@@ -18,6 +19,10 @@ if TYPE_CHECKING:
 __all__ = ["main"]
 
 Command = TypeVar("Command", bound=Callable[..., Any])
+# Vectors here are short: threads of the linear algebra library would only wait for each other.
+for _library in ("OPENBLAS", "MKL", "OMP"):
+    os.environ.setdefault(f"{_library}_NUM_THREADS", "1")
+
 _EXITS = {"agrees": 0, "disagrees": 3, "undecided": 4}
 
 
@@ -71,10 +76,10 @@ def main() -> None:
     """Heat capacity and pressure curves of a model fluid from canonical sampling, with error bars that hold."""
 
 
-@main.command()
+@main.command("new")
 @_path("file")
 @click.option("--fluid", help="A fluid with published parameters, such as argon.")
-def new(file: Path, fluid: str | None) -> None:
+def _new(file: Path, fluid: str | None) -> None:
     """Write a commented study file to start from."""
     from canonry.errors import UserError
     from canonry.starter import starter_text
@@ -88,11 +93,11 @@ def new(file: Path, fluid: str | None) -> None:
     click.echo(f"{file} is written. Next: canonry check {file}")
 
 
-@main.command()
+@main.command("check")
 @_path("study")
 @_workers
 @_json
-def check(study: Path, workers: int | None, as_json: bool) -> None:
+def _check(study: Path, workers: int | None, as_json: bool) -> None:
     """Validate a study and show its plan: cost, overlaps, warnings. Samples nothing."""
     from dataclasses import asdict
 
@@ -107,75 +112,73 @@ def check(study: Path, workers: int | None, as_json: bool) -> None:
     click.echo(json.dumps(asdict(planned), indent=1) if as_json else plan_text(found, planned, Border.of(found)))
 
 
-@main.command()
+@main.command("run")
 @_path("study")
 @_into
 @_workers
 @_units
-def run(study: Path, into: Path | None, workers: int | None, units: Any) -> None:
+def _run(study: Path, into: Path | None, workers: int | None, units: Any) -> None:
     """Sample, estimate, compare and report in one go; again: resume, extend, or say that all is there."""
     from canonry.border import Border
     from canonry.directory import locate
-    from canonry.job import is_finished
+    from canonry.job import is_finished, report
 
     found, directory = locate(study, into)
     border = Border.of(found, units)
     if is_finished(found, directory, units):
         click.echo(f"{directory} is finished: nothing is missing.\n")
     else:
-        _sample(found, directory, workers, border)
-        from canonry.job import report
-
+        _fill(found, directory, workers, border)
         with _working() as watch:
             report(directory, units=units, watch=watch)
     _close(directory)
 
 
-@main.command()
+@main.command("sample")
 @_path("study")
 @_into
 @_workers
-def sample(study: Path, into: Path | None, workers: int | None) -> None:
+def _sample(study: Path, into: Path | None, workers: int | None) -> None:
     """Sample what a study lacks, without estimating anything."""
     from canonry.border import Border
     from canonry.directory import locate
 
     found, directory = locate(study, into)
-    _sample(found, directory, workers, Border.of(found))
+    _fill(found, directory, workers, Border.of(found))
     click.echo(f"{directory} holds all samples. Next: canonry run {directory}")
 
 
-@main.command()
+@main.command("estimate")
 @_path("study")
 @_into
 @_units
-def estimate(study: Path, into: Path | None, units: Any) -> None:
+def _estimate(study: Path, into: Path | None, units: Any) -> None:
     """Write the tables from what has been sampled so far."""
-    from canonry import job
     from canonry.directory import locate
+    from canonry.job import estimate
 
     _, directory = locate(study, into)
     with _working() as watch:
-        job.estimate(directory, units=units, watch=watch)
+        estimate(directory, units=units, watch=watch)
     _close(directory)
 
 
-@main.command()
+@main.command("compare")
 @_path("study")
 @_into
 @click.option("--against", multiple=True, help="Name of a reference, see `canonry reference`; may be repeated.")
 @_units
 @_json
-def compare(study: Path, into: Path | None, against: tuple[str, ...], units: Any, as_json: bool) -> None:
+def _compare(study: Path, into: Path | None, against: tuple[str, ...], units: Any, as_json: bool) -> None:
     """Hold the estimates against references; exit code 0 agrees, 3 disagrees, 4 undecided. Writes nothing."""
-    from canonry import job
     from canonry.border import Border
     from canonry.directory import locate, stored
+    from canonry.job import compare
     from canonry.terminal import verdict_text
 
     _, directory = locate(study, into)
     with _working() as watch:
-        table = job.compare(directory, against=against or None, units=units, watch=watch)
+        table = compare(directory, against=against or None, units=units, watch=watch)
     if as_json:
         click.echo(table.to_json(orient="records", indent=1))
     else:
@@ -184,52 +187,50 @@ def compare(study: Path, into: Path | None, against: tuple[str, ...], units: Any
     sys.exit(max((_EXITS[outcome] for outcome in table["outcome"][table["temperature"].isna()]), key=[0, 4, 3].index))
 
 
-@main.command()
+@main.command("report")
 @_path("study")
 @_into
 @_units
-def report(study: Path, into: Path | None, units: Any) -> None:
+def _report(study: Path, into: Path | None, units: Any) -> None:
     """Write tables and report.html from what has been sampled so far."""
-    from canonry import job
     from canonry.directory import locate
+    from canonry.job import report
 
     _, directory = locate(study, into)
     with _working() as watch:
-        job.report(directory, units=units, watch=watch)
+        report(directory, units=units, watch=watch)
     click.echo(f"{directory / 'report.html'} is written.")
 
 
-@main.command()
+@main.command("reference")
 @click.argument("name", required=False)
 @click.option("-T", "--temperature", "temperatures", type=float, multiple=True, help="epsilon/k_B; may be repeated.")
 @click.option("--density", "densities", type=float, multiple=True, help="sigma^-3; may be repeated.")
 @_json
-def reference(name: str | None, temperatures: tuple[float, ...], densities: tuple[float, ...], as_json: bool) -> None:
+def _reference(name: str | None, temperatures: tuple[float, ...], densities: tuple[float, ...], as_json: bool) -> None:
     """Show which references exist, or the values of one at given states, in reduced units."""
-    from canonry import known
+    from canonry.known import as_text, described, names, values, values_text
 
     if name is None:
         if temperatures or densities:
             raise click.UsageError("values at a state need the NAME of a reference")
-        names = known.names()
-        records = [known.described(each) for each in names]
-        click.echo(json.dumps(records, indent=1) if as_json else "\n\n".join(map(known.as_text, records)))
+        records = [described(each) for each in names()]
+        click.echo(json.dumps(records, indent=1) if as_json else "\n\n".join(map(as_text, records)))
     elif not (temperatures or densities):
-        record = known.described(name)
-        click.echo(json.dumps(record, indent=1) if as_json else known.as_text(record))
+        record = described(name)
+        click.echo(json.dumps(record, indent=1) if as_json else as_text(record))
     elif not (temperatures and densities):
         raise click.UsageError("values at a state need both -T and --density")
     else:
-        rows = known.values(name, temperatures=temperatures, densities=densities)
-        click.echo(json.dumps(rows, indent=1) if as_json else known.values_text(rows))
+        rows = values(name, temperatures=temperatures, densities=densities)
+        click.echo(json.dumps(rows, indent=1) if as_json else values_text(rows))
 
 
-def _sample(study: Study, directory: Path, workers: int | None, border: Border) -> None:
+def _fill(study: Study, directory: Path, workers: int | None, border: Border) -> None:
     from canonry.directory import claim
     from canonry.plan import plan
     from canonry.progress import display
-    from canonry.sampling import outstanding
-    from canonry.sampling import sample as fill
+    from canonry.sampling import outstanding, sample
     from canonry.terminal import plan_text
 
     claim(study, directory)
@@ -245,7 +246,7 @@ def _sample(study: Study, directory: Path, workers: int | None, border: Border) 
         share = 100.0 * todo.particle_steps / planned.particle_steps
         click.echo(f"{directory} holds a part already; {share:.0f} % is still to be sampled.", err=True)
     with display(study, todo, border) as watch:
-        fill(study, directory, workers=workers, watch=watch, todo=todo)
+        sample(study, directory, workers=workers, watch=watch, todo=todo)
 
 
 def _tell_if_compiling() -> None:

@@ -14,7 +14,7 @@ from pathlib import Path
 from canonry.directory import write
 from canonry.study import Study
 
-__all__ = ["SESSIONS", "book", "provenance"]
+__all__ = ["SESSIONS", "book", "duration", "provenance"]
 
 SESSIONS = "sessions.csv"
 _COLUMNS = ("started", "seconds", "particle_steps", "canonry", "machine")
