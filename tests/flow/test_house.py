@@ -120,7 +120,13 @@ def test_nothing_is_in_the_way_elsewhere(tmp_path: Path) -> None:
     assert result.stdout.strip() == str(ROOT / "canonry" / "__init__.py")
 
 
+def test_the_command_line_loads_no_heavy_library(tmp_path: Path) -> None:
+    heavy = {"h5py", "numba", "numpy", "pandas", "pint", "pymbar", "rich", "scipy"}
+    result = python(f"import canonry.cli; print({heavy!r} & set(sys.modules))", directory=tmp_path)
+    assert result.stdout.strip() == "set()", result.stderr
+
+
 def test_reading_a_reduced_study_loads_no_heavy_library(tmp_path: Path) -> None:
-    heavy = {"h5py", "matplotlib", "numba", "pandas", "pint", "pymbar", "scipy.optimize"}
+    heavy = {"h5py", "numba", "pandas", "pint", "pymbar", "scipy.optimize"}
     result = python(f"import canonry.study; print({heavy!r} & set(sys.modules))", directory=tmp_path)
     assert result.stdout.strip() == "set()", result.stderr
