@@ -122,7 +122,7 @@ def test_effective_samples_against_arviz(generator):
 def test_covariances_of_short_correlated_series_are_unbiased(lengths):
     """AR(1) of tau 8 over 400 samples: means removed cost 2 tau / N = 4 %; 2500 series tell it from zero."""
     generator = np.random.default_rng(12)
-    tau, n_series, slope = 8.0, 2500, 0.6
+    tau, n_series, slope = 8.0, 2500, -0.6
     own, shared, biased = np.empty(n_series), np.empty(n_series), np.empty(n_series)
     for index in range(n_series):
         first = {(1.0, 0.8, 100, r): autoregressive(generator, n, tau) for r, n in enumerate(lengths)}
