@@ -10,6 +10,8 @@ from canonry.border import Border
 from canonry.findings import Findings
 from canonry.notation import name_of
 from canonry.numbers import with_error
+from canonry.risks import risks
+from canonry.study import Study
 from estimators.estimate import Estimate
 from sampler.fluid import State
 
@@ -19,14 +21,25 @@ _CROSS_CHECK = 4.0  # combined standard errors between a value from g(r) and the
 _UNSETTLED = 0.45  # share of a series cut off from which on even half of it may not have been enough
 
 
-def caveats(findings: Findings, border: Border) -> list[str]:
+def caveats(study: Study, findings: Findings, border: Border) -> list[str]:
     """The sentences, in the units of the border."""
-    return [*_unfinished(findings, border), *_unsettled(findings, border), *_cross_checks(findings, border)]
+    return [
+        *_unfinished(findings, border),
+        *risks(study, border),
+        *_measured_temperatures(findings),
+        *_unsettled(findings, border),
+        *_cross_checks(findings, border),
+    ]
 
 
 def _unfinished(findings: Findings, border: Border) -> Iterator[str]:
     if findings.unfinished:
         yield f"Not all samples asked for are there yet: {_listed(findings.unfinished, border)}."
+
+
+def _measured_temperatures(findings: Findings) -> Iterator[str]:
+    if any(finding.temperature is not None for finding in findings.properties):
+        yield "No bath acts while samples are taken: temperatures are those of the mean kinetic energy, not those set."
 
 
 def _unsettled(findings: Findings, border: Border) -> Iterator[str]:

@@ -14,6 +14,7 @@ import click
 
 if TYPE_CHECKING:
     from canonry.border import Border
+    from canonry.results import Results
     from canonry.study import Study
 
 __all__ = ["main"]
@@ -130,7 +131,8 @@ def _run(study: Path, into: Path | None, workers: int | None, units: Any) -> Non
     else:
         _fill(found, directory, workers, border)
         with _working() as watch:
-            report(directory, units=units, watch=watch)
+            results = report(directory, units=units, watch=watch)
+        _tell_caveats(results)
     _close(directory)
 
 
@@ -159,7 +161,8 @@ def _estimate(study: Path, into: Path | None, units: Any) -> None:
 
     _, directory = locate(study, into)
     with _working() as watch:
-        estimate(directory, units=units, watch=watch)
+        results = estimate(directory, units=units, watch=watch)
+    _tell_caveats(results)
     _close(directory)
 
 
@@ -266,6 +269,11 @@ def _working() -> Iterator[Any]:
 
     with Console(stderr=True).status("reading the samples") as status:
         yield status.update
+
+
+def _tell_caveats(results: Results) -> None:
+    for caveat in results.caveats:
+        click.echo(f"Caveat: {caveat}", err=True)
 
 
 def _close(directory: Path) -> None:

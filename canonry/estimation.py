@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+import operator
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass, replace
+from functools import cached_property, reduce
 from pathlib import Path
 
 import numpy as np
@@ -13,7 +15,7 @@ from canonry.findings import Curve, Cut, Findings
 from canonry.isochore import Isochore, assemble
 from canonry.sampling import recorded
 from canonry.study import Study
-from estimators.canonical import rung_properties
+from estimators.canonical import kinetic_temperature, rung_properties
 from estimators.estimate import Estimate, mean
 from estimators.settle import settled_start
 from estimators.structure import Structure, pair_structure
@@ -28,23 +30,46 @@ _POINTS = 400  # of a ledger curve, at most
 
 @dataclass(frozen=True, eq=False)
 class _Rung:
-    """Samples of one rung after the cut, without frames, and what they say alone."""
+    """Samples of one rung after the cut and before, without frames, and what they say alone."""
 
     series: list[Series]
     own: dict[str, Estimate]
     structure: Structure | None
-    cuts: list[Cut]
-    ledgers: list[Curve]
+    before: list[Series]
 
-    @property
+    @cached_property
+    def temperature(self) -> Estimate | None:
+        """Measured, where no bath acts."""
+        if self.series[0].bath:
+            return None
+        return _mean([kinetic_temperature([each]) for each in self.series], self.series)
+
+    @cached_property
     def state(self) -> State:
-        return self.series[0].state
+        """The state sampled: that asked for, but at the temperature measured where no bath acts."""
+        state = self.series[0].state
+        return state if self.temperature is None else replace(state, temperature=self.temperature.value)
 
     @property
     def histogram(self) -> Curve:
         energies = np.concatenate([each.energy for each in self.series]) / self.state.particles
         density, edges = np.histogram(energies, bins=_BINS, density=True)
         return Curve(self.state, None, 0.5 * (edges[1:] + edges[:-1]), density)
+
+    @property
+    def cuts(self) -> Iterator[Cut]:
+        for before, after in zip(self.before, self.series, strict=True):
+            state = before.state
+            chain = (state.temperature, state.density, state.particles, before.repeat)
+            effective = mean({chain: after.energy}).effective_samples
+            yield Cut(self.state, before.repeat, len(before) - len(after), len(before), effective)
+
+    @property
+    def ledgers(self) -> Iterator[Curve]:
+        for each in self.before:
+            every = -(-len(each) // _POINTS)
+            conserved = (each.kinetic + each.sampled_energy + each.ledger) / self.state.particles
+            yield Curve(self.state, each.repeat, each.times[::every], (conserved - conserved[0])[::every])
 
 
 def findings(study: Study, directory: Path, *, watch: Callable[[str], None] | None = None) -> Findings:
@@ -85,22 +110,42 @@ def _densities(rungs: list[_Rung]) -> list[float]:
 
 
 def _isochore(study: Study, rungs: list[_Rung]) -> Isochore:
-    own = {rung.state: rung.own for rung in rungs}
+    rungs = sorted(rungs, key=lambda rung: rung.state)
     series = [each for rung in rungs for each in rung.series]
-    return assemble(own, series, ideal_heat_capacity=study.ideal_heat_capacity)
+    temperatures = {rung.state: rung.temperature for rung in rungs if rung.temperature is not None}
+    return assemble(
+        {rung.state: rung.own for rung in rungs},
+        series,
+        temperatures=temperatures,
+        ideal_heat_capacity=study.ideal_heat_capacity,
+    )
 
 
 def _rung(series: list[Series]) -> _Rung:
     settled = [_settled(each) for each in series]
     structure = pair_structure(settled)
-    light = [replace(each, frames=each.frames[:0]) for each in settled]
+    light = [_light(each) for each in settled]
     return _Rung(
         series=light,
-        own=rung_properties(light, contact=structure.contact if structure else None),
+        own=_own(light, structure.contact if structure else None),
         structure=structure,
-        cuts=[_cut(before, after) for before, after in zip(series, light, strict=True)],
-        ledgers=[_ledger(each) for each in series],
+        before=[_light(each) for each in series],
     )
+
+
+def _own(series: list[Series], contact: Estimate | None) -> dict[str, Estimate]:
+    """Of one rung alone. Repeats without a bath differ in their energy: each is estimated by itself, then averaged."""
+    if series[0].bath:
+        return rung_properties(series, contact=contact)
+    each = [rung_properties([one], contact=contact) for one in series]
+    return {name: _mean([properties[name] for properties in each], series) for name in each[0]}
+
+
+def _mean(estimates: list[Estimate], series: list[Series]) -> Estimate:
+    """Mean over repeats, each by its number of samples."""
+    samples = sum(map(len, series))
+    shares = [estimate * (len(one) / samples) for estimate, one in zip(estimates, series, strict=True)]
+    return reduce(operator.add, shares)
 
 
 def _settled(series: Series) -> Series:
@@ -110,14 +155,6 @@ def _settled(series: Series) -> Series:
     return after if len(after) else series
 
 
-def _cut(before: Series, after: Series) -> Cut:
-    state = before.state
-    chain = (state.temperature, state.density, state.particles, before.repeat)
-    effective = mean({chain: after.energy}).effective_samples
-    return Cut(state, before.repeat, len(before) - len(after), len(before), effective)
-
-
-def _ledger(series: Series) -> Curve:
-    every = -(-len(series) // _POINTS)
-    conserved = (series.kinetic + series.sampled_energy + series.ledger) / series.state.particles
-    return Curve(series.state, series.repeat, series.times[::every], (conserved - conserved[0])[::every])
+def _light(series: Series) -> Series:
+    """Without its frames, which take most of the room."""
+    return replace(series, frames=series.frames[:0].copy())

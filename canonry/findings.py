@@ -19,7 +19,11 @@ Floats = npt.NDArray[np.float64]
 
 @dataclass(frozen=True, eq=False)
 class Finding:
-    """One property at one state by one method; `estimate` is None where it was refused."""
+    """One property at one state by one method.
+
+    estimate : None where it was refused
+    temperature : measured, where no bath acts; the state's is then its value
+    """
 
     state: State
     property: str
@@ -29,6 +33,7 @@ class Finding:
     trust: str
     reason: str
     headline: bool
+    temperature: Estimate | None = None
 
 
 @dataclass(frozen=True)

@@ -29,10 +29,12 @@ class Isochore:
     """States by rising temperature with what each says alone, and all of them pooled.
 
     pooled : None where there is nothing to pool: a single rung, or no bath
+    temperatures : measured, where no bath acts
     """
 
     own: Mapping[State, Properties]
     pooled: Pooled | None
+    temperatures: Mapping[State, Estimate]
     ideal_heat_capacity: float | None
 
     def overlaps(self) -> Iterator[Overlap]:
@@ -49,7 +51,8 @@ class Isochore:
             pooled = None if self.pooled is None else self._at_rung(self.pooled, index, state)
             others = {} if pooled is None else self._completed(pooled.properties)
             for name, own in self._completed(properties).items():
-                yield from _both(state, name, own, others.get(name), pooled)
+                for finding in _both(state, name, own, others.get(name), pooled):
+                    yield replace(finding, temperature=self.temperatures.get(state))
 
     def curve(self) -> Iterator[Finding]:
         """Reweighted values from the coldest rung to the warmest; refused ones carry the reason."""
@@ -79,16 +82,20 @@ class Isochore:
 
 
 def assemble(
-    own: Mapping[State, Properties], series: Sequence[Series], *, ideal_heat_capacity: float | None
+    own: Mapping[State, Properties],
+    series: Sequence[Series],
+    *,
+    temperatures: Mapping[State, Estimate],
+    ideal_heat_capacity: float | None,
 ) -> Isochore:
     """The rungs of one density.
 
-    own : what each rung says alone, by rising temperature
+    own : what each rung says alone, by rising temperature; temperatures : measured, where no bath acts
     series : all repeats of these rungs, already cut
     Raises NotSolved if rungs overlap and yet cannot be pooled.
     """
     pooled = pool(series) if len(own) > 1 and series[0].bath else None
-    return Isochore(own, pooled, ideal_heat_capacity)
+    return Isochore(own, pooled, temperatures, ideal_heat_capacity)
 
 
 def _both(

@@ -15,6 +15,7 @@ import numpy as np
 import numpy.typing as npt
 
 from canonry.border import Border
+from canonry.risks import guide, risks
 from canonry.study import Study
 
 if TYPE_CHECKING:
@@ -31,8 +32,6 @@ _MOST_TRIALS = 3
 _SPREAD = 8.0  # standard deviations
 _FINE = 24  # points a standard deviation
 _LEAST_OVERLAP = 0.03  # below it too few samples connect two rungs for reweighting between them
-_LIQUID = 0.5  # sigma^-3
-_CUTOFFS = (5.0, 3.0)  # sigma, below and above that density
 
 
 @dataclass(frozen=True)
@@ -78,15 +77,15 @@ def plan(study: Study, *, workers: int | None = None, border: Border | None = No
     Raises BadRequest or DivergedRun where a trial run shows that the study cannot be sampled as asked.
     """
     workers = min(workers or os.cpu_count() or 1, len(study.states) * study.sampling.repeats)
-    guide = _guide(study.fluid)
-    overlaps = {state: shared for states in study.isochores.values() for state, shared in _overlaps(states, guide)}
+    spoken = guide(study.fluid)
+    overlaps = {state: shared for states in study.isochores.values() for state, shared in _overlaps(states, spoken)}
     steps = study.sampling.settling + study.sampling.steps
     rungs = tuple(
         Rung(state, steps, steps * state.particles * study.sampling.repeats, overlaps[state]) for state in study.states
     )
     border = border or Border.of(study)
-    warnings = [*_phases(study.states, guide, border), *_cutoffs(study, border), *_gaps(rungs, border)]
-    return Plan(rungs, study.sampling.repeats, workers, _seconds(study, steps, workers), guide.name, tuple(warnings))
+    warnings = [*risks(study, border), *_gaps(rungs, border)]
+    return Plan(rungs, study.sampling.repeats, workers, _seconds(study, steps, workers), spoken.name, tuple(warnings))
 
 
 def predicted_overlap(
@@ -108,21 +107,13 @@ def predicted_overlap(
     return list(map(float, shared * (grid[1] - grid[0]) / np.sqrt(2.0 * np.pi)))
 
 
-def _guide(fluid: Fluid) -> Reference:
-    """The reference for this model, or the one for the full potential as the nearest."""
-    from reference import find, names
-
-    references = [find(name) for name in names()]
-    return next((each for each in references if each.same_model(fluid.truncation, fluid.cutoff)), references[0])
-
-
-def _overlaps(states: Sequence[State], guide: Reference) -> Iterator[tuple[State, float | None]]:
+def _overlaps(states: Sequence[State], reference: Reference) -> Iterator[tuple[State, float | None]]:
     """Each state of one density with its overlap with the next, where the reference covers both."""
-    known = [state for state in states if not guide.covers(state.temperature, state.density)]
+    known = [state for state in states if not reference.covers(state.temperature, state.density)]
     found: dict[State, float] = {}
     if len(known) > 1:
         values = [
-            [guide.value(name, temperature=s.temperature, density=s.density).value for s in known]
+            [reference.value(name, temperature=s.temperature, density=s.density).value for s in known]
             for name in ("residual_energy", "residual_heat_capacity")
         ]
         temperatures = np.array([state.temperature for state in known])
@@ -132,42 +123,6 @@ def _overlaps(states: Sequence[State], guide: Reference) -> Iterator[tuple[State
         found = dict(zip(known, shared, strict=False))
     for state, warmer in zip(states, [*states[1:], None], strict=True):
         yield state, found.get(state) if warmer in known else None
-
-
-def _phases(states: Sequence[State], guide: Reference, border: Border) -> Iterator[str]:
-    from reference.errors import OutOfRange
-    from reference.freezing import freezing_density
-
-    for state in states:
-        try:
-            if guide.phase(state.temperature, state.density) == "two-phase":
-                pair = guide.coexistence(state.temperature)
-                yield (
-                    f"{border.state(state)}: liquid and vapour coexist here ({guide.name}: densities "
-                    f"{border.text('density', pair.vapour)} and {border.text('density', pair.liquid)}); the sample "
-                    "will be no bulk phase, and its values depend on its size."
-                )
-            if state.density > freezing_density(state.temperature):
-                yield (
-                    f"{border.state(state)}: the liquid freezes at this temperature from density "
-                    f"{border.text('density', freezing_density(state.temperature))} on (J. Chem. Phys. 113, 8142 "
-                    "(2000)); the sample may be an undercooled liquid or crystallise."
-                )
-        except OutOfRange:
-            continue
-
-
-def _cutoffs(study: Study, border: Border) -> Iterator[str]:
-    if study.fluid.truncation != "corrected":
-        return
-    for density in study.isochores:
-        wanted = _CUTOFFS[density >= _LIQUID]
-        if study.fluid.cutoff < wanted:
-            yield (
-                f"cutoff {border.text('length', study.fluid.cutoff)}: at density {border.text('density', density)} the "
-                "correction beyond the cutoff, which takes the fluid as homogeneous there, wants "
-                f"{border.text('length', wanted)} at least."
-            )
 
 
 def _gaps(rungs: Sequence[Rung], border: Border) -> Iterator[str]:

@@ -119,7 +119,7 @@ class _Tally:
         rate = self._rate
         if rate <= 0.0:
             return "starting"
-        return f"{duration(self.left / rate) or '0 s'} left, {rate / 1e6:.1f} million particle-steps a second"
+        return f"{duration(self.left / rate)} left, {rate / 1e6:.1f} million particle-steps a second"
 
     def line(self) -> str:
         """One line on the whole."""

@@ -63,7 +63,7 @@ def assemble(
                 for cut in findings.cuts
             ),
         ),
-        caveats=tuple(caveats(findings, border)),
+        caveats=tuple(caveats(study, findings, border)),
         provenance=provenance or {},
     )
 

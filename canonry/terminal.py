@@ -57,7 +57,7 @@ def plan_text(study: Study, plan: Plan, border: Border) -> str:
         "",
         aligned([*heads, *body]),
         "",
-        f"Cost: {plan.particle_steps:.3g} particle-steps, about {duration(plan.seconds) or '1 s'} of sampling with "
+        f"Cost: {plan.particle_steps:.3g} particle-steps, about {duration(max(plan.seconds, 1.0))} of sampling with "
         f"{plan.workers} worker{'' if plan.workers == 1 else 's'} on this machine.",
         f"Overlaps are predicted from the heat capacity of {plan.guide}.",
     ]

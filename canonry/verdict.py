@@ -18,6 +18,7 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from functools import cached_property
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -28,6 +29,7 @@ from canonry.errors import UserError
 from canonry.findings import Finding
 from canonry.study import COMPARED, Study, Tolerance
 from estimators.covariance import covariance_matrix
+from estimators.estimate import Estimate
 from sampler.fluid import Fluid
 
 if TYPE_CHECKING:
@@ -41,48 +43,59 @@ Floats = npt.NDArray[np.float64]
 OUTCOMES = ("agrees", "undecided", "disagrees")  # by weight
 _WIDEST = 3.0  # combined standard errors within which a value agrees
 _LEVEL = 0.01
+_STEP = 1e-4  # of the temperature, for a slope
 _SMALLEST_EIGENVALUE = 0.02  # of a correlation matrix known from a finite number of blocks; smaller ones are noise
 _SAME = {"residual_heat_capacity": "heat_capacity", "compressibility_factor": "pressure"}  # the same but for constants
 
 
 @dataclass(frozen=True, eq=False)
 class Verdict:
-    """One headline value held against a reference, in reduced units; `known` is None where the reference is silent."""
+    """One headline value held against a reference, in reduced units.
+
+    known : None where the reference is silent
+    slope : d known/dT where the temperature is a measured one, else 0
+    """
 
     finding: Finding
     known: ReferenceValue | None
     tolerance: Tolerance | None
+    slope: float = 0.0
 
-    @property
-    def difference(self) -> float:
-        """Value less reference value; not a number where either is missing."""
-        if self.known is None or self.finding.estimate is None:
-            return math.nan
-        return self.finding.estimate.value - self.known.value
+    @cached_property
+    def difference(self) -> Estimate | None:
+        """Value less reference value, with the error of a measured temperature but not that of the reference."""
+        estimate, temperature = self.finding.estimate, self.finding.temperature
+        if self.known is None or estimate is None:
+            return None
+        difference = estimate - self.known.value
+        return difference if temperature is None else difference - (temperature - temperature.value) * self.slope
 
     @property
     def error(self) -> float:
-        """Combined standard error of the difference."""
-        if self.known is None or self.finding.estimate is None:
+        """Combined standard error of the difference; not a number where there is none."""
+        if self.known is None or self.difference is None:
             return math.nan
-        return math.hypot(self.finding.estimate.standard_error, self.known.uncertainty)
+        return math.hypot(self.difference.standard_error, self.known.uncertainty)
 
     @property
     def z(self) -> float:
         """Difference in combined standard errors; not a number where there is none."""
-        return self.difference / self.error if 0.0 < self.error < math.inf else math.nan
+        if self.difference is None or not 0.0 < self.error < math.inf:
+            return math.nan
+        return self.difference.value / self.error
 
     @property
     def outcome(self) -> str:
         """'agrees', 'disagrees' or 'undecided'."""
-        if not math.isfinite(self.z) or self.finding.trust == "no" or self.known is None:
+        if self.known is None or not math.isfinite(self.z) or self.finding.trust == "no":
             return "undecided"
         if self.tolerance is None:
             return "agrees" if abs(self.z) <= _WIDEST else "disagrees"
         limit = self.tolerance.value * (abs(self.known.value) if self.tolerance.relative else 1.0)
-        if abs(self.difference) + 2.0 * self.error <= limit:
+        size = abs(self.z) * self.error
+        if size + 2.0 * self.error <= limit:
             return "agrees"
-        return "disagrees" if abs(self.difference) - 2.0 * self.error > limit else "undecided"
+        return "disagrees" if size - 2.0 * self.error > limit else "undecided"
 
 
 @dataclass(frozen=True, eq=False)
@@ -112,10 +125,16 @@ def compare(
     """
     _check_model(reference, study.fluid)
     tolerance = study.compare.tolerance if tolerance is None else tolerance
+    ideal = study.ideal_heat_capacity
     return Comparison(
         reference.name,
         tuple(
-            Verdict(finding, _known(reference, finding, study.ideal_heat_capacity), tolerance.get(finding.property))
+            Verdict(
+                finding,
+                _known(reference, finding, finding.state.temperature, ideal),
+                tolerance.get(finding.property),
+                0.0 if finding.temperature is None else _slope(reference, finding, ideal),
+            )
             for finding in findings
             if finding.headline and finding.property in COMPARED
         ),
@@ -146,12 +165,21 @@ def _check_model(reference: Reference, fluid: Fluid) -> None:
     )
 
 
-def _known(reference: Reference, finding: Finding, ideal_heat_capacity: float | None) -> ReferenceValue | None:
-    state = finding.state
-    if reference.covers(state.temperature, state.density):
+def _known(
+    reference: Reference, finding: Finding, temperature: float, ideal_heat_capacity: float | None
+) -> ReferenceValue | None:
+    density = finding.state.density
+    if reference.covers(temperature, density):
         return None
     ideal = {} if ideal_heat_capacity is None else {"ideal_heat_capacity": ideal_heat_capacity}
-    return reference.value(finding.property, temperature=state.temperature, density=state.density, **ideal)
+    return reference.value(finding.property, temperature=temperature, density=density, **ideal)
+
+
+def _slope(reference: Reference, finding: Finding, ideal_heat_capacity: float | None) -> float:
+    """Change of the reference value with temperature; 0 where the reference is silent."""
+    temperatures = [finding.state.temperature * (1.0 + step) for step in (-_STEP, _STEP)]
+    low, high = (_known(reference, finding, each, ideal_heat_capacity) for each in temperatures)
+    return 0.0 if low is None or high is None else (high.value - low.value) / (temperatures[1] - temperatures[0])
 
 
 def _independent(verdicts: Sequence[Verdict]) -> list[Verdict]:
@@ -168,12 +196,12 @@ def _improbable(verdicts: Sequence[Verdict]) -> bool:
 
 def _chance_of_squares(verdicts: Sequence[Verdict]) -> float:
     """Chance of a larger sum of squares of the deviations, along the directions that the covariance knows."""
-    covariance = covariance_matrix([v.finding.estimate for v in verdicts if v.finding.estimate is not None])
-    covariance = covariance + _reference_covariance(verdicts)
+    differences = [verdict.difference for verdict in verdicts if verdict.difference is not None]
+    covariance = covariance_matrix(differences) + _reference_covariance(verdicts)
     errors = np.sqrt(np.diag(covariance))
     sizes, directions = np.linalg.eigh(covariance / errors[:, None] / errors)
     clear = sizes > _SMALLEST_EIGENVALUE
-    deviations = np.array([verdict.difference for verdict in verdicts]) / errors
+    deviations = np.array([difference.value for difference in differences]) / errors
     squares = (deviations @ directions[:, clear]) ** 2 / sizes[clear]
     return float(stats.chi2.sf(np.sum(squares), int(np.sum(clear))))
 
