@@ -40,9 +40,7 @@ class _Rung:
     @cached_property
     def temperature(self) -> Estimate | None:
         """Measured, where no bath acts."""
-        if self.series[0].bath:
-            return None
-        return _mean([kinetic_temperature([each]) for each in self.series], self.series)
+        return None if self.series[0].bath else _temperature(self.series)
 
     @cached_property
     def state(self) -> State:
@@ -138,7 +136,14 @@ def _own(series: list[Series], contact: Estimate | None) -> dict[str, Estimate]:
     if series[0].bath:
         return rung_properties(series, contact=contact)
     each = [rung_properties([one], contact=contact) for one in series]
-    return {name: _mean([properties[name] for properties in each], series) for name in each[0]}
+    found = {name: _mean([properties[name] for properties in each], series) for name in each[0]}
+    factor = found["pressure"] / (_temperature(series) * series[0].state.density)
+    return found | {"compressibility_factor": replace(factor, method=found["pressure"].method)}
+
+
+def _temperature(series: list[Series]) -> Estimate:
+    """Measured, of repeats without a bath."""
+    return _mean([kinetic_temperature([one]) for one in series], series)
 
 
 def _mean(estimates: list[Estimate], series: list[Series]) -> Estimate:

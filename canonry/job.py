@@ -8,7 +8,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from canonry.border import Border
-from canonry.directory import locate, write
+from canonry.directory import locate, stored, write
 from canonry.sampling import is_complete, sample
 from canonry.study import Study
 from canonry.units import Kind
@@ -52,7 +52,8 @@ def estimate(directory: Place, *, units: Kind | None = None, watch: Tell | None 
     from canonry.tables import assemble, save
     from canonry.verdict import against, compare
 
-    study, directory = locate(Path(directory))
+    directory = Path(directory)
+    study = stored(directory)
     border = Border.of(study, units)
     found = findings(study, directory, watch=watch)
     references = [against(name, study.fluid) for name in study.compare.against]
@@ -93,7 +94,8 @@ def compare(
     from canonry.verdict import against as reference_for
     from canonry.verdict import compare as held_against
 
-    study, directory = locate(Path(directory))
+    directory = Path(directory)
+    study = stored(directory)
     border = Border.of(study, units)
     names = study.compare.against if against is None else tuple(dict.fromkeys(against))
     if not names:

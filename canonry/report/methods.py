@@ -110,6 +110,8 @@ def standing_caveats(results: Results) -> list[str]:
         _TRUNCATION_CAVEATS[setup.truncation].format(cutoff=setup.cutoff),
         f"The system holds {setup.particles} particles in a periodic box. The finite size is not corrected for; it "
         "matters most near a critical point, and inside a two-phase region the sample is not a bulk phase.",
+        "The time step shifts the sampled ensemble by a little that grows with its square and that no error bar holds; "
+        "a run with half the time step shows how much.",
         "The particles move classically. Light atoms at low temperature (hydrogen, helium, neon) show quantum effects "
         "that are absent here.",
     ]
@@ -134,8 +136,8 @@ def _dynamics(results: Results, setup: Setup) -> list[str]:
     ensemble = "The canonical ensemble was sampled" if setup.bath else "Trajectories were run"
     return [
         f"{ensemble} at {_counted(states, 'state')} {_SCHEMES[setup.scheme]} "
-        f"(time step {_quantity(sampling['time_step'], 'σ √(m/ε)')}{friction}; {lengths} in each of "
-        f"{repeats} a state, recorded every {sampling['record_every']} steps).",
+        f"(time step {_quantity(sampling['time_step'], 'σ √(m/ε)')}{friction}; {repeats} a state of {lengths}, recorded "
+        f"every {sampling['record_every']} steps).",
         "The end of equilibration was found from the data.",
     ]
 

@@ -1,0 +1,245 @@
+"""A study directory that is sampled in several goes holds the same as one sampled in a single go."""
+
+import os
+import signal
+import subprocess
+import sys
+import time
+from pathlib import Path
+
+import pytest
+from click.testing import CliRunner
+
+import canonry.plan
+import canonry.progress
+import sampler.protocol
+from canonry.cli import main
+from canonry.directory import claim, locate
+from canonry.errors import UserError
+
+ROOT = Path(__file__).parents[2]
+TABLES = ("properties", "curve", "structure", "verdict", "summary")
+STUDY = """
+[fluid]
+potential = "lennard-jones"
+cutoff = {cutoff}
+[state]
+density = {density}
+temperatures = {temperatures}
+particles = 32
+[sampling]
+seed = {seed}
+repeats = {repeats}
+equilibration = 200
+steps = {steps}
+record_every = 5
+frame_every = 100
+[compare]
+against = ["thol-2016"]
+"""
+DEFAULTS = {"cutoff": 3.0, "density": 0.1, "temperatures": [1.5, 2.0], "seed": 4, "repeats": 1, "steps": 3100}
+
+
+@pytest.fixture(autouse=True)
+def many_segments(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
+    """Segments of 600 steps, so that these small studies have several a repeat; shorter trials; a directory apart."""
+    monkeypatch.setattr(sampler.protocol, "_SEGMENT", 600 * 32)
+    monkeypatch.setattr(canonry.plan, "_TRIAL", 10_000)
+    monkeypatch.chdir(tmp_path)
+
+
+def write(name: str, **changes: object) -> Path:
+    path = Path(f"{name}.toml")
+    path.write_text(STUDY.format(**DEFAULTS | changes))
+    return path
+
+
+def run(*arguments: object, code: int = 0):
+    result = CliRunner().invoke(main, ["run", *map(str, arguments)])
+    assert result.exit_code == code, result.output
+    return result
+
+
+def tables(directory: str | Path) -> dict[str, bytes]:
+    return {name: Path(directory, f"{name}.csv").read_bytes() for name in TABLES}
+
+
+def segments(directory: str | Path) -> dict[Path, bytes]:
+    return {path: path.read_bytes() for path in sorted(Path(directory).rglob("segment-*.h5"))}
+
+
+@pytest.fixture
+def sampled(tmp_path: Path) -> Path:
+    run(write("study"))
+    return Path("study")
+
+
+def test_a_second_run_says_finished_and_touches_nothing(sampled: Path) -> None:
+    before = {path: path.stat().st_mtime_ns for path in sampled.rglob("*")}
+    result = run("study.toml")
+    assert "study is finished" in result.stdout
+    assert "thol-2016" in result.stdout
+    assert {path: path.stat().st_mtime_ns for path in sampled.rglob("*")} == before
+
+
+@pytest.mark.parametrize(
+    "longer",
+    [
+        {"steps": 4500},
+        {"temperatures": [1.5, 1.7, 2.0]},
+        {"repeats": 2},
+        {"density": [0.05, 0.1]},
+        {"steps": 3600, "temperatures": [1.3, 1.5, 2.0], "repeats": 2},
+    ],
+    ids=["steps", "inserted temperature", "repeats", "density", "all"],
+)
+def test_an_extended_study_equals_one_sampled_at_once(sampled: Path, longer: dict[str, object]) -> None:
+    kept = segments(sampled)
+    result = run(write("study", **longer))
+    assert "holds a part already" in result.stderr
+    run(write("direct", **longer), "--workers", 1)
+    assert tables("study") == tables("direct")
+    after = segments(sampled)
+    last = max(path.name for path in kept)
+    assert all(after[path] == content for path, content in kept.items() if path.name != last)
+
+
+def test_a_study_cut_short_equals_one_that_asked_for_less(sampled: Path) -> None:
+    run(write("study", steps=2000, temperatures=[2.0]))
+    run(write("direct", steps=2000, temperatures=[2.0]))
+    assert tables("study") == tables("direct")
+
+
+def test_title_and_references_may_change(sampled: Path) -> None:
+    kept = {path: path.stat().st_mtime_ns for path in segments(sampled)}
+    text = Path("study.toml").read_text().replace('["thol-2016"]', '["kolafa-nezbeda-1994"]')
+    Path("study.toml").write_text(f'title = "Another"\n{text}')
+    result = run("study.toml")
+    assert "Against kolafa-nezbeda-1994" in result.stdout
+    assert "thol-2016" not in result.stdout
+    assert 'title = "Another"' in (sampled / "study.toml").read_text()
+    assert {path: path.stat().st_mtime_ns for path in segments(sampled)} == kept
+
+
+@pytest.mark.parametrize("after", [1, 4, 9])
+def test_an_interrupted_run_goes_on_where_it_stopped(monkeypatch: pytest.MonkeyPatch, after: int) -> None:
+    original = canonry.progress._Tally.add
+    count = 0
+
+    def interrupted(self, progress) -> None:
+        nonlocal count
+        count += 1
+        if count == after:
+            raise KeyboardInterrupt
+        original(self, progress)
+
+    write("study")
+    with monkeypatch.context() as patch:
+        patch.setattr(canonry.progress._Tally, "add", interrupted)
+        result = run("study.toml", code=130)
+    assert "Interrupted" in result.stderr
+    assert not list(Path("study").rglob(".segment*"))
+    kept = segments("study")
+    assert kept
+    run("study")
+    assert segments("study").items() >= kept.items()
+    run(write("direct"))
+    assert tables("study") == tables("direct")
+
+
+def test_the_interrupt_of_a_terminal_leaves_a_directory_that_goes_on() -> None:
+    write("study", steps=60_000)
+    code = (
+        f"import sys; sys.path.insert(1, {str(ROOT)!r}); import sampler.protocol; sampler.protocol._SEGMENT = 19200\n"
+        "from canonry.cli import main; main(['run', 'study.toml'])"
+    )
+    command = [sys.executable, "-c", code]
+    with subprocess.Popen(command, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True) as process:
+        while process.poll() is None and len(segments("study")) < 3:
+            time.sleep(0.02)
+        process.send_signal(signal.SIGINT)
+        stdout, stderr = process.communicate(timeout=60)
+    assert process.returncode == 130, stderr
+    assert "Interrupted" in stderr
+    assert "Traceback" not in stderr
+    assert stdout == ""
+    run(write("study", steps=2400))
+    run(write("direct", steps=2400))
+    assert tables("study") == tables("direct")
+
+
+def test_estimates_of_an_unfinished_study_say_so(sampled: Path) -> None:
+    last = max(segments(sampled), key=lambda path: path.name)
+    last.unlink()
+    result = CliRunner().invoke(main, ["estimate", "study"])
+    assert result.exit_code == 0, result.output
+    assert "Not all samples asked for are there yet" in result.stderr
+    assert "finished" not in run("study.toml").stdout
+
+
+@pytest.mark.parametrize("length", [0, 700, -1])
+def test_a_damaged_segment_is_put_aside_named_and_sampled_again(sampled: Path, length: int) -> None:
+    expected = tables(sampled)
+    victim = sorted(segments(sampled))[2]
+    content = victim.read_bytes()
+    victim.write_bytes(content[:length])
+    result = run("study.toml")
+    assert f"{victim.name}.damaged-1" in result.stderr
+    assert victim.with_name(f"{victim.name}.damaged-1").read_bytes() == content[:length]
+    assert tables(sampled) == expected
+
+
+@pytest.mark.parametrize(
+    ("key", "old", "new", "message"),
+    [
+        ("fluid.cutoff", "cutoff = 3.0", "cutoff = 2.5", "is 3.0 there and 2.5"),
+        ("fluid.truncation", "[state]", 'truncation = "shifted"\n[state]', "is corrected there and shifted"),
+        ("fluid.ideal_heat_capacity", "[state]", "ideal_heat_capacity = 2.5\n[state]", "is 1.5 there and 2.5"),
+        ("state.particles", "particles = 32", "particles = 64", "is 32 there and 64"),
+        ("sampling.seed", "seed = 4", "seed = 5", "is 4 there and 5"),
+        ("sampling.time_step", "[compare]", "time_step = 0.002\n[compare]", "is 0.005 there and 0.002"),
+        ("sampling.friction", "[compare]", "friction = 3.0\n[compare]", "is 1.0 there and 3.0"),
+        ("sampling.scheme", "[compare]", 'scheme = "obabo"\n[compare]', "is baoab there and obabo"),
+        ("sampling.equilibration", "equilibration = 200", "equilibration = 300", "is 200 there and 300"),
+        ("sampling.record_every", "record_every = 5", "record_every = 10", "is 5 there and 10"),
+        ("sampling.frame_every", "frame_every = 100", "frame_every = 200", "is 100 there and 200"),
+    ],
+)
+def test_the_directory_of_another_study_is_refused(sampled: Path, key: str, old: str, new: str, message: str) -> None:
+    everything = {path: path.read_bytes() for path in sampled.rglob("*") if path.is_file()}
+    text = Path("study.toml").read_text()
+    if key == "fluid.truncation":
+        text = text.replace('against = ["thol-2016"]', "")
+    Path("study.toml").write_text(text.replace(old, new))
+    result = run("study.toml", code=2)
+    assert f"Error: study: it belongs to another study, {key} {message}" in result.stderr
+    assert result.stdout == ""
+    assert {path: path.read_bytes() for path in sampled.rglob("*") if path.is_file()} == everything
+
+
+def test_a_directory_without_samples_may_change_its_study() -> None:
+    study, directory = locate(write("study"))
+    claim(study, directory)
+    other, _ = locate(write("study", seed=5))
+    claim(other, directory)
+    assert "seed = 5" in (directory / "study.toml").read_text()
+
+
+def test_a_directory_with_other_things_is_left_alone() -> None:
+    Path("study").mkdir()
+    Path("study", "properties.csv").write_text("mine")
+    study, directory = locate(write("study"))
+    with pytest.raises(UserError, match=r"it holds properties\.csv but no study\.toml"):
+        claim(study, directory)
+    assert os.listdir("study") == ["properties.csv"]
+
+
+def test_every_stretch_of_sampling_is_booked(sampled: Path) -> None:
+    run(write("study", steps=3600))
+    sessions = (sampled / "sessions.csv").read_text().splitlines()
+    assert sessions[0] == "started,seconds,particle_steps,canonry,machine"
+    steps = [int(line.split(",")[2]) for line in sessions[1:]]
+    assert steps == [
+        2 * 32 * 3300,
+        2 * 32 * 600,
+    ]  # 200 + 3100 steps of two rungs; then the last 100 of each anew as 600
