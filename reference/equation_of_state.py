@@ -10,7 +10,7 @@ from typing import Literal
 import numpy as np
 import numpy.typing as npt
 
-from reference import coexistence as equilibrium
+import reference.coexistence as equilibrium
 from reference.errors import AboveCritical, OutOfRange, UnknownProperty
 from reference.helmholtz import Array, Equation
 from reference.properties import DIRECT, PROPERTIES, Bulk, propagate

@@ -19,7 +19,7 @@ from numba.extending import intrinsic
 
 from sampler.compiled import kernel, piece
 
-__all__ = ["START", "Key", "chain_key", "normals", "scramble"]
+__all__ = ["START", "Key", "chain_key", "draw", "normals", "scramble"]
 
 Key = tuple[np.uint64, np.uint64]
 START = np.uint64(2**63)  # a step number that no trajectory reaches: draws made before the first step

@@ -5,7 +5,7 @@ from dataclasses import replace
 from reference.equation_of_state import Reference
 from reference.equations import thol_2016
 from reference.helmholtz import HelmholtzEquation
-from reference.source import DescribedFluid, Source
+from reference.source import Accuracy, DescribedFluid, Source
 
 __all__ = ["REFERENCE"]
 
@@ -46,6 +46,14 @@ _BORROWED = (
     "simulation of the shifted fluid was compared here; there: "
 )
 
+_SAMPLED = Accuracy(
+    0.03,
+    2,
+    0.006,
+    "from the deviation of the equation from our own sampling (500 particles, 300 000 steps of 0.004 at density 0.8): "
+    "-0.016(4) at temperature 1.0 and -0.005(5) at 1.5, doubled",
+)
+
 REFERENCE = Reference(
     name="thol-2015",
     title="Lennard-Jones fluid, truncated and shifted at 2.5 sigma, Thol et al. (2015)",
@@ -63,5 +71,8 @@ REFERENCE = Reference(
     temperature_range=(0.66, 10.0),
     density_maximum=None,
     pressure_maximum=7.0,
-    accuracy={name: replace(item, origin=_BORROWED + item.origin) for name, item in thol_2016.ACCURACY.items()},
+    accuracy={
+        **{name: replace(item, origin=_BORROWED + item.origin) for name, item in thol_2016.ACCURACY.items()},
+        "pressure": _SAMPLED,
+    },
 )

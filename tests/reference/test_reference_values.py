@@ -180,8 +180,12 @@ def test_standard_uncertainty_is_half_the_95_percent_figure_and_says_whose(name:
 
 
 def test_the_shifted_equation_says_that_its_accuracy_is_borrowed() -> None:
-    note = find("thol-2015").value("pressure", temperature=1.0, density=0.8).accuracy_note
-    assert note.startswith("borrowed from the equation of the same authors")
+    values = {
+        name: find("thol-2015").value(name, temperature=1.0, density=0.8) for name in ("bulk_modulus", "pressure")
+    }
+    assert values["bulk_modulus"].accuracy_note.startswith("borrowed from the equation of the same authors")
+    assert values["pressure"].accuracy_note.startswith("from the deviation of the equation from our own sampling")
+    assert values["pressure"].uncertainty == pytest.approx(0.015, rel=1e-12)
 
 
 def test_uncertainty_of_a_derived_property_is_propagated() -> None:

@@ -92,6 +92,19 @@ def test_surface_term_only_where_the_force_jumps():
     )
 
 
+def test_surface_term_is_what_a_steep_but_continuous_force_gives():
+    # X of a homogeneous fluid (g = 1) whose force falls to zero linearly within +-delta of the cutoff, less the part
+    # inside the cutoff. The remainder is of second order: (delta/r_c)^2 and delta w'/w.
+    fluid, delta, density = Fluid(cutoff=2.5, truncation="shifted"), 1e-4, 0.8
+    low, high = 2.5 - delta, 2.5 + delta
+    fall = lambda r: (high - r) / (high - low)  # noqa: E731
+    steep = lambda r: lennard_jones.x(r) * fall(r) - r * lennard_jones.w(r) / (high - low)  # noqa: E731
+    edge, _ = quad(lambda r: float(r**2 * steep(r)), low, high, epsabs=1e-12)
+    inside, _ = quad(lambda r: float(r**2 * lennard_jones.x(r)), low, 2.5, epsabs=1e-14)
+    term = 2 * np.pi * density / 9 * (edge - inside)
+    assert fluid.surface_hypervirial(density) == pytest.approx(term, rel=1e-3)
+
+
 @pytest.mark.parametrize(
     ("make", "words"),
     [
