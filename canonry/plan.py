@@ -27,7 +27,7 @@ __all__ = ["Plan", "Rung", "plan", "predicted_overlap"]
 
 Floats = npt.NDArray[np.float64]
 
-_TRIAL = 800_000  # particle-steps of a trial run: a fraction of a second
+_TRIAL = 2_000_000  # particle-steps of a trial run: about half a second
 _MOST_TRIALS = 3
 _SPREAD = 8.0  # standard deviations
 _FINE = 24  # points a standard deviation

@@ -44,7 +44,9 @@ OUTCOMES = ("agrees", "undecided", "disagrees")  # by weight
 _WIDEST = 3.0  # combined standard errors within which a value agrees
 _LEVEL = 0.01
 _STEP = 1e-4  # of the temperature, for a slope
-_SMALLEST_EIGENVALUE = 0.02  # of a correlation matrix known from a finite number of blocks; smaller ones are noise
+_SMALLEST_EIGENVALUE = 0.02
+"""Of the correlation matrix; smaller ones are noise of its finite number of blocks, or rest on the reference's error
+being the same at all states to the last digit."""
 _SAME = {"residual_heat_capacity": "heat_capacity", "compressibility_factor": "pressure"}  # the same but for constants
 
 

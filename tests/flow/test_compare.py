@@ -181,15 +181,20 @@ def test_many_values_a_little_off_are_seen(tmp_path: Path) -> None:
 
 
 def test_the_error_of_a_reference_is_one_and_the_same_at_all_states(tmp_path: Path) -> None:
-    """All pressures off by twice its uncertainty: one deviation of two, not six."""
-    rng, study = np.random.default_rng(15), asked(tmp_path)
-    error = np.mean([each.estimate.standard_error for each in ladder(rng) if each.property == "pressure"])
-    wide = float(10.0 * error)
-    together = compare(ladder(rng, common=2.0 * wide), Known(uncertainty=wide), study)
-    assert together.outcome == "agrees"
-    assert all(abs(each.z) > 1.5 for each in together.verdicts if each.finding.property == "pressure")
-    found = [replace(each, estimate=each.estimate - 4.0 * wide * (-1) ** k) for k, each in enumerate(ladder(rng))]
-    assert compare(found, Known(uncertainty=wide), study).outcome == "disagrees"  # now up, now down: none of its doing
+    """All pressures off by 2.5 times its uncertainty: one deviation, not six. Now up, now down: none of its doing."""
+    study = asked(tmp_path)
+    found = [each for each in ladder(np.random.default_rng(15)) if each.property == "pressure"]
+    uncertainty = float(3.0 * np.mean([each.estimate.standard_error for each in found]))
+
+    def outcome(*shifts: float) -> str:
+        moved = [
+            replace(each, estimate=each.estimate + shift * uncertainty)
+            for each, shift in zip(found, shifts, strict=True)
+        ]
+        return compare(moved, Known(uncertainty=uncertainty), study).outcome
+
+    assert outcome(2.5, 2.5, 2.5, 2.5, 2.5, 2.5) == "agrees"
+    assert outcome(1.5, -1.5, 1.5, -1.5, 1.5, -1.5) == "disagrees"
 
 
 @pytest.mark.parametrize(

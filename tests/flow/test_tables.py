@@ -7,6 +7,7 @@ import numpy as np
 import pandas as pd
 import pytest
 
+import canonry.estimation
 from canonry.directory import write
 from canonry.findings import Finding
 from canonry.isochore import Isochore
@@ -161,6 +162,15 @@ def test_without_a_bath_temperatures_are_measured(tmp_path: Path) -> None:
         assert rows[temperature, "compressibility_factor"] == pytest.approx(factor, rel=1e-9)
 
 
+def test_repeats_of_different_energy_are_not_one_sample(tmp_path: Path, liquid: Results) -> None:
+    """At constant energy u scatters less than in a bath; two energies taken as one sample would make it scatter more."""
+    results = sampled(tmp_path, scheme="velocity-verlet", repeats=2)
+    free = results.properties[results.properties["property"] == "residual_energy"]
+    bound = liquid.properties[(liquid.properties["property"] == "residual_energy") & ~liquid.properties["headline"]]
+    assert len(free) == len(bound) == 3
+    assert (free["standard_error"].to_numpy() < bound["standard_error"].to_numpy()).all()
+
+
 def test_coordination_counts_what_g_says(liquid: Results) -> None:
     """Of 63 others at density 0.7: g times the volume of each shell."""
     for _, rows in liquid.structure.groupby("temperature"):
@@ -186,9 +196,24 @@ def test_provenance_names_what_made_it(liquid: Results) -> None:
     assert "1 session" in liquid.provenance["wall time of sampling"]
 
 
-def test_cross_check_from_structure_is_a_caveat_where_it_fails(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
-    import canonry.estimation
+@pytest.mark.parametrize("name", ["sampled_energy", "virial"])
+def test_what_has_not_settled_is_cut_off(monkeypatch: pytest.MonkeyPatch, tmp_path: Path, name: str) -> None:
+    """A transient that dies out within 400 of 2000 samples, in the energy or in the virial alone."""
+    sampled(tmp_path, states="points = [[1.6, 0.7]]")
+    honest = canonry.estimation.recorded
 
+    def unsettled(*arguments):
+        (series,) = honest(*arguments)
+        values = getattr(series, name)
+        transient = 10.0 * values.std() * np.exp(-np.arange(len(series)) / 100.0)
+        return [replace(series, **{name: values + transient})]
+
+    monkeypatch.setattr(canonry.estimation, "recorded", unsettled)
+    (cut,) = estimate(tmp_path / "study").equilibration["cut"]
+    assert 250 <= cut <= 1000
+
+
+def test_cross_check_from_structure_is_a_caveat_where_it_fails(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
     assert not any("g(r)" in caveat for caveat in sampled(tmp_path, states="points = [[1.6, 0.7]]").caveats)
     honest = canonry.estimation.pair_structure
 
