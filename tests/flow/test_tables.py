@@ -163,7 +163,7 @@ def test_without_a_bath_temperatures_are_measured(tmp_path: Path) -> None:
 
 
 def test_repeats_of_different_energy_are_not_one_sample(tmp_path: Path, liquid: Results) -> None:
-    """At constant energy u scatters less than in a bath; two energies taken as one sample would make it scatter more."""
+    """At constant energy u scatters less than in a bath; two energies taken as one would make it scatter more."""
     results = sampled(tmp_path, scheme="velocity-verlet", repeats=2)
     free = results.properties[results.properties["property"] == "residual_energy"]
     bound = liquid.properties[(liquid.properties["property"] == "residual_energy") & ~liquid.properties["headline"]]
