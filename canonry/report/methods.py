@@ -136,8 +136,8 @@ def _dynamics(results: Results, setup: Setup) -> list[str]:
     ensemble = "The canonical ensemble was sampled" if setup.bath else "Trajectories were run"
     return [
         f"{ensemble} at {_counted(states, 'state')} {_SCHEMES[setup.scheme]} "
-        f"(time step {_quantity(sampling['time_step'], 'σ √(m/ε)')}{friction}; {repeats} a state of {lengths}, recorded "
-        f"every {sampling['record_every']} steps).",
+        f"(time step {_quantity(sampling['time_step'], 'σ √(m/ε)')}{friction}; {repeats} a state of {lengths}, "
+        f"recorded every {sampling['record_every']} steps).",
         "The end of equilibration was found from the data.",
     ]
 
