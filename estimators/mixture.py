@@ -8,7 +8,7 @@ J. Chem. Phys. 129, 124105 (2008); of two ensembles: C. H. Bennett, J. Comput. P
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -18,7 +18,7 @@ from scipy.special import expit
 
 from estimators.errors import NotSolved
 
-__all__ = ["Mixture", "bennett", "polished", "slices"]
+__all__ = ["Mixture", "bennett", "polished"]
 
 Floats = npt.NDArray[np.float64]
 
@@ -43,20 +43,9 @@ class Mixture:
     response: Floats
     overlap: Floats
 
-    def claims(self, energies: Floats) -> tuple[npt.NDArray[np.float32], Floats]:
-        """Shares p, (K, n), in single precision, and log D, (n,), of samples at the energies (n,)."""
-        shares = np.empty((len(self.beta), len(energies)), dtype=np.float32)
-        log_density = np.empty(len(energies))
-        offsets = np.log(self.counts) + self.free_energies
-        for part in slices(len(energies)):
-            shares[:, part], log_density[part] = _claims(self.beta, offsets, energies[part])
-        return shares, log_density
-
-
-def slices(length: int) -> Iterator[slice]:
-    """Consecutive chunks of a series."""
-    for start in range(0, length, CHUNK):
-        yield slice(start, min(start + CHUNK, length))
+    def claims(self, energies: Floats) -> tuple[Floats, Floats]:
+        """Shares p, (K, n), and log D, (n,), of samples at the energies (n,)."""
+        return _claims(self.beta, np.log(self.counts) + self.free_energies, energies)
 
 
 def _claims(beta: Floats, offsets: Floats, energies: Floats) -> tuple[Floats, Floats]:
@@ -102,8 +91,8 @@ def _claim_sums(beta: Floats, offsets: Floats, energies: Sequence[Floats]) -> tu
     """Sums over all samples of p, (K,), and of p p^T, (K, K)."""
     claimed, products = np.zeros(len(beta)), np.zeros((len(beta), len(beta)))
     for series in energies:
-        for part in slices(len(series)):
-            shares, _ = _claims(beta, offsets, series[part])
+        for start in range(0, len(series), CHUNK):
+            shares, _ = _claims(beta, offsets, series[start : start + CHUNK])
             claimed += np.sum(shares, axis=1)
             products += shares @ shares.T
     return claimed, products

@@ -23,13 +23,16 @@ from scipy.sparse.csgraph import connected_components
 
 from estimators.errors import BadSeries
 from estimators.estimate import FEWEST_SAMPLES, Chain, Estimate, mean
-from estimators.group import Group, Run, Rung
+from estimators.group import Group, Rung
 from estimators.mixture import bennett, polished
+from estimators.moments import Run, block_starts
 from sampler.series import Series
 
 __all__ = ["Pooled", "Reweighted", "pool"]
 
 Floats = npt.NDArray[np.float64]
+
+TOGETHER = 64  # temperatures: as many as fit into memory with their block sums
 
 
 @dataclass(frozen=True)
@@ -83,14 +86,30 @@ class Pooled:
 
     def at(self, temperature: float) -> Reweighted:
         """Properties at a temperature (epsilon/k_B), refused where fewer than 50 effective samples support them."""
-        if not (math.isfinite(temperature) and temperature > 0.0):
-            return Reweighted(temperature, 0.0, {}, f"a temperature must be a positive number, found {temperature!r}")
-        candidates = [(group, group.weights(temperature)) for group in self._groups]
-        group, weights = max(candidates, key=lambda candidate: candidate[1].effective_samples)
-        samples = weights.effective_samples
-        if samples < FEWEST_SAMPLES:
-            return Reweighted(temperature, samples, {}, self._refusal(temperature, samples))
-        return Reweighted(temperature, samples, group.properties(temperature, weights))
+        return self.curve([temperature])[0]
+
+    def curve(self, temperatures: Sequence[float]) -> list[Reweighted]:
+        """What `at` gives at each temperature, at hardly more cost than at one."""
+        asked = [each for each in temperatures if math.isfinite(each) and each > 0.0]
+        batches = [asked[start : start + TOGETHER] for start in range(0, len(asked), TOGETHER)]
+        found = {each.temperature: each for batch in batches for each in self._together(batch)}
+        reason = "a temperature must be a positive number, found "
+        return [found.get(each) or Reweighted(each, 0.0, {}, f"{reason}{each!r}") for each in temperatures]
+
+    def _together(self, temperatures: Sequence[float]) -> Iterator[Reweighted]:
+        """At each temperature from the group that supports it best."""
+        moments = [group.moments(np.array(temperatures)) for group in self._groups]
+        for index, temperature in enumerate(temperatures):
+            support = [
+                group.effective_samples(temperature, float(each.kish[index]))
+                for group, each in zip(self._groups, moments, strict=True)
+            ]
+            best = int(np.argmax(support))
+            if support[best] < FEWEST_SAMPLES:
+                yield Reweighted(temperature, support[best], {}, self._refusal(temperature, support[best]))
+            else:
+                properties = self._groups[best].properties(temperature, moments[best], index)
+                yield Reweighted(temperature, support[best], properties)
 
     def _refusal(self, temperature: float, samples: float) -> str:
         reason = f"{samples:.0f} effective samples support temperature {temperature:g}, {FEWEST_SAMPLES:.0f} are needed"
@@ -175,12 +194,23 @@ def _solved(rungs: list[Rung]) -> Group:
         _thinned_solution(beta, [rung.thinned for rung in rungs]),
         [energies for rung in rungs for energies in rung.energies],
     )
+    repeats = [(index, series, energies) for index, rung in enumerate(rungs) for series, energies in rung.recorded]
+    centres, pooled = _centres([series for _, series, _ in repeats]), sum(rung.samples for rung in rungs)
     runs = [
-        Run(index, _chain(series), series, energies, *mixture.claims(energies))
-        for index, rung in enumerate(rungs)
-        for series, energies in zip(rung.repeats, rung.energies, strict=True)
+        Run(index, _chain(series), series, energies, centres, block_starts(len(series), pooled))
+        for index, series, energies in repeats
     ]
     return Group(rungs, mixture, runs)
+
+
+def _centres(series: Sequence[Series]) -> tuple[float, float, float]:
+    """Means of U, W and W + X."""
+    samples = sum(map(len, series))
+    energy, virial, hypervirial = (
+        sum(float(np.sum(getattr(each, name))) for each in series) / samples
+        for name in ("energy", "virial", "hypervirial")
+    )
+    return energy, virial, virial + hypervirial
 
 
 def _thinned_solution(beta: Floats, energies: list[Floats]) -> Floats:

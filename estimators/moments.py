@@ -1,0 +1,150 @@
+"""Weighted moments of pooled samples at many temperatures at once, over all samples and over blocks of them.
+
+A sample of energy E weighs exp(-E/T)/D(E) at temperature T. Whatever is averaged there is a combination of a few
+powers of what was recorded, the same ones at every temperature: one pass over the samples, and products of small
+matrices, serve any number of temperatures and properties.
+
+Influences of many samples are kept as sums over blocks. Where blocks are short against the autocorrelation time, the
+Gamma method sees the same decay in other units; where they are long, next to none: the error bar is the same.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from estimators.estimate import Chain
+from estimators.mixture import Mixture
+from sampler.series import Series
+
+__all__ = ["Moments", "Run", "block_starts", "claimed", "moments"]
+
+Floats = npt.NDArray[np.float64]
+Indices = npt.NDArray[np.int64]
+
+POWERS = 8  # 1, U, E, W, W + X, U E, W E, W W
+BLOCKS = 2**14  # over all chains: an error bar's own error, about 1/sqrt(2 BLOCKS), is no concern then
+FEWEST_BLOCKS = 128  # of a chain, however many there are
+CHUNK = 2**12  # samples worked on at once: the matrices of a chunk stay in cache
+SCANNED = 1024  # energies at which the largest weight is looked for
+
+
+@dataclass(frozen=True)
+class Run:
+    """One repeat inside a group.
+
+    rung : index of its rung in the group
+    energies : (n,), E: dynamical, less one constant for the whole isochore
+    centres : U, W and W + X less these constants enter the powers, so that no digits are lost
+    starts : (B,), first samples of its blocks
+    """
+
+    rung: int
+    chain: Chain
+    series: Series
+    energies: Floats
+    centres: tuple[float, float, float]
+    starts: Indices
+
+    @property
+    def lengths(self) -> Indices:
+        """(B,), samples of each block."""
+        return np.diff(self.starts, append=len(self.energies))
+
+    def powers(self, samples: Indices) -> Floats:
+        """(POWERS, n) of some samples."""
+        series = self.series
+        energy, virial = series.energy[samples] - self.centres[0], series.virial[samples]
+        stiffness = virial + series.hypervirial[samples] - self.centres[2]
+        virial = virial - self.centres[1]
+        sampled = self.energies[samples]
+        rows = (energy, sampled, virial, stiffness, energy * sampled, virial * sampled, virial * virial)
+        return np.stack([np.ones(len(samples)), *rows])
+
+    def chunks(self) -> Iterator[tuple[slice, Indices, npt.NDArray[np.bool_]]]:
+        """Some blocks at a time: which, their samples (b, L), and where a block that is shorter than L has ended."""
+        longest = int(np.max(self.lengths))
+        blocks = max(CHUNK // longest, 1)
+        ends = self.starts + self.lengths
+        for first in range(0, len(self.starts), blocks):
+            part = slice(first, first + blocks)
+            samples = self.starts[part, None] + np.arange(longest)
+            ended = samples >= ends[part, None]
+            yield part, np.where(ended, 0, samples), ended
+
+
+def block_starts(samples: int, pooled: int) -> Indices:
+    """First samples of the blocks of a run, (B,), as equal as they can be, where `pooled` samples are in the group."""
+    length = -(-pooled // BLOCKS)
+    blocks = max(samples // length, min(samples, FEWEST_BLOCKS))
+    return np.arange(blocks) * samples // blocks
+
+
+@dataclass(frozen=True)
+class Moments:
+    """At G temperatures, from the runs of a group of K rungs; weights have sum 1 at each temperature.
+
+    means : (G, POWERS)
+    claimed : (G, POWERS, K), sum of w x p_k: what every rung claims of them
+    blocks : of each run (G, POWERS, B)
+    kish : (G,), 1 / sum g w^2, with the inefficiency g of each sample's rung
+    """
+
+    means: Floats
+    claimed: Floats
+    blocks: list[Floats]
+    kish: Floats
+
+
+def moments(mixture: Mixture, runs: Sequence[Run], temperatures: Floats, inefficiencies: Sequence[float]) -> Moments:
+    """All moments at the temperatures (G,).
+
+    inefficiencies : (K,), of the energy at each rung
+    """
+    beta = 1.0 / temperatures
+    tops = _tops(mixture, runs, beta)
+    shape = (len(beta), POWERS)
+    coupled, squares = np.zeros((*shape, len(mixture.beta))), np.zeros(len(beta))
+    blocks = [np.empty((*shape, len(run.starts))) for run in runs]
+    for run, sums in zip(runs, blocks, strict=True):
+        for part, samples, ended in run.chunks():
+            energies = run.energies[samples.ravel()]
+            shares, log_density = mixture.claims(energies)
+            log_density[ended.ravel()] = math.inf
+            weights = np.multiply.outer(-beta, energies)
+            weights -= log_density
+            weights -= tops[:, None]
+            np.exp(weights, out=weights)
+            powers = run.powers(samples.ravel())
+            by_block = weights.reshape(-1, *samples.shape).transpose(1, 0, 2)
+            sums[:, :, part] = (by_block @ powers.reshape(-1, *samples.shape).transpose(1, 2, 0)).transpose(1, 2, 0)
+            shared = powers[:, None, :] * shares
+            coupled += (weights @ shared.reshape(-1, len(energies)).T).reshape(coupled.shape)
+            squares += inefficiencies[run.rung] * np.einsum("gn,gn->g", weights, weights)
+    totals = sum(np.sum(each, axis=2) for each in blocks)
+    scale = 1.0 / totals[:, :1]
+    for each in blocks:
+        each *= scale[:, :, None]
+    return Moments(totals * scale, coupled * scale[:, :, None], blocks, 1.0 / (squares * scale[:, 0] ** 2))
+
+
+def claimed(mixture: Mixture, run: Run) -> Floats:
+    """What every rung claims of each block of a run, (K, B)."""
+    sums = np.empty((len(mixture.beta), len(run.starts)))
+    for part, samples, ended in run.chunks():
+        shares, _ = mixture.claims(run.energies[samples.ravel()])
+        sums[:, part] = np.sum(np.where(ended, 0.0, shares.reshape(-1, *samples.shape)), axis=2)
+    return sums
+
+
+def _tops(mixture: Mixture, runs: Sequence[Run], beta: Floats) -> Floats:
+    """About the largest log weight at each beta, (G,); as a function of the energy it is concave."""
+    low = min(float(np.min(run.energies)) for run in runs)
+    high = max(float(np.max(run.energies)) for run in runs)
+    energies = np.linspace(low, high, SCANNED)
+    _, log_density = mixture.claims(energies)
+    return np.asarray(np.max(-np.multiply.outer(beta, energies) - log_density, axis=1), dtype=float)
