@@ -60,9 +60,9 @@ class Isochore:
             return
         first, properties = next(iter(self.own.items()))
         names = [*self._completed(properties)]
-        for temperature in np.linspace(self.pooled.temperatures[0], self.pooled.temperatures[-1], _GRID):
-            state = replace(first, temperature=float(temperature))
-            at = self.pooled.at(state.temperature)
+        temperatures = np.linspace(self.pooled.temperatures[0], self.pooled.temperatures[-1], _GRID)
+        for at in self.pooled.curve(temperatures.tolist()):
+            state = replace(first, temperature=at.temperature)
             for name, value in self._completed(at.properties).items():
                 yield _reweighted(state, name, value, at.effective_samples, headline=True)
             if at.refused:

@@ -25,7 +25,7 @@ __all__ = ["Group", "Rung"]
 Floats = npt.NDArray[np.float64]
 
 METHOD = "reweighted"
-THINNED = 4096  # samples of a rung that are enough for links and a start
+THINNED = 4096  # samples of a rung that are enough for links
 
 
 @dataclass(frozen=True)
@@ -52,10 +52,13 @@ class Rung:
         return np.concatenate([energies[::stride] for energies in self.energies])
 
     @cached_property
+    def mean_energy(self) -> float:
+        return sum(float(np.sum(energies)) for energies in self.energies) / self.samples
+
+    @cached_property
     def heat_capacity(self) -> float:
         """var(E)/T^2 of the whole system."""
-        mean = sum(float(np.sum(energies)) for energies in self.energies) / self.samples
-        squares = sum(float(np.sum((energies - mean) ** 2)) for energies in self.energies)
+        squares = sum(float(np.sum((energies - self.mean_energy) ** 2)) for energies in self.energies)
         return squares / self.samples / self.temperature**2
 
     def surviving(self, temperature: float) -> float:

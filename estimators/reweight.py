@@ -16,6 +16,7 @@ from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
 from functools import cached_property
+from itertools import pairwise
 
 import numpy as np
 import numpy.typing as npt
@@ -28,10 +29,12 @@ from estimators.mixture import bennett, polished
 from estimators.moments import Run, block_starts
 from sampler.series import Series
 
-__all__ = ["Pooled", "Reweighted", "pool"]
+__all__ = ["Gap", "Pooled", "Reweighted", "pool"]
 
 Floats = npt.NDArray[np.float64]
 
+START = 1024  # samples of a rung that are enough for a start
+FARTHEST = 2.0  # standard deviations of the energy between rungs: 45 % of their samples are then shared
 TOGETHER = 64  # temperatures: as many as fit into memory with their block sums
 
 
@@ -53,15 +56,28 @@ class Reweighted:
 
 
 @dataclass(frozen=True)
+class Gap:
+    """Neighbouring temperatures that no chain of overlapping rungs spans, and the rungs that would close the gap."""
+
+    low: float
+    high: float
+    rungs: tuple[float, ...]
+
+    def __str__(self) -> str:
+        *most, last = (f"{temperature:.4g}" for temperature in self.rungs)
+        listed = f"rungs at {', '.join(most)} and {last}" if most else f"a rung at {last}"
+        return f"the rungs at {self.low:g} and {self.high:g} do not overlap, set {listed} between them"
+
+
+@dataclass(frozen=True)
 class Pooled:
     """All rungs of one isochore, solved; build it with `pool`.
 
     temperatures : (K,), of the rungs, rising
-    gaps : neighbouring temperatures that no chain of overlapping rungs connects
     """
 
     temperatures: list[float]
-    gaps: list[tuple[float, float]]
+    gaps: list[Gap]
     _groups: list[Group]
     _reference_energy: float
 
@@ -113,9 +129,9 @@ class Pooled:
 
     def _refusal(self, temperature: float, samples: float) -> str:
         reason = f"{samples:.0f} effective samples support temperature {temperature:g}, {FEWEST_SAMPLES:.0f} are needed"
-        for low, high in self.gaps:
-            if low < temperature < high:
-                return f"{reason}; the rungs at {low:g} and {high:g} do not overlap, set one between them"
+        for gap in self.gaps:
+            if gap.low < temperature < gap.high:
+                return f"{reason}; {gap}"
         nearest = min(self.temperatures, key=lambda each: abs(each - temperature))
         return f"{reason}; the nearest rung is at {nearest:g}, set one closer or sample it longer"
 
@@ -138,8 +154,7 @@ def pool(series: Sequence[Series]) -> Pooled:
         _solved([rung for rung, own in zip(rungs, labels, strict=True) if own == label]) for label in np.unique(labels)
     ]
     temperatures = [rung.temperature for rung in rungs]
-    gaps = [(temperatures[i], temperatures[i + 1]) for i in np.flatnonzero(np.diff(labels))]
-    return Pooled(temperatures, gaps, groups, reference_energy)
+    return Pooled(temperatures, _gaps(rungs, groups), groups, reference_energy)
 
 
 def _check(series: Sequence[Series]) -> None:
@@ -186,12 +201,35 @@ def _connected(rungs: list[Rung]) -> npt.NDArray[np.int32]:
     return np.asarray(connected_components(links, directed=False)[1], dtype=np.int32)
 
 
+def _gaps(rungs: list[Rung], groups: list[Group]) -> list[Gap]:
+    return [
+        Gap(cold.temperature, hot.temperature, _bridge(cold, hot))
+        for cold, hot in pairwise(rungs)
+        if not any(
+            group.rungs[0].temperature <= cold.temperature and hot.temperature <= group.rungs[-1].temperature
+            for group in groups
+        )
+    ]
+
+
+def _bridge(cold: Rung, hot: Rung) -> tuple[float, ...]:
+    """Temperatures of rungs, even in ln T, none further from the next than two standard deviations of the energy.
+
+    At constant heat capacity C = dE/dT a rung's energy scatters by sqrt(C) T, so that sqrt(C) ln(T_hot/T_cold)
+    deviations part the two.
+    """
+    first, last = cold.temperature, hot.temperature
+    heat_capacity = max((hot.mean_energy - cold.mean_energy) / (last - first), 0.0)
+    rungs = max(math.ceil(math.sqrt(heat_capacity) * math.log(last / first) / FARTHEST) - 1, 1)
+    return tuple(first * (last / first) ** (step / (rungs + 1)) for step in range(1, rungs + 1))
+
+
 def _solved(rungs: list[Rung]) -> Group:
     beta = np.array([1.0 / rung.temperature for rung in rungs])
     mixture = polished(
         beta,
         np.array([float(rung.samples) for rung in rungs]),
-        _thinned_solution(beta, [rung.thinned for rung in rungs]),
+        _thinned_solution(beta, [rung.thinned[:: -(-len(rung.thinned) // START)] for rung in rungs]),
         [energies for rung in rungs for energies in rung.energies],
     )
     repeats = [(index, series, energies) for index, rung in enumerate(rungs) for series, energies in rung.recorded]

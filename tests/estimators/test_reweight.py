@@ -17,6 +17,8 @@ from scipy.signal import lfilter
 
 from estimators import moments
 from estimators.errors import BadSeries, NotSolved
+from estimators.estimate import Estimate
+from estimators.gamma import scatter
 from estimators.mixture import polished
 from estimators.reweight import Pooled, pool
 from sampler.fluid import Fluid, State
@@ -26,6 +28,7 @@ Floats = npt.NDArray[np.float64]
 
 PARTICLES, DENSITY = 8, 0.5
 FLUID = Fluid(cutoff=1.0, truncation="corrected")
+GAP_CLOSED_BY = "set rungs at 1.928, 3.098 and 4.979 between them"
 EXACT: dict[str, Callable[[float], float]] = {
     "residual_energy": lambda t: 1.875 * t,
     "residual_heat_capacity": lambda t: 1.875,
@@ -80,24 +83,40 @@ def solved_by_pymbar(series: Sequence[Series]) -> tuple[Any, Floats, Floats]:
     return solver, sampled, np.concatenate([each.energy for each in series])
 
 
-def test_values_are_those_of_pymbar_and_so_are_errors_of_independent_samples(independent: list[Series]) -> None:
-    """Values to 1e-8; standard errors within 7 %.
+def without_window(estimate: Estimate) -> float:
+    """Standard error of an estimate whose samples are known to be independent of one another."""
+    return math.sqrt(sum(scatter(repeats, window=0).variance for repeats in estimate._states.values()))
 
-    10^4 samples give a variance to about 2 % and the Gamma method's window adds a few; influences at fixed free
-    energies miss by more.
+
+def test_values_are_those_of_pymbar_and_so_are_errors_of_independent_samples(independent: list[Series]) -> None:
+    """Values to 1e-8, asymptotic errors within 5 %, the heat capacity's as that of a mean product.
+
+    10^4 samples know an error to 1 %, the heaviest of an extrapolation to 2 %; influences at fixed free energies miss
+    by more than 5. The window, which is to find that there is no correlation, may add its own noise of about 5 %.
     """
     pooled = pool(independent)
     solver, sampled, energy = solved_by_pymbar(independent)
     differences = solver.compute_free_energy_differences()
     ours = pooled.free_energies
     np.testing.assert_allclose([each.value for each in ours], differences["Delta_f"][0], atol=1e-8)
-    np.testing.assert_allclose([each.standard_error for each in ours], differences["dDelta_f"][0], rtol=0.07)
+    np.testing.assert_allclose([without_window(each) for each in ours], differences["dDelta_f"][0], rtol=0.05)
+    np.testing.assert_allclose([each.standard_error for each in ours], differences["dDelta_f"][0], rtol=0.2)
     np.testing.assert_allclose(pooled.overlap, solver.compute_overlap()["matrix"], atol=1e-8)
+    virial = np.concatenate([each.virial for each in independent])
     for temperature in (1.15, 1.7, 2.4):
-        theirs = solver.compute_multiple_expectations(energy[None], sampled / temperature)
-        estimate = pooled.at(temperature).properties["residual_energy"]
-        assert abs(estimate.value - theirs["mu"][0] / PARTICLES) < 1e-8
-        assert abs(estimate.standard_error / (theirs["sigma"][0] / PARTICLES) - 1.0) < 0.07
+        means = solver.compute_multiple_expectations(np.stack([energy, sampled]), sampled / temperature)["mu"]
+        observables = np.stack([energy, (energy - means[0]) * (sampled - means[1]), virial])
+        theirs = solver.compute_multiple_expectations(observables, sampled / temperature)
+        per_particle = np.array([1.0, temperature**-2, DENSITY]) / PARTICLES
+        values = theirs["mu"] * per_particle + np.array([0.0, 0.0, DENSITY * temperature])
+        names = ("residual_energy", "residual_heat_capacity", "pressure")
+        expected = dict(zip(names, zip(values, theirs["sigma"] * per_particle, strict=True), strict=True))
+        properties = pooled.at(temperature).properties
+        for name, (value, error) in expected.items():
+            bias_removed = 0.01 * value if name == "residual_heat_capacity" else 1e-8
+            assert abs(properties[name].value - value) < bias_removed
+            assert abs(without_window(properties[name]) / error - 1.0) < 0.05, (temperature, name)
+            assert abs(properties[name].standard_error / error - 1.0) < 0.2, (temperature, name)
 
 
 def test_influences_are_those_of_the_estimating_equations(independent: list[Series]) -> None:
@@ -213,16 +232,38 @@ def test_rungs_that_do_not_overlap_are_solved_apart() -> None:
     hot = [harmonic(rng, temperature, 1000) for temperature in (8.0, 9.5)]
     pooled = pool([*hot, *cold])
     assert pooled.temperatures == [1.0, 1.2, 8.0, 9.5]
-    assert pooled.gaps == [(1.2, 8.0)]
+    (gap,) = pooled.gaps
+    assert (gap.low, gap.high) == (1.2, 8.0)
     assert np.all(pooled.overlap[:2, 2:] == 0.0)
     np.testing.assert_allclose(np.sum(pooled.overlap, axis=1), 1.0, rtol=1e-8)
     assert pooled.free_energies[2].value == 0.0
     for alone, temperature in ((pool(cold), 1.1), (pool(hot), 8.8)):
         for name, estimate in alone.at(temperature).properties.items():
             assert abs(pooled.at(temperature).properties[name].value / estimate.value - 1.0) < 1e-8
-    gap = pooled.at(3.0)
-    assert gap.properties == {}
-    assert "the rungs at 1.2 and 8 do not overlap" in gap.refused
+    refused = pooled.at(3.0)
+    assert refused.properties == {}
+    assert f"the rungs at 1.2 and 8 do not overlap, {GAP_CLOSED_BY}" in refused.refused
+
+
+def test_the_rungs_that_are_named_close_a_gap() -> None:
+    """C = 12: sqrt(12) ln(8/1.2) = 6.6 standard deviations, so three rungs make steps below two of them."""
+    rng = np.random.default_rng(25)
+    ends = [harmonic(rng, temperature, 1000) for temperature in (1.2, 8.0)]
+    (gap,) = pool(ends).gaps
+    np.testing.assert_allclose(gap.rungs, 1.2 * (8.0 / 1.2) ** (np.arange(1, 4) / 4), rtol=1e-12)
+    assert str(gap).endswith(GAP_CLOSED_BY)
+    closed = pool([*ends, *(harmonic(rng, temperature, 1000) for temperature in gap.rungs)])
+    assert closed.gaps == []
+    assert np.min(np.diag(closed.overlap, 1)) > 0.1
+    assert all(each.refused == "" for each in closed.curve(np.linspace(1.2, 8.0, 20).tolist()))
+
+
+def test_one_rung_is_named_where_one_is_enough() -> None:
+    """Gap of 2.4 deviations, which 60 samples do not span."""
+    rng = np.random.default_rng(33)
+    (gap,) = pool([harmonic(rng, temperature, 60) for temperature in (1.0, 2.0)]).gaps
+    assert gap.rungs == pytest.approx([math.sqrt(2.0)])
+    assert str(gap) == "the rungs at 1 and 2 do not overlap, set a rung at 1.414 between them"
 
 
 def test_a_short_rung_between_does_not_part_its_neighbours() -> None:
@@ -231,30 +272,30 @@ def test_a_short_rung_between_does_not_part_its_neighbours() -> None:
     pooled = pool(series)
     assert pooled.overlap[0, 2] > 0.1
     assert pooled.overlap[0, 1] == 0.0
+    assert pooled.gaps == []
     assert pooled.at(1.2).effective_samples > 500.0
 
 
 def test_long_series_enter_as_block_sums(monkeypatch: pytest.MonkeyPatch) -> None:
-    """Error bars are those of full influences whether blocks are short or long against the 5 samples of correlation.
+    """Error bars are those of full influences whether blocks are short or long against 5 samples of correlation.
 
-    1024 blocks in all know a variance to about 2 sqrt(3.5/1024) = 12 %, hence the error bar to 6 %, in part of the
-    same noise as the full series; allowed are 3 times that. Values equal pymbar's on all samples though a start was
-    found on fewer, and do not depend on the blocks.
+    4096 blocks of 10 correlation times know an error bar to about sqrt(5/4096) = 3.5 %; allowed are 4 times that.
+    Values equal pymbar's on all samples though a start was found on fewer, and do not depend on the blocks.
     """
     rng = np.random.default_rng(27)
-    series = [harmonic(rng, temperature, 25_000, memory=0.9) for temperature in (1.0, 1.2)]
+    series = [harmonic(rng, temperature, 100_000, memory=0.9) for temperature in (1.0, 1.2)]
     solver, _, _ = solved_by_pymbar(series)
     found = {}
-    for entries, each in ((10**6, 25_000), (2**14, 6250), (5000, 2500), (1024, 510)):
+    for entries, each in ((10**6, 100_000), (10**5, 50_000), (2**14, 7692), (2**12, 2040)):
         monkeypatch.setattr(moments, "BLOCKS", entries)
         pooled = pool(series)
         free_energy = pooled.free_energies[1]
-        assert abs(free_energy.value - solver.compute_free_energy_differences()["Delta_f"][0, 1]) < 1e-8
+        assert abs(free_energy.value - solver.f_k[1]) < 1e-8
         found[each] = {**pooled.at(1.1).properties, "F": free_energy}
         for name, estimate in found[each].items():
-            full = found[25_000][name]
+            full = found[100_000][name]
             assert {len(values) for values in estimate.influence.values()} == {each}
-            assert abs(estimate.standard_error / full.standard_error - 1.0) < 0.18, (each, name)
+            assert abs(estimate.standard_error / full.standard_error - 1.0) < 0.14, (each, name)
             assert abs(estimate.value - full.value) < 1e-9
 
 
@@ -307,7 +348,8 @@ def test_equations_without_a_solution_are_reported_in_our_words() -> None:
 
 def test_no_notice_of_a_library_reaches_the_user() -> None:
     program = (
-        "import numpy as np\n"
+        "import logging, numpy as np\n"
+        "logging.basicConfig()\n"
         "from sampler.fluid import Fluid, State\n"
         "from sampler.series import Series\n"
         "from estimators.reweight import pool\n"
