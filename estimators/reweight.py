@@ -20,7 +20,6 @@ from itertools import pairwise
 
 import numpy as np
 import numpy.typing as npt
-from scipy.sparse.csgraph import connected_components
 
 from estimators.errors import BadSeries
 from estimators.estimate import FEWEST_SAMPLES, Chain, Estimate, mean
@@ -186,19 +185,21 @@ def _rung(temperature: float, repeats: list[Series], reference_energy: float) ->
     return Rung(temperature, repeats, energies, max(samples / max(effective, 1.0), 1.0))
 
 
-def _connected(rungs: list[Rung]) -> npt.NDArray[np.int32]:
+def _connected(rungs: list[Rung]) -> npt.NDArray[np.int64]:
     """(K,), equal labels for rungs that share 50 effective samples or are connected through others that do."""
-    links = np.zeros((len(rungs), len(rungs)))
-    for i, cold in enumerate(rungs):
-        for j in range(i + 1, len(rungs)):
-            hot = rungs[j]
-            _, *evenness = bennett((1.0 / cold.temperature, 1.0 / hot.temperature), cold.thinned, hot.thinned)
-            shared = sum(
-                float(np.mean(even)) * rung.samples / rung.inefficiency
-                for even, rung in zip(evenness, (cold, hot), strict=True)
-            )
-            links[i, j] = shared >= FEWEST_SAMPLES
-    return np.asarray(connected_components(links, directed=False)[1], dtype=np.int32)
+    labels = np.arange(len(rungs))
+    for distance in range(1, len(rungs)):
+        for i, j in zip(range(len(rungs)), range(distance, len(rungs)), strict=False):
+            if labels[i] != labels[j] and _shared_samples(rungs[i], rungs[j]) >= FEWEST_SAMPLES:
+                labels[labels == labels[j]] = labels[i]
+    return labels
+
+
+def _shared_samples(cold: Rung, hot: Rung) -> float:
+    """Effective samples of two rungs that either might have drawn."""
+    _, *evenness = bennett((1.0 / cold.temperature, 1.0 / hot.temperature), cold.thinned, hot.thinned)
+    pairs = zip(evenness, (cold, hot), strict=True)
+    return sum(float(np.mean(even)) * rung.samples / rung.inefficiency for even, rung in pairs)
 
 
 def _gaps(rungs: list[Rung], groups: list[Group]) -> list[Gap]:
