@@ -17,7 +17,7 @@ import numpy.typing as npt
 
 from estimators.estimate import Estimate
 from estimators.mixture import Mixture
-from estimators.moments import Moments, Run, claimed, moments
+from estimators.moments import POWERS, Moments, Run, claimed, moments
 from sampler.series import Series
 
 __all__ = ["Group", "Rung"]
@@ -105,7 +105,7 @@ class Group:
     def properties(self, temperature: float, found: Moments, index: int) -> dict[str, Estimate]:
         """By name, from the moments at a temperature, which is the one with this index."""
         samples = self.effective_samples(temperature, float(found.kish[index]))
-        rows = self._rows(temperature, found.means[index], 1.0 / (1.0 - 1.0 / samples))
+        rows = self._rows(temperature, found.means[index], correction=1.0 / (1.0 - 1.0 / samples))
         values = rows @ found.means[index]
         rows[:, 0] -= values
         pull = rows @ found.claimed[index] @ self.mixture.response
@@ -122,25 +122,28 @@ class Group:
         surface = series.fluid.surface_hypervirial(series.state.density) != 0.0
         return properties if surface else properties | {"bulk_modulus": bulk_modulus}
 
-    def _rows(self, temperature: float, means: Floats, correction: float) -> Floats:
+    def _rows(self, temperature: float, means: Floats, *, correction: float) -> Floats:
         """(5, POWERS): of which combinations of powers the properties are the weighted means.
 
         In a covariance the means may stand still: its influence is the product of deviations, to first order.
         correction : what the scatter of these means takes from a covariance, made good
         """
-        state, (energy, virial, stiffness) = self.runs[0].series.state, self.runs[0].centres
+        one, u, e, w, stiffness, ue, we, ww = np.eye(POWERS)
+        state, (u_centre, w_centre, stiffness_centre) = self.runs[0].series.state, self.runs[0].centres
         particles, volume, density = state.particles, state.volume, state.density
-        _, u, e, w, *_ = means
-        response, softening = correction / temperature**2, correction / temperature
-        ideal = density * temperature
-        return np.array(
+
+        def covariance(product: Floats, first: Floats, second: Floats) -> Floats:
+            a, b = first @ means, second @ means
+            return np.asarray(correction * (product - b * first - a * second + a * b * one), dtype=float)
+
+        ideal = density * temperature * one
+        return np.stack(
             [
-                np.array([energy, 1.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0]) / particles,
-                np.array([u * e, -e, -u, 0.0, 0.0, 1.0, 0.0, 0.0]) * (response / particles),
-                np.array([virial + ideal * volume, 0.0, 0.0, 1.0, 0.0, 0.0, 0.0, 0.0]) / volume,
-                np.array([w * e + particles / response, 0.0, -w, -e, 0.0, 0.0, 1.0, 0.0]) * (response / volume),
-                np.array([stiffness + ideal * volume, 0.0, 0.0, 0.0, 1.0, 0.0, 0.0, 0.0]) / volume
-                - np.array([w * w, 0.0, 0.0, -2.0 * w, 0.0, 0.0, 0.0, 1.0]) * (softening / volume),
+                (u + u_centre * one) / particles,
+                covariance(ue, u, e) / (particles * temperature**2),
+                (w + w_centre * one) / volume + ideal,
+                covariance(we, w, e) / (volume * temperature**2) + density * one,
+                (stiffness + stiffness_centre * one - covariance(ww, w, w) / temperature) / volume + ideal,
             ]
         )
 

@@ -21,7 +21,7 @@ from estimators.estimate import Chain
 from estimators.mixture import Mixture
 from sampler.series import Series
 
-__all__ = ["Moments", "Run", "block_starts", "claimed", "moments"]
+__all__ = ["POWERS", "Moments", "Run", "block_starts", "claimed", "moments"]
 
 Floats = npt.NDArray[np.float64]
 Indices = npt.NDArray[np.int64]
