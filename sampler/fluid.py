@@ -80,6 +80,14 @@ class Fluid:
         if not (math.isfinite(self.cutoff) and self.cutoff > 0.0):
             raise BadRequest(f"cutoff must be a positive number, found {self.cutoff!r}")
 
+    def check_box(self, box: float) -> None:
+        """Raises BadRequest if the cutoff is beyond half the edge of a periodic cube (sigma)."""
+        if self.cutoff > 0.5 * box:
+            raise BadRequest(
+                f"cutoff {self.cutoff:g} sigma is beyond half the box of edge {box:g} sigma; "
+                "take a smaller cutoff or more particles"
+            )
+
     @property
     def energy_at_cutoff(self) -> float:
         """u(r_c) of the untruncated potential, epsilon."""

@@ -157,8 +157,10 @@ def evaluate(
 ) -> tuple[npt.NDArray[np.float64], npt.NDArray[np.float64]]:
     """Forces (n, 3), epsilon/sigma, and the bare sums (4,) that `Fluid.totals` reads, of one configuration.
 
-    positions : (n, 3), sigma, anywhere; box : edge of the periodic cube, at least twice the cutoff
+    positions : (n, 3), sigma, anywhere; box : edge of the periodic cube
+    Raises BadRequest if the cutoff is beyond half the box.
     """
+    fluid.check_box(box)
     where = np.mod(positions, box)
     where[where >= box] = 0.0
     forces, sums = _evaluate(pair_function(fluid), where, box, fluid.cutoff)

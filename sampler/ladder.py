@@ -42,7 +42,9 @@ class _Work:
 
 
 def chains(study: Path, fluid: Fluid, states: Sequence[State], protocol: Protocol) -> list[Chain]:
-    """Every repeat of every rung."""
+    """Every repeat of every rung. Raises BadRequest if the cutoff is beyond half the box of one."""
+    for state in states:
+        fluid.check_box(state.box)
     return [Chain(study, fluid, state, protocol, repeat) for state in states for repeat in range(protocol.repeats)]
 
 

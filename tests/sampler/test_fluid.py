@@ -6,7 +6,10 @@ from scipy.integrate import quad
 
 from sampler.errors import BadRequest
 from sampler.fluid import Fluid, State
+from sampler.forces import evaluate
+from sampler.ladder import chains
 from sampler.potentials import lennard_jones
+from sampler.protocol import Protocol
 
 TRUNCATIONS = ("corrected", "plain", "shifted", "force-shifted")
 
@@ -103,6 +106,19 @@ def test_surface_term_is_what_a_steep_but_continuous_force_gives():
     inside, _ = quad(lambda r: float(r**2 * lennard_jones.x(r)), low, 2.5, epsabs=1e-14)
     term = 2 * np.pi * density / 9 * (edge - inside)
     assert fluid.surface_hypervirial(density) == pytest.approx(term, rel=1e-3)
+
+
+def test_a_cutoff_beyond_half_the_box_is_refused(tmp_path):
+    fluid, state = Fluid(cutoff=3.0), State(1.0, 0.8, 100)
+    for ask in (
+        lambda: chains(tmp_path, fluid, [state], Protocol()),
+        lambda: evaluate(fluid, np.zeros((2, 3)), box=state.box),
+    ):
+        with pytest.raises(
+            BadRequest, match="cutoff 3 sigma is beyond half the box of edge 5 sigma; .* more particles"
+        ):
+            ask()
+    Fluid(cutoff=2.5).check_box(5.0)
 
 
 @pytest.mark.parametrize(
