@@ -115,7 +115,7 @@ def test_a_cutoff_beyond_half_the_box_is_refused(tmp_path):
         lambda: evaluate(fluid, np.zeros((2, 3)), box=state.box),
     ):
         with pytest.raises(
-            BadRequest, match="cutoff 3 sigma is beyond half the box of edge 5 sigma; .* more particles"
+            BadRequest, match=r"cutoff 3 sigma is beyond half the box of edge 5 sigma; .* more particles"
         ):
             ask()
     Fluid(cutoff=2.5).check_box(5.0)
