@@ -8,7 +8,8 @@ from collections.abc import Mapping, Sequence
 import numpy as np
 import numpy.typing as npt
 
-from estimators.estimate import Chain, Estimate, centred, coarsened
+from estimators.estimate import Chain, Estimate, State, centred
+from estimators.gamma import coarsened
 
 __all__ = ["covariance", "covariance_matrix"]
 
@@ -30,21 +31,33 @@ def covariance(first: Mapping[Chain, Floats], second: Mapping[Chain, Floats]) ->
     products = {chain: a[chain] * b[chain] for chain in a}
     biased = sum(float(np.sum(values)) for values in products.values()) / samples
     influence = {chain: (values - biased) / samples for chain, values in products.items()}
-    return Estimate(biased + _covariance_of_means(a, b, samples), influence, "fluctuation")
+    shared, underlying = _covariance_of_means(a, b, samples)
+    return Estimate(biased + shared, influence, "fluctuation", underlying)
 
 
-def _covariance_of_means(a: Mapping[Chain, Floats], b: Mapping[Chain, Floats], samples: int) -> float:
-    """By polarisation of the variances of sum and difference, each observable in its own standard deviation."""
+def _covariance_of_means(
+    a: Mapping[Chain, Floats], b: Mapping[Chain, Floats], samples: int
+) -> tuple[float, dict[State, float]]:
+    """Covariance of the means of deviations a and b, and the effective samples of each state behind these means.
+
+    By polarisation of the variances of sum and difference, each observable in its own standard deviation.
+    """
     widths = [math.sqrt(sum(float(np.sum(v**2)) for v in each.values()) / samples) for each in (a, b)]
     if min(widths) == 0.0:
-        return 0.0
-    variances = [
-        Estimate(0.0, {chain: a[chain] / widths[0] + sign * b[chain] / widths[1] for chain in a}).variance
+        return 0.0, {}
+    both = [
+        Estimate(0.0, {chain: a[chain] / widths[0] + sign * b[chain] / widths[1] for chain in a})
         for sign in (1.0, -1.0)
     ]
-    if not all(map(math.isfinite, variances)):
-        return 0.0
-    return 0.25 * (variances[0] - variances[1]) * widths[0] * widths[1] / samples**2
+    underlying: dict[State, float] = {}
+    for each in both:
+        for state, scatter in each.scatters.items():
+            if scatter.variance > 0.0:
+                underlying[state] = min(scatter.steady_samples, underlying.get(state, math.inf))
+    first, second = (each.variance for each in both)
+    if not math.isfinite(first + second):
+        return 0.0, underlying
+    return 0.25 * (first - second) * widths[0] * widths[1] / samples**2, underlying
 
 
 def covariance_matrix(estimates: Sequence[Estimate]) -> Floats:

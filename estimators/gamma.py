@@ -11,15 +11,16 @@ from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
-from scipy import fft
+from scipy import fft, special
 
 from estimators.errors import BadSeries
 
-__all__ = ["Scatter", "autocovariances", "block_scatter", "scatter"]
+__all__ = ["Scatter", "autocovariances", "block_scatter", "coarsened", "scatter"]
 
 Floats = npt.NDArray[np.float64]
 
-WINDOW_FACTOR = 1.5  # Wolff's S: assumed ratio of the exponential to the integrated autocorrelation time
+WINDOW_FACTOR = 2.5  # Wolff's S, exponential over integrated autocorrelation time: room for a slow mode of a tenth
+STEADY_WINDOW = 2.0  # autocorrelation times; 86 % of an exponential lies within, at half the noise of the full window
 FIRST_LAGS = 128
 BLOCKS = 32
 
@@ -30,7 +31,9 @@ class Scatter:
 
     variance : of the sum
     relative_error : standard error of `variance`, as a fraction of it
+    skewness : of the sum: third cumulant over variance^(3/2)
     tau : integrated autocorrelation time in samples, 1/2 without correlation
+    steady_tau : the same from a window of 2 tau and an exponential beyond: less noisy, blind to slower modes
     window : largest lag that was summed
     samples : over all repeats
     longest : samples of the longest repeat
@@ -38,7 +41,9 @@ class Scatter:
 
     variance: float
     relative_error: float
+    skewness: float
     tau: float
+    steady_tau: float
     window: int
     samples: int
     longest: int
@@ -47,6 +52,11 @@ class Scatter:
     def effective_samples(self) -> float:
         """Independent samples that would scatter as much: samples / (2 tau)."""
         return self.samples / (2.0 * self.tau)
+
+    @property
+    def steady_samples(self) -> float:
+        """The same from `steady_tau`: the better measure of whether a series is long enough."""
+        return self.samples / (2.0 * self.steady_tau)
 
 
 def autocovariances(repeats: Sequence[Floats], n_lags: int) -> Floats:
@@ -81,13 +91,14 @@ def scatter(repeats: Sequence[Floats], *, window: int | None = None) -> Scatter:
     """Scatter of the sum of all entries of one state's influence series, by the Gamma method.
 
     repeats : each (n_r,), independent of one another; the mean over all repeats is removed
-    window : largest lag summed; chosen from the data (S = 1.5) if None
+    window : largest lag summed; chosen from the data (S = 2.5) if None
     A state with fewer than four samples has infinite variance; one whose influences are all equal has none.
     Raises BadSeries if an entry is not finite.
     """
     samples, longest = sum(map(len, repeats)), max(map(len, repeats), default=0)
     if samples < 4:
-        return Scatter(math.inf, math.inf, 0.5 * max(samples, 1), 0, samples, longest)
+        tau = 0.5 * max(samples, 1)
+        return Scatter(math.inf, math.inf, 0.0, tau, tau, 0, samples, longest)
     centre = sum(float(np.sum(values)) for values in repeats) / samples
     if not math.isfinite(centre):
         raise BadSeries("a series holds entries that are not finite numbers; leave those samples out or repair them")
@@ -95,13 +106,43 @@ def scatter(repeats: Sequence[Floats], *, window: int | None = None) -> Scatter:
     covariances, window = _up_to_window(centred, window, longest // 2 + 1)
     gamma0 = float(covariances[0])
     if gamma0 <= (1e-14 * centre) ** 2:
-        return Scatter(0.0, 0.0, 0.5, 0, samples, longest)
+        return Scatter(0.0, 0.0, 0.0, 0.5, 0.5, 0, samples, longest)
     total = gamma0 + 2.0 * float(np.sum(covariances[1 : window + 1]))
     if total <= 0.0:
         total, window = gamma0, 0
     total *= 1.0 + (2 * window + 1) / samples
-    tau = 0.5 * total / (gamma0 * (1.0 + 1.0 / samples))
-    return Scatter(samples * total, 2.0 * math.sqrt((window + 0.5) / samples), tau, window, samples, longest)
+    return Scatter(
+        variance=samples * total,
+        relative_error=2.0 * math.sqrt((window + 0.5) / samples),
+        skewness=_skewness(centred, 2 * window + 1),
+        tau=0.5 * total / (gamma0 * (1.0 + 1.0 / samples)),
+        steady_tau=_steady_tau(covariances[: window + 1] / gamma0, samples),
+        window=window,
+        samples=samples,
+        longest=longest,
+    )
+
+
+def _skewness(centred: Sequence[Floats], length: int) -> float:
+    """Of the sum of all entries, from sums over blocks that are nearly independent of one another."""
+    sums = _block_sums(centred, length)
+    squares = float(np.sum(sums**2))
+    return float(np.sum(sums**3)) / squares**1.5 if squares > 0.0 else 0.0
+
+
+def _steady_tau(correlations: Floats, samples: int) -> float:
+    """Autocorrelation time from the first window W >= 2 tau(W); without one in reach from all lags.
+
+    An exponential's share below W is tau(W) = tau (1 - exp(-(W + 1/2) / tau)): Lambert's function gives tau.
+    """
+    lags = np.arange(len(correlations))
+    taus = np.cumsum(correlations) - 0.5
+    window = int(np.argmax(np.append(lags[1:] >= STEADY_WINDOW * taus[1:], True))) + 1
+    if window == len(correlations):
+        return max(float(taus[-1]), 0.5)
+    within = max(float(taus[window]) * (1.0 + (2 * window + 1) / samples), 0.25)
+    reach = (window + 0.5) / within
+    return max(within / (1.0 + float(np.real(special.lambertw(-reach * math.exp(-reach)))) / reach), 0.5)
 
 
 def _up_to_window(centred: Sequence[Floats], window: int | None, most_lags: int) -> tuple[Floats, int]:
@@ -138,9 +179,21 @@ def block_scatter(repeats: Sequence[Floats], *, blocks: int = BLOCKS) -> tuple[f
     """
     samples = sum(map(len, repeats))
     length = max(min(samples // blocks, max(map(len, repeats), default=0)), 1)
-    sums = np.concatenate(
-        [values[: len(values) // length * length].reshape(-1, length).sum(axis=1) for values in repeats]
-    )
+    sums = _block_sums(repeats, length)
     if len(sums) < 4:
         return math.nan, math.inf
     return samples / length * float(np.var(sums, ddof=1)), math.sqrt(2.0 / (len(sums) - 1))
+
+
+def _block_sums(repeats: Sequence[Floats], length: int) -> Floats:
+    return np.concatenate(
+        [values[: len(values) // length * length].reshape(-1, length).sum(axis=1) for values in repeats]
+    )
+
+
+def coarsened(values: Floats, length: int) -> Floats:
+    """Sums over `length` consecutive blocks, as equal as they can be, (length,)."""
+    if len(values) == length:
+        return values
+    starts = np.arange(length) * len(values) // length
+    return np.asarray(np.add.reduceat(values, starts), dtype=float)

@@ -3,18 +3,20 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 
 import numpy as np
 import numpy.typing as npt
 from scipy import special, stats
 
 from estimators.errors import BadSeries
+from estimators.gamma import scatter
 
-__all__ = ["rank_normalised_split_rhat", "settled_start"]
+__all__ = ["rank_normalised_split_rhat", "repeats_disagree", "settled_start"]
 
 Floats = npt.NDArray[np.float64]
 
+FALSE_ALARMS = 0.001  # of each of the two comparisons of repeats
 BLOCKS = 50  # long enough each to see slow transients, and the steps in which the cut is placed
 
 
@@ -48,6 +50,33 @@ def rank_normalised_split_rhat(chains: Sequence[Floats]) -> float:
     series split into halves: A. Vehtari, A. Gelman, D. Simpson, B. Carpenter, P.-C. Buerkner, Bayesian Anal. 16, 667
     (2021). Raises BadSeries when a series is too short or holds entries that are not finite.
     """
+    return max(_spread_ratio(scores) for scores in _scores(chains))
+
+
+def repeats_disagree(repeats: Sequence[Floats]) -> bool:
+    """Whether rank-normalised split R-hat is larger than the correlation of the samples explains.
+
+    repeats : as for `rank_normalised_split_rhat`
+    A fixed threshold either misses or cries wolf, depending on the length: under agreement the halves' means scatter by
+    2 tau / n of the variance within, and the ratio of both follows Fisher's F, with tau and its degrees of freedom from
+    the Gamma method on the same scores about each repeat's own mean. About one false alarm in 500 in all.
+    """
+    return any(_beyond_chance(scores) for scores in _scores(repeats))
+
+
+def _beyond_chance(halves: Sequence[Floats]) -> bool:
+    wholes = [np.concatenate(pair) for pair in zip(halves[::2], halves[1::2], strict=True)]
+    noise = scatter([whole - np.mean(whole) for whole in wholes])
+    if noise.variance == 0.0:
+        return _spread_ratio(halves) > 1.0
+    own_means = 1.0 + (2 * noise.window + 1) * (len(wholes) - 1) / noise.samples
+    expected = own_means * 2.0 * noise.tau * float(np.mean([1.0 / len(half) for half in halves]))
+    excess = _spread_ratio(halves) ** 2 - 1.0 + len(halves) / noise.samples
+    return bool(excess > expected * special.fdtri(len(halves) - 1, 2.0 / noise.relative_error**2, 1.0 - FALSE_ALARMS))
+
+
+def _scores(chains: Sequence[Floats]) -> Iterator[list[Floats]]:
+    """Normal scores of the values' ranks and of the ranks of their distances from the median, as halves of chains."""
     halves = []
     for chain in chains:
         half = len(chain) // 2
@@ -58,8 +87,8 @@ def rank_normalised_split_rhat(chains: Sequence[Floats]) -> float:
     if not len(pooled) or not np.all(np.isfinite(pooled)):
         raise BadSeries("series to compare must hold finite numbers only, and be at least one")
     ends = np.cumsum([len(half) for half in halves])[:-1]
-    folded = np.abs(pooled - np.median(pooled))
-    return max(_spread_ratio(np.split(_normal_scores(values), ends)) for values in (pooled, folded))
+    for values in (pooled, np.abs(pooled - np.median(pooled))):
+        yield np.split(_normal_scores(values), ends)
 
 
 def _normal_scores(values: Floats) -> Floats:

@@ -14,6 +14,7 @@ from scipy.signal import lfilter
 from estimators.covariance import covariance, covariance_matrix
 from estimators.errors import BadSeries
 from estimators.estimate import Estimate, combine, exact, mean
+from estimators.gamma import WINDOW_FACTOR
 
 COLD, COLD_AGAIN, HOT = (1.0, 0.8, 100, 0), (1.0, 0.8, 100, 1), (1.2, 0.8, 100, 0)
 
@@ -41,7 +42,8 @@ def test_mean_pools_repeats_sample_by_sample(generator):
     # White noise: the plain standard error, known to sqrt((W + 1/2) / 4000), and W is 1 to 4.
     relative = found.error_of_error / found.standard_error
     assert math.sqrt(1.5 / 4000) * 0.999 < relative < math.sqrt(4.501 / 4000)
-    assert found.standard_error == pytest.approx(everything.std() / math.sqrt(4000), rel=4.0 * relative)
+    assert math.sqrt(found.variance) == pytest.approx(everything.std() / math.sqrt(4000), rel=4.0 * relative)
+    assert 1.0 < found.standard_error / math.sqrt(found.variance) < 1.01
 
 
 def test_functions_of_correlated_means_as_pyerrors_propagates_them(generator):
@@ -58,10 +60,10 @@ def test_functions_of_correlated_means_as_pyerrors_propagates_them(generator):
     ]
     pairs[0] = (pairs[0][0], np.exp(-their_a) * np.sqrt(their_b) / (their_a + their_b))
     for ours, theirs in pairs:
-        theirs.gamma_method(S=1.5)
+        theirs.gamma_method(S=WINDOW_FACTOR)
         assert ours.value == pytest.approx(theirs.value, rel=1e-12)
-        assert ours.standard_error == pytest.approx(theirs.dvalue, rel=1e-8)
-        assert ours.error_of_error == pytest.approx(theirs.ddvalue, rel=1e-8)
+        assert math.sqrt(ours.variance) == pytest.approx(theirs.dvalue, rel=1e-8)
+        assert ours.error_of_error / ours.standard_error == pytest.approx(theirs.ddvalue / theirs.dvalue, rel=1e-8)
 
 
 def test_shared_samples_cancel_and_states_add_in_quadrature(generator):
@@ -70,10 +72,13 @@ def test_shared_samples_cancel_and_states_add_in_quadrature(generator):
     assert (cold - cold).standard_error == 0.0
     assert (cold + cold).standard_error == pytest.approx(2.0 * cold.standard_error)
     both = cold - hot
-    assert both.standard_error == pytest.approx(math.hypot(cold.standard_error, hot.standard_error))
+    assert both.variance == pytest.approx(cold.variance + hot.variance)
     shares = np.array([cold.variance, hot.variance]) / both.variance
     sizes = np.array([cold.effective_samples, hot.effective_samples])
     assert both.effective_samples == pytest.approx(1.0 / np.sum(shares**2 / sizes))
+    assert both.freedom == pytest.approx(1.0 / np.sum(shares**2 / np.array([cold.freedom, hot.freedom])))
+    assert both.skewness == pytest.approx(np.sum(shares**1.5 * np.array([cold.skewness, -hot.skewness])))
+    assert (cold - hot).skewness != pytest.approx((cold + hot).skewness)
 
 
 def test_exact_values_carry_no_error(generator):
@@ -161,24 +166,52 @@ def test_covariance_matrix_of_errors(generator):
     c = mean({HOT: generator.normal(size=500)})
     matrix = covariance_matrix([a, b, c, exact(1.0), a * -2.0])
     assert np.diag(matrix) == pytest.approx(
-        [a.variance, b.variance, c.variance, 0.0, 4.0 * a.variance], rel=1e-12, abs=1e-300
+        [each.standard_error**2 for each in (a, b, c, exact(1.0), a * 2.0)], rel=1e-12, abs=1e-300
     )
     assert np.linalg.eigvalsh(matrix).min() > -1e-12 * matrix.max()
     assert matrix[0, 2] == matrix[1, 2] == matrix[0, 3] == 0.0
-    assert matrix[0, 4] == pytest.approx(-2.0 * a.variance)
+    assert matrix[0, 4] == pytest.approx(-2.0 * matrix[0, 0])
     # Correlation 0.6 from several hundred blocks: (1 - 0.36) / sqrt(500) = 0.03.
     assert matrix[0, 1] / math.sqrt(matrix[0, 0] * matrix[1, 1]) == pytest.approx(0.6, abs=0.12)
 
 
-def test_too_few_effective_samples_are_said(generator):
+@pytest.mark.parametrize("tau", [1.0, 20.0])
+def test_short_series_are_not_judged_ok_and_longer_ones_are(tau):
+    """Below 200 autocorrelation times mostly not, at 50 never; from 200 on in 95 % (binomial error of 300: 1.3 %)."""
+    generator, judged = np.random.default_rng(15), {}
+    for length in (50, 100, 200, 800):
+        found = [mean({COLD: autoregressive(generator, round(length * tau), tau)}) for _ in range(300)]
+        judged[length] = np.mean([each.trust == "ok" for each in found])
+        assert all(bool(each.reason) == (each.trust != "ok") for each in found)
+    assert judged[50] < 0.02
+    assert judged[100] < 0.2
+    assert judged[200] > 0.92
+    assert judged[800] > 0.97
+
+
+def test_reasons_of_short_series(generator):
     short = mean({COLD: autoregressive(generator, 600, 20.0)})
-    assert short.effective_samples < 50
     assert (short.trust, short.reason) == ("no", "too short to tell")
     none = mean({COLD: np.array([1.0, 2.0])})
-    assert (none.standard_error, none.effective_samples, none.trust) == (math.inf, 0.0, "no")
-    some = mean({COLD: generator.normal(size=120)})
+    assert (none.standard_error, none.error_of_error, none.effective_samples) == (math.inf, math.inf, 0.0)
+    assert (none.trust, none.reason) == ("no", "too short to tell")
+    some = mean({COLD: generator.normal(size=60)})
     assert some.trust == "caution"
+    assert "only about" in some.reason
     assert "effective samples" in some.reason
+
+
+def test_fluctuations_are_told_no_better_than_the_means_they_are_about(generator):
+    """Squares forget twice as fast: 100 correlation times of the series are 200 of its squares."""
+    n_series, tau = 100, 10.0
+    found = []
+    for _ in range(n_series):
+        values = {COLD: autoregressive(generator, round(100 * tau), tau)}
+        found.append(covariance(values, values))
+    assert np.median([each.effective_samples for each in found]) > 80.0
+    assert np.mean([each.trust == "ok" for each in found]) < 0.2
+    assert np.mean([(each * 2.0 + 1.0).trust == "ok" for each in found]) < 0.2
+    assert np.median([each.underlying[COLD[:3]] for each in found]) == pytest.approx(50.0, rel=0.15)
 
 
 def test_repeats_each_shorter_than_fifty_correlation_times_are_too_short(generator):
@@ -188,20 +221,48 @@ def test_repeats_each_shorter_than_fifty_correlation_times_are_too_short(generat
     assert (found.trust, found.reason) == ("no", "too short to tell")
 
 
-def test_repeats_that_disagree_raise_caution(generator):
-    found = mean({COLD: generator.normal(size=4000), COLD_AGAIN: generator.normal(size=4000) + 0.5})
-    assert found.trust == "caution"
-    assert "blocks disagree" in found.reason
+@pytest.mark.parametrize("lengths", [(4000, 4000), (9000, 3000, 5000)])
+def test_repeats_that_disagree_are_not_trusted(generator, lengths):
+    """In location, and in scale where the means agree."""
+    moved = mean({(1.0, 0.8, 100, r): generator.normal(size=n) + 0.3 * r for r, n in enumerate(lengths)})
+    wider = mean({(1.0, 0.8, 100, r): generator.normal(size=n) * (1.0 + r) for r, n in enumerate(lengths)})
+    for found in (moved, wider):
+        assert found.trust in ("caution", "no")
+        assert "repeats disagree" in found.reason
 
 
 def test_agreeing_repeats_rarely_raise_caution():
+    """R-hat: one false alarm in 500; blocks: three combined errors, one in 100. So 4 of 300 are expected."""
     generator = np.random.default_rng(14)
-    flags = [
-        mean({COLD: autoregressive(generator, 6000, 3.0), COLD_AGAIN: autoregressive(generator, 3000, 3.0)}).trust
-        for _ in range(200)
+    found = [
+        mean({COLD: autoregressive(generator, 6000, 3.0), COLD_AGAIN: autoregressive(generator, 3000, 3.0)})
+        for _ in range(300)
     ]
-    # Three combined errors: at most about one in a hundred of them.
-    assert flags.count("ok") > 190
+    assert sum(each.trust != "ok" for each in found) <= 15
+    assert sum("repeats" in each.reason for each in found) <= 4
+
+
+def test_blocks_that_disagree_raise_caution(generator):
+    """A slow mode too faint for the window: 1 % of the variance, but half of the error bar's square."""
+    slow = autoregressive(generator, 200_000, 400.0)
+    found = mean({COLD: generator.normal(size=200_000) + 0.12 * slow})
+    assert found.trust == "caution"
+    assert found.reason == "error bars from autocorrelation and from blocks disagree"
+
+
+def test_error_bars_widen_for_their_noise_and_for_skewness(generator):
+    values = np.exp(generator.normal(size=150))
+    found = mean({COLD: values})
+    (spread,) = found.scatters.values()
+    assert found.freedom == pytest.approx(2.0 / spread.relative_error**2)
+    student = stats.t.ppf(0.975, found.freedom) / stats.norm.ppf(0.975)
+    # Hall's second-order term at z = 1.96: (14.76 + 7.68 - 3) / 18 = 1.080.
+    expected = math.sqrt(found.variance) * student * (1.0 + 1.080 * found.skewness**2)
+    assert found.standard_error == pytest.approx(expected, rel=1e-4)
+    assert found.error_of_error == pytest.approx(0.5 * spread.relative_error * found.standard_error)
+    assert spread.skewness == pytest.approx(found.skewness)
+    assert found.skewness == pytest.approx((found * 3.0).skewness)
+    assert found.skewness == pytest.approx(-(-found).skewness)
 
 
 def test_values_that_are_no_numbers_are_not_trusted():

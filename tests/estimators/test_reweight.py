@@ -86,7 +86,7 @@ def solved_by_pymbar(series: Sequence[Series]) -> tuple[Any, Floats, Floats]:
 
 def without_window(estimate: Estimate) -> float:
     """Standard error of an estimate whose samples are known to be independent of one another."""
-    return math.sqrt(sum(scatter(repeats, window=0).variance for repeats in estimate._states.values()))
+    return math.sqrt(sum(scatter(repeats, window=0).variance for repeats in estimate.repeats.values()))
 
 
 def test_values_are_those_of_pymbar_and_so_are_errors_of_independent_samples(independent: list[Series]) -> None:
