@@ -30,6 +30,7 @@ POWERS = 8  # 1, U, E, W, W + X, U E, W E, W W
 BLOCKS = 2**14  # over all chains: an error bar's own error, about 1/sqrt(2 BLOCKS), is no concern then
 FEWEST_BLOCKS = 128  # of a chain, however many there are
 CHUNK = 2**12  # samples worked on at once: the matrices of a chunk stay in cache
+PIECE = 2**18  # multiplications of one matrix product: above it OpenBLAS takes threads
 SCANNED = 1024  # energies at which the largest weight is looked for
 
 
@@ -123,13 +124,25 @@ def moments(mixture: Mixture, runs: Sequence[Run], temperatures: Floats, ineffic
             by_block = weights.reshape(-1, *samples.shape).transpose(1, 0, 2)
             sums[:, :, part] = (by_block @ powers.reshape(-1, *samples.shape).transpose(1, 2, 0)).transpose(1, 2, 0)
             shared = powers[:, None, :] * shares
-            coupled += (weights @ shared.reshape(-1, len(energies)).T).reshape(coupled.shape)
+            coupled += _product(weights, shared.reshape(-1, len(energies))).reshape(coupled.shape)
             squares += inefficiencies[run.rung] * np.einsum("gn,gn->g", weights, weights)
     totals = sum(np.sum(each, axis=2) for each in blocks)
     scale = 1.0 / totals[:, :1]
     for each in blocks:
         each *= scale[:, :, None]
     return Moments(totals * scale, coupled * scale[:, :, None], blocks, 1.0 / (squares * scale[:, 0] ** 2))
+
+
+def _product(first: Floats, second: Floats) -> Floats:
+    """first @ second.T, (m, n) and (k, n), in pieces too small to be spread over threads of the linear algebra library.
+
+    On a busy machine these would wait for each other many times longer than they work.
+    """
+    length = max(PIECE // (len(first) * len(second)), 1)
+    whole = first.shape[1] // length * length
+    a, b = (each[:, :whole].reshape(len(each), -1, length) for each in (first, second))
+    pieces = a.transpose(1, 0, 2) @ b.transpose(1, 2, 0)
+    return np.asarray(np.sum(pieces, axis=0) + first[:, whole:] @ second[:, whole:].T, dtype=float)
 
 
 def claimed(mixture: Mixture, run: Run) -> Floats:
