@@ -19,7 +19,7 @@ __all__ = ["Scatter", "autocovariances", "block_scatter", "coarsened", "scatter"
 
 Floats = npt.NDArray[np.float64]
 
-WINDOW_FACTOR = 2.5  # Wolff's S, exponential over integrated autocorrelation time: room for a slow mode of a tenth
+WINDOW_FACTOR = 2.0  # S, assumed ratio of the exponential to the integrated autocorrelation time
 STEADY_WINDOW = 2.0  # autocorrelation times; 86 % of an exponential lies within, at half the noise of the full window
 FIRST_LAGS = 128
 BLOCKS = 32
@@ -91,7 +91,7 @@ def scatter(repeats: Sequence[Floats], *, window: int | None = None) -> Scatter:
     """Scatter of the sum of all entries of one state's influence series, by the Gamma method.
 
     repeats : each (n_r,), independent of one another; the mean over all repeats is removed
-    window : largest lag summed; chosen from the data (S = 2.5) if None
+    window : largest lag summed; chosen from the data (S = 2) if None
     A state with fewer than four samples has infinite variance; one whose influences are all equal has none.
     Raises BadSeries if an entry is not finite.
     """
