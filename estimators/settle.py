@@ -59,17 +59,17 @@ def repeats_disagree(repeats: Sequence[Floats]) -> bool:
     repeats : as for `rank_normalised_split_rhat`
     A fixed threshold either misses or cries wolf, depending on the length: under agreement the halves' means scatter by
     2 tau / n of the variance within, and the ratio of both follows Fisher's F, with tau and its degrees of freedom from
-    the Gamma method on the same scores about each repeat's own mean. About one false alarm in 500 in all.
+    the Gamma method on the same scores about each half's own mean. About one false alarm in 500 in all.
     """
     return any(_beyond_chance(scores) for scores in _scores(repeats))
 
 
 def _beyond_chance(halves: Sequence[Floats]) -> bool:
-    wholes = [np.concatenate(pair) for pair in zip(halves[::2], halves[1::2], strict=True)]
-    noise = scatter([whole - np.mean(whole) for whole in wholes])
+    centred = [half - np.mean(half) for half in halves]
+    noise = scatter([np.concatenate(pair) for pair in zip(centred[::2], centred[1::2], strict=True)])
     if noise.variance == 0.0:
         return _spread_ratio(halves) > 1.0
-    own_means = 1.0 + (2 * noise.window + 1) * (len(wholes) - 1) / noise.samples
+    own_means = 1.0 + (2 * noise.window + 1) * (len(halves) - 1) / noise.samples
     expected = own_means * 2.0 * noise.tau * float(np.mean([1.0 / len(half) for half in halves]))
     excess = _spread_ratio(halves) ** 2 - 1.0 + len(halves) / noise.samples
     return bool(excess > expected * special.fdtri(len(halves) - 1, 2.0 / noise.relative_error**2, 1.0 - FALSE_ALARMS))

@@ -10,7 +10,7 @@ from arviz_stats.base import array_stats
 from scipy.signal import lfilter
 
 from estimators.errors import BadSeries
-from estimators.settle import rank_normalised_split_rhat, settled_start
+from estimators.settle import rank_normalised_split_rhat, repeats_disagree, settled_start
 
 
 def autoregressive(generator, n, tau):
@@ -102,3 +102,34 @@ def test_rhat_of_constants_and_of_nothing():
         rank_normalised_split_rhat([np.array([1.0, 2.0, math.nan, 1.0])])
     with pytest.raises(BadSeries, match="at least one"):
         rank_normalised_split_rhat([])
+
+
+@pytest.mark.parametrize("lengths", [(500, 500), (3000, 1200, 700), (400,) * 8])
+@pytest.mark.parametrize("story", ["normal", "squares", "heavy"])
+def test_agreeing_repeats_are_seldom_said_to_disagree(lengths, story):
+    """One in 500 of 400: Poisson with mean 0.8; five or more happen once in a thousand."""
+    generator = np.random.default_rng(27)
+    turn = {"normal": lambda x: x, "squares": np.square, "heavy": lambda x: np.exp(1.5 * x)}[story]
+    alarms = [repeats_disagree([turn(autoregressive(generator, n, 3.0)) for n in lengths]) for _ in range(400)]
+    assert sum(alarms) < 5
+
+
+@pytest.mark.parametrize("tau", [0.5, 5.0])
+def test_repeats_that_differ_beyond_their_noise_are_found(tau):
+    """Means twelve standard errors of one repeat apart, spreads by a half, or a drift by 24 within each.
+
+    The halves of two then scatter by 12^2 / 6 + 1 = 25 times what is expected; Fisher's F allows about 6.
+    """
+    generator = np.random.default_rng(28)
+    n = round(1000 * tau)
+    error = math.sqrt(2.0 * tau / n)
+    for _ in range(20):
+        first, second = (autoregressive(generator, n, tau) for _ in range(2))
+        assert repeats_disagree([first, second + 12.0 * error])
+        assert repeats_disagree([first, first[::-1], 1.5 * second])
+        assert repeats_disagree([each + np.linspace(0.0, 24.0 * error, n) for each in (first, second)])
+
+
+def test_repeats_without_scatter_disagree_if_they_differ():
+    assert repeats_disagree([np.ones(10), np.zeros(10)])
+    assert not repeats_disagree([np.ones(10), np.ones(10)])
