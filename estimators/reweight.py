@@ -16,7 +16,6 @@ from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
 from functools import cached_property
-from itertools import pairwise
 
 import numpy as np
 import numpy.typing as npt
@@ -26,14 +25,14 @@ from estimators.estimate import FEWEST_SAMPLES, Chain, Estimate, mean
 from estimators.group import Group, Rung
 from estimators.mixture import bennett, polished
 from estimators.moments import Run, block_starts
+from estimators.overlap import Gap, connected, gaps
 from sampler.series import Series
 
-__all__ = ["Gap", "Pooled", "Reweighted", "pool"]
+__all__ = ["Pooled", "Reweighted", "pool"]
 
 Floats = npt.NDArray[np.float64]
 
 START = 1024  # samples of a rung that are enough for a start
-FARTHEST = 2.0  # standard deviations of the energy between rungs: 45 % of their samples are then shared
 TOGETHER = 64  # temperatures: as many as fit into memory with their block sums
 
 
@@ -52,20 +51,6 @@ class Reweighted:
     effective_samples: float
     properties: dict[str, Estimate]
     refused: str = ""
-
-
-@dataclass(frozen=True)
-class Gap:
-    """Neighbouring temperatures that no chain of overlapping rungs spans, and the rungs that would close the gap."""
-
-    low: float
-    high: float
-    rungs: tuple[float, ...]
-
-    def __str__(self) -> str:
-        *most, last = (f"{temperature:.4g}" for temperature in self.rungs)
-        listed = f"rungs at {', '.join(most)} and {last}" if most else f"a rung at {last}"
-        return f"the rungs at {self.low:g} and {self.high:g} do not overlap, set {listed} between them"
 
 
 @dataclass(frozen=True)
@@ -148,12 +133,12 @@ def pool(series: Sequence[Series]) -> Pooled:
     for each in series:
         by_temperature[each.state.temperature].append(each)
     rungs = [_rung(*item, reference_energy) for item in sorted(by_temperature.items(), key=lambda item: item[0])]
-    labels = _connected(rungs)
+    labels = connected(rungs)
     groups = [
         _solved([rung for rung, own in zip(rungs, labels, strict=True) if own == label]) for label in np.unique(labels)
     ]
     temperatures = [rung.temperature for rung in rungs]
-    return Pooled(temperatures, _gaps(rungs, groups), groups, reference_energy)
+    return Pooled(temperatures, gaps(rungs, labels), groups, reference_energy)
 
 
 def _check(series: Sequence[Series]) -> None:
@@ -183,46 +168,6 @@ def _rung(temperature: float, repeats: list[Series], reference_energy: float) ->
     samples = sum(map(len, energies))
     effective = mean({_chain(each): values for each, values in zip(repeats, energies, strict=True)}).effective_samples
     return Rung(temperature, repeats, energies, max(samples / max(effective, 1.0), 1.0))
-
-
-def _connected(rungs: list[Rung]) -> npt.NDArray[np.int64]:
-    """(K,), equal labels for rungs that share 50 effective samples or are connected through others that do."""
-    labels = np.arange(len(rungs))
-    for distance in range(1, len(rungs)):
-        for i, j in zip(range(len(rungs)), range(distance, len(rungs)), strict=False):
-            if labels[i] != labels[j] and _shared_samples(rungs[i], rungs[j]) >= FEWEST_SAMPLES:
-                labels[labels == labels[j]] = labels[i]
-    return labels
-
-
-def _shared_samples(cold: Rung, hot: Rung) -> float:
-    """Effective samples of two rungs that either might have drawn."""
-    _, *evenness = bennett((1.0 / cold.temperature, 1.0 / hot.temperature), cold.thinned, hot.thinned)
-    pairs = zip(evenness, (cold, hot), strict=True)
-    return sum(float(np.mean(even)) * rung.samples / rung.inefficiency for even, rung in pairs)
-
-
-def _gaps(rungs: list[Rung], groups: list[Group]) -> list[Gap]:
-    return [
-        Gap(cold.temperature, hot.temperature, _bridge(cold, hot))
-        for cold, hot in pairwise(rungs)
-        if not any(
-            group.rungs[0].temperature <= cold.temperature and hot.temperature <= group.rungs[-1].temperature
-            for group in groups
-        )
-    ]
-
-
-def _bridge(cold: Rung, hot: Rung) -> tuple[float, ...]:
-    """Temperatures of rungs, even in ln T, none further from the next than two standard deviations of the energy.
-
-    At constant heat capacity C = dE/dT a rung's energy scatters by sqrt(C) T, so that sqrt(C) ln(T_hot/T_cold)
-    deviations part the two.
-    """
-    first, last = cold.temperature, hot.temperature
-    heat_capacity = max((hot.mean_energy - cold.mean_energy) / (last - first), 0.0)
-    rungs = max(math.ceil(math.sqrt(heat_capacity) * math.log(last / first) / FARTHEST) - 1, 1)
-    return tuple(first * (last / first) ** (step / (rungs + 1)) for step in range(1, rungs + 1))
 
 
 def _solved(rungs: list[Rung]) -> Group:
