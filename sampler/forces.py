@@ -10,7 +10,7 @@ from numba.extending import overload
 
 from sampler.compiled import kernel, piece
 from sampler.fluid import Fluid
-from sampler.groups import BLOCK, FAR, LANES, group, prune, scatter
+from sampler.groups import BLOCK, FAR, LANES, group, narrow, scatter
 from sampler.vector import both, count, later_lanes, load, select, smaller, splat, square_root, store, total
 
 __all__ = ["ForceShifted", "Truncated", "evaluate", "fold_images", "pair_forces", "pair_function", "place_images"]
@@ -82,7 +82,7 @@ def _meet(pair, position, force, x, y, z, other, mask, limit):  # type: ignore[n
 
 
 @kernel
-def pair_forces(pair, position, force, n_groups, inner, sums):  # type: ignore[no-untyped-def]
+def pair_forces(pair, position, force, n_groups, near, sums):  # type: ignore[no-untyped-def]
     """Forces on groups and images, overwritten; with `sums` also S12, S6, pairs and sum of distances, (4,).
 
     position, force : slot layout, images included
@@ -99,15 +99,15 @@ def pair_forces(pair, position, force, n_groups, inner, sums):  # type: ignore[n
         if position[at] == FAR:
             continue
         x, y, z = splat(position[at]), splat(position[at + 4]), splat(position[at + 8])
-        px, py, pz, i6, near, length = _meet(pair, position, force, x, y, z, own, later_lanes(lane), limit)
+        px, py, pz, i6, met, length = _meet(pair, position, force, x, y, z, own, later_lanes(lane), limit)
         if sums is not None:
-            s12, s6, pairs, distances = s12 + i6 * i6, s6 + i6, pairs + near, distances + length
-        for k in range(inner.start[slot], inner.start[slot + 1]):
-            other = np.int64(inner.offsets[k])
-            fx, fy, fz, i6, near, length = _meet(pair, position, force, x, y, z, other, everyone, limit)
+            s12, s6, pairs, distances = s12 + i6 * i6, s6 + i6, pairs + met, distances + length
+        for k in range(near.start[slot], near.start[slot + 1]):
+            other = np.int64(near.offsets[k])
+            fx, fy, fz, i6, met, length = _meet(pair, position, force, x, y, z, other, everyone, limit)
             px, py, pz = px + fx, py + fy, pz + fz
             if sums is not None:
-                s12, s6, pairs, distances = s12 + i6 * i6, s6 + i6, pairs + near, distances + length
+                s12, s6, pairs, distances = s12 + i6 * i6, s6 + i6, pairs + met, distances + length
         force[at] += total(px)
         force[at + 4] += total(py)
         force[at + 8] += total(pz)
@@ -139,10 +139,10 @@ def _evaluate(pair, where, box, reach):  # type: ignore[no-untyped-def]
     n_groups = groups.labels.size // LANES
     position = scatter(where, groups, FAR)
     place_images(position, n_groups, groups)
-    inner = prune(position, groups, reach)
+    near = narrow(position, groups, reach)
     force = np.empty_like(position)
     sums = np.empty(4)
-    pair_forces(pair, position, force, n_groups, inner, sums)
+    pair_forces(pair, position, force, n_groups, near, sums)
     fold_images(force, n_groups, groups)
     out = np.empty_like(where)
     for slot in range(groups.labels.size):

@@ -2,8 +2,8 @@
 
 Particles are sorted into square columns and along z inside a column, then cut into groups of four lanes; the last
 group of a column is filled up with padding far outside. Every pair is met once: a group meets the groups behind it
-and the images shifted by a positive lattice vector (first non-zero component positive). Two lists: `outer`, by group
-and bounding boxes, rarely made; `inner`, by particle and true distances, cut out of the outer one often.
+and the images shifted by a positive lattice vector (first non-zero component positive). Two lists: `wide`, by group
+and bounding boxes, rarely made; `near`, by particle and true distances, cut out of the wide one often.
 
 Slot layout: coordinate c of lane l in group g stands at [12 g + 4 c + l].
 """
@@ -18,7 +18,7 @@ import numpy.typing as npt
 from sampler.compiled import kernel, piece
 from sampler.vector import any_of, load, smaller, splat
 
-__all__ = ["Groups", "Inner", "group", "prune", "scatter"]
+__all__ = ["Groups", "Near", "group", "narrow", "scatter"]
 
 LANES = 4
 BLOCK = 12  # numbers in a group: three coordinates of four lanes
@@ -26,7 +26,7 @@ FAR = 1.0e8  # where padding sits; its distance to anything is beyond every cuto
 
 
 class Groups(NamedTuple):
-    """Groups and their outer list.
+    """Groups and their wide list.
 
     labels : (4 n_groups,), particle in each slot, -1 for padding
     image_source, image_shift : (n_images,), (n_images, 3), groups repeated by periodicity, counted on from n_groups
@@ -40,7 +40,7 @@ class Groups(NamedTuple):
     partners: npt.NDArray[np.int32]
 
 
-class Inner(NamedTuple):
+class Near(NamedTuple):
     """Offsets in the slot layout of the groups that slot i meets, offsets[start[i]:start[i + 1]], but its own."""
 
     start: npt.NDArray[np.int64]
@@ -174,7 +174,7 @@ def _columns_bounds(bounds, column, first_image, n_groups, n_columns, margin):  
 
 @kernel
 def _partners(bounds, column, first_image, n_columns, margin, box, reach):  # type: ignore[no-untyped-def]
-    """The outer list of every group: groups behind it and images whose bounding boxes come within reach."""
+    """The wide list of every group: groups behind it and images whose bounding boxes come within reach."""
     n_groups = column[-1]
     width = n_columns + 2 * margin
     edges = _columns_bounds(bounds, column, first_image, n_groups, n_columns, margin)
@@ -248,8 +248,8 @@ def scatter(values, groups, padding):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def prune(position, groups, reach):  # type: ignore[no-untyped-def]
-    """Cut the outer list down to the groups with a particle within reach of each particle now."""
+def narrow(position, groups, reach):  # type: ignore[no-untyped-def]
+    """Cut the wide list down to the groups with a particle within reach of each particle now."""
     square = splat(reach * reach)
     start = np.zeros(groups.labels.size + 1, np.int64)
     offsets = np.empty(LANES * groups.start[-1] + LANES, np.int32)
@@ -265,4 +265,4 @@ def prune(position, groups, reach):  # type: ignore[no-untyped-def]
                 offsets[count] = other
                 count += 1 if any_of(smaller(dx * dx + dy * dy + dz * dz, square)) else 0
         start[slot + 1] = count
-    return Inner(start, offsets)
+    return Near(start, offsets)

@@ -17,8 +17,8 @@ from sampler.store import Chain, Segment, read
 __all__ = ["advance", "assemble", "sampled_segments"]
 
 Stop = npt.NDArray[np.uint8]
-_INNER_SKIN = 0.2  # sigma; beyond the cutoff: measured best for dense fluids, harmless in gases
-_OUTER_SKIN = 0.9
+_NEAR_SKIN = 0.2  # sigma; beyond the cutoff: measured best for dense fluids, harmless in gases
+_WIDE_SKIN = 0.9
 _ROOM = 0.999  # of the box edge that cutoff and skin may span
 
 
@@ -47,7 +47,7 @@ def advance(chain: Chain, index: int, before: Segment | None, stop: Stop) -> Seg
         where,
         velocity,
         state.box,
-        (_INNER_SKIN, min(_OUTER_SKIN, _ROOM * state.box - chain.fluid.cutoff)),
+        (_NEAR_SKIN, min(_WIDE_SKIN, _ROOM * state.box - chain.fluid.cutoff)),
         substeps(scheme, time_step=protocol.time_step, friction=protocol.friction, temperature=state.temperature),
         key,
         first,

@@ -15,7 +15,7 @@ import numpy.typing as npt
 
 from sampler.compiled import kernel
 from sampler.forces import fold_images, pair_forces, place_images
-from sampler.groups import BLOCK, FAR, LANES, group, prune, scatter
+from sampler.groups import BLOCK, FAR, LANES, group, narrow, scatter
 from sampler.noise import normals
 from sampler.protocol import SUBSTEPS, Scheme
 from sampler.vector import larger, largest, load, splat, store, total
@@ -127,9 +127,9 @@ def _regroup(where, velocity, box, reach):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _forces(pair, position, force, groups, inner, sums):  # type: ignore[no-untyped-def]
+def _forces(pair, position, force, groups, near, sums):  # type: ignore[no-untyped-def]
     n_groups = groups.labels.size // LANES
-    pair_forces(pair, position, force, n_groups, inner, sums)
+    pair_forces(pair, position, force, n_groups, near, sums)
     fold_images(force, n_groups, groups)
 
 
@@ -140,25 +140,25 @@ def propagate(  # type: ignore[no-untyped-def]
     """Advance a trajectory from step `first` by n_steps, in place; returns DONE, STOPPED or DIVERGED and the step.
 
     where, velocity : (n, 3), by label
-    skins : (inner, outer), lengths beyond the cutoff at which the two lists are cut
+    skins : (near, wide), lengths beyond the cutoff at which the two lists are cut
     every, frame_every : sample at steps that these divide
     samples : (n_steps // every, 6), COLUMNS
     frames : (n_steps // frame_every or 0, n, 3), wrapped positions
     ledger : (1,), heat that the bath has taken so far
     stop : (1,), uint8; set by another thread to leave early
     """
-    inner_skin, outer_skin = skins
+    near_skin, wide_skin = skins
     last_drift = 0
     for s in range(scheme.letters.size):
         last_drift = s if scheme.letters[s] == _A else last_drift
     sums = np.empty(4)
     n_samples, n_frames = 0, 0
     _wrap(where, box)
-    groups, position, speed, noise, force = _regroup(where, velocity, box, pair.cutoff + outer_skin)
+    groups, position, speed, noise, force = _regroup(where, velocity, box, pair.cutoff + wide_skin)
     place_images(position, groups.labels.size // LANES, groups)
-    inner = prune(position, groups, pair.cutoff + inner_skin)
-    at_group, at_prune = position.copy(), position.copy()
-    _forces(pair, position, force, groups, inner, None)
+    near = narrow(position, groups, pair.cutoff + near_skin)
+    at_group, at_narrowing = position.copy(), position.copy()
+    _forces(pair, position, force, groups, near, None)
     for step in range(first + 1, first + n_steps + 1):
         recorded = step % every == 0
         for s in range(scheme.letters.size):
@@ -172,27 +172,24 @@ def propagate(  # type: ignore[no-untyped-def]
                 _drift(position, speed, duration)
                 if s != last_drift:
                     continue
-                moved = 2.0 * math.sqrt(_largest_move(position, at_prune, speed.size))
+                moved = 2.0 * math.sqrt(_largest_move(position, at_narrowing, speed.size))
                 if not moved <= box:
                     return DIVERGED, step
-                outgrown = moved > inner_skin
-                if (
-                    outgrown
-                    and inner_skin + 2.0 * math.sqrt(_largest_move(position, at_group, speed.size)) > outer_skin
-                ):
+                outgrown = moved > near_skin
+                if outgrown and near_skin + 2.0 * math.sqrt(_largest_move(position, at_group, speed.size)) > wide_skin:
                     _gather(position, groups, where)
                     _gather(speed, groups, velocity)
                     _wrap(where, box)
-                    groups, position, speed, noise, force = _regroup(where, velocity, box, pair.cutoff + outer_skin)
+                    groups, position, speed, noise, force = _regroup(where, velocity, box, pair.cutoff + wide_skin)
                     at_group = position.copy()
                 place_images(position, groups.labels.size // LANES, groups)
                 if outgrown:
-                    inner = prune(position, groups, pair.cutoff + inner_skin)
-                    at_prune = position.copy()
+                    near = narrow(position, groups, pair.cutoff + near_skin)
+                    at_narrowing = position.copy()
                 if recorded:
-                    _forces(pair, position, force, groups, inner, sums)
+                    _forces(pair, position, force, groups, near, sums)
                 else:
-                    _forces(pair, position, force, groups, inner, None)
+                    _forces(pair, position, force, groups, near, None)
         if recorded:
             for c in range(4):
                 samples[n_samples, c] = sums[c]
