@@ -154,10 +154,8 @@ def _mean(estimates: list[Estimate], series: list[Series]) -> Estimate:
 
 
 def _settled(series: Series) -> Series:
-    """Without what the energy or the virial says is not settled, as long as anything is left."""
-    start = max(settled_start(series.sampled_energy), settled_start(series.virial))
-    after = series.after(start)
-    return after if len(after) else series
+    """Without what the energy or the virial says is not settled, half of it at most."""
+    return series.after(max(settled_start(series.sampled_energy), settled_start(series.virial)))
 
 
 def _light(series: Series) -> Series:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from datetime import UTC, datetime
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -91,7 +91,7 @@ def recorded(study: Study, directory: Path, state: State) -> list[Series]:
     from sampler.ladder import chains, load
 
     wanted = study.sampling.steps // study.sampling.record_every
-    series = [_first(load(chain), wanted) for chain in chains(directory, study.fluid, [state], study.sampling)]
+    series = [load(chain).until(wanted) for chain in chains(directory, study.fluid, [state], study.sampling)]
     return [each for each in series if len(each)]
 
 
@@ -120,12 +120,3 @@ def is_complete(study: Study, directory: Path, results: Sequence[str]) -> bool:
             except DamagedSegment:
                 return False
     return toml.stat().st_mtime_ns <= oldest
-
-
-def _first(series: Series, n_samples: int) -> Series:
-    """The first samples of a series, and the frames among them."""
-    if len(series) <= n_samples:
-        return series
-    names = ("energy", "sampled_energy", "virial", "hypervirial", "kinetic", "ledger")
-    frames = series.frames[: n_samples // series.frame_stride]
-    return replace(series, frames=frames, **{name: getattr(series, name)[:n_samples] for name in names})

@@ -24,7 +24,8 @@ class Series:
     hypervirial : (n,), X = 1/9 sum r d/dr (r u')
     kinetic : (n,), K
     ledger : (n,), kinetic energy that the bath has taken out so far; K + U_dyn + ledger is conserved
-    frames : (m, particles, 3), positions inside [0, box); frame k belongs to sample (k + 1) * frame_stride - 1
+    frames : (m, particles, 3), positions inside [0, box), of every frame_stride-th sample; see `frame_samples`
+    frame_offset : samples missing of the stride that the first frame ends, less than frame_stride
     interval : time between samples
     bath : whether a thermostat acted; without one the ensemble has constant energy
     """
@@ -42,6 +43,7 @@ class Series:
     ledger: Floats
     frames: Floats
     frame_stride: int
+    frame_offset: int = 0
 
     def __len__(self) -> int:
         return len(self.energy)
@@ -56,9 +58,22 @@ class Series:
         """Kinetic degrees of freedom: 3N with a bath, 3N - 3 without (the total momentum is zero and stays so)."""
         return 3 * self.state.particles - (0 if self.bath else 3)
 
+    @property
+    def frame_samples(self) -> npt.NDArray[np.int_]:
+        """(m,), index of the sample that each frame belongs to."""
+        return self.frame_stride * np.arange(1, len(self.frames) + 1) - 1 - self.frame_offset
+
     def after(self, n_samples: int) -> Series:
-        """The series without its first n_samples, made up to whole frame strides, and without their frames."""
-        n_frames = -(-n_samples // self.frame_stride)
-        keep = slice(n_frames * self.frame_stride, None)
+        """The series without its first n_samples and their frames."""
+        n_frames, offset = divmod(self.frame_offset + n_samples, self.frame_stride)
+        return self._cut(slice(n_samples, None), slice(n_frames, None), offset)
+
+    def until(self, n_samples: int) -> Series:
+        """The first n_samples of the series, or as many as there are, and their frames."""
+        n_frames = (self.frame_offset + n_samples) // self.frame_stride
+        return self._cut(slice(n_samples), slice(n_frames), self.frame_offset)
+
+    def _cut(self, samples: slice, frames: slice, frame_offset: int) -> Series:
         names = ("energy", "sampled_energy", "virial", "hypervirial", "kinetic", "ledger")
-        return replace(self, frames=self.frames[n_frames:], **{name: getattr(self, name)[keep] for name in names})
+        kept = {name: getattr(self, name)[samples] for name in names}
+        return replace(self, frames=self.frames[frames], frame_offset=frame_offset, **kept)

@@ -10,6 +10,7 @@ from pathlib import Path
 import pytest
 from click.testing import CliRunner
 
+import canonry
 import canonry.plan
 import canonry.progress
 import sampler.protocol
@@ -166,6 +167,19 @@ def test_the_interrupt_of_a_terminal_leaves_a_directory_that_goes_on() -> None:
     run(write("study", steps=2400))
     run(write("direct", steps=2400))
     assert tables("study") == tables("direct")
+
+
+def test_a_series_that_has_not_settled_is_cut_however_rare_its_frames_are() -> None:
+    """From the lattice, without equilibration: some of the start is cut, the same as with many frames."""
+    cuts = []
+    for every in (100, 6000):
+        path = write("study", density=0.6, cutoff=1.8, temperatures=[2.0], steps=6000)
+        text = path.read_text().replace("equilibration = 200", "equilibration = 0")
+        path.write_text(text.replace("frame_every = 100", f"frame_every = {every}"))
+        cuts.append(canonry.run(path, into=f"every-{every}").equilibration[["cut", "samples"]].to_numpy().tolist())
+    assert cuts[0] == cuts[1]
+    ((cut, samples),) = cuts[1]
+    assert 0 < cut < samples == 1200
 
 
 def test_estimates_of_an_unfinished_study_say_so(sampled: Path) -> None:
