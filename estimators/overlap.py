@@ -10,35 +10,40 @@ from itertools import pairwise
 import numpy as np
 import numpy.typing as npt
 
-from estimators.estimate import FEWEST_SAMPLES
 from estimators.group import Rung
 from estimators.mixture import bennett
 
 __all__ = ["Gap", "connected", "gaps"]
 
+LINKED = 10.0  # shared effective samples: they tell a free energy to 1/sqrt(10), still small enough to be linear in
 FARTHEST = 2.0  # standard deviations of the energy between rungs: 45 % of their samples are then shared
 
 
 @dataclass(frozen=True)
 class Gap:
-    """Neighbouring temperatures that no chain of overlapping rungs spans, and the rungs that would close the gap."""
+    """Neighbouring temperatures that no chain of linked rungs spans, and the rungs that would close the gap.
+
+    rungs : none where the two lie close enough and only hold too few samples
+    """
 
     low: float
     high: float
     rungs: tuple[float, ...]
 
     def __str__(self) -> str:
+        if not self.rungs:
+            return f"the rungs at {self.low:g} and {self.high:g} hold too few samples to be joined, sample them longer"
         *most, last = (f"{temperature:.4g}" for temperature in self.rungs)
         listed = f"rungs at {', '.join(most)} and {last}" if most else f"a rung at {last}"
         return f"the rungs at {self.low:g} and {self.high:g} do not overlap, set {listed} between them"
 
 
 def connected(rungs: Sequence[Rung]) -> npt.NDArray[np.int64]:
-    """(K,), equal labels for rungs that share 50 effective samples or are connected through others that do."""
+    """(K,), equal labels for rungs that share 10 effective samples or are connected through others that do."""
     labels = np.arange(len(rungs))
     for distance in range(1, len(rungs)):
         for i, j in zip(range(len(rungs)), range(distance, len(rungs)), strict=False):
-            if labels[i] != labels[j] and _shared_samples(rungs[i], rungs[j]) >= FEWEST_SAMPLES:
+            if labels[i] != labels[j] and _shared_samples(rungs[i], rungs[j]) >= LINKED:
                 labels[labels == labels[j]] = labels[i]
     return labels
 
@@ -71,5 +76,5 @@ def _bridge(cold: Rung, hot: Rung) -> tuple[float, ...]:
     """
     first, last = cold.temperature, hot.temperature
     heat_capacity = max((hot.mean_energy - cold.mean_energy) / (last - first), 0.0)
-    rungs = max(math.ceil(math.sqrt(heat_capacity) * math.log(last / first) / FARTHEST) - 1, 1)
+    rungs = max(math.ceil(math.sqrt(heat_capacity) * math.log(last / first) / FARTHEST) - 1, 0)
     return tuple(first * (last / first) ** (step / (rungs + 1)) for step in range(1, rungs + 1))

@@ -310,23 +310,29 @@ def test_the_rungs_that_are_named_close_a_gap() -> None:
 
 
 def test_one_rung_is_named_where_one_is_enough() -> None:
-    """Gap of 2.4 deviations, which 60 samples do not span."""
+    """Gap of 3.8 deviations, which 20 samples do not span."""
     rng = np.random.default_rng(33)
-    (gap,) = pool([harmonic(rng, temperature, 60) for temperature in (1.0, 2.0)]).gaps
-    assert gap.rungs == pytest.approx([math.sqrt(2.0)])
-    assert str(gap) == "the rungs at 1 and 2 do not overlap, set a rung at 1.414 between them"
+    (gap,) = pool([harmonic(rng, temperature, 20) for temperature in (1.0, 3.0)]).gaps
+    assert gap.rungs == pytest.approx([math.sqrt(3.0)])
+    assert str(gap) == "the rungs at 1 and 3 do not overlap, set a rung at 1.732 between them"
+
+
+def test_close_rungs_with_too_few_samples_want_more_of_them() -> None:
+    rng = np.random.default_rng(33)
+    (gap,) = pool([harmonic(rng, temperature, 8) for temperature in (1.0, 1.4)]).gaps
+    assert str(gap) == "the rungs at 1 and 1.4 hold too few samples to be joined, sample them longer"
 
 
 def test_a_short_rung_between_does_not_part_its_neighbours() -> None:
     """Nor does it part the coldest from the warmest, which only the one between connects."""
     rng = np.random.default_rng(26)
-    plan = [(1.0, 500), (1.4, 10), (2.0, 500), (4.0, 500)]
+    plan = [(1.0, 500), (1.4, 4), (2.0, 500), (5.0, 500)]
     series = [harmonic(rng, temperature, samples) for temperature, samples in plan]
     pooled = pool(series)
     assert pooled.overlap[0, 2] > 0.1
-    assert pooled.overlap[2, 3] > 0.1
+    assert pooled.overlap[2, 3] > 0.05
     assert pooled.overlap[0, 3] > 0.0
-    assert pooled.overlap[0, 1] == 0.0
+    assert pooled.overlap[0, 1] < 0.01
     assert pooled.gaps == []
     assert pooled.at(1.4).effective_samples > 200.0
     assert len(pool([series[0], series[3]]).gaps) == 1
