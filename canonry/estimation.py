@@ -2,10 +2,9 @@
 
 from __future__ import annotations
 
-import operator
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, replace
-from functools import cached_property, reduce
+from functools import cached_property
 from pathlib import Path
 
 import numpy as np
@@ -13,9 +12,9 @@ import numpy as np
 from canonry.errors import UserError
 from canonry.findings import Curve, Cut, Findings
 from canonry.isochore import Isochore, assemble
+from canonry.repeats import measured_temperature, properties_alone
 from canonry.sampling import recorded
 from canonry.study import Study
-from estimators.canonical import kinetic_temperature, rung_properties
 from estimators.estimate import Estimate, mean
 from estimators.settle import settled_start
 from estimators.structure import Structure, pair_structure
@@ -40,7 +39,7 @@ class _Rung:
     @cached_property
     def temperature(self) -> Estimate | None:
         """Measured, where no bath acts."""
-        return None if self.series[0].bath else _temperature(self.series)
+        return None if self.series[0].bath else measured_temperature(self.series)
 
     @cached_property
     def state(self) -> State:
@@ -125,32 +124,10 @@ def _rung(series: list[Series]) -> _Rung:
     light = [_light(each) for each in settled]
     return _Rung(
         series=light,
-        own=_own(light, structure.contact if structure else None),
+        own=properties_alone(light, contact=structure.contact if structure else None),
         structure=structure,
         before=[_light(each) for each in series],
     )
-
-
-def _own(series: list[Series], contact: Estimate | None) -> dict[str, Estimate]:
-    """Of one rung alone. Repeats without a bath differ in their energy: each is estimated by itself, then averaged."""
-    if series[0].bath:
-        return rung_properties(series, contact=contact)
-    each = [rung_properties([one], contact=contact) for one in series]
-    found = {name: _mean([properties[name] for properties in each], series) for name in each[0]}
-    factor = found["pressure"] / (_temperature(series) * series[0].state.density)
-    return found | {"compressibility_factor": replace(factor, method=found["pressure"].method)}
-
-
-def _temperature(series: list[Series]) -> Estimate:
-    """Measured, of repeats without a bath."""
-    return _mean([kinetic_temperature([one]) for one in series], series)
-
-
-def _mean(estimates: list[Estimate], series: list[Series]) -> Estimate:
-    """Mean over repeats, each by its number of samples."""
-    samples = sum(map(len, series))
-    shares = [estimate * (len(one) / samples) for estimate, one in zip(estimates, series, strict=True)]
-    return reduce(operator.add, shares)
 
 
 def _settled(series: Series) -> Series:

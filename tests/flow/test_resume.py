@@ -11,12 +11,16 @@ import pytest
 from click.testing import CliRunner
 
 import canonry
+import canonry.estimation
 import canonry.plan
 import canonry.progress
 import sampler.protocol
+from canonry.border import Border
 from canonry.cli import main
 from canonry.directory import claim, locate
 from canonry.errors import UserError
+from canonry.numbers import with_error
+from canonry.sampling import outstanding
 
 ROOT = Path(__file__).parents[2]
 TABLES = ("properties", "curve", "structure", "verdict", "summary")
@@ -180,6 +184,18 @@ def test_a_series_that_has_not_settled_is_cut_however_rare_its_frames_are() -> N
     assert cuts[0] == cuts[1]
     ((cut, samples),) = cuts[1]
     assert 0 < cut < samples == 1200
+
+
+def test_live_error_bars_without_a_bath_are_those_of_the_tables(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Repeats differ in energy there, and are not one sample; nothing is cut off while sampling goes on."""
+    monkeypatch.setattr(canonry.estimation, "settled_start", lambda values: 0)
+    write("study", repeats=2, temperatures=[2.0])
+    Path("study.toml").write_text(Path("study.toml").read_text().replace("seed", 'scheme = "velocity-verlet"\nseed'))
+    rows = canonry.run("study.toml").properties.set_index("property")
+    study, directory = locate(Path("study"))
+    shown = canonry.progress._Tally(study, outstanding(study, directory), Border.of(study))._look(study.states[0])
+    for text, name in zip(shown, ("heat_capacity", "pressure"), strict=True):
+        assert text == with_error(rows.loc[name, "value"], rows.loc[name, "standard_error"])
 
 
 def test_estimates_of_an_unfinished_study_say_so(sampled: Path) -> None:
