@@ -5,9 +5,11 @@ error bars themselves are bounded, so that a large one passes nothing.
 """
 
 import math
+from types import SimpleNamespace
 
 import pytest
 
+import canonry
 from estimators.canonical import rung_properties
 from estimators.settle import settled_start
 from estimators.structure import pair_structure
@@ -23,7 +25,7 @@ def properties(folder, fluid, state, *, steps, **options):
     every = chains(folder, fluid, [state], protocol)
     sample([(chain, unfinished(chain)[0]) for chain in every], workers=1)
     series = [load(chain) for chain in every]
-    series = [each.after(settled_start(each.sampled_energy)) for each in series]
+    series = [each.after(max(settled_start(each.energy), settled_start(each.virial))) for each in series]
     structure = pair_structure(series)
     return rung_properties(series, contact=structure.contact), structure
 
@@ -62,14 +64,36 @@ def test_energy_and_pressure_of_published_states(
     assert_agrees(structure.pressure, pressure, pressure_error, largest_error=3 * largest[1])
 
 
-@pytest.mark.parametrize(("temperature", "density"), [(1.5, 0.6), (1.0, 0.8)])
-def test_second_derivatives_against_the_equation_of_state(tmp_path, temperature, density):
+ISOCHORES = """
+[fluid]
+potential = "lennard-jones"
+[state]
+points = [[1.5, 0.6], [1.65, 0.6], [1.0, 0.8], [1.1, 0.8]]
+particles = 256
+[sampling]
+seed = 20
+equilibration = 5000
+steps = 170000
+[compare]
+against = ["thol-2016"]
+"""
+
+
+def test_second_derivatives_of_two_isochores_against_the_equation_of_state(tmp_path):
     # Thol et al., J. Phys. Chem. Ref. Data 45, 023101 (2016), with the uncertainty that the reference states.
-    estimates, _ = properties(tmp_path, Fluid(cutoff=3.0), State(temperature, density, 256), steps=200_000)
-    reference = find("thol-2016")
-    for name, largest in (("residual_heat_capacity", 0.04), ("thermal_pressure", 0.1), ("bulk_modulus", 0.5)):
-        expected = reference.value(name, temperature=temperature, density=density)
-        assert_agrees(estimates[name], expected.value, expected.uncertainty, largest_error=largest)
+    study = tmp_path / "isochores.toml"
+    study.write_text(ISOCHORES)
+    results = canonry.run(study, into=tmp_path / "isochores")
+    rows = results.properties[results.properties["headline"]].set_index(["temperature", "density", "property"])
+    for state in ((1.5, 0.6), (1.0, 0.8)):
+        for name, largest in (("residual_heat_capacity", 0.04), ("thermal_pressure", 0.1), ("bulk_modulus", 0.7)):
+            row = rows.loc[(*state, name)]
+            assert (row["method"], row["trust"]) == ("reweighted", "ok")
+            expected = find("thol-2016").value(name, temperature=state[0], density=state[1])
+            estimate = SimpleNamespace(value=row["value"], standard_error=row["standard_error"])
+            assert_agrees(estimate, expected.value, expected.uncertainty, largest_error=largest)
+    overall = results.verdict[results.verdict["temperature"].isna()]
+    assert overall["outcome"].tolist() == ["agrees"]
 
 
 def test_bulk_modulus_of_the_shifted_fluid_needs_its_surface_term(tmp_path):
