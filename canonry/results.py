@@ -22,7 +22,7 @@ COLUMNS: Mapping[str, tuple[str, ...]] = {
         "curve": _ESTIMATES,
         "structure": "temperature,density,species_a,species_b,r,r_unit,g,standard_error,coordination",
         "verdict": "temperature,density,property,value,standard_error,reference,reference_value,reference_uncertainty,"
-        "z,outcome",
+        "z,outcome,tolerance,reason",
         "summary": "temperature,density",
         "histograms": "temperature,density,energy,probability",
         "ledger": "temperature,density,repeat,time,drift",
@@ -42,7 +42,8 @@ class Results:
     study_toml : the study as run, complete with defaults
     units : 'reduced' (energies in epsilon, times in sigma sqrt(m/epsilon)) or 'SI' (kJ/mol, ps)
     properties, curve, structure, verdict, summary : the tables of the study directory; `headline` holds booleans. A
-        verdict row without temperature and property is the overall outcome of its reference
+        verdict row without temperature and property is the overall outcome of its reference; `tolerance` is a
+        difference in the unit of the property, empty where there is none; `reason` says why a row is undecided
     histograms : probability density of the energy per particle, bin centres in rising order, one curve a rung
     ledger : change of K + U_dyn + ledger per particle since the first sample (of K + U_dyn where no bath acts)
     overlap : shared phase space of neighbouring rungs of an isochore, between 0 and 1

@@ -138,6 +138,8 @@ def _verdict(verdict: Verdict, reference: str, border: Border) -> dict[str, Any]
         "reference_uncertainty": math.nan if known is None else border.value(kind, known.uncertainty),
         "z": verdict.z,
         "outcome": verdict.outcome,
+        "tolerance": border.value(kind, verdict.limit),
+        "reason": verdict.reason,
     }
 
 
@@ -151,11 +153,20 @@ def _summary(findings: Findings, border: Border) -> pd.DataFrame:
         row, cells = rows.setdefault(finding.state, {}), _estimate(finding, border)
         if not row:
             row |= {key: cells[key] for key in ("temperature", "temperature_unit", "density", "density_unit")}
+            row |= _set_temperature(finding, border)
             row |= {"particles": finding.state.particles, "trust": "ok"}
         row["trust"] = max(row["trust"], finding.trust, key=_TRUST.index)
         name = finding.property
         row |= {name: cells["value"], f"{name}_error": cells["standard_error"], f"{name}_unit": cells["unit"]}
     return pd.DataFrame(list(rows.values()))
+
+
+def _set_temperature(finding: Finding, border: Border) -> dict[str, float]:
+    """What the study asked for, where the temperature of the state is a measured one."""
+    if finding.temperature is None:
+        return {}
+    (temperature,) = {temperature for temperature, *_ in finding.temperature.influence}
+    return {"set_temperature": border.coordinate("temperature", temperature)}
 
 
 def _structure(findings: Findings, border: Border) -> pd.DataFrame:

@@ -36,7 +36,7 @@ if TYPE_CHECKING:
     from reference import Reference
     from reference.equation_of_state import ReferenceValue
 
-__all__ = ["OUTCOMES", "Comparison", "Verdict", "against", "compare"]
+__all__ = ["OUTCOMES", "SAME", "Comparison", "Verdict", "against", "compare"]
 
 Floats = npt.NDArray[np.float64]
 
@@ -47,7 +47,8 @@ _STEP = 1e-4  # of the temperature, for a slope
 _SMALLEST_EIGENVALUE = 0.02
 """Of the correlation matrix; smaller ones are noise of its finite number of blocks, or rest on the reference's error
 being the same at all states to the last digit."""
-_SAME = {"residual_heat_capacity": "heat_capacity", "compressibility_factor": "pressure"}  # the same but for constants
+SAME = {"residual_heat_capacity": "heat_capacity", "compressibility_factor": "pressure"}
+"""Properties that say the same as another one, but for constants."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -93,11 +94,37 @@ class Verdict:
             return "undecided"
         if self.tolerance is None:
             return "agrees" if abs(self.z) <= _WIDEST else "disagrees"
-        limit = self.tolerance.value * (abs(self.known.value) if self.tolerance.relative else 1.0)
+        return self._equivalence(self.error)
+
+    @property
+    def limit(self) -> float:
+        """The tolerance as a difference; not a number where there is none."""
+        if self.tolerance is None or self.known is None:
+            return math.nan
+        return self.tolerance.value * (abs(self.known.value) if self.tolerance.relative else 1.0)
+
+    @property
+    def reason(self) -> str:
+        """Why it is undecided, in words; empty if it is not."""
+        if self.outcome != "undecided":
+            return ""
+        if self.known is None:
+            return "the state is outside the range of the reference"
+        if self.finding.trust == "no" or not math.isfinite(self.z):
+            return "the value is not to be trusted"
+        uncertainty, error = self.known.uncertainty, math.sqrt(max(self.error**2 - self.known.uncertainty**2, 0.0))
+        if 2.0 * uncertainty > self.limit or (uncertainty > error and self._equivalence(uncertainty) == "undecided"):
+            return (
+                "the uncertainty of the reference itself is too large for the tolerance, and no sampling changes that"
+            )
+        return "the error bar is too wide for the tolerance; longer sampling narrows it"
+
+    def _equivalence(self, error: float) -> str:
+        """Outcome under a tolerance, were this the combined error."""
         size = abs(self.z) * self.error
-        if size + 2.0 * self.error <= limit:
+        if size + 2.0 * error <= self.limit:
             return "agrees"
-        return "disagrees" if size - 2.0 * self.error > limit else "undecided"
+        return "disagrees" if size - 2.0 * error > self.limit else "undecided"
 
 
 @dataclass(frozen=True, eq=False)
@@ -187,7 +214,7 @@ def _slope(reference: Reference, finding: Finding, ideal_heat_capacity: float | 
 def _independent(verdicts: Sequence[Verdict]) -> list[Verdict]:
     """Without values that say the same as another one at the same state."""
     there = {(verdict.finding.state, verdict.finding.property) for verdict in verdicts}
-    return [v for v in verdicts if (v.finding.state, _SAME.get(v.finding.property)) not in there]
+    return [v for v in verdicts if (v.finding.state, SAME.get(v.finding.property)) not in there]
 
 
 def _improbable(verdicts: Sequence[Verdict]) -> bool:

@@ -20,6 +20,7 @@ _WORKS = {
     "obabo": "G. Bussi, M. Parrinello, Phys. Rev. E 75, 056707 (2007)",
     "velocity-verlet": "W. C. Swope, H. C. Andersen, P. H. Berens, K. R. Wilson, J. Chem. Phys. 76, 637 (1982)",
     "constant-energy": "J. L. Lebowitz, J. K. Percus, L. Verlet, Phys. Rev. 153, 250 (1967)",
+    "phase-volume": "E. M. Pearson, T. Halicioglu, W. A. Tiller, Phys. Rev. A 32, 3030 (1985)",
     "gamma": "U. Wolff, Comput. Phys. Commun. 156, 143 (2004); erratum 176, 383 (2007)",
     "reweighting": "M. R. Shirts, J. D. Chodera, J. Chem. Phys. 129, 124105 (2008)",
 }
@@ -59,12 +60,14 @@ class Setup:
     scheme: str
     sampling: Mapping[str, Any]
     against: Sequence[str]
+    tolerance: Mapping[str, float | str]
+    ideal_heat_capacity: float | str
 
     @classmethod
     def of(cls, results: Results) -> Setup:
         """Read the study of these results, complete with defaults; KeyError where it is not."""
         study = tomllib.loads(results.study_toml)
-        fluid, sampling = study["fluid"], study["sampling"]
+        fluid, sampling, compare = study["fluid"], study["sampling"], study.get("compare", {})
         return cls(
             potential=fluid["potential"].replace("lennard-jones", "Lennard-Jones"),
             truncation=fluid["truncation"],
@@ -72,7 +75,9 @@ class Setup:
             particles=study["state"]["particles"],
             scheme=sampling["scheme"],
             sampling=sampling,
-            against=study.get("compare", {}).get("against", []),
+            against=compare.get("against", []),
+            tolerance=compare.get("tolerance", {}),
+            ideal_heat_capacity=fluid["ideal_heat_capacity"],
         )
 
     @property
@@ -148,7 +153,11 @@ def _estimates(results: Results, setup: Setup) -> list[str]:
         "with the energy whose ensemble the forces sample."
         if setup.bath
         else "Temperature is from the mean kinetic energy, heat capacity from kinetic fluctuations at constant energy "
-        "[constant-energy]."
+        "[constant-energy], in the form exact for any number of particles [phase-volume]. Thermal pressure coefficient "
+        "and isothermal bulk modulus are from exact derivatives of the same phase volume: the fluctuations of the "
+        "virial together with those of the inverse kinetic energy give the change of pressure with energy and with "
+        "volume at constant energy, and the heat capacity turns these into changes at constant volume and at constant "
+        "temperature."
     )
     errors = (
         "Standard errors are from the integrated autocorrelation of the linearised fluctuation of each estimate, with "

@@ -102,7 +102,7 @@ def _set(number: int, where: str, results: Results) -> Iterator[str]:
     isochore = results.properties["temperature"].nunique() > 1 and not several
     yield f'<section id="set-{number}"><h2>{as_html(where.capitalize())}</h2>'
     yield tables.values(results, with_density=several)
-    yield _legend_of_marks(results)
+    yield from _notes(results)
     if isochore:
         names = [words.heat_capacity_name(results), "pressure", "residual_energy"]
         figures = [plots.curves(results, where, name) for name in names]
@@ -148,11 +148,17 @@ def _provenance(results: Results) -> Iterator[str]:
     yield "</section>"
 
 
-def _legend_of_marks(results: Results) -> str:
-    used = set(headline(results)["trust"])
-    texts = {"caution": "† with caution", "no": "‡ not to be trusted"}
-    shown = [text for trust, text in texts.items() if trust in used]
-    return f'<p class="fine">{"; ".join(shown)}: reasons above.</p>' if shown else ""
+def _notes(results: Results) -> Iterator[str]:
+    rows, notes = headline(results), []
+    texts = {"caution": "† with caution: the error bar is less certain", "no": "‡ not to be trusted"}
+    shown = [text for trust, text in texts.items() if trust in set(rows["trust"])]
+    notes += [f"{'; '.join(shown)}; reasons above."] if shown else []
+    if {"heat_capacity", "residual_heat_capacity"} <= set(rows["property"]):
+        ideal = methods.Setup.of(results).ideal_heat_capacity
+        notes.append(f"c_v holds the ideal part of {ideal} k_B a particle; c_v,res is c_v less that.")
+    if "set_temperature" in results.summary:
+        notes.append("T is the temperature measured, from the mean kinetic energy; T as set is that of the study file.")
+    yield from (f'<p class="fine">{as_html(note)}</p>' for note in notes)
 
 
 def _tabled(title: str, table: str, kind: str = "") -> Iterator[str]:

@@ -10,11 +10,12 @@ import numpy as np
 import numpy.typing as npt
 
 from canonry.results import Results
+from canonry.verdict import SAME
 
 if TYPE_CHECKING:
     import pandas as pd
 
-__all__ = ["at_densities", "floats", "grouped", "headline"]
+__all__ = ["at_densities", "floats", "grouped", "headline", "independent", "trusted"]
 
 
 def floats(rows: pd.DataFrame, column: str) -> npt.NDArray[np.float64]:
@@ -30,6 +31,21 @@ def grouped(table: pd.DataFrame, *columns: str, sort: bool = True) -> Iterator[t
 def headline(results: Results) -> pd.DataFrame:
     """The one row per property and state that counts."""
     return results.properties[results.properties["headline"].astype(bool)]
+
+
+def independent(rows: pd.DataFrame, *judged: str) -> pd.DataFrame:
+    """Without rows that say the same as another property at the same state, and bear the same entries in `judged`."""
+    columns = ["temperature", "density", "property", *judged]
+    there = set(rows[columns].itertuples(index=False, name=None))
+    others = rows[columns].assign(property=rows["property"].map(SAME))
+    return rows[np.array([row not in there for row in others.itertuples(index=False, name=None)], dtype=bool)]
+
+
+def trusted(results: Results) -> pd.DataFrame:
+    """The values compared, each with the trust in it; without the outcome of all together."""
+    state = ["temperature", "density", "property"]
+    single = results.verdict[results.verdict["temperature"].notna()]
+    return single.merge(headline(results)[[*state, "trust"]], on=state, how="left")
 
 
 def at_densities(results: Results, densities: list[float]) -> Results:

@@ -10,7 +10,7 @@ import numpy as np
 
 from canonry.notation import as_html, name_of, symbol_of, unit_text
 from canonry.numbers import plain, with_error
-from canonry.report.rows import grouped, headline
+from canonry.report.rows import grouped, headline, trusted
 from canonry.results import Results
 from canonry.units import PROPERTIES, unit_label
 
@@ -45,14 +45,12 @@ def derived(results: Results, *, with_density: bool = False) -> str:
     """Headline values of every other property; empty if there is none."""
     known = set(results.properties["property"])
     names = [name for name in PROPERTIES if name in known and name not in _FIRST]
-    if "heat_capacity" in known and "residual_heat_capacity" in known:
-        names.insert(0, "residual_heat_capacity")
     return _states(results, names, with_density) if names else ""
 
 
 def comparison(results: Results) -> list[str]:
     """One table a reference and property: each value beside its reference, with a strip that shows the deviation."""
-    rows = results.verdict[results.verdict["temperature"].notna()]
+    rows = trusted(results)
     several = rows["density"].nunique() > 1
     found = []
     for (reference, name), own in grouped(rows, "reference", "property", sort=False):
@@ -78,12 +76,23 @@ def sampling(results: Results) -> str:
 
 def _states(results: Results, names: Sequence[str], with_density: bool) -> str:
     heads = [f"{symbol_of(name)}|{_unit(results, name)}" for name in names]
+    asked = _set_temperatures(results)
     body = []
     for (density, temperature), state in grouped(headline(results), "density", "temperature"):
         cells = [plain(temperature), *([plain(density)] if with_density else [])]
+        cells += [plain(asked[density, temperature])] if asked else []
         found = {row["property"]: row for _, row in state.iterrows()}
         body.append(_row([*cells, *(_estimate(found[name]) if name in found else "" for name in names)]))
-    return _table([*_state_heads(results, with_density), *heads], body)
+    measured = [f"T as set|{_unit(results, 'temperature')}"] if asked else []
+    return _table([*_state_heads(results, with_density), *measured, *heads], body)
+
+
+def _set_temperatures(results: Results) -> dict[tuple[float, float], float]:
+    """By density and measured temperature; empty where a bath holds the temperature set."""
+    if "set_temperature" not in results.summary:
+        return {}
+    columns = results.summary[["density", "temperature", "set_temperature"]]
+    return {(density, measured): asked for density, measured, asked in columns.itertuples(index=False, name=None)}
 
 
 def _state_heads(results: Results, with_density: bool) -> list[str]:
@@ -99,7 +108,7 @@ def _compared(row: pd.Series, several: bool) -> list[str]:
     return [
         plain(row["temperature"]),
         *([plain(row["density"])] if several else []),
-        _typeset(with_error(row["value"], row["standard_error"])),
+        _estimate(row),
         _typeset(with_error(row["reference_value"], row["reference_uncertainty"])),
         _deviation(float(row["z"])),
         _OUTCOMES[row["outcome"]],

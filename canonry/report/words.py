@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import re
 from collections.abc import Iterator
 from typing import TYPE_CHECKING
 
@@ -11,7 +12,7 @@ import numpy as np
 from canonry.notation import name_of, symbol_of, unit_text
 from canonry.numbers import plain, with_error
 from canonry.report.methods import Setup
-from canonry.report.rows import grouped, headline
+from canonry.report.rows import grouped, headline, independent, trusted
 from canonry.results import Results
 from canonry.units import unit_label
 
@@ -21,6 +22,8 @@ if TYPE_CHECKING:
 __all__ = ["agreement", "answers", "doubts", "heat_capacity_name", "outcome", "question", "states_in_words"]
 
 _ANSWERS_SHOWN = 4
+_CAUSES_SHOWN = 3  # of each kind of doubt
+_COUNT = re.compile(r"\d+(?= effective samples)")
 
 
 def heat_capacity_name(results: Results) -> str:
@@ -39,7 +42,7 @@ def question(results: Results) -> str:
     """What was asked."""
     setup = Setup.of(results)
     heat, fluid = name_of(heat_capacity_name(results)), f"{setup.potential} fluid, {setup.cut}"
-    against = f", held against {_listed(list(setup.against))}" if setup.against else ""
+    against = f", held against {_listed(list(setup.against))}{_tolerances(results, setup)}" if setup.against else ""
     return (
         f"Asked: {heat} and pressure of the {fluid}; {setup.particles} particles, {states_in_words(results)}{against}."
     )
@@ -74,18 +77,28 @@ def agreement(results: Results) -> list[str]:
     """One sentence a reference: outcome, how many values agree, the largest deviation in combined standard errors."""
     if results.verdict.empty:
         return ["No comparison: no reference was asked for, or none speaks for this fluid at these states."]
-    return [_agreement(results, name, rows) for (name,), rows in grouped(results.verdict, "reference", sort=False)]
+    compared = trusted(results)
+    careful = " Values marked † count like any other, though with caution: their error bars, and with them their "
+    careful += "deviations, are less certain than those of the rest."
+    return [
+        " ".join([_agreement(results, name, rows), *_undecided(results, rows)])
+        + (careful if (compared[compared["reference"] == name]["trust"] == "caution").any() else "")
+        for (name,), rows in grouped(results.verdict, "reference", sort=False)
+    ]
 
 
 def doubts(results: Results) -> list[str]:
-    """What should not be trusted, worst first: headline values with their reason, refused stretches of the curve."""
-    found, values = [], headline(results)
+    """What should not be trusted, worst first: headline values by cause, refused stretches of the curve; a few each."""
+    found, values = [], independent(headline(results), "trust")
     for trust, words in (("no", "Do not use"), ("caution", "With caution")):
         rows = values[values["trust"] == trust].fillna({"reason": "none given"})
-        for (reason,), group in grouped(rows, "reason", sort=False):
-            names = _listed(list(dict.fromkeys(name_of(name) for name in group["property"])))
-            found.append(f"{words}: {names} at {_where(results, group)}. Reason: {_sentence(reason)}")
-    return [*found, *_refusals(results)]
+        causes = rows.assign(cause=rows["reason"].str.replace(_COUNT, "#", regex=True))
+        groups = sorted((group for _, group in grouped(causes, "cause", sort=False)), key=len, reverse=True)
+        told = [
+            f"{words}: {_places(results, group)}. Reason: {_sentence(_merged(group['reason']))}" for group in groups
+        ]
+        found += _few(told, f"{words}, for other reasons: {sum(map(len, groups[_CAUSES_SHOWN:]))} more values")
+    return [*found, *_few([*_refusals(results)], "More stretches of the curve are without a value")]
 
 
 def _outcome_of(rows: pd.DataFrame) -> str:
@@ -108,11 +121,13 @@ def _answer(results: Results, density: float, rows: pd.DataFrame, names: tuple[s
 
 def _agreement(results: Results, name: str, rows: pd.DataFrame) -> str:
     single = rows[rows["temperature"].notna()]
-    counts = single["outcome"].value_counts()
+    once = independent(single, "outcome")
+    counts = once["outcome"].value_counts()
     tally = ", ".join(f"{counts[word]} {word}" for word in ("agrees", "undecided", "disagrees") if word in counts)
     tally = tally.replace("agrees", "agree").replace("disagrees", "disagree")
-    text = f"Against {name}: {_outcome_of(rows)}. Of {_counted(len(single), 'value')}, {tally}."
-    measured = single[np.isfinite(single["z"])]
+    counted = "independent value" if len(once) < len(single) else "value"
+    text = f"Against {name}: {_outcome_of(rows)}. Of {_counted(len(once), counted)}, {tally}."
+    measured = once[np.isfinite(once["z"])]
     if measured.empty:
         return text
     worst = measured.loc[measured["z"].abs().idxmax()]
@@ -133,11 +148,53 @@ def _refusals(results: Results) -> Iterator[str]:
         for start, end in zip(edges[::2], edges[1::2], strict=True):
             reason = str(table["reason"].iloc[start])
             whole = refused.all()
-            span = "" if whole else f" between T = {plain(temperatures[start])} and {plain(temperatures[end - 1])}"
+            ends = f"{plain(temperatures[start])} and {plain(temperatures[end - 1])} {_unit(results, 'temperature')}"
+            span = "" if whole else f" between T = {ends}"
             yield (
                 f"No reweighted value at density {plain(density)} {_unit(results, 'density')}{span}. "
                 f"Reason: {_sentence(reason)}"
             )
+
+
+def _tolerances(results: Results, setup: Setup) -> str:
+    """Tolerances asked for, those of absolute size in the units of the report."""
+    said = []
+    for name, tolerance in setup.tolerance.items():
+        sizes = results.verdict.loc[results.verdict["property"] == name, "tolerance"].dropna()
+        if isinstance(tolerance, str):
+            said.append(f"{tolerance} for {name_of(name)}")
+        elif len(sizes):
+            said.append(f"{plain(sizes.iloc[0])} {_unit(results, name)} for {name_of(name)}".replace("  ", " "))
+    rule = "; such a value agrees only where the 95 % interval of its difference lies inside the tolerance"
+    return f" with a tolerance of {_listed(said)}{rule}" if said else ""
+
+
+def _undecided(results: Results, rows: pd.DataFrame) -> Iterator[str]:
+    """Why values of one reference are undecided, one sentence a cause."""
+    open_rows = independent(rows[(rows["outcome"] == "undecided") & rows["temperature"].notna()])
+    for (reason,), group in grouped(open_rows[open_rows["reason"] != ""], "reason", sort=False):
+        yield f"Undecided: {_places(results, group)}. Reason: {_sentence(reason)}"
+
+
+def _places(results: Results, rows: pd.DataFrame) -> str:
+    """Properties with the states they are at, those at the same states together."""
+    at: dict[str, list[str]] = {}
+    for (name,), own in grouped(rows, "property", sort=False):
+        at.setdefault(_where(results, own), []).append(name_of(name))
+    return "; ".join(f"{_listed(names)} at {where}" for where, names in at.items())
+
+
+def _merged(reasons: pd.Series) -> str:
+    """Reasons that differ only in a count of effective samples as one, with the range of it."""
+    counts = sorted({int(count) for reason in reasons for count in _COUNT.findall(reason)})
+    span = _between([*map(float, counts)]) if counts else ""
+    return _COUNT.sub(span, str(reasons.iloc[0]))
+
+
+def _few(sentences: list[str], more: str) -> list[str]:
+    """The first of them, and a word on the rest."""
+    rest = len(sentences) - _CAUSES_SHOWN
+    return [*sentences[:_CAUSES_SHOWN], *([f"{more}; the tables beside this page list them."] if rest > 0 else [])]
 
 
 def _where(results: Results, rows: pd.DataFrame) -> str:

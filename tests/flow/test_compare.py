@@ -7,9 +7,12 @@ import numpy as np
 import pytest
 from scipy.signal import lfilter
 
+from canonry.border import Border
 from canonry.errors import UserError
 from canonry.findings import Finding
 from canonry.study import Study, Tolerance, load
+from canonry.tables import verdict_table
+from canonry.units import Scale
 from canonry.verdict import Verdict, against, compare
 from estimators.estimate import Estimate, mean
 from reference import find
@@ -114,6 +117,36 @@ def test_a_state_outside_the_range_stays_undecided(tmp_path: Path) -> None:
     (only,) = comparison.verdicts
     assert (only.known, only.outcome, comparison.outcome) == (None, "undecided", "undecided")
     assert np.isnan(only.z)
+
+
+@pytest.mark.parametrize(
+    ("difference", "error", "uncertainty", "cause"),
+    [
+        (0.0, 0.3, 0.4, ""),
+        (9.0, 0.3, 0.4, ""),
+        (0.0, 1.5, 0.4, "the error bar is too wide for the tolerance; longer sampling"),
+        (1.6, 0.4, 0.1, "the error bar is too wide for the tolerance; longer sampling"),
+        (0.0, 0.1, 1.1, "uncertainty of the reference itself is too large for the tolerance, and no sampling"),
+        (0.0, 1.5, 1.1, "uncertainty of the reference itself is too large for the tolerance, and no sampling"),
+        (1.6, 0.1, 0.4, "uncertainty of the reference itself is too large for the tolerance, and no sampling"),
+    ],
+)
+def test_undecided_under_a_tolerance_has_its_cause(
+    difference: float, error: float, uncertainty: float, cause: str
+) -> None:
+    """Tolerance 2: twice the uncertainty alone, or the difference with it, may reach past that or not."""
+    found = verdict(difference, error, uncertainty, tolerance=Tolerance(0.2, relative=True))
+    assert found.limit == pytest.approx(2.0)
+    assert (found.outcome == "undecided") is bool(cause)
+    assert cause in found.reason
+    assert bool(found.reason) is bool(cause)
+
+
+def test_undecided_without_trust_or_reference_has_its_cause() -> None:
+    assert verdict(0.0, trust="no").reason == "the value is not to be trusted"
+    silent = Verdict(finding(estimate(10.0, 0.3)), None, Tolerance(1.0, relative=False))
+    assert silent.reason == "the state is outside the range of the reference"
+    assert np.isnan(silent.limit)
 
 
 def test_only_headlines_are_compared(tmp_path: Path) -> None:
@@ -241,3 +274,15 @@ def test_a_reference_of_another_model_is_refused(
         against(name, study.fluid)
     with pytest.raises(UserError, match=needed):
         compare([finding(estimate(0.0, 1.0))], find(name), study)
+
+
+def test_the_table_tells_tolerance_and_cause_in_its_units(tmp_path: Path) -> None:
+    """Argon's pressure unit is epsilon/sigma^3 = 41.9 MPa; what was decided has no cause."""
+    scale = Scale(epsilon=119.8 * 1.380649e-23, sigma=3.405e-10, mass=6.63e-26)
+    found = [finding(estimate(0.0, 1.0)), finding(estimate(0.0, 0.01), state=STATES[1])]
+    comparison = compare(found, Known(), asked(tmp_path), tolerance={"pressure": Tolerance(0.5, relative=False)})
+    wide, close, overall = verdict_table([comparison], Border("SI", scale)).to_dict("records")
+    assert wide["tolerance"] == close["tolerance"] == pytest.approx(0.5 * 41.9, rel=1e-3)
+    assert "too wide for the tolerance" in wide["reason"]
+    assert close["reason"] == ""
+    assert overall["outcome"] == "undecided"

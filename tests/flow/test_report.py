@@ -22,6 +22,7 @@ STUDY = """title = "Isochore"
 potential = "lennard-jones"
 cutoff = 3.0
 truncation = "{truncation}"
+ideal_heat_capacity = 1.5
 
 [state]
 density = 0.8
@@ -130,7 +131,7 @@ def invented(densities=(0.8,), rungs=6, units="reduced", samples=300, scheme="ba
             verdict.append(
                 {key: row[key] for key in ("temperature", "density", "property", "value", "standard_error")}
                 | {"reference": "thol-2016", "reference_value": truth, "reference_uncertainty": 0.002, "z": z}
-                | {"outcome": "agrees" if abs(z) < 2.0 else "undecided"}
+                | {"outcome": "agrees" if abs(z) < 2.0 else "undecided", "tolerance": np.nan, "reason": ""}
             )
     repeats = [(t, rho, repeat) for t, rho in states for repeat in (1, 2)]
     times = np.linspace(0.0, 1000.0, samples)
@@ -348,7 +349,8 @@ def test_refused_stretch_breaks_the_curve_and_is_named():
     assert line.get("d").count("M") == 2
     assert len([mark for mark in figure if mark.get("class") == "span"]) == 2, "the stretch and its legend"
     assert doubts(cut) == [
-        "No reweighted value at density 0.8 σ⁻³ between T = 1.2 and 1.28. Reason: 31 effective samples, 50 are needed."
+        "No reweighted value at density 0.8 σ⁻³ between T = 1.2 and 1.28 ε/k_B. "
+        "Reason: 31 effective samples, 50 are needed."
     ]
 
 
@@ -489,3 +491,118 @@ def test_provenance_holds_the_whole_study():
 def test_table_without_a_column_is_refused():
     with pytest.raises(ValueError, match="table 'overlap' lacks the columns overlap"):
         replace(invented(), overlap=empty("overlap").drop(columns="overlap"))
+
+
+def doubted(results, *cases):
+    """The results with trust and reason of the headlines of a property at one temperature, or at all."""
+    rows = results.properties.copy()
+    for name, temperature, trust, reason in cases:
+        own = (rows["property"] == name) & rows["headline"]
+        rows.loc[own & (rows["temperature"] == temperature if temperature else True), ["trust", "reason"]] = [
+            trust,
+            reason,
+        ]
+    return replace(results, properties=rows)
+
+
+def test_doubts_of_one_cause_are_told_once():
+    results = invented()
+    temperatures = sorted(results.properties["temperature"].unique())
+    cases = [
+        (name, temperature, "caution", f"only about {40 + 3 * k} effective samples")
+        for name in ("heat_capacity", "residual_heat_capacity", "bulk_modulus")
+        for k, temperature in enumerate(temperatures)
+    ]
+    last = ("thermal_pressure", temperatures[-1], "caution", "only about 61 effective samples")
+    (told,) = doubts(doubted(results, *cases, last))
+    assert told == (
+        "With caution: heat capacity and isothermal bulk modulus at 6 states, T = 0.9 to 1.5 ε/k_B; thermal pressure "
+        "coefficient at T = 1.5 ε/k_B, density 0.8 σ⁻³. Reason: only about 40 to 61 effective samples."
+    )
+
+
+def test_doubts_of_many_causes_stay_a_handful():
+    results = invented()
+    temperatures = sorted(results.properties["temperature"].unique())
+    cases = [
+        ("pressure", temperature, trust, f"cause {k}")
+        for k, temperature in enumerate(temperatures)
+        for trust in [("no", "caution")[k % 2]]
+    ]
+    curve = results.curve.copy()
+    refused = (curve["temperature"] * 100).round().astype(int) % 4 == 0
+    curve.loc[refused, ["value", "trust", "reason"]] = [np.nan, "no", "too few samples"]
+    told = doubts(replace(doubted(results, *cases), curve=curve))
+    assert [each.split(":")[0] for each in told[:6]] == ["Do not use"] * 3 + ["With caution"] * 3
+    assert len(told) == 3 + 3 + 4
+    assert told[-1] == "More stretches of the curve are without a value; the tables beside this page list them."
+    more = doubts(doubted(results, *cases, *((name, 0.9, "no", name) for name in ("sound_speed", "residual_energy"))))
+    assert more[3].startswith("Do not use, for other reasons: 2 more values;")
+
+
+def with_verdict(results, where, **cells):
+    verdict = results.verdict.copy()
+    verdict.loc[where(verdict), list(cells)] = list(cells.values())
+    return replace(results, verdict=verdict)
+
+
+def test_tolerances_and_causes_of_what_is_undecided_are_told():
+    results = invented()
+    study = f'{results.study_toml}tolerance = {{ pressure = 0.03, heat_capacity = "2 %" }}\n'
+    results = with_verdict(replace(results, study_toml=study), lambda v: v["property"] == "pressure", tolerance=0.5)
+    wide = {"outcome": "undecided", "reason": "the error bar is too wide"}
+    silent = {"outcome": "undecided", "reason": "the state is outside the range"}
+    results = with_verdict(results, lambda v: v["property"] == "heat_capacity", **wide)
+    results = with_verdict(results, lambda v: (v["property"] == "pressure") & (v["temperature"] == 1.5), **silent)
+    text = Page(html(results)).text.replace("σ 3", "σ³").replace("k B", "k_B")
+    assert "with a tolerance of 0.5 ε/σ³ for pressure and 2 % for heat capacity; such a value agrees only" in text
+    assert "Undecided: heat capacity at 6 states, T = 0.9 to 1.5 ε/k_B . Reason: the error bar is too wide." in text
+    assert "Undecided: pressure at T = 1.5 ε/k_B , density" in text
+    assert "Reason: the state is outside the range." in text
+    assert "Undecided" not in Page(html(invented())).text
+
+
+def test_values_that_say_the_same_are_counted_once():
+    results = invented()
+    twin = results.verdict[results.verdict["property"] == "heat_capacity"].assign(property="residual_heat_capacity")
+    both = replace(results, verdict=pd.concat([results.verdict, twin], ignore_index=True))
+    assert "Of 18 independent values, 18 agree." in Page(html(both)).text
+    differing = with_verdict(both, lambda v: v["property"] == "residual_heat_capacity", outcome="disagrees")
+    assert "Of 24 values, 18 agree, 6 disagree." in Page(html(differing)).text
+
+
+def test_residual_heat_capacity_is_not_tabled_beside_the_full_one():
+    results = invented()
+    page = Page(html(results))
+    assert not re.search("Further properties[^|]*c v,res", page.text.split("Comparison")[0])
+    assert "c v holds the ideal part of 1.5 k B a particle; c v,res is c v less that." in page.text
+    assert "Further properties" in page.text, "the speed of sound"
+    rows = results.properties[results.properties["property"] != "sound_speed"]
+    assert "Further properties" not in Page(html(replace(results, properties=rows))).text
+
+
+def test_compared_values_with_caution_are_marked_and_explained():
+    told = "Values marked † count like any other, though with caution"
+    results = doubted(invented(), ("pressure", 0.9, "caution", "only about 60 effective samples"))
+    page = Page(html(results))
+    row = results.verdict[(results.verdict["property"] == "pressure") & (results.verdict["temperature"] == 0.9)]
+    assert page.text.count(f"{row['value'].iloc[0]:.3f}(11)†") == 2, "table of values, comparison"
+    assert told in page.text
+    assert told not in Page(html(invented())).text
+
+
+def test_temperatures_set_stand_beside_those_measured():
+    results = invented(scheme="velocity-verlet")
+    states = results.properties[["temperature", "density"]].drop_duplicates()
+    assert "T as set" not in Page(html(results)).text
+    page = Page(html(replace(results, summary=states.assign(set_temperature=states["temperature"] + 0.123))))
+    assert "T as set" in page.text
+    for temperature in states["temperature"]:
+        assert f"{temperature:g} {temperature + 0.123:.6g} " in page.text
+
+
+def test_methods_say_how_constant_energy_gives_its_derivatives():
+    results = invented(scheme="velocity-verlet")
+    assert "Thermal pressure coefficient and isothermal bulk modulus are from exact derivatives" in paragraph(results)
+    assert any("Pearson" in work for work in citations(results))
+    assert "phase volume" not in paragraph(invented())
