@@ -272,8 +272,10 @@ def _working() -> Iterator[Any]:
 
 
 def _tell_caveats(results: Results) -> None:
+    from canonry.terminal import wrapped
+
     for caveat in results.caveats:
-        click.echo(f"Caveat: {caveat}", err=True)
+        click.echo(wrapped(f"Caveat: {caveat}"), err=True)
 
 
 def _close(directory: Path) -> None:

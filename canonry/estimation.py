@@ -2,17 +2,20 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterable, Iterator
 from dataclasses import dataclass, replace
 from functools import cached_property
+from itertools import chain
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 import numpy as np
 
 from canonry.errors import UserError
-from canonry.findings import Curve, Cut, Findings
+from canonry.findings import Curve, Cut, Finding, Findings
 from canonry.isochore import Isochore, assemble
 from canonry.repeats import measured_temperature, properties_alone
+from canonry.risks import doubt, guide
 from canonry.sampling import recorded
 from canonry.study import Study
 from estimators.estimate import Estimate, mean
@@ -20,6 +23,9 @@ from estimators.settle import settled_start
 from estimators.structure import Structure, pair_structure
 from sampler.fluid import State
 from sampler.series import Series
+
+if TYPE_CHECKING:
+    from reference import Reference
 
 __all__ = ["findings"]
 
@@ -57,8 +63,8 @@ class _Rung:
     def cuts(self) -> Iterator[Cut]:
         for before, after in zip(self.before, self.series, strict=True):
             state = before.state
-            chain = (state.temperature, state.density, state.particles, before.repeat)
-            effective = mean({chain: after.energy}).effective_samples
+            key = (state.temperature, state.density, state.particles, before.repeat)
+            effective = mean({key: after.energy}).effective_samples
             yield Cut(self.state, before.repeat, len(before) - len(after), len(before), effective)
 
     @property
@@ -89,10 +95,11 @@ def findings(study: Study, directory: Path, *, watch: Callable[[str], None] | No
     if not rungs:
         raise UserError(f"{directory}: there are no samples yet; what is needed is `canonry run` or `canonry sample`")
     tell("reweighting between the rungs")
+    reference = guide(study.fluid)
     isochores = [_isochore(study, [rung for rung in rungs if rung.state.density == rho]) for rho in _densities(rungs)]
     return Findings(
-        properties=tuple(finding for isochore in isochores for finding in isochore.properties()),
-        curve=tuple(finding for isochore in isochores for finding in isochore.curve()),
+        properties=tuple(_doubted((each.properties() for each in isochores), reference)),
+        curve=tuple(_doubted((each.curve() for each in isochores), reference)),
         structures={rung.state: rung.structure for rung in rungs if rung.structure is not None},
         cuts=tuple(cut for rung in rungs for cut in rung.cuts),
         overlaps=tuple(overlap for isochore in isochores for overlap in isochore.overlaps()),
@@ -100,6 +107,11 @@ def findings(study: Study, directory: Path, *, watch: Callable[[str], None] | No
         ledgers=tuple(ledger for rung in rungs for ledger in rung.ledgers),
         unfinished=tuple(unfinished),
     )
+
+
+def _doubted(findings: Iterable[Iterable[Finding]], reference: Reference) -> Iterator[Finding]:
+    """With caution where the state may be no stable bulk phase."""
+    return (each.doubted(doubt(each.state, reference)) for each in chain.from_iterable(findings))
 
 
 def _densities(rungs: list[_Rung]) -> list[float]:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import numpy.typing as npt
@@ -34,6 +34,13 @@ class Finding:
     reason: str
     headline: bool
     temperature: Estimate | None = None
+
+    def doubted(self, reason: str) -> Finding:
+        """The same with caution at most, for one more reason; itself where the reason is empty."""
+        if not reason:
+            return self
+        trust = "caution" if self.trust == "ok" else self.trust
+        return replace(self, trust=trust, reason="; ".join(filter(None, (self.reason, reason))))
 
 
 @dataclass(frozen=True)

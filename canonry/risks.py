@@ -2,17 +2,21 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Collection, Iterator, Sequence
+from functools import cache
+from itertools import chain
 from typing import TYPE_CHECKING
 
 from canonry.border import Border
+from canonry.numbers import plain
 from canonry.study import Study
 
 if TYPE_CHECKING:
     from reference import Reference
+    from reference.coexistence import Coexistence
     from sampler.fluid import Fluid, State
 
-__all__ = ["guide", "risks"]
+__all__ = ["doubt", "guide", "risks"]
 
 _LIQUID = 0.5  # sigma^-3
 _CUTOFFS = (5.0, 3.0)  # sigma, below and above that density
@@ -26,36 +30,77 @@ def guide(fluid: Fluid) -> Reference:
     return next((each for each in references if each.same_model(fluid.truncation, fluid.cutoff)), references[0])
 
 
+def doubt(state: State, reference: Reference) -> str:
+    """Why a sample at a state may be no stable bulk phase, in a few words; empty where nothing says so."""
+    if _coexisting(state, reference) is not None:
+        return "liquid and vapour coexist here"
+    return "" if _freezing(state) is None else "beyond freezing"
+
+
 def risks(study: Study, border: Border) -> list[str]:
-    """One sentence each: two phases, freezing, a cutoff too short for its correction."""
-    return [*_phases(study.states, guide(study.fluid), border), *_cutoffs(study, border)]
+    """One sentence for each density: two phases, freezing, a cutoff too short for its correction."""
+    reference = guide(study.fluid)
+    phases = (_phases(states, reference, border) for states in study.isochores.values())
+    return [*chain.from_iterable(phases), *_cutoffs(study, border)]
 
 
 def _phases(states: Sequence[State], reference: Reference, border: Border) -> Iterator[str]:
+    """Of one density; densities of coexistence and freezing are those at the coldest of the states concerned."""
+    mixed = {state: pair for state in states if (pair := _coexisting(state, reference)) is not None}
+    if mixed:
+        pair = mixed[min(mixed)]
+        yield (
+            f"{_named([*mixed], border)}: liquid and vapour coexist here, at densities "
+            f"{border.text('density', pair.liquid)} and {border.text('density', pair.vapour)}{_coldest(mixed)} "
+            f"({reference.name}); the sample is no bulk phase, and its values depend on its size."
+        )
+    frozen = {state: density for state in states if (density := _freezing(state)) is not None}
+    if frozen:
+        yield (
+            f"{_named([*frozen], border)}: the liquid freezes from density "
+            f"{border.text('density', frozen[min(frozen)])} on{_coldest(frozen)} (M. A. van der Hoef, J. Chem. Phys. "
+            "113, 8142 (2000)); the sample may be an undercooled liquid, or crystallise."
+        )
+
+
+def _named(states: Sequence[State], border: Border) -> str:
+    """States of one density, as `Border.state` names one of them."""
+    *others, last = states
+    temperatures = (plain(border.coordinate("temperature", state.temperature)) for state in others)
+    return border.state(last).replace("T = ", f"T = {''.join(f'{each}, ' for each in temperatures)}", 1)
+
+
+def _coldest(states: Collection[State]) -> str:
+    return " at the lowest of these temperatures" if len(states) > 1 else ""
+
+
+def _coexisting(state: State, reference: Reference) -> Coexistence | None:
+    """Liquid and vapour between whose densities a state lies; None where it does not, or nothing is known."""
+    pair = _coexistence(reference.name, state.temperature)
+    return pair if pair is not None and pair.vapour < state.density < pair.liquid else None
+
+
+@cache
+def _coexistence(reference: str, temperature: float) -> Coexistence | None:
+    from reference import find
+    from reference.errors import OutOfRange
+
+    try:
+        return find(reference).coexistence(temperature)
+    except OutOfRange:
+        return None
+
+
+def _freezing(state: State) -> float | None:
+    """Density from which the liquid freezes, where a state lies beyond it; None where not, or nothing is known."""
     from reference.errors import OutOfRange
     from reference.freezing import freezing_density
 
-    for state in states:
-        try:
-            if reference.phase(state.temperature, state.density) == "two-phase":
-                pair = reference.coexistence(state.temperature)
-                yield (
-                    f"{border.state(state)}: liquid and vapour coexist here, at densities "
-                    f"{border.text('density', pair.liquid)} and {border.text('density', pair.vapour)} "
-                    f"({reference.name}); the sample is no bulk phase, and its values depend on its size."
-                )
-        except OutOfRange:
-            pass
-        try:
-            freezing = freezing_density(state.temperature)
-        except OutOfRange:
-            continue
-        if state.density > freezing:
-            yield (
-                f"{border.state(state)}: the liquid freezes from density {border.text('density', freezing)} on (M. A. "
-                "van der Hoef, J. Chem. Phys. 113, 8142 (2000)); the sample may be an undercooled liquid, or "
-                "crystallise."
-            )
+    try:
+        freezing = freezing_density(state.temperature)
+    except OutOfRange:
+        return None
+    return freezing if state.density > freezing else None
 
 
 def _cutoffs(study: Study, border: Border) -> Iterator[str]:

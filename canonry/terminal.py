@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import csv
 import math
+import shutil
+import textwrap
 from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import Any
@@ -16,7 +18,7 @@ from canonry.provenance import duration
 from canonry.study import Study
 from canonry.units import UNITS, Kind
 
-__all__ = ["aligned", "closing_text", "plan_text", "verdict_text"]
+__all__ = ["aligned", "closing_text", "plan_text", "verdict_text", "wrapped"]
 
 _MARKS = {"ok": "", "caution": "*", "no": "!", "": ""}
 _LEGENDS = {"caution": "* with caution", "no": "! not to be trusted"}
@@ -29,6 +31,12 @@ def aligned(rows: Sequence[Sequence[str]]) -> str:
     """Rows of equal length as right-aligned columns, two spaces apart."""
     widths = [max(map(len, column)) for column in zip(*rows, strict=True)]
     return "\n".join("  ".join(map(str.rjust, row, widths)).rstrip() for row in rows)
+
+
+def wrapped(sentence: str) -> str:
+    """A sentence in lines no wider than the terminal, 80 characters where there is none."""
+    width = shutil.get_terminal_size((80, 24)).columns
+    return textwrap.fill(sentence, width, subsequent_indent="  ", break_long_words=False, break_on_hyphens=False)
 
 
 def plan_text(study: Study, plan: Plan, border: Border) -> str:
@@ -61,7 +69,7 @@ def plan_text(study: Study, plan: Plan, border: Border) -> str:
         f"{plan.workers} worker{'' if plan.workers == 1 else 's'} on this machine.",
         f"Overlaps are predicted from the heat capacity of {plan.guide}.",
     ]
-    return "\n".join([*lines, *(f"Warning: {warning}" for warning in plan.warnings)])
+    return "\n".join([*lines, *(wrapped(f"Warning: {warning}") for warning in plan.warnings)])
 
 
 def _rows_of(directory: Path, table: str) -> list[Row]:

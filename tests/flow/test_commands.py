@@ -150,8 +150,26 @@ def test_check_shows_the_plan_and_samples_nothing() -> None:
     assert "32 particles, cutoff 3.4 σ, corrected" in result.stdout
     assert "1000 + 20000 steps" in result.stdout
     assert "2.02e+06 particle-steps" in result.stdout  # 3 x 32 x 21000
-    assert "cutoff of 5 σ at least, not 3.4 σ" in result.stdout
+    assert "cutoff of 5 σ at least, not 3.4 σ" in " ".join(result.stdout.split())
     assert sorted(Path().iterdir()) == [path]
+
+
+def test_warnings_of_check_are_one_for_a_density_and_fit_the_terminal(monkeypatch: pytest.MonkeyPatch) -> None:
+    changes = {
+        "0.1": "0.3",
+        "[1.5, 1.75, 2.0]": "[0.9, 0.95, 1.0, 1.7]",
+        "= 32": "= 500",
+        "cutoff = 3.4": "cutoff = 5.0",
+    }
+    path = study(**changes)
+    for columns, widest in (("", 80), ("60", 60)):  # none: not on a terminal here
+        monkeypatch.setenv("COLUMNS", columns)
+        warning = command("check", path).stdout.split("Warning: ")[1:]
+        assert len(warning) == 1
+        assert "T = 0.9, 0.95, 1 ε/k_B, density 0.3 σ⁻³: liquid and vapour" in " ".join(warning[0].split())
+        lines = f"Warning: {warning[0]}".splitlines()
+        assert len(lines) >= 3
+        assert widest - 20 < max(map(len, lines)) <= widest
 
 
 def test_check_echoes_both_kinds_of_units() -> None:

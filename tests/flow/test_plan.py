@@ -124,6 +124,17 @@ def test_two_phases_are_told_with_their_densities() -> None:
         assert part in warning
 
 
+def test_two_phases_are_told_once_for_each_density() -> None:
+    found = warnings(states="density = [0.5, 0.6]\ntemperatures = [0.9, 1.0, 1.2, 1.5]", particles=500)
+    mixed = [each for each in found if "coexist" in each]
+    assert [each.split(":")[0] for each in mixed] == [
+        "T = 0.9, 1, 1.2 ε/k_B, density 0.5 σ⁻³",
+        "T = 0.9, 1 ε/k_B, density 0.6 σ⁻³",
+    ]
+    pair = find("thol-2016").coexistence(0.9)
+    assert f"{pair.vapour:.6g} σ⁻³ at the lowest of these temperatures" in mixed[0]
+
+
 def test_two_phases_of_the_shifted_fluid_are_its_own() -> None:
     states = "points = [[1.15, 0.3]]"  # above the critical point of the shifted fluid, below that of the full one
     assert warnings(states=states, truncation="shifted", cutoff=2.5) == []

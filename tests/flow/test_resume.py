@@ -186,6 +186,25 @@ def test_a_series_that_has_not_settled_is_cut_however_rare_its_frames_are() -> N
     assert 0 < cut < samples == 1200
 
 
+@pytest.mark.parametrize(
+    ("density", "temperatures", "reason"),
+    [(0.3, [1.1, 1.4], "liquid and vapour coexist here"), (1.02, [1.2, 1.7], "beyond freezing")],
+)
+def test_values_of_no_stable_phase_come_with_caution(density: float, temperatures: list[float], reason: str) -> None:
+    path = write("study", density=density, cutoff=1.5, temperatures=temperatures, steps=20_000)
+    results = canonry.run(path)
+    cold = results.properties["temperature"] == temperatures[0]
+    for rows, where in (
+        (results.properties, cold),
+        (results.curve, results.curve["temperature"] < temperatures[0] + 0.01),
+    ):
+        assert rows["reason"][where].str.contains(reason).all()
+        assert set(rows["trust"][where]) <= {"caution", "no"}
+    assert not results.properties["reason"][~cold].str.contains(reason).any()
+    assert results.summary["trust"].iloc[0] != "ok"
+    assert "* with caution" in run(path).stdout
+
+
 def test_live_error_bars_without_a_bath_are_those_of_the_tables(monkeypatch: pytest.MonkeyPatch) -> None:
     """Repeats differ in energy there, and are not one sample; nothing is cut off while sampling goes on."""
     monkeypatch.setattr(canonry.estimation, "settled_start", lambda values: 0)
