@@ -15,9 +15,9 @@ from scipy import special
 
 from estimators.errors import BadSeries
 from estimators.gamma import Scatter, coarsened, scatter
-from estimators.trust import FEWEST_SAMPLES, judgement
+from estimators.trust import judgement
 
-__all__ = ["FEWEST_SAMPLES", "Chain", "Estimate", "State", "centred", "combine", "exact", "mean"]
+__all__ = ["Chain", "Estimate", "State", "centred", "combine", "exact", "mean"]
 
 Floats = npt.NDArray[np.float64]
 Chain = tuple[float, float, int, int]  # temperature, density, particles, repeat

@@ -21,11 +21,12 @@ import numpy as np
 import numpy.typing as npt
 
 from estimators.errors import BadSeries
-from estimators.estimate import FEWEST_SAMPLES, Chain, Estimate, mean
+from estimators.estimate import Chain, Estimate, mean
 from estimators.group import Group, Rung
 from estimators.mixture import bennett, polished
 from estimators.moments import Run, block_starts
 from estimators.overlap import Gap, connected, gaps
+from estimators.trust import FEWEST_SAMPLES
 from sampler.series import Series
 
 __all__ = ["Pooled", "Reweighted", "pool"]
@@ -112,12 +113,15 @@ class Pooled:
                 yield Reweighted(temperature, support[best], properties)
 
     def _refusal(self, temperature: float, samples: float) -> str:
-        reason = f"{samples:.0f} effective samples support temperature {temperature:g}, {FEWEST_SAMPLES:.0f} are needed"
+        reason = (
+            f"{samples:.0f} effective samples support temperature {temperature:g} epsilon/k_B, {FEWEST_SAMPLES:.0f} are "
+            "needed"
+        )
         for gap in self.gaps:
             if gap.low < temperature < gap.high:
                 return f"{reason}; {gap}"
         nearest = min(self.temperatures, key=lambda each: abs(each - temperature))
-        return f"{reason}; the nearest rung is at {nearest:g}, set one closer or sample it longer"
+        return f"{reason}; the nearest rung is at {nearest:g} epsilon/k_B, set one closer or sample it longer"
 
 
 def pool(series: Sequence[Series]) -> Pooled:
