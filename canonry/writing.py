@@ -8,6 +8,7 @@ from dataclasses import asdict
 from typing import TYPE_CHECKING
 
 from canonry.quantities import shortest_text
+from canonry.units import UNITS
 
 if TYPE_CHECKING:
     from canonry.study import Study, Tolerance
@@ -25,7 +26,8 @@ _UNITS = {
 
 def study_text(study: Study) -> str:
     """The study file that loads to an equal study."""
-    tolerances = ", ".join(f"{name} = {_tolerance(entry)}" for name, entry in study.compare.tolerance.items())
+    entries = study.compare.tolerance.items()
+    tolerances = ", ".join(f"{name} = {_tolerance(study, name, entry)}" for name, entry in entries)
     return "\n".join(
         [
             f"title = {_quoted(study.title)}",
@@ -77,9 +79,10 @@ def _states(study: Study) -> list[str]:
 
 
 def _writer(study: Study, quantity: str) -> Callable[[float], str]:
-    if study.units == "reduced":
+    units = _UNITS.get(quantity) or (UNITS[quantity].SI,)
+    if study.units == "reduced" or units == ("1",):
         return repr
-    return lambda value: _quoted(shortest_text(value, quantity, study.scale, _UNITS[quantity]))
+    return lambda value: _quoted(shortest_text(value, quantity, study.scale, units))
 
 
 def _sampling(study: Study) -> list[str]:
@@ -87,5 +90,5 @@ def _sampling(study: Study) -> list[str]:
     return [f"{name} = {_quoted(value) if isinstance(value, str) else repr(value)}" for name, value in values]
 
 
-def _tolerance(tolerance: Tolerance) -> str:
-    return f'"{tolerance.value * 100:.12g} %"' if tolerance.relative else repr(tolerance.value)
+def _tolerance(study: Study, name: str, tolerance: Tolerance) -> str:
+    return f'"{tolerance.value * 100:.12g} %"' if tolerance.relative else _writer(study, name)(tolerance.value)

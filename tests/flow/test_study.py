@@ -136,13 +136,27 @@ def test_what_is_written_is_what_was_meant(write: Writer) -> None:
         'mass = "39.948 u"',
         'density = ["1.3 g/cm3", "1.36 g/cm3"]',
         'temperatures = ["108 K", "120 K"]',
+        'tolerance = { heat_capacity = "2 %", pressure = "0.5 MPa" }',
         "cutoff = 3.0",
         "equilibration = 20000",
     ):
         assert line in text.splitlines()
 
 
+ABSOLUTE = {
+    "residual_energy": '"0.1 kJ/mol"',
+    "residual_heat_capacity": '"0.25 J/(mol K)"',
+    "heat_capacity": "0.02",
+    "pressure": '"1 MPa"',
+    "compressibility_factor": "0.03",
+    "thermal_pressure": '"0.0123 MPa/K"',
+    "bulk_modulus": '"700 bar"',
+}
 VARIANTS = [
+    *(
+        COOLANT.replace('heat_capacity = "2 %", pressure = "0.5 MPa"', f"{name} = {value}")
+        for name, value in ABSOLUTE.items()
+    ),
     SHORTEST,
     COOLANT,
     COOLANT.replace("39.948 u", "39.948 g/mol").replace("119.8 K", "0.996 kJ/mol"),
@@ -163,6 +177,20 @@ def test_a_written_study_loads_to_an_equal_one(write: Writer, text: str) -> None
     assert load(write(study.to_toml())) == study
     assert load(write(study.to_toml())).to_toml() == study.to_toml()
     assert pickle.loads(pickle.dumps(study)) == study
+
+
+@pytest.mark.parametrize("name", COMPARED)
+def test_a_tolerance_keeps_its_unit(write: Writer, name: str) -> None:
+    given = COOLANT.replace('heat_capacity = "2 %", pressure = "0.5 MPa"', f"{name} = {ABSOLUTE[name]}")
+    written = load(write(given)).to_toml()
+    (line,) = (line for line in written.splitlines() if line.startswith("tolerance"))
+    expected = ABSOLUTE[name].replace("700 bar", "70 MPa")
+    if name == "heat_capacity":  # given reduced: 0.02 k_B times the gas constant, 8.31446261815 J/(mol K)
+        assert float(line.split('"')[1].removesuffix(" J/(mol K)")) == pytest.approx(0.166289252363, rel=1e-11)
+    else:
+        assert line == f"tolerance = {{ {name} = {expected} }}"
+    reduced = given.replace('["1.36 g/cm3", "1300 kg/m3"]', "0.8").replace('["108 K", "120 K"]', "0.9")
+    assert '"' not in load(write(reduced)).to_toml().split("tolerance")[1]
 
 
 def test_a_changed_study_is_written_as_changed(write: Writer) -> None:
