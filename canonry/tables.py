@@ -119,14 +119,8 @@ def _estimate(finding: Finding, border: Border) -> dict[str, Any]:
         "headline": finding.headline,
         "effective_samples": _finite(finding.effective_samples),
         "trust": finding.trust,
-        "reason": _reason(finding, border),
+        "reason": border.told(finding.reason),
     }
-
-
-def _reason(finding: Finding, border: Border) -> str:
-    """Estimators give their reasons in reduced units."""
-    reduced = border.kind == "SI" and "temperature" in finding.reason
-    return f"{finding.reason} (temperatures in epsilon/k_B)" if reduced else finding.reason
 
 
 def _verdict(verdict: Verdict, reference: str, border: Border) -> dict[str, Any]:

@@ -31,11 +31,12 @@ class Gap:
     rungs: tuple[float, ...]
 
     def __str__(self) -> str:
+        both = f"the rungs at {self.low:g} and {self.high:g} epsilon/k_B"
         if not self.rungs:
-            return f"the rungs at {self.low:g} and {self.high:g} hold too few samples to be joined, sample them longer"
+            return f"{both} hold too few samples to be joined, sample them longer"
         *most, last = (f"{temperature:.4g}" for temperature in self.rungs)
         listed = f"rungs at {', '.join(most)} and {last}" if most else f"a rung at {last}"
-        return f"the rungs at {self.low:g} and {self.high:g} do not overlap, set {listed} between them"
+        return f"{both} do not overlap, set {listed} epsilon/k_B between them"
 
 
 def connected(rungs: Sequence[Rung]) -> npt.NDArray[np.int64]:

@@ -113,10 +113,8 @@ class Pooled:
                 yield Reweighted(temperature, support[best], properties)
 
     def _refusal(self, temperature: float, samples: float) -> str:
-        reason = (
-            f"{samples:.0f} effective samples support temperature {temperature:g} epsilon/k_B, {FEWEST_SAMPLES:.0f} are "
-            "needed"
-        )
+        support = f"{samples:.0f} effective samples support temperature {temperature:g} epsilon/k_B"
+        reason = f"{support}, {FEWEST_SAMPLES:.0f} are needed"
         for gap in self.gaps:
             if gap.low < temperature < gap.high:
                 return f"{reason}; {gap}"

@@ -94,9 +94,7 @@ def doubts(results: Results) -> list[str]:
         rows = values[values["trust"] == trust].fillna({"reason": "none given"})
         causes = rows.assign(cause=rows["reason"].str.replace(_COUNT, "#", regex=True))
         groups = sorted((group for _, group in grouped(causes, "cause", sort=False)), key=len, reverse=True)
-        told = [
-            f"{words}: {_places(results, group)}. Reason: {_sentence(_merged(group['reason']))}" for group in groups
-        ]
+        told = [f"{words}: {_places(results, group)}. {_reason(results, _merged(group['reason']))}" for group in groups]
         found += _few(told, f"{words}, for other reasons: {sum(map(len, groups[_CAUSES_SHOWN:]))} more values")
     return [*found, *_few([*_refusals(results)], "More stretches of the curve are without a value")]
 
@@ -134,7 +132,7 @@ def _agreement(results: Results, name: str, rows: pd.DataFrame) -> str:
     sizes = measured["z"].abs()
     return (
         f"{text} The median deviation is {sizes.median():.1f} combined standard errors, the largest "
-        f"{abs(worst['z']):.1f}: {name_of(worst['property'])} at {_state(results, worst)}."
+        f"{abs(worst['z']):.1f}: {name_of(worst['property'])} at {_where(results, measured.loc[[worst.name]])}."
     )
 
 
@@ -150,10 +148,8 @@ def _refusals(results: Results) -> Iterator[str]:
             whole = refused.all()
             ends = f"{plain(temperatures[start])} and {plain(temperatures[end - 1])} {_unit(results, 'temperature')}"
             span = "" if whole else f" between T = {ends}"
-            yield (
-                f"No reweighted value at density {plain(density)} {_unit(results, 'density')}{span}. "
-                f"Reason: {_sentence(reason)}"
-            )
+            where = f"density {plain(density)} {_unit(results, 'density')}{span}"
+            yield f"No reweighted value at {where}. {_reason(results, reason)}"
 
 
 def _tolerances(results: Results, setup: Setup) -> str:
@@ -162,7 +158,7 @@ def _tolerances(results: Results, setup: Setup) -> str:
     for name, tolerance in setup.tolerance.items():
         sizes = results.verdict.loc[results.verdict["property"] == name, "tolerance"].dropna()
         if isinstance(tolerance, str):
-            said.append(f"{tolerance} for {name_of(name)}")
+            said.append(f"{unit_text(tolerance)} for {name_of(name)}")
         elif len(sizes):
             said.append(f"{plain(sizes.iloc[0])} {_unit(results, name)} for {name_of(name)}".replace("  ", " "))
     rule = "; such a value agrees only where the 95 % interval of its difference lies inside the tolerance"
@@ -173,7 +169,7 @@ def _undecided(results: Results, rows: pd.DataFrame) -> Iterator[str]:
     """Why values of one reference are undecided, one sentence a cause."""
     open_rows = independent(rows[(rows["outcome"] == "undecided") & rows["temperature"].notna()])
     for (reason,), group in grouped(open_rows[open_rows["reason"] != ""], "reason", sort=False):
-        yield f"Undecided: {_places(results, group)}. Reason: {_sentence(reason)}"
+        yield f"Undecided: {_places(results, group)}. {_reason(results, reason)}"
 
 
 def _places(results: Results, rows: pd.DataFrame) -> str:
@@ -200,16 +196,15 @@ def _few(sentences: list[str], more: str) -> list[str]:
 def _where(results: Results, rows: pd.DataFrame) -> str:
     states = rows[["temperature", "density"]].drop_duplicates()
     if len(states) <= 3:
-        return _listed([_state(results, state) for _, state in states.iterrows()])
+        return _listed([_state(results, own, density) for (density,), own in grouped(states, "density")])
     span = f"T = {_between(sorted(states['temperature']))} {_unit(results, 'temperature')}"
     return f"{len(states)} states, {span}"
 
 
-def _state(results: Results, row: pd.Series) -> str:
-    return (
-        f"T = {plain(row['temperature'])} {_unit(results, 'temperature')}, density {plain(row['density'])} "
-        f"{_unit(results, 'density')}"
-    )
+def _state(results: Results, states: pd.DataFrame, density: float) -> str:
+    """One or more states of one density."""
+    temperatures = _listed([plain(temperature) for temperature in sorted(states["temperature"])])
+    return f"T = {temperatures} {_unit(results, 'temperature')}, density {plain(density)} {_unit(results, 'density')}"
 
 
 def _unit(results: Results, quantity: str) -> str:
@@ -229,5 +224,6 @@ def _listed(words: list[str]) -> str:
     return " and ".join([", ".join(words[:-1]), words[-1]] if len(words) > 1 else words)
 
 
-def _sentence(text: str) -> str:
-    return text if text.endswith((".", "!", "?")) else f"{text}."
+def _reason(results: Results, text: str) -> str:
+    said = text.replace(unit_label("temperature", results.units), _unit(results, "temperature"))
+    return f"Reason: {said}" if said.endswith((".", "!", "?")) else f"Reason: {said}."

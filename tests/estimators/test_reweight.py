@@ -29,7 +29,7 @@ Floats = npt.NDArray[np.float64]
 
 PARTICLES, DENSITY = 8, 0.5
 FLUID = Fluid(cutoff=1.0, truncation="corrected")
-GAP_CLOSED_BY = "set rungs at 1.928, 3.098 and 4.979 between them"
+GAP_CLOSED_BY = "set rungs at 1.928, 3.098 and 4.979 epsilon/k_B between them"
 EXACT: dict[str, Callable[[float], float]] = {
     "residual_energy": lambda t: 1.875 * t,
     "residual_heat_capacity": lambda t: 1.875,
@@ -270,7 +270,7 @@ def test_temperatures_that_samples_do_not_support_are_refused() -> None:
     assert far.effective_samples < 50.0
     assert far.properties == {}
     assert "50 are needed" in far.refused
-    assert "nearest rung is at 1," in far.refused
+    assert "nearest rung is at 1 epsilon/k_B," in far.refused
     assert pooled.at(2.5).effective_samples == 0.0
     assert pooled.at(0.2).properties == {}
     assert "positive number" in pooled.at(-1.0).refused
@@ -293,7 +293,7 @@ def test_rungs_that_do_not_overlap_are_solved_apart() -> None:
             assert abs(pooled.at(temperature).properties[name].value / estimate.value - 1.0) < 1e-8
     refused = pooled.at(3.0)
     assert refused.properties == {}
-    assert f"the rungs at 1.2 and 8 do not overlap, {GAP_CLOSED_BY}" in refused.refused
+    assert f"the rungs at 1.2 and 8 epsilon/k_B do not overlap, {GAP_CLOSED_BY}" in refused.refused
 
 
 def test_the_rungs_that_are_named_close_a_gap() -> None:
@@ -320,7 +320,7 @@ def test_one_rung_is_named_where_one_is_enough() -> None:
 def test_close_rungs_with_too_few_samples_want_more_of_them() -> None:
     rng = np.random.default_rng(33)
     (gap,) = pool([harmonic(rng, temperature, 8) for temperature in (1.0, 1.4)]).gaps
-    assert str(gap) == "the rungs at 1 and 1.4 hold too few samples to be joined, sample them longer"
+    assert str(gap) == "the rungs at 1 and 1.4 epsilon/k_B hold too few samples to be joined, sample them longer"
 
 
 def test_a_short_rung_between_does_not_part_its_neighbours() -> None:

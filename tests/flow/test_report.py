@@ -606,3 +606,11 @@ def test_methods_say_how_constant_energy_gives_its_derivatives():
     assert "Thermal pressure coefficient and isothermal bulk modulus are from exact derivatives" in paragraph(results)
     assert any("Pearson" in work for work in citations(results))
     assert "phase volume" not in paragraph(invented())
+
+
+def test_states_of_one_density_are_told_together():
+    results = invented()
+    cases = [("pressure", temperature, "no", "near 1.25 epsilon/k_B") for temperature in (0.9, 1.5)]
+    assert doubts(doubted(results, *cases)) == [
+        "Do not use: pressure at T = 0.9 and 1.5 ε/k_B, density 0.8 σ⁻³. Reason: near 1.25 ε/k_B."
+    ]
