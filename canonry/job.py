@@ -3,12 +3,14 @@
 from __future__ import annotations
 
 import csv
-from collections.abc import Callable, Sequence
+from collections import Counter
+from collections.abc import Callable, Mapping, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 from canonry.border import Border
 from canonry.directory import locate, stored, write
+from canonry.results import COLUMNS
 from canonry.sampling import is_complete, sample
 from canonry.study import Study
 from canonry.units import Kind
@@ -20,9 +22,11 @@ if TYPE_CHECKING:
 
 __all__ = ["compare", "estimate", "is_finished", "report", "run"]
 
-_FILES = ("properties.csv", "curve.csv", "structure.csv", "verdict.csv", "summary.csv", "report.html")
+_TABLES = ("properties", "curve", "structure", "verdict", "summary")
+_FILES = (*(f"{name}.csv" for name in _TABLES), "report.html")
 
 Place = str | Path
+Row = dict[str, str]
 Tell = Callable[[str], None]
 
 
@@ -109,6 +113,28 @@ def is_finished(study: Study, directory: Path, units: Kind | None = None) -> boo
     """Whether all samples, tables and the report of a study are there and in these units; takes a moment only."""
     if not is_complete(study, directory, _FILES):
         return False
-    with (directory / "properties.csv").open(encoding="utf-8", newline="") as file:
-        row = next(csv.DictReader(file), None)
-    return row is not None and row["temperature_unit"] == Border.of(study, units).label("temperature")
+    tables = {name: _rows(directory / f"{name}.csv", columns) for name, columns in COLUMNS.items() if name in _TABLES}
+    found = {name: rows for name, rows in tables.items() if rows is not None}
+    return len(found) == len(_TABLES) and _cover(study, found, Border.of(study, units).label("temperature"))
+
+
+def _cover(study: Study, tables: Mapping[str, list[Row]], unit: str) -> bool:
+    """Whether tables hold a state's row and headlines for every state, in these units, the curve, and every outcome."""
+    headlines = [row for row in tables["properties"] if (row["headline"], row["temperature_unit"]) == ("True", unit)]
+    states = Counter(row["property"] for row in headlines)
+    outcomes = {row["reference"] for row in tables["verdict"] if not row["property"]}
+    counts = (len(tables["summary"]), states["residual_heat_capacity"], states["pressure"])
+    pooled = study.sampling.bath and len(study.isochores) < len(study.states)
+    return {*counts} == {len(study.states)} and bool(tables["curve"]) == pooled and outcomes == {*study.compare.against}
+
+
+def _rows(path: Path, columns: Sequence[str]) -> list[Row] | None:
+    """Rows of a table; None where it is damaged or lacks one of the columns."""
+    try:
+        with path.open(encoding="utf-8", newline="") as file:
+            reader = csv.DictReader(file, strict=True)
+            names, rows = reader.fieldnames or (), list(reader)
+    except (UnicodeDecodeError, csv.Error):
+        return None
+    whole = all(None not in row and None not in row.values() for row in rows)
+    return rows if whole and {*columns} <= {*names} else None

@@ -109,6 +109,23 @@ def test_an_extended_study_equals_one_sampled_at_once(sampled: Path, longer: dic
     assert all(after[path] == content for path, content in kept.items() if path.name != last)
 
 
+@pytest.mark.parametrize("table", TABLES)
+def test_damaged_tables_are_made_anew(sampled: Path, table: str) -> None:
+    """Empty, cut off behind the header, foreign, torn within a line, no text; the times of the file tell nothing."""
+    expected, victim = tables(sampled), sampled / f"{table}.csv"
+    whole, stamp = victim.read_bytes(), victim.stat()
+    header = whole[: whole.index(b"\n") + 1]
+    damaged = [b"", header, b"a,b\n1,2\n", whole[: whole.rindex(b",")], b"\xe9\0"]
+    if table == "structure":
+        damaged.remove(header)  # a study without frames has no more than that
+    for content in damaged:
+        victim.write_bytes(content)
+        os.utime(victim, ns=(stamp.st_atime_ns, stamp.st_mtime_ns))
+        assert "finished" not in run("study.toml").stdout
+        assert tables(sampled) == expected
+    assert "finished" in run("study.toml").stdout
+
+
 def test_a_study_cut_short_equals_one_that_asked_for_less(sampled: Path) -> None:
     run(write("study", steps=2000, temperatures=[2.0]))
     run(write("direct", steps=2000, temperatures=[2.0]))
@@ -173,17 +190,14 @@ def test_the_interrupt_of_a_terminal_leaves_a_directory_that_goes_on() -> None:
     assert tables("study") == tables("direct")
 
 
-def test_a_series_that_has_not_settled_is_cut_however_rare_its_frames_are() -> None:
-    """From the lattice, without equilibration: some of the start is cut, the same as with many frames."""
-    cuts = []
-    for every in (100, 6000):
-        path = write("study", density=0.6, cutoff=1.8, temperatures=[2.0], steps=6000)
-        text = path.read_text().replace("equilibration = 200", "equilibration = 0")
-        path.write_text(text.replace("frame_every = 100", f"frame_every = {every}"))
-        cuts.append(canonry.run(path, into=f"every-{every}").equilibration[["cut", "samples"]].to_numpy().tolist())
-    assert cuts[0] == cuts[1]
-    ((cut, samples),) = cuts[1]
-    assert 0 < cut < samples == 1200
+def test_a_series_is_cut_at_the_sample_however_rare_its_frames_are(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(canonry.estimation, "settled_start", lambda values: 333)
+    for every, frames in ((100, True), (6000, True), (7000, False)):
+        path = write("study", temperatures=[2.0], steps=6000)
+        path.write_text(path.read_text().replace("frame_every = 100", f"frame_every = {every}"))
+        results = canonry.run(path, into=f"every-{every}")
+        assert results.equilibration[["cut", "samples"]].to_numpy().tolist() == [[333, 1200]]
+        assert bool(len(results.structure)) == frames
 
 
 @pytest.mark.parametrize(
