@@ -30,7 +30,7 @@ BARE_SAMPLES = 40.0  # by the Gamma method's own count, two and a half times its
 SHORTEST_SERIES = 50.0  # autocorrelation times
 WEIGHTY = 0.1  # share of the variance from which a state's own length matters
 BLOCK_TOLERANCE = 3.0  # combined errors between the two error bars
-MOST_RANKED = 2048  # entries of a repeat that are ranked to compare it with others; longer series enter as block sums
+MOST_RANKED = 512  # entries of a repeat that are ranked to compare it with others; longer series enter as block sums
 FEWEST_RANKED = 16
 
 
