@@ -22,7 +22,7 @@ if TYPE_CHECKING:
 __all__ = ["agreement", "answers", "doubts", "heat_capacity_name", "outcome", "question", "states_in_words"]
 
 _ANSWERS_SHOWN = 4
-_CAUSES_SHOWN = 3  # of each kind of doubt
+_CAUSES_SHOWN = 2  # of each kind of doubt
 _COUNT = re.compile(r"\d+(?= effective samples)")
 
 
@@ -95,8 +95,10 @@ def doubts(results: Results) -> list[str]:
         causes = rows.assign(cause=rows["reason"].str.replace(_COUNT, "#", regex=True))
         groups = sorted((group for _, group in grouped(causes, "cause", sort=False)), key=len, reverse=True)
         told = [f"{words}: {_places(results, group)}. {_reason(results, _merged(group['reason']))}" for group in groups]
-        found += _few(told, f"{words}, for other reasons: {sum(map(len, groups[_CAUSES_SHOWN:]))} more values")
-    return [*found, *_few([*_refusals(results)], "More stretches of the curve are without a value")]
+        found += _few(
+            told, f"{_counted(sum(map(len, groups[_CAUSES_SHOWN:])), 'more value')} for other reasons", "properties"
+        )
+    return [*found, *_few([*_refusals(results)], "more such stretches", "curve")]
 
 
 def _outcome_of(rows: pd.DataFrame) -> str:
@@ -187,10 +189,12 @@ def _merged(reasons: pd.Series) -> str:
     return _COUNT.sub(span, str(reasons.iloc[0]))
 
 
-def _few(sentences: list[str], more: str) -> list[str]:
-    """The first of them, and a word on the rest."""
-    rest = len(sentences) - _CAUSES_SHOWN
-    return [*sentences[:_CAUSES_SHOWN], *([f"{more}; the tables beside this page list them."] if rest > 0 else [])]
+def _few(sentences: list[str], more: str, table: str) -> list[str]:
+    """The first of them, the last of these with a word on the rest."""
+    shown = sentences[:_CAUSES_SHOWN]
+    if len(sentences) > _CAUSES_SHOWN:
+        shown[-1] += f" {table}.csv lists {more}."
+    return shown
 
 
 def _where(results: Results, rows: pd.DataFrame) -> str:

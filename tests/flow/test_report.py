@@ -533,11 +533,11 @@ def test_doubts_of_many_causes_stay_a_handful():
     refused = (curve["temperature"] * 100).round().astype(int) % 4 == 0
     curve.loc[refused, ["value", "trust", "reason"]] = [np.nan, "no", "too few samples"]
     told = doubts(replace(doubted(results, *cases), curve=curve))
-    assert [each.split(":")[0] for each in told[:6]] == ["Do not use"] * 3 + ["With caution"] * 3
-    assert len(told) == 3 + 3 + 4
-    assert told[-1] == "More stretches of the curve are without a value; the tables beside this page list them."
+    assert [each.split(" ")[0] for each in told] == ["Do", "Do", "With", "With", "No", "No"]
+    assert told[-1].endswith("Reason: too few samples. curve.csv lists more such stretches.")
     more = doubts(doubted(results, *cases, *((name, 0.9, "no", name) for name in ("sound_speed", "residual_energy"))))
-    assert more[3].startswith("Do not use, for other reasons: 2 more values;")
+    assert more[1].endswith(". properties.csv lists 3 more values for other reasons.")
+    assert "more values" not in more[0]
 
 
 def with_verdict(results, where, **cells):
