@@ -8,12 +8,12 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
+    from canonry.directory import load
     from canonry.job import compare, estimate, run
-    from canonry.study import load
 
 __all__ = ["compare", "estimate", "load", "run"]
 
-_HOMES = {"compare": "canonry.job", "estimate": "canonry.job", "load": "canonry.study", "run": "canonry.job"}
+_HOMES = {"compare": "canonry.job", "estimate": "canonry.job", "load": "canonry.directory", "run": "canonry.job"}
 
 
 def __getattr__(name: str) -> object:

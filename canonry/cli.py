@@ -103,14 +103,21 @@ def _check(study: Path, workers: int | None, as_json: bool) -> None:
     from dataclasses import asdict
 
     from canonry.border import Border
-    from canonry.directory import locate
+    from canonry.directory import continues, locate
     from canonry.plan import plan
-    from canonry.terminal import plan_text
+    from canonry.sampling import left
+    from canonry.terminal import left_text, plan_text
 
-    found, _ = locate(study)
+    found, directory = locate(study)
     _tell_if_compiling()
     planned = plan(found, workers=workers)
-    click.echo(json.dumps(asdict(planned), indent=1) if as_json else plan_text(found, planned, Border.of(found)))
+    lacking = left(found, directory) if continues(found, directory) else planned.particle_steps
+    if as_json:
+        click.echo(json.dumps(asdict(planned) | {"particle_steps_left": lacking}, indent=1))
+        return
+    click.echo(plan_text(found, planned, Border.of(found)))
+    if lacking < planned.particle_steps:
+        click.echo(left_text(directory, lacking, planned))
 
 
 @main.command("run")
@@ -133,7 +140,7 @@ def _run(study: Path, into: Path | None, workers: int | None, units: Any) -> Non
         with _working() as watch:
             results = report(directory, units=units, watch=watch)
         _tell_caveats(results)
-    _close(directory)
+    _close(directory, "Tables and report.html")
 
 
 @main.command("sample")
@@ -163,7 +170,9 @@ def _estimate(study: Path, into: Path | None, units: Any) -> None:
     with _working() as watch:
         results = estimate(directory, units=units, watch=watch)
     _tell_caveats(results)
-    _close(directory)
+    _close(directory, "Tables")
+    if (directory / "report.html").exists():
+        click.echo(f"The report.html there is older; `canonry report {directory}` writes it anew.")
 
 
 @main.command("compare")
@@ -234,7 +243,7 @@ def _fill(study: Study, directory: Path, workers: int | None, border: Border) ->
     from canonry.plan import plan
     from canonry.progress import display
     from canonry.sampling import outstanding, sample
-    from canonry.terminal import plan_text
+    from canonry.terminal import left_text, plan_text
 
     claim(study, directory)
     todo = outstanding(study, directory)
@@ -246,8 +255,7 @@ def _fill(study: Study, directory: Path, workers: int | None, border: Border) ->
     planned = plan(study, workers=workers)
     click.echo(f"{plan_text(study, planned, border)}\n", err=True)
     if todo.particle_steps < planned.particle_steps:
-        share = 100.0 * todo.particle_steps / planned.particle_steps
-        click.echo(f"{directory} holds a part already; {share:.0f} % is still to be sampled.", err=True)
+        click.echo(left_text(directory, todo.particle_steps, planned), err=True)
     with display(study, todo, border) as watch:
         sample(study, directory, workers=workers, watch=watch, todo=todo)
 
@@ -278,9 +286,8 @@ def _tell_caveats(results: Results) -> None:
         click.echo(wrapped(f"Caveat: {caveat}"), err=True)
 
 
-def _close(directory: Path) -> None:
+def _close(directory: Path, written: str) -> None:
     from canonry.terminal import closing_text
 
     click.echo(closing_text(directory))
-    page = directory / "report.html"
-    click.echo(f"\nTables{' and report.html' if page.exists() else ''} are in {directory}.")
+    click.echo(f"\n{written} are in {directory}.")

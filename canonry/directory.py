@@ -7,21 +7,30 @@ from dataclasses import asdict
 from pathlib import Path
 
 from canonry.errors import UserError
-from canonry.study import Study, load
+from canonry.study import Study
+from canonry.study import load as load_file
 
-__all__ = ["STUDY", "claim", "locate", "stored", "write"]
+__all__ = ["STUDY", "claim", "continues", "load", "locate", "stored", "write"]
 
 STUDY = "study.toml"
+
+
+def load(path: str | Path) -> Study:
+    """The study of a study file or of a study directory. Raises UserError if there is none, or a value is refused."""
+    path = Path(path)
+    return stored(path) if path.is_dir() else load_file(path)
 
 
 def locate(path: Path, into: Path | None = None) -> tuple[Study, Path]:
     """A study and its directory, from a study file or from the directory itself.
 
     into : the directory; by default the name of the study file without its suffix, in the current directory
+    What a study file leaves out is as in the study of the samples that are there already, see `canonry.study.load`.
     Raises UserError if there is no such study, or `into` contradicts the directory given.
     """
     if not path.is_dir():
-        return load(path), into or Path(path.stem)
+        directory = into or Path(path.stem)
+        return load_file(path, earlier=_sampled(directory)), directory
     if into is not None and into.resolve() != path.resolve():
         raise UserError(f"--into {into}: {path} is a study directory itself; what is accepted is its study file")
     return stored(path), path
@@ -35,7 +44,7 @@ def stored(directory: Path) -> Study:
             f"{directory}: this is no study directory, there is no {STUDY} in it; what is needed is a study file, or a "
             "directory that `canonry run` has made of one"
         )
-    return load(file)
+    return load_file(file)
 
 
 def claim(study: Study, directory: Path) -> None:
@@ -68,6 +77,18 @@ def write(path: Path, text: str) -> None:
         temporary.unlink(missing_ok=True)
 
 
+def continues(study: Study, directory: Path) -> bool:
+    """Whether a directory holds samples that a study can go on from. Raises UserError if its own study is refused."""
+    earlier = _sampled(directory)
+    return earlier is not None and _identity(earlier) == _identity(study)
+
+
+def _sampled(directory: Path) -> Study | None:
+    """The study that the samples of a directory belong to; None where there are none."""
+    there = (directory / STUDY).is_file() and any(directory.glob("rungs/*/*/segment-*.h5"))
+    return stored(directory) if there else None
+
+
 def _holds(path: Path, text: str) -> bool:
     return path.exists() and path.read_text(encoding="utf-8") == text
 
@@ -81,9 +102,10 @@ def _check_owner(study: Study, directory: Path) -> None:
                 "new or empty directory: choose one with --into"
             )
         return
-    if not any(directory.glob("rungs/*/*/segment-*.h5")):
+    earlier = _sampled(directory)
+    if earlier is None:
         return
-    found, wanted = _identity(stored(directory)), _identity(study)
+    found, wanted = _identity(earlier), _identity(study)
     for key, value in wanted.items():
         if found[key] != value:
             raise UserError(

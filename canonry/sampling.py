@@ -18,7 +18,7 @@ if TYPE_CHECKING:
     from sampler.series import Series
     from sampler.store import Chain
 
-__all__ = ["Outstanding", "is_complete", "outstanding", "recorded", "sample"]
+__all__ = ["Outstanding", "is_complete", "left", "outstanding", "recorded", "sample"]
 
 
 @dataclass(frozen=True)
@@ -48,6 +48,14 @@ def outstanding(study: Study, directory: Path) -> Outstanding:
         work.append((chain, missing))
         aside += damaged
     return Outstanding(tuple(work), tuple(aside))
+
+
+def left(study: Study, directory: Path) -> int:
+    """Particle-steps that a directory lacks; writes nothing, and reads the last segment of each repeat only."""
+    from sampler.ladder import chains
+
+    work = chains(directory, study.fluid, study.states, study.sampling)
+    return Outstanding(tuple((chain, _lacking(chain)) for chain in work), ()).particle_steps
 
 
 def sample(
@@ -100,8 +108,7 @@ def is_complete(study: Study, directory: Path, results: Sequence[str]) -> bool:
 
     Looks at file times and at the last segment of each repeat; nothing is sampled or checked in full.
     """
-    from sampler.errors import DamagedSegment
-    from sampler.store import Chain, read
+    from sampler.store import Chain
 
     toml = directory / STUDY
     made = [directory / name for name in results]
@@ -112,11 +119,21 @@ def is_complete(study: Study, directory: Path, results: Sequence[str]) -> bool:
         for repeat in range(study.sampling.repeats):
             chain = Chain(directory, study.fluid, state, study.sampling, repeat)
             paths = [chain.path(index) for index in range(len(chain.segments))]
-            if not all(path.exists() and path.stat().st_mtime_ns <= oldest for path in paths):
-                return False
-            try:
-                if read(paths[-1], chain.identity).last < chain.segments[-1][1]:
-                    return False
-            except DamagedSegment:
+            if _lacking(chain) or any(path.stat().st_mtime_ns > oldest for path in paths):
                 return False
     return toml.stat().st_mtime_ns <= oldest
+
+
+def _lacking(chain: Chain) -> list[int]:
+    """Numbers of the segments that are not there; of the last one there also if it is too short or damaged."""
+    from sampler.errors import DamagedSegment
+    from sampler.store import read
+
+    numbers = range(len(chain.segments))
+    there = [index for index in numbers if chain.path(index).exists()]
+    try:
+        if there and read(chain.path(there[-1]), chain.identity).last < chain.segments[there[-1]][1]:
+            there.pop()
+    except DamagedSegment:
+        there.pop()
+    return [index for index in numbers if index not in {*there}]

@@ -28,6 +28,8 @@ COMPARED = (
 )
 _SMALLEST_CUTOFF = 1.0  # sigma
 _LIQUID = 0.5  # sigma^-3: at and above this density the defaults are those of a liquid
+_CUTOFFS = (5.0, 3.0)  # sigma, defaults of a gas and of a liquid
+_FRICTIONS = (1.0, 2.0)
 
 
 @dataclass(frozen=True)
@@ -91,8 +93,11 @@ class Study:
         return study_text(self)
 
 
-def load(path: str | Path) -> Study:
-    """The study a file asks for. Raises UserError, which names the file, the key and what is accepted."""
+def load(path: str | Path, *, earlier: Study | None = None) -> Study:
+    """The study a file asks for. Raises UserError, which names the file, the key and what is accepted.
+
+    earlier : the study that samples were taken for already; defaults that depend on the states are as they were there
+    """
     path = Path(path)
     top = open_table(path).only(("title", "fluid", "state", "sampling", "compare"), later=("until",))
     fluid = top.table("fluid").only(
@@ -100,7 +105,7 @@ def load(path: str | Path) -> Study:
     )
     scale = _scale(fluid)
     states = _states(top.table("state"), scale)
-    sampled = _fluid(fluid, scale, states)
+    sampled = _fluid(fluid, scale, _default(_CUTOFFS, states, earlier.fluid.cutoff if earlier else None), states)
     return Study(
         title=top.read("title", line, "".join(filter(str.isprintable, path.stem))[:200].strip() or "study"),
         units=_kind(top.table("state")),
@@ -108,7 +113,9 @@ def load(path: str | Path) -> Study:
         scale=scale,
         ideal_heat_capacity=_ideal_heat_capacity(fluid, scale),
         states=states,
-        sampling=_sampling(top.table("sampling"), scale, states),
+        sampling=_sampling(
+            top.table("sampling"), scale, _default(_FRICTIONS, states, earlier.sampling.friction if earlier else None)
+        ),
         compare=_compare(top.table("compare"), scale, sampled),
     )
 
@@ -183,15 +190,16 @@ def _kind(table: Table) -> Kind:
     return "SI" if any(has_unit(table.content.get(key)) for key in ("density", "temperatures", "points")) else "reduced"
 
 
-def _is_liquid(states: tuple[State, ...]) -> bool:
-    return min(state.density for state in states) >= _LIQUID
+def _default(defaults: tuple[float, float], states: tuple[State, ...], earlier: float | None) -> float:
+    """That of a gas or of a liquid, by the lowest density; the earlier value if it is one of them."""
+    if earlier is not None and earlier in defaults:
+        return earlier
+    return defaults[min(state.density for state in states) >= _LIQUID]
 
 
-def _fluid(table: Table, scale: Scale | None, states: tuple[State, ...]) -> Fluid:
+def _fluid(table: Table, scale: Scale | None, default_cutoff: float, states: tuple[State, ...]) -> Fluid:
     potential = table.read("potential", choice(("lennard-jones",)))
-    cutoff = table.read(
-        "cutoff", quantity("length", _SMALLEST_CUTOFF, 100.0, scale), 3.0 if _is_liquid(states) else 5.0
-    )
+    cutoff = table.read("cutoff", quantity("length", _SMALLEST_CUTOFF, 100.0, scale), default_cutoff)
     truncation: Truncation = table.read("truncation", choice(get_args(Truncation)), "corrected")
     _check_box(table, cutoff, states)
     return Fluid(cutoff=cutoff, truncation=truncation, potential=potential)
@@ -220,7 +228,7 @@ def _ideal_heat_capacity(table: Table, scale: Scale | None) -> float | None:
     return table.read("ideal_heat_capacity", quantity("heat_capacity", 1.5, 1000.0, scale), 1.5)
 
 
-def _sampling(table: Table, scale: Scale | None, states: tuple[State, ...]) -> Protocol:
+def _sampling(table: Table, scale: Scale | None, default_friction: float) -> Protocol:
     table.only(tuple(entry.name for entry in fields(Protocol)))
     record_every = table.read("record_every", whole(1, 1_000_000), 10)
     counts = {
@@ -235,7 +243,7 @@ def _sampling(table: Table, scale: Scale | None, states: tuple[State, ...]) -> P
         seed=table.read("seed", whole(0, 2**32 - 1), 1),
         repeats=table.read("repeats", whole(1, 10_000), 1),
         time_step=table.read("time_step", quantity("time", 1e-6, 0.1, scale), 0.005),
-        friction=table.read("friction", quantity("friction", 1e-3, 1e3, scale), 2.0 if _is_liquid(states) else 1.0),
+        friction=table.read("friction", quantity("friction", 1e-3, 1e3, scale), default_friction),
         scheme=table.read("scheme", choice(get_args(Scheme), later=("metropolised",)), "baoab"),
         equilibration=table.read("equilibration", whole(0, 10**12), 20_000),
         **counts,

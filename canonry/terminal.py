@@ -18,7 +18,7 @@ from canonry.provenance import duration
 from canonry.study import Study
 from canonry.units import UNITS, Kind
 
-__all__ = ["aligned", "closing_text", "plan_text", "verdict_text", "wrapped"]
+__all__ = ["aligned", "closing_text", "left_text", "plan_text", "verdict_text", "wrapped"]
 
 _MARKS = {"ok": "", "caution": "*", "no": "!", "": ""}
 _LEGENDS = {"caution": "* with caution", "no": "! not to be trusted"}
@@ -70,6 +70,14 @@ def plan_text(study: Study, plan: Plan, border: Border) -> str:
         f"Overlaps are predicted from the heat capacity of {plan.guide}.",
     ]
     return "\n".join([*lines, *(wrapped(f"Warning: {warning}") for warning in plan.warnings)])
+
+
+def left_text(directory: Path, particle_steps: int, plan: Plan) -> str:
+    """What is still to be sampled of a plan, where a directory holds a part or all of it."""
+    if particle_steps == 0:
+        return f"{directory} holds all these samples already."
+    share = 100.0 * particle_steps / plan.particle_steps
+    return f"{directory} holds a part already; {particle_steps:.3g} particle-steps ({share:.0f} %) are left to do."
 
 
 def _rows_of(directory: Path, table: str) -> list[Row]:

@@ -190,9 +190,14 @@ def test_sample_then_estimate_then_report_equals_run(sampled: tuple[Path, Result
     study()
     command("sample", "gas.toml")
     assert sorted(path.name for path in Path("gas").iterdir()) == ["rungs", "sessions.csv", "study.toml"]
-    command("estimate", "gas.toml")
+    assert command("estimate", "gas.toml").stdout.endswith("\nTables are in gas.\n")
     assert not Path("gas", "report.html").exists()
     command("report", "gas")
+    older = Path("gas", "report.html").stat().st_mtime_ns
+    said = command("estimate", "gas.toml").stdout
+    assert "Tables and report.html" not in said
+    assert "The report.html there is older; `canonry report gas` writes it anew." in said
+    assert Path("gas", "report.html").stat().st_mtime_ns == older
     for name in ("properties", "curve", "structure", "verdict", "summary"):
         assert Path("gas", f"{name}.csv").read_bytes() == (sampled[0] / f"{name}.csv").read_bytes()
     assert "finished" in command("run", "gas.toml").stdout
@@ -295,7 +300,8 @@ def test_public_functions_return_tables(sampled: tuple[Path, Result]) -> None:
     assert results.properties["value"].to_numpy() == pytest.approx(
         [float(row["value"]) for row in rows(directory, "properties")], rel=1e-9
     )
-    assert canonry.estimate("gas").title == canonry.load("gas.toml").title == "A gas"
+    assert canonry.estimate("gas").title == canonry.load("gas.toml").title == canonry.load("gas").title == "A gas"
+    assert canonry.load(Path("gas")) == canonry.load("gas.toml")
     verdict = canonry.compare("gas", against=["kolafa-nezbeda-1994"])
     assert set(verdict["reference"]) == {"kolafa-nezbeda-1994"}
     assert np.isfinite(verdict["z"][verdict["temperature"].notna()]).all()

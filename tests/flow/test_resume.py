@@ -1,5 +1,6 @@
 """A study directory that is sampled in several goes holds the same as one sampled in a single go."""
 
+import json
 import os
 import signal
 import subprocess
@@ -278,6 +279,66 @@ def test_the_directory_of_another_study_is_refused(sampled: Path, key: str, old:
     assert f"Error: study: it belongs to another study, {key} {message}" in result.stderr
     assert result.stdout == ""
     assert {path: path.read_bytes() for path in sampled.rglob("*") if path.is_file()} == everything
+
+
+DEFAULTS_OF_A_LIQUID = """
+[fluid]
+potential = "lennard-jones"
+[state]
+density = {density}
+temperatures = [2.0]
+particles = {particles}
+[sampling]
+equilibration = 50
+steps = 600
+record_every = 5
+frame_every = 100
+"""
+
+
+def test_defaults_stay_those_of_the_samples_when_a_thin_density_is_added() -> None:
+    """The cutoff of 5 that is the default at density 0.4 does not even fit the box; the plan says that 3 is short."""
+    path = Path("study.toml")
+    path.write_text(DEFAULTS_OF_A_LIQUID.format(density=0.6, particles=150))
+    run(path)
+    kept = segments("study")
+    path.write_text(DEFAULTS_OF_A_LIQUID.format(density="[0.4, 0.6]", particles=150))
+    result = run(path)
+    assert "density 0.4 σ⁻³: the correction" in " ".join(result.stderr.replace("Density", "density").split())
+    study = canonry.load("study")
+    assert (study.fluid.cutoff, study.sampling.friction) == (3.0, 2.0)
+    assert list(study.isochores) == [0.4, 0.6]
+    assert segments("study").items() > kept.items()
+    assert "finished" in run(path).stdout
+    assert "the default cutoff 5 sigma is beyond half the box" in run(path, "--into", "new", code=2).stderr
+
+
+def test_a_default_that_no_longer_fits_the_box_is_refused() -> None:
+    path = Path("study.toml")
+    path.write_text(DEFAULTS_OF_A_LIQUID.format(density=0.4, particles=420))
+    run(path)
+    path.write_text(DEFAULTS_OF_A_LIQUID.format(density="[0.4, 0.8]", particles=420))
+    assert "cutoff 5 sigma is beyond half the box of 420 particles at density 0.8" in run(path, code=2).stderr
+
+
+def test_check_says_what_is_left_and_touches_nothing(sampled: Path) -> None:
+    def check(study: object, *options: str) -> str:
+        result = CliRunner().invoke(main, ["check", str(study), *options])
+        assert result.exit_code == 0, result.output
+        return result.stdout
+
+    assert "study holds all these samples already" in check("study")
+    write("study", temperatures=[1.5, 1.7, 2.0])
+    assert "(33 %) are left to do" in check("study.toml")
+    assert json.loads(check("study.toml", "--json"))["particle_steps_left"] == 32 * 3300
+    write("study", seed=5)
+    assert "already" not in check("study.toml")  # samples of another study are of no use to it
+    victims = sorted(segments(sampled))
+    victims[1].unlink()
+    victims[-1].write_bytes(b"")
+    before = {path: path.stat().st_mtime_ns for path in sampled.rglob("*")}
+    assert json.loads(check("study", "--json"))["particle_steps_left"] == 32 * (600 + 100)
+    assert {path: path.stat().st_mtime_ns for path in sampled.rglob("*")} == before
 
 
 def test_a_directory_without_samples_may_change_its_study() -> None:
