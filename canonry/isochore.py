@@ -71,7 +71,7 @@ class Isochore:
 
     def _at_rung(self, pooled: Pooled, index: int, state: State) -> Reweighted:
         if pooled.overlap[index, index] > 1.0 - _ALONE:
-            return Reweighted(state.temperature, 0.0, {}, "the rung overlaps with no other")
+            return Reweighted(state.temperature, 0.0, {}, "the rung shares too few samples with any other")
         return pooled.at(state.temperature)
 
     def _completed(self, properties: Properties) -> dict[str, Estimate]:

@@ -93,7 +93,7 @@ def test_rungs_apart_keep_their_own_values_with_caution(apart: Results) -> None:
     headlines = apart.properties[apart.properties["headline"]]
     assert not (headlines["method"] == "reweighted").any()
     assert set(headlines["trust"]) <= {"caution", "no"}
-    assert headlines["reason"].str.contains("overlaps with no other").all()
+    assert headlines["reason"].str.contains("shares too few samples").all()
 
 
 def test_refused_points_of_a_curve_keep_their_row(apart: Results, liquid: Results) -> None:
