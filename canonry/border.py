@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import re
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
@@ -19,8 +18,6 @@ __all__ = ["Border"]
 
 _DIGITS = 10  # of a temperature or density: fewer than are kept of a value read, so that 112 K comes back as 112 K
 _TOLD_DIGITS = 5  # of a temperature within a sentence
-_NUMBER = r"\d+(?:\.\d+)?(?:e[+-]\d+)?"
-_TEMPERATURES = re.compile(rf"({_NUMBER}(?:(?:, | and ){_NUMBER})*) epsilon/k_B")
 
 
 @dataclass(frozen=True)
@@ -56,15 +53,9 @@ class Border:
         """A value with its unit: '112 K', '1.2 ε/k_B'."""
         return f"{plain(self.coordinate(quantity, reduced))} {unit_text(self.label(quantity))}".strip()
 
-    def told(self, sentence: str) -> str:
-        """A sentence of an estimator, its temperatures before their unit: 'rungs at 1.2 and 1.5 epsilon/k_B'."""
-        return sentence if self.kind == "reduced" else _TEMPERATURES.sub(self._temperatures, sentence)
-
-    def _temperatures(self, found: re.Match[str]) -> str:
-        def shown(number: re.Match[str]) -> str:
-            return plain(self.value("temperature", float(number[0])), _TOLD_DIGITS)
-
-        return f"{re.sub(_NUMBER, shown, found[1])} {self.label('temperature')}"
+    def temperature(self, reduced: float) -> str:
+        """A temperature with its unit, short enough for a sentence in a table: '109.61 K'."""
+        return f"{plain(self.value('temperature', reduced), _TOLD_DIGITS)} {self.label('temperature')}"
 
     def state(self, state: State) -> str:
         """A state in words: 'T = 112 K, density 1320 kg/m³'."""

@@ -11,6 +11,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from canonry.border import Border
 from canonry.errors import UserError
 from canonry.findings import Curve, Cut, Finding, Findings
 from canonry.isochore import Isochore, assemble
@@ -75,9 +76,10 @@ class _Rung:
             yield Curve(self.state, each.repeat, each.times[::every], (conserved - conserved[0])[::every])
 
 
-def findings(study: Study, directory: Path, *, watch: Callable[[str], None] | None = None) -> Findings:
+def findings(study: Study, directory: Path, border: Border, *, watch: Callable[[str], None] | None = None) -> Findings:
     """What a study directory's samples say, also while it is still being sampled.
 
+    border : the units in which reasons name temperatures
     watch : called with a few words on what is worked on
     Raises UserError if nothing has been sampled yet; BadSeries or NotSolved if samples cannot be used.
     """
@@ -96,7 +98,9 @@ def findings(study: Study, directory: Path, *, watch: Callable[[str], None] | No
         raise UserError(f"{directory}: there are no samples yet; what is needed is `canonry run` or `canonry sample`")
     tell("reweighting between the rungs")
     reference = guide(study.fluid)
-    isochores = [_isochore(study, [rung for rung in rungs if rung.state.density == rho]) for rho in _densities(rungs)]
+    isochores = [
+        _isochore(study, [rung for rung in rungs if rung.state.density == rho], border) for rho in _densities(rungs)
+    ]
     return Findings(
         properties=tuple(_doubted((each.properties() for each in isochores), reference)),
         curve=tuple(_doubted((each.curve() for each in isochores), reference)),
@@ -118,7 +122,7 @@ def _densities(rungs: list[_Rung]) -> list[float]:
     return list(dict.fromkeys(rung.state.density for rung in rungs))
 
 
-def _isochore(study: Study, rungs: list[_Rung]) -> Isochore:
+def _isochore(study: Study, rungs: list[_Rung], border: Border) -> Isochore:
     rungs = sorted(rungs, key=lambda rung: rung.state)
     series = [each for rung in rungs for each in rung.series]
     temperatures = {rung.state: rung.temperature for rung in rungs if rung.temperature is not None}
@@ -127,6 +131,7 @@ def _isochore(study: Study, rungs: list[_Rung]) -> Isochore:
         series,
         temperatures=temperatures,
         ideal_heat_capacity=study.ideal_heat_capacity,
+        spoken=border.temperature,
     )
 
 

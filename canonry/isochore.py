@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
 from itertools import pairwise
 
@@ -87,14 +87,16 @@ def assemble(
     *,
     temperatures: Mapping[State, Estimate],
     ideal_heat_capacity: float | None,
+    spoken: Callable[[float], str],
 ) -> Isochore:
     """The rungs of one density.
 
     own : what each rung says alone, by rising temperature; temperatures : measured, where no bath acts
     series : all repeats of these rungs, already cut
+    spoken : writes a temperature (epsilon/k_B) for the reader
     Raises NotSolved if rungs overlap and yet cannot be pooled.
     """
-    pooled = pool(series) if len(own) > 1 and series[0].bath else None
+    pooled = pool(series, spoken=spoken) if len(own) > 1 and series[0].bath else None
     return Isochore(own, pooled, temperatures, ideal_heat_capacity)
 
 

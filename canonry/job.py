@@ -59,7 +59,7 @@ def estimate(directory: Place, *, units: Kind | None = None, watch: Tell | None 
     directory = Path(directory)
     study = stored(directory)
     border = Border.of(study, units)
-    found = findings(study, directory, watch=watch)
+    found = findings(study, directory, border, watch=watch)
     references = [against(name, study.fluid) for name in study.compare.against]
     results = assemble(
         study,
@@ -105,7 +105,7 @@ def compare(
     if not names:
         raise UserError(f"{directory}: the study names no reference; what is needed is --against, or compare.against")
     references = [reference_for(name, study.fluid) for name in names]
-    headlines = findings(study, directory, watch=watch).headlines
+    headlines = findings(study, directory, border, watch=watch).headlines
     return verdict_table([held_against(headlines, reference, study) for reference in references], border)
 
 

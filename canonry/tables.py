@@ -119,7 +119,7 @@ def _estimate(finding: Finding, border: Border) -> dict[str, Any]:
         "headline": finding.headline,
         "effective_samples": _finite(finding.effective_samples),
         "trust": finding.trust,
-        "reason": border.told(finding.reason),
+        "reason": finding.reason,
     }
 
 

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from itertools import pairwise
 
@@ -30,13 +30,14 @@ class Gap:
     high: float
     rungs: tuple[float, ...]
 
-    def __str__(self) -> str:
-        both = f"the rungs at {self.low:g} and {self.high:g} epsilon/k_B"
+    def told(self, spoken: Callable[[float], str]) -> str:
+        """The gap and what would close it in words; `spoken` writes a temperature."""
+        both = f"the rungs at {spoken(self.low)} and {spoken(self.high)}"
         if not self.rungs:
             return f"{both} hold too few samples to be joined, sample them longer"
-        *most, last = (f"{temperature:.4g}" for temperature in self.rungs)
+        *most, last = map(spoken, self.rungs)
         listed = f"rungs at {', '.join(most)} and {last}" if most else f"a rung at {last}"
-        return f"{both} do not overlap, set {listed} epsilon/k_B between them"
+        return f"{both} do not overlap, set {listed} between them"
 
 
 def connected(rungs: Sequence[Rung]) -> npt.NDArray[np.int64]:

@@ -12,7 +12,7 @@ import logging
 import math
 import warnings
 from collections import defaultdict
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
 from functools import cached_property
@@ -65,6 +65,7 @@ class Pooled:
     gaps: list[Gap]
     _groups: list[Group]
     _reference_energy: float
+    _spoken: Callable[[float], str]
 
     @cached_property
     def overlap(self) -> Floats:
@@ -113,18 +114,25 @@ class Pooled:
                 yield Reweighted(temperature, support[best], properties)
 
     def _refusal(self, temperature: float, samples: float) -> str:
-        support = f"{samples:.0f} effective samples support temperature {temperature:g} epsilon/k_B"
+        support = f"{samples:.0f} effective samples support temperature {self._spoken(temperature)}"
         reason = f"{support}, {FEWEST_SAMPLES:.0f} are needed"
         for gap in self.gaps:
             if gap.low < temperature < gap.high:
-                return f"{reason}; {gap}"
+                return f"{reason}; {gap.told(self._spoken)}"
         nearest = min(self.temperatures, key=lambda each: abs(each - temperature))
-        return f"{reason}; the nearest rung is at {nearest:g} epsilon/k_B, set one closer or sample it longer"
+        if math.isclose(nearest, temperature, rel_tol=1e-9):
+            return f"{reason}; sample this rung longer"
+        return f"{reason}; the nearest rung is at {self._spoken(nearest)}, set one closer or sample it longer"
 
 
-def pool(series: Sequence[Series]) -> Pooled:
+def _in_reduced_units(temperature: float) -> str:
+    return f"{temperature:.5g} epsilon/k_B"
+
+
+def pool(series: Sequence[Series], *, spoken: Callable[[float], str] = _in_reduced_units) -> Pooled:
     """All repeats of all rungs of one isochore, pooled; series without samples are left out.
 
+    spoken : writes a temperature (epsilon/k_B) in the words of a refusal, with its unit
     Raises BadSeries if nothing is left, the series differ in fluid, density or particles, hold entries that are not
     finite, come twice, or have no bath; NotSolved if the free energies of overlapping rungs cannot be found.
     """
@@ -140,7 +148,7 @@ def pool(series: Sequence[Series]) -> Pooled:
         _solved([rung for rung, own in zip(rungs, labels, strict=True) if own == label]) for label in np.unique(labels)
     ]
     temperatures = [rung.temperature for rung in rungs]
-    return Pooled(temperatures, gaps(rungs, labels), groups, reference_energy)
+    return Pooled(temperatures, gaps(rungs, labels), groups, reference_energy, spoken)
 
 
 def _check(series: Sequence[Series]) -> None:
