@@ -22,6 +22,7 @@ _WORKS = {
     "constant-energy": "J. L. Lebowitz, J. K. Percus, L. Verlet, Phys. Rev. 153, 250 (1967)",
     "phase-volume": "E. M. Pearson, T. Halicioglu, W. A. Tiller, Phys. Rev. A 32, 3030 (1985)",
     "gamma": "U. Wolff, Comput. Phys. Commun. 156, 143 (2004); erratum 176, 383 (2007)",
+    "skewness": "P. Hall, Ann. Probab. 15, 920 (1987)",
     "reweighting": "M. R. Shirts, J. D. Chodera, J. Chem. Phys. 129, 124105 (2008)",
 }
 _SCHEMES = {
@@ -161,7 +162,8 @@ def _estimates(results: Results, setup: Setup) -> list[str]:
     )
     errors = (
         "Standard errors are from the integrated autocorrelation of the linearised fluctuation of each estimate, with "
-        "an automatic summation window and pooled over repeats (Gamma method) [gamma]."
+        "an automatic summation window and pooled over repeats (Gamma method) [gamma], widened for their own noise "
+        "(Student's t) and for the skewness of the estimate [skewness]."
     )
     reweighted = (results.curve["trust"] != "no").any() or (results.properties["method"] == "reweighted").any()
     pooled = (
