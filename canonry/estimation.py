@@ -15,10 +15,10 @@ from canonry.border import Border
 from canonry.errors import UserError
 from canonry.findings import Curve, Cut, Finding, Findings
 from canonry.isochore import Isochore, assemble
-from canonry.repeats import measured_temperature, properties_alone
 from canonry.risks import doubt, guide
 from canonry.sampling import recorded
 from canonry.study import Study
+from estimators.canonical import kinetic_temperature, rung_properties
 from estimators.estimate import Estimate, mean
 from estimators.settle import settled_start
 from estimators.structure import Structure, pair_structure
@@ -46,7 +46,7 @@ class _Rung:
     @cached_property
     def temperature(self) -> Estimate | None:
         """Measured, where no bath acts."""
-        return None if self.series[0].bath else measured_temperature(self.series)
+        return None if self.series[0].bath else kinetic_temperature(self.series)
 
     @cached_property
     def state(self) -> State:
@@ -141,7 +141,7 @@ def _rung(series: list[Series]) -> _Rung:
     light = [_light(each) for each in settled]
     return _Rung(
         series=light,
-        own=properties_alone(light, contact=structure.contact if structure else None),
+        own=rung_properties(light, contact=structure.contact if structure else None),
         structure=structure,
         before=[_light(each) for each in series],
     )

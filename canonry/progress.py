@@ -102,13 +102,13 @@ class _Tally:
 
     def _look(self, state: State) -> tuple[str, str]:
         """Heat capacity and pressure of a rung from its samples so far, with their error bars."""
-        from canonry.repeats import properties_alone
+        from estimators.canonical import rung_properties
         from sampler.ladder import load
 
         series = [each for each in map(load, self._chains[state]) if len(each)]
         if not series:
             return "", ""
-        properties = properties_alone(series)
+        properties = rung_properties(series)
         heat_capacity = properties["residual_heat_capacity"] + (self._study.ideal_heat_capacity or 0.0)
         named = (("heat_capacity", heat_capacity), ("pressure", properties["pressure"]))
         value = self._border.value

@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
+import operator
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
-from functools import cached_property
+from functools import cached_property, reduce
 
 import numpy as np
 import numpy.typing as npt
@@ -37,7 +38,8 @@ def rung_properties(series: Sequence[Series], *, contact: Estimate | None = None
     the fluctuation of K (J. L. Lebowitz, J. K. Percus, L. Verlet, Phys. Rev. 153, 250 (1967)), in the form exact for
     any N (E. M. Pearson, T. Halicioglu, W. A. Tiller, Phys. Rev. A 32, 3030 (1985)). The residual part is the total
     less f/2. gamma_V and B_T follow from derivatives of the same phase volume; see `_ConstantEnergy`. The state's own
-    temperature is then the nominal one and is not used.
+    temperature is then the nominal one and is not used. Repeats differ in energy, so fluctuations are those within each
+    repeat, about its own means.
     Raises BadSeries if the series are none, empty, not finite, or not of one state.
     """
     _check(series)
@@ -62,7 +64,8 @@ def rung_properties(series: Sequence[Series], *, contact: Estimate | None = None
 def kinetic_temperature(series: Sequence[Series]) -> Estimate:
     """Temperature from the mean kinetic energy of the repeats of one rung, 2<K>/f, epsilon/k_B."""
     _check(series)
-    return mean(_recorded(series, lambda each: each.kinetic)) * (2.0 / series[0].kinetic_freedom)
+    rung = _Rung(series) if series[0].bath else _ConstantEnergy(series)
+    return rung.mean_of(lambda each: each.kinetic) * (2.0 / series[0].kinetic_freedom)
 
 
 def _check(series: Sequence[Series]) -> None:
@@ -145,6 +148,23 @@ class _ConstantEnergy(_Rung):
     dP/dE and dP/dV follow by differentiation, and B_T = -V (dP/dV)_E - V (gamma_V/C)(T gamma_V - P). The long-range
     parts of W and X, constant while the energy fluctuates, are added to P and B_T.
     """
+
+    def mean_of(self, observable: Callable[[Series], Floats]) -> Estimate:
+        return self._within_repeats(lambda rung: rung.mean_of(observable))
+
+    def covariance_of(self, first: Callable[[Series], Floats], second: Callable[[Series], Floats]) -> Estimate:
+        """Within repeats; the influences are about the common covariance, as repeats scatter about that."""
+        one, other = (
+            {chain: values - np.mean(values) for chain, values in _recorded(self.series, each).items()}
+            for each in (first, second)
+        )
+        value = self._within_repeats(lambda rung: rung.covariance_of(first, second)).value
+        return replace(covariance(one, other), value=value)
+
+    def _within_repeats(self, estimate: Callable[[_Rung], Estimate]) -> Estimate:
+        """Of each repeat by itself, averaged by number of samples: their energies differ."""
+        samples = sum(map(len, self.series))
+        return reduce(operator.add, (estimate(_Rung([one])) * (len(one) / samples) for one in self.series))
 
     @property
     def _a(self) -> float:

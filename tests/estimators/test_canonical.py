@@ -86,6 +86,25 @@ def without_bath(generator, particles, fluid=SMOOTH):
     return found
 
 
+def test_constant_energy_repeats_of_different_energy_do_not_count_as_fluctuation():
+    """Half of the repeats 2 % warmer: pooled, their distance would count as scatter of K within a repeat."""
+    cold, warm = without_bath(np.random.default_rng(61), 256)
+    hotter = {name: 1.02 * getattr(warm, name) for name in ("energy", "sampled_energy", "kinetic")}
+    same, apart = rung_properties([cold, warm]), rung_properties([cold, replace(warm, **hotter)])
+    share = len(warm) / (len(cold) + len(warm))
+    for name in ("residual_heat_capacity", "thermal_pressure"):
+        # the well's heat capacity is the same at every energy; gamma_V keeps its virials
+        assert apart[name].value == pytest.approx(same[name].value, rel=0.02)
+        assert apart[name].standard_error == pytest.approx(same[name].standard_error, rel=0.1)
+    assert apart["residual_energy"].value == pytest.approx(
+        same["residual_energy"].value * (1 + 0.02 * share), rel=0.005
+    )
+    assert apart["residual_energy"].standard_error == pytest.approx(same["residual_energy"].standard_error, rel=0.1)
+    found = kinetic_temperature([cold, replace(warm, **hotter)])
+    assert found.value == pytest.approx(TEMPERATURE * (1 + 0.02 * share), rel=0.005)
+    assert found.trust == "ok"
+
+
 def exact_values(fluid):
     energy, virial, hypervirial = fluid.tail(DENSITY)
     pressure = DENSITY * TEMPERATURE * (1.0 + 1.5 * EXPONENT)
