@@ -13,7 +13,7 @@ import numpy.typing as npt
 
 from reference.equation_of_state import Reference
 from reference.helmholtz import Array, log_powers, outer_sum
-from reference.source import Accuracy, DescribedFluid, Source
+from reference.source import DescribedFluid, Source, beside_simulation, beside_slopes
 
 __all__ = ["REFERENCE", "PerturbedVirialEquation"]
 
@@ -121,26 +121,16 @@ _EQUATION = PerturbedVirialEquation(
     ),
 )
 
-_DEVIATION = (
-    "from the deviation of the equation from published simulation, not from a statement of its authors: covers "
-)
-_DYNAMICS = "molecular dynamics of G. Chaparro and E. A. Mueller, J. Chem. Phys. 158, 184505 (2023), temperature 1 to 9"
-_MONTE_CARLO = "Monte Carlo of the NIST Standard Reference Simulation Website at temperature 0.85"
-_SIMULATED = _DEVIATION + "{} states of the " + _DYNAMICS + ", and 9 of 9 of the " + _MONTE_CARLO
-_SLOPES = _DEVIATION + "{}, of the " + _DYNAMICS
-
 _ACCURACY = {
-    "residual_energy": Accuracy(0.012, 1, 0.001, _SIMULATED.format("289 of 302")),
-    "pressure": Accuracy(0.015, 2, 0.003, _SIMULATED.format("299 of 302")),
-    "residual_heat_capacity": Accuracy(
-        0.02, 1, 0.02, _SLOPES.format("150 of 150 slopes along isochores, temperature 1.2 to 7.2")
+    "residual_energy": beside_simulation(0.012, 1, 0.001, covered=289),
+    "pressure": beside_simulation(0.015, 2, 0.003, covered=299),
+    "residual_heat_capacity": beside_slopes(
+        0.02, 1, 0.02, covered="150 of 150 slopes along isochores, temperature 1.2 to 7.2"
     ),
-    "thermal_pressure": Accuracy(
-        0.01, 2, 0.005, _SLOPES.format("144 of 150 slopes along isochores, temperature 1.2 to 7.2")
+    "thermal_pressure": beside_slopes(
+        0.01, 2, 0.005, covered="144 of 150 slopes along isochores, temperature 1.2 to 7.2"
     ),
-    "bulk_modulus": Accuracy(
-        0.05, 2, 0.01, _SLOPES.format("141 of 141 slopes along isotherms, temperature 1.6 to 7.2")
-    ),
+    "bulk_modulus": beside_slopes(0.05, 2, 0.01, covered="141 of 141 slopes along isotherms, temperature 1.6 to 7.2"),
 }
 
 REFERENCE = Reference(

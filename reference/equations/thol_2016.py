@@ -2,7 +2,7 @@
 
 from reference.equation_of_state import Reference
 from reference.helmholtz import HelmholtzEquation
-from reference.source import Accuracy, DescribedFluid, Source
+from reference.source import DescribedFluid, Source, beside_simulation, beside_slopes
 
 __all__ = ["ACCURACY", "REFERENCE"]
 
@@ -40,26 +40,16 @@ _EQUATION = HelmholtzEquation(
     ),
 )
 
-_DEVIATION = (
-    "from the deviation of the equation from published simulation, not from a statement of its authors: covers "
-)
-_DYNAMICS = "molecular dynamics of G. Chaparro and E. A. Mueller, J. Chem. Phys. 158, 184505 (2023), temperature 1 to 9"
-_MONTE_CARLO = "Monte Carlo of the NIST Standard Reference Simulation Website at temperature 0.85"
-_SIMULATED = _DEVIATION + "{} states of the " + _DYNAMICS + ", and 9 of 9 of the " + _MONTE_CARLO
-_SLOPES = _DEVIATION + "{}, of the " + _DYNAMICS
-
 ACCURACY = {
-    "residual_energy": Accuracy(0.006, 1, 0.001, _SIMULATED.format("285 of 302")),
-    "pressure": Accuracy(0.005, 2, 0.003, _SIMULATED.format("292 of 302")),
-    "residual_heat_capacity": Accuracy(
-        0.01, 1, 0.01, _SLOPES.format("150 of 150 slopes along isochores, temperature 1.2 to 7.2")
+    "residual_energy": beside_simulation(0.006, 1, 0.001, covered=285),
+    "pressure": beside_simulation(0.005, 2, 0.003, covered=292),
+    "residual_heat_capacity": beside_slopes(
+        0.01, 1, 0.01, covered="150 of 150 slopes along isochores, temperature 1.2 to 7.2"
     ),
-    "thermal_pressure": Accuracy(
-        0.005, 2, 0.003, _SLOPES.format("149 of 150 slopes along isochores, temperature 1.2 to 7.2")
+    "thermal_pressure": beside_slopes(
+        0.005, 2, 0.003, covered="149 of 150 slopes along isochores, temperature 1.2 to 7.2"
     ),
-    "bulk_modulus": Accuracy(
-        0.05, 2, 0.005, _SLOPES.format("136 of 141 slopes along isotherms, temperature 1.6 to 7.2")
-    ),
+    "bulk_modulus": beside_slopes(0.05, 2, 0.005, covered="136 of 141 slopes along isotherms, temperature 1.6 to 7.2"),
 }
 
 REFERENCE = Reference(
