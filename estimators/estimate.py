@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import operator
 from collections import defaultdict
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
@@ -26,6 +27,7 @@ State = tuple[float, float, int]
 NORMAL = 1.959963984540054  # 95 % of a normal variable lies within so many standard deviations
 SKEW = (NORMAL**4 + 2.0 * NORMAL**2 - 3.0) / 18.0
 STEP = 1e-20
+CURVATURE_STEP = 1e-2  # standard errors
 
 
 @dataclass(frozen=True, eq=False)
@@ -143,8 +145,7 @@ class Estimate:
 
     def __mul__(self, other: Estimate | float) -> Estimate:
         if isinstance(other, Estimate):
-            parts = [(other.value, self), (self.value, other)]
-            return _linear(self.value * other.value, parts, _common_method(self, other))
+            return combine(operator.mul, self, other, method=_common_method(self, other))
         return _linear(self.value * other, [(other, self)], self.method)
 
     def __rmul__(self, other: float) -> Estimate:
@@ -152,14 +153,14 @@ class Estimate:
 
     def __truediv__(self, other: Estimate | float) -> Estimate:
         if isinstance(other, Estimate):
-            return self * other**-1.0
+            return combine(operator.truediv, self, other, method=_common_method(self, other))
         return self * (1.0 / other)
 
     def __rtruediv__(self, other: float) -> Estimate:
         return self**-1.0 * other
 
     def __pow__(self, power: float) -> Estimate:
-        return _linear(self.value**power, [(power * self.value ** (power - 1.0), self)], self.method)
+        return combine(lambda value: value**power, self, method=self.method)
 
 
 def exact(value: float, *, method: str = "average") -> Estimate:
@@ -190,18 +191,44 @@ def centred(observables: Mapping[Chain, Floats]) -> tuple[float, dict[Chain, Flo
 
 
 def combine(function: Callable[..., Any], *estimates: Estimate, method: str = "derived") -> Estimate:
-    """Smooth function of estimates, to first order, with all correlations kept.
+    """Smooth function of estimates, with all correlations kept, free of bias to first order.
 
     function : of as many numbers; must take complex ones and be analytic (the gradient is a complex step: numpy ufuncs
     and arithmetic do, abs() and comparisons do not)
+    A curved function of noisy numbers is off by half the sum of its second derivatives times their covariances, which
+    is taken off.
     """
-    values = [estimate.value for estimate in estimates]
-    parts = []
+    values = np.array([estimate.value for estimate in estimates])
+    gradient = _gradient(function, values)
+    bias = 0.0
     for index, estimate in enumerate(estimates):
-        shifted: list[complex] = [*values]
-        shifted[index] += 1j * STEP
-        parts.append((float(np.imag(function(*shifted))) / STEP, estimate))
-    return _linear(float(np.real(function(*values))), parts, method)
+        width = estimate.variance**0.5
+        if not 0.0 < width < math.inf:
+            continue
+        step = np.zeros(len(values))
+        step[index] = CURVATURE_STEP * width
+        slopes = (_gradient(function, values + step) - _gradient(function, values - step)) / (2.0 * step[index])
+        bias += 0.5 * sum(
+            slope * _covariance_of_errors(estimate, other)
+            for slope, other in zip(slopes, estimates, strict=True)
+            if slope
+        )
+    value = float(np.real(function(*values))) - bias
+    return _linear(value, list(zip(map(float, gradient), estimates, strict=True)), method)
+
+
+def _gradient(function: Callable[..., Any], values: Floats) -> Floats:
+    """By complex steps, (n,)."""
+    return np.array([np.imag(function(*(values + 1j * STEP * unit))) / STEP for unit in np.eye(len(values))])
+
+
+def _covariance_of_errors(first: Estimate, second: Estimate) -> float:
+    """Covariance of the errors of two estimates, from the variances of sum and difference; 0 if one is unknown."""
+    if first is second:
+        return first.variance
+    larger = _linear(0.0, [(1.0, first), (1.0, second)], "").variance
+    smaller = _linear(0.0, [(1.0, first), (-1.0, second)], "").variance
+    return 0.25 * (larger - smaller) if math.isfinite(larger + smaller) else 0.0
 
 
 def _common_method(first: Estimate, second: Estimate) -> str:

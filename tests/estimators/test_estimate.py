@@ -61,7 +61,8 @@ def test_functions_of_correlated_means_as_pyerrors_propagates_them(generator):
     pairs[0] = (pairs[0][0], np.exp(-their_a) * np.sqrt(their_b) / (their_a + their_b))
     for ours, theirs in pairs:
         theirs.gamma_method(S=WINDOW_FACTOR)
-        assert ours.value == pytest.approx(theirs.value, rel=1e-12)
+        # they keep the bias of curved functions, which is far below the error here
+        assert abs(ours.value - theirs.value) < 0.1 * ours.standard_error
         assert math.sqrt(ours.variance) == pytest.approx(theirs.dvalue, rel=1e-8)
         assert ours.error_of_error / ours.standard_error == pytest.approx(theirs.ddvalue / theirs.dvalue, rel=1e-8)
 
@@ -275,3 +276,22 @@ def test_nothing_to_average_is_refused():
         mean({COLD: np.empty(0)})
     with pytest.raises(BadSeries, match="not finite numbers"):
         mean({COLD: np.array([1.0, math.nan])})
+
+
+def test_curved_functions_of_short_correlated_means_are_unbiased():
+    """Series of 200 samples, tau 2, mean and deviation 1: 1/x is high by var(mean) = 0.02, a/b by var/2 where a is
+    half of b and noise; removing that leaves 3 var^2 = 0.0012. The mean of 1200 repetitions scatters by 0.004.
+    """
+    generator = np.random.default_rng(71)
+    inverse, ratio, raw = [], [], []
+    for _ in range(1200):
+        shared = 1.0 + autoregressive(generator, 200, 2.0)
+        a, b = mean({COLD: 0.5 * shared + 0.5 + autoregressive(generator, 200, 2.0)}), mean({COLD: shared})
+        inverse.append((1.0 / b).value)
+        ratio.append((a / b).value)
+        raw.append((1.0 / b.value, a.value / b.value))
+    for found, biased, off in zip((inverse, ratio), np.transpose(raw), (0.02, 0.01), strict=True):
+        error = np.std(found) / math.sqrt(len(found))
+        assert abs(np.mean(found) - 1.0) < 4.0 * error + 0.0012
+        # what is taken off is itself curved: up to 6 var = 12 % more on average, and the variance is noisy
+        assert np.mean(biased) - np.mean(found) == pytest.approx(off, rel=0.3)
