@@ -159,7 +159,8 @@ def test_without_a_bath_temperatures_are_measured(tmp_path: Path) -> None:
     rows = results.properties.set_index(["temperature", "property"])["value"]
     for temperature in found:
         factor = rows[temperature, "pressure"] / (0.7 * temperature)
-        assert rows[temperature, "compressibility_factor"] == pytest.approx(factor, rel=1e-9)
+        # less the bias of a ratio of two noisy numbers, about var(T)/T^2 = 1e-5 here
+        assert rows[temperature, "compressibility_factor"] == pytest.approx(factor, rel=5e-5)
 
 
 def test_repeats_of_different_energy_are_not_one_sample(tmp_path: Path, liquid: Results) -> None:
