@@ -63,9 +63,7 @@ class _Rung:
     @property
     def cuts(self) -> Iterator[Cut]:
         for before, after in zip(self.before, self.series, strict=True):
-            state = before.state
-            key = (state.temperature, state.density, state.particles, before.repeat)
-            effective = mean({key: after.energy}).effective_samples
+            effective = mean({after.chain: after.energy}).effective_samples
             yield Cut(self.state, before.repeat, len(before) - len(after), len(before), effective)
 
     @property

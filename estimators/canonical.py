@@ -79,10 +79,7 @@ def _check(series: Sequence[Series]) -> None:
 
 
 def _recorded(series: Sequence[Series], observable: Callable[[Series], Floats]) -> Recorded:
-    return {
-        (each.state.temperature, each.state.density, each.state.particles, each.repeat): observable(each)
-        for each in series
-    }
+    return {each.chain: observable(each) for each in series}
 
 
 @dataclass(frozen=True)

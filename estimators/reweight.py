@@ -21,7 +21,7 @@ import numpy as np
 import numpy.typing as npt
 
 from estimators.errors import BadSeries
-from estimators.estimate import Chain, Estimate, mean
+from estimators.estimate import Estimate, mean
 from estimators.group import Group, Rung
 from estimators.mixture import bennett, polished
 from estimators.moments import Run, block_starts
@@ -164,19 +164,14 @@ def _check(series: Sequence[Series]) -> None:
         columns = (each.energy, each.sampled_energy, each.virial, each.hypervirial)
         if not all(np.all(np.isfinite(column)) for column in columns):
             raise BadSeries(f"the series at {each.state}, repeat {each.repeat}, holds entries that are not finite")
-    if len({_chain(each) for each in series}) < len(series):
+    if len({each.chain for each in series}) < len(series):
         raise BadSeries("the same repeat of a rung was given twice")
-
-
-def _chain(series: Series) -> Chain:
-    state = series.state
-    return (state.temperature, state.density, state.particles, series.repeat)
 
 
 def _rung(temperature: float, repeats: list[Series], reference_energy: float) -> Rung:
     energies = [each.sampled_energy - reference_energy for each in repeats]
     samples = sum(map(len, energies))
-    effective = mean({_chain(each): values for each, values in zip(repeats, energies, strict=True)}).effective_samples
+    effective = mean({each.chain: values for each, values in zip(repeats, energies, strict=True)}).effective_samples
     return Rung(temperature, repeats, energies, max(samples / max(effective, 1.0), 1.0))
 
 
@@ -191,7 +186,7 @@ def _solved(rungs: list[Rung]) -> Group:
     repeats = [(index, series, energies) for index, rung in enumerate(rungs) for series, energies in rung.recorded]
     centres, pooled = _centres([series for _, series, _ in repeats]), sum(rung.samples for rung in rungs)
     runs = [
-        Run(index, _chain(series), series, energies, centres, block_starts(len(series), pooled))
+        Run(index, series.chain, series, energies, centres, block_starts(len(series), pooled))
         for index, series, energies in repeats
     ]
     return Group(rungs, mixture, runs)

@@ -71,7 +71,7 @@ def pair_structure(series: Sequence[Series], *, bin_width: float = 0.02) -> Stru
     _check(series, bin_width)
     first = series[0]
     bins = _Bins.of(first.fluid, first.state, bin_width)
-    counts = {_chain(each): _pair_counts(each.frames, first.state.box, bins) for each in series}
+    counts = {each.chain: _pair_counts(each.frames, first.state.box, bins) for each in series}
     return _Pairs(series, bins, counts).structure()
 
 
@@ -86,11 +86,6 @@ def _check(series: Sequence[Series], bin_width: float) -> None:
     for each in series:
         if not np.all(np.isfinite(each.frames)):
             raise BadSeries(f"a frame at {each.state}, repeat {each.repeat}, holds positions that are not finite")
-
-
-def _chain(series: Series) -> Chain:
-    state = series.state
-    return (state.temperature, state.density, state.particles, series.repeat)
 
 
 @dataclass(frozen=True)

@@ -49,6 +49,11 @@ class Series:
         return len(self.energy)
 
     @property
+    def chain(self) -> tuple[float, float, int, int]:
+        """What marks this repeat among all: temperature, density, particles, repeat."""
+        return self.state.temperature, self.state.density, self.state.particles, self.repeat
+
+    @property
     def times(self) -> Floats:
         """(n,), time of each sample since the stated equilibration ended."""
         return self.interval * np.arange(1.0, len(self) + 1)
