@@ -13,7 +13,7 @@ from canonry.quantities import NotAccepted, percent, rounded
 from canonry.units import PROPERTIES, Kind, Scale
 from canonry.writing import study_text
 from sampler.fluid import Fluid, State, Truncation
-from sampler.protocol import Protocol, Scheme
+from sampler.protocol import Precision, Protocol, Scheme
 
 __all__ = ["COMPARED", "Compare", "Study", "Tolerance", "load"]
 
@@ -245,6 +245,7 @@ def _sampling(table: Table, scale: Scale | None, default_friction: float) -> Pro
         time_step=table.read("time_step", quantity("time", 1e-6, 0.1, scale), 0.005),
         friction=table.read("friction", quantity("friction", 1e-3, 1e3, scale), default_friction),
         scheme=table.read("scheme", choice(get_args(Scheme), later=("metropolised",)), "baoab"),
+        precision=table.read("precision", choice(get_args(Precision)), "mixed"),
         equilibration=table.read("equilibration", whole(0, 10**12), 20_000),
         **counts,
     )

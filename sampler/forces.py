@@ -1,4 +1,4 @@
-"""Forces and pair sums: each particle against whole groups, four lanes at a time."""
+"""Forces and pair sums: each particle against whole groups, eight lanes at a time."""
 
 from __future__ import annotations
 
@@ -10,10 +10,10 @@ from numba.extending import overload
 
 from sampler.compiled import kernel, piece
 from sampler.fluid import Fluid
-from sampler.groups import BLOCK, FAR, LANES, group, narrow, scatter
-from sampler.vector import both, count, later_lanes, load, select, smaller, splat, square_root, store, total
+from sampler.groups import BLOCK, FINE, LANES, Near, fix, gather, group, limits, narrow, scatter
+from sampler.vector import both, broad, later_lanes, load, real, reciprocal, select, smaller, splat, square_root, store, total
 
-__all__ = ["ForceShifted", "Truncated", "evaluate", "fold_images", "pair_forces", "pair_function", "place_images"]
+__all__ = ["ForceShifted", "Truncated", "evaluate", "pair_forces", "pair_function"]
 
 
 class Truncated(NamedTuple):
@@ -39,117 +39,129 @@ def pair_function(fluid: Fluid) -> PairFunction:
     return Truncated(float(fluid.cutoff))
 
 
-def _force(pair, square, inverse, inverse6):  # type: ignore[no-untyped-def]
-    """-u'(r)/r from r^2, r^-2 and r^-6; zero where r^-2 is. Chosen by the type of `pair` when compiled."""
+def _force(pair, square):  # type: ignore[no-untyped-def]
+    """-u'(r)/r from r^2; anything outside the cutoff. Chosen by the type of `pair` when compiled."""
     raise TypeError("compiled code only")
 
 
 @overload(_force, jit_options={"forceinline": True})
-def _force_by_type(pair, square, inverse, inverse6):  # type: ignore[no-untyped-def]
-    if pair.instance_class is Truncated:
-        return lambda pair, square, inverse, inverse6: (splat(48.0) * inverse6 - splat(24.0)) * inverse6 * inverse
-    return lambda pair, square, inverse, inverse6: (
-        (splat(48.0) * inverse6 - splat(24.0)) * inverse6 * inverse + splat(pair.slope) * square_root(inverse)
-    )
+def _force_by_type(pair, square):  # type: ignore[no-untyped-def]
+    def bare(pair, square):  # type: ignore[no-untyped-def]
+        inverse = reciprocal(square)
+        inverse6 = inverse * inverse * inverse
+        return (48.0 * inverse6 - 24.0) * inverse6 * inverse
+
+    def shifted(pair, square):  # type: ignore[no-untyped-def]
+        inverse = reciprocal(square)
+        inverse6 = inverse * inverse * inverse
+        return (48.0 * inverse6 - 24.0) * inverse6 * inverse + pair.slope * square_root(inverse)
+
+    return bare if pair.instance_class is Truncated else shifted
 
 
-def _distance(pair, square, inverse):  # type: ignore[no-untyped-def]
-    """r where the potential needs the sum of distances, else zero. Chosen like `_force`."""
+def _terms(pair, square):  # type: ignore[no-untyped-def]
+    """r^-12, r^-6 and, where the potential needs the sum of distances, r. Chosen like `_force`."""
     raise TypeError("compiled code only")
 
 
-@overload(_distance, jit_options={"forceinline": True})
-def _distance_by_type(pair, square, inverse):  # type: ignore[no-untyped-def]
-    if pair.instance_class is Truncated:
-        return lambda pair, square, inverse: splat(0.0)
-    return lambda pair, square, inverse: square * square_root(inverse)
+@overload(_terms, jit_options={"forceinline": True})
+def _terms_by_type(pair, square):  # type: ignore[no-untyped-def]
+    def bare(pair, square):  # type: ignore[no-untyped-def]
+        inverse = reciprocal(square)
+        inverse6 = inverse * inverse * inverse
+        return inverse6 * inverse6, inverse6, 0.0 * inverse
+
+    def shifted(pair, square):  # type: ignore[no-untyped-def]
+        inverse = reciprocal(square)
+        inverse6 = inverse * inverse * inverse
+        return inverse6 * inverse6, inverse6, square * square_root(inverse)
+
+    return bare if pair.instance_class is Truncated else shifted
 
 
 @piece
-def _meet(pair, position, force, x, y, z, other, mask, limit):  # type: ignore[no-untyped-def]
-    """One particle with those lanes of a group that are in the mask and within the cutoff; the group is pushed back."""
-    dx, dy, dz = x - load(position, other), y - load(position, other + 4), z - load(position, other + 8)
-    square = dx * dx + dy * dy + dz * dz
-    inside = both(smaller(square, limit), mask)
-    inverse = select(inside, splat(1.0) / square, splat(0.0))
-    inverse6 = inverse * inverse * inverse
-    strength = _force(pair, square, inverse, inverse6)
+def _apart(ticks, limit, scale, x, y, z, other):  # type: ignore[no-untyped-def]
+    """A particle and a group: differences in ticks, squared distances, and which lanes are inside the cutoff."""
+    dx = real(x - load(ticks, other))
+    dy = real(y - load(ticks, other + LANES))
+    dz = real(z - load(ticks, other + 2 * LANES))
+    square = scale * (dx * dx + dy * dy + dz * dz)
+    return dx, dy, dz, square, smaller(square, load(limit, other))
+
+
+@piece
+def _push(pair, force, zero, other, dx, dy, dz, square, inside):  # type: ignore[no-untyped-def]
+    """The force of a group on a particle, lane by lane; the group is pushed back."""
+    strength = select(inside, _force(pair, square), zero)
     fx, fy, fz = strength * dx, strength * dy, strength * dz
     store(force, other, load(force, other) - fx)
-    store(force, other + 4, load(force, other + 4) - fy)
-    store(force, other + 8, load(force, other + 8) - fz)
-    return fx, fy, fz, inverse6, count(inside), _distance(pair, square, inverse)
+    store(force, other + LANES, load(force, other + LANES) - fy)
+    store(force, other + 2 * LANES, load(force, other + 2 * LANES) - fz)
+    return fx, fy, fz
 
 
 @kernel
-def pair_forces(pair, position, force, n_groups, near, sums):  # type: ignore[no-untyped-def]
-    """Forces on groups and images, overwritten; with `sums` also S12, S6, pairs and sum of distances, (4,).
+def pair_forces(pair, ticks, limit, tick, labels, near, force, sums):  # type: ignore[no-untyped-def]
+    """Forces of all pairs in the precision of `force`, overwritten; with room in `sums` also the pair sums.
 
-    position, force : slot layout, images included
-    sums : None leaves them out, and the work for them
+    ticks : slot layout, whole numbers of `tick` (sigma); limit : as `limits` gives it
+    force : slot layout, in epsilon/sigma per tick
+    sums : (4,) S12, S6, pairs and sum of distances; empty leaves them out, and the work for them
     """
+    number = force.dtype.type
+    zero, one = splat(number(0.0)), splat(number(1.0))
     for at in range(0, force.size, LANES):
-        store(force, at, splat(0.0))
-    limit, zero, everyone = splat(pair.cutoff * pair.cutoff), splat(0.0), later_lanes(-1)
+        store(force, at, zero)
+    scale = tick * tick
     s12, s6, pairs, distances = zero, zero, zero, zero
-    for slot in range(LANES * n_groups):
-        lane = slot % LANES
-        own = BLOCK * (slot // LANES)
-        at = own + lane
-        if position[at] == FAR:
+    for slot in range(labels.size):
+        if labels[slot] < 0:
             continue
-        x, y, z = splat(position[at]), splat(position[at + 4]), splat(position[at + 8])
-        px, py, pz, i6, met, length = _meet(pair, position, force, x, y, z, own, later_lanes(lane), limit)
-        if sums is not None:
-            s12, s6, pairs, distances = s12 + i6 * i6, s6 + i6, pairs + met, distances + length
-        for k in range(near.start[slot], near.start[slot + 1]):
-            other = np.int64(near.offsets[k])
-            fx, fy, fz, i6, met, length = _meet(pair, position, force, x, y, z, other, everyone, limit)
+        lane, other = slot % LANES, BLOCK * (slot // LANES)
+        at = other + lane
+        x, y, z = splat(ticks[at]), splat(ticks[at + LANES]), splat(ticks[at + 2 * LANES])
+        px, py, pz = zero, zero, zero
+        dx, dy, dz, square, inside = _apart(ticks, limit, scale, x, y, z, other)
+        inside = both(inside, later_lanes(lane))
+        for k in range(near.start[slot], near.start[slot + 1] + 1):
+            coming = np.int64(near.offsets[np.uint64(k)])
+            next_dx, next_dy, next_dz, next_square, next_inside = _apart(ticks, limit, scale, x, y, z, coming)
+            fx, fy, fz = _push(pair, force, zero, other, dx, dy, dz, square, inside)
             px, py, pz = px + fx, py + fy, pz + fz
-            if sums is not None:
-                s12, s6, pairs, distances = s12 + i6 * i6, s6 + i6, pairs + met, distances + length
+            if sums.size > 0:
+                a, b, c = _terms(pair, square)
+                s12, s6 = s12 + select(inside, a, zero), s6 + select(inside, b, zero)
+                pairs, distances = pairs + select(inside, one, zero), distances + select(inside, c, zero)
+            other, inside = coming, next_inside
+            dx, dy, dz, square = next_dx, next_dy, next_dz, next_square
         force[at] += total(px)
-        force[at + 4] += total(py)
-        force[at + 8] += total(pz)
-    if sums is not None:
+        force[at + LANES] += total(py)
+        force[at + 2 * LANES] += total(pz)
+    if sums.size > 0:
         sums[0], sums[1], sums[2], sums[3] = total(s12), total(s6), total(pairs), total(distances)
 
 
 @kernel
-def place_images(position, n_groups, groups):  # type: ignore[no-untyped-def]
-    """Copy the groups to their periodic images."""
-    for k in range(groups.image_source.size):
-        source, image = BLOCK * groups.image_source[k], BLOCK * (n_groups + k)
-        for c in range(3):
-            store(position, image + 4 * c, load(position, source + 4 * c) + splat(groups.image_shift[k, c]))
+def scaled(values, factor, out):  # type: ignore[no-untyped-def]
+    """Values times a factor, as float64."""
+    by = splat(factor)
+    for at in range(0, values.size, LANES):
+        store(out, at, by * broad(load(values, at)))
 
 
 @kernel
-def fold_images(force, n_groups, groups):  # type: ignore[no-untyped-def]
-    """Add the forces on images to the groups they stand for."""
-    for k in range(groups.image_source.size):
-        source, image = BLOCK * groups.image_source[k], BLOCK * (n_groups + k)
-        for c in range(3):
-            store(force, source + 4 * c, load(force, source + 4 * c) + load(force, image + 4 * c))
-
-
-@kernel
-def _evaluate(pair, where, box, reach):  # type: ignore[no-untyped-def]
-    groups = group(where, box, reach)
-    n_groups = groups.labels.size // LANES
-    position = scatter(where, groups, FAR)
-    place_images(position, n_groups, groups)
-    near = narrow(position, groups, reach)
-    force = np.empty_like(position)
-    sums = np.empty(4)
-    pair_forces(pair, position, force, n_groups, near, sums)
-    fold_images(force, n_groups, groups)
-    out = np.empty_like(where)
-    for slot in range(groups.labels.size):
-        if groups.labels[slot] >= 0:
-            for c in range(3):
-                out[groups.labels[slot], c] = force[BLOCK * (slot // LANES) + LANES * c + slot % LANES]
-    return out, sums
+def _evaluate(pair, where, box):  # type: ignore[no-untyped-def]
+    groups = group(where, box, pair.cutoff)
+    size = groups.labels.size
+    fine, coarse = np.empty(3 * size, np.int64), np.empty(3 * size, np.int32)
+    fix(scatter(where, groups.labels), box, fine, coarse)
+    near = Near(np.zeros(size + 1, np.int64), np.empty(LANES * groups.start[-1] + 1, np.int32))
+    narrow(coarse, groups, box, pair.cutoff, near)
+    limit = limits(groups.labels, pair.cutoff * pair.cutoff, np.empty(3 * size))
+    force, sums, out = np.empty(3 * size), np.empty(4), np.empty_like(where)
+    pair_forces(pair, fine, limit, box / FINE, groups.labels, near, force, sums)
+    gather(force, groups.labels, out)
+    return out * (box / FINE), sums
 
 
 def evaluate(
@@ -163,5 +175,5 @@ def evaluate(
     fluid.check_box(box)
     where = np.mod(positions, box)
     where[where >= box] = 0.0
-    forces, sums = _evaluate(pair_function(fluid), where, box, fluid.cutoff)
+    forces, sums = _evaluate(pair_function(fluid), where, box)
     return forces, sums

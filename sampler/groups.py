@@ -1,11 +1,12 @@
-"""Spatial groups of four particles, their periodic images, and the lists of which groups may touch.
+"""Spatial groups of eight particles and the lists of which groups may touch.
 
-Particles are sorted into square columns and along z inside a column, then cut into groups of four lanes; the last
-group of a column is filled up with padding far outside. Every pair is met once: a group meets the groups behind it
-and the images shifted by a positive lattice vector (first non-zero component positive). Two lists: `wide`, by group
-and bounding boxes, rarely made; `near`, by particle and true distances, cut out of the wide one often.
+Particles are sorted into square columns and along z inside a column, then cut into groups of eight lanes; the last
+group of a column is filled up with padding. Positions are also held as whole numbers, the box edge being the range of
+the integer, so that a difference wraps to the nearest image by itself: `fine` (int64) and `coarse` (int32).
+Every pair is met once. Two lists: `wide`, by group and bounding boxes, rarely made; `near`, by particle and true
+distances, cut out of the wide one often.
 
-Slot layout: coordinate c of lane l in group g stands at [12 g + 4 c + l].
+Slot layout: coordinate c of lane l in group g stands at [24 g + 8 c + l].
 """
 
 from __future__ import annotations
@@ -16,32 +17,30 @@ import numpy as np
 import numpy.typing as npt
 
 from sampler.compiled import kernel, piece
-from sampler.vector import any_of, load, smaller, splat
+from sampler.vector import LANES, any_of, load, low_bits, real, smaller, splat, store, whole
 
-__all__ = ["Groups", "Near", "group", "narrow", "scatter"]
+__all__ = ["BLOCK", "FINE", "COARSE", "LANES", "Groups", "Near", "fix", "gather", "group", "limits", "narrow", "scatter"]
 
-LANES = 4
-BLOCK = 12  # numbers in a group: three coordinates of four lanes
-FAR = 1.0e8  # where padding sits; its distance to anything is beyond every cutoff
+BLOCK = 3 * LANES  # numbers in a group: three coordinates of eight lanes
+FINE, COARSE = 2.0**64, 2.0**32  # of a whole box edge
+LINE = 64  # bytes
+_MARGIN = 1e-4  # sigma; more than coarse distances can be off
 
 
 class Groups(NamedTuple):
     """Groups and their wide list.
 
-    labels : (4 n_groups,), particle in each slot, -1 for padding
-    image_source, image_shift : (n_images,), (n_images, 3), groups repeated by periodicity, counted on from n_groups
-    start, partners : group g may touch the groups partners[start[g]:start[g + 1]]
+    labels : (8 n_groups,), particle in each slot, -1 for padding
+    start, partners : group g may touch itself and the groups partners[start[g]:start[g + 1]], all behind it
     """
 
     labels: npt.NDArray[np.int64]
-    image_source: npt.NDArray[np.int64]
-    image_shift: npt.NDArray[np.float64]
     start: npt.NDArray[np.int64]
     partners: npt.NDArray[np.int32]
 
 
 class Near(NamedTuple):
-    """Offsets in the slot layout of the groups that slot i meets, offsets[start[i]:start[i + 1]], but its own."""
+    """Offsets in the slot layout of the groups that slot i meets beside its own, offsets[start[i]:start[i + 1]]."""
 
     start: npt.NDArray[np.int64]
     offsets: npt.NDArray[np.int32]
@@ -80,7 +79,7 @@ def _sort(where, box, n_columns, n_bins):  # type: ignore[no-untyped-def]
 
 @kernel
 def _bounds(where, labels):  # type: ignore[no-untyped-def]
-    """Bounding boxes of groups, (n_groups, 6): lower then upper corner."""
+    """Bounding boxes of groups, (n_groups, 6): centre, then half the edges."""
     bounds = np.empty((labels.size // LANES, 6))
     for g in range(bounds.shape[0]):
         for c in range(3):
@@ -90,179 +89,134 @@ def _bounds(where, labels):  # type: ignore[no-untyped-def]
                 if label >= 0:
                     low = min(low, where[label, c])
                     high = max(high, where[label, c])
-            bounds[g, c], bounds[g, 3 + c] = low, high
+            bounds[g, c], bounds[g, 3 + c] = 0.5 * (low + high), 0.5 * (high - low)
     return bounds
 
 
 @piece
-def _is_image_needed(bounds, g, shift, box, reach):  # type: ignore[no-untyped-def]
-    """Whether group g shifted by a lattice vector comes within reach of the box."""
-    near = True
-    for c in range(3):
-        move = shift[c] * box
-        near = near and bounds[g, c] + move <= box + reach and bounds[g, 3 + c] + move >= -reach
-    return near
+def _gap(bounds, a, b, c, box):  # type: ignore[no-untyped-def]
+    """Distance along coordinate c between bounding boxes, nearest images."""
+    apart = abs(bounds[a, c] - bounds[b, c])
+    return max(0.0, min(apart, box - apart) - bounds[a, 3 + c] - bounds[b, 3 + c])
 
 
 @kernel
-def _images(bounds, column, n_columns, margin, box, reach):  # type: ignore[no-untyped-def]
-    """Images in the order of the extended columns, and the first image of each extended column.
-
-    Extended columns run over 0 .. n_columns + margin in x and -margin .. n_columns + margin in y.
-    """
-    width = n_columns + 2 * margin
-    first = np.zeros((n_columns + margin) * width + 1, np.int64)
-    source = np.empty(0, np.int64)
-    shifts = np.empty((0, 3))
-    shift = np.zeros(3)
-    for filling in range(2):
-        count = 0
-        for ex in range(n_columns + margin):
-            for ey in range(-margin, n_columns + margin):
-                shift[0] = 1.0 if ex >= n_columns else 0.0
-                shift[1] = -1.0 if ey < 0 else (1.0 if ey >= n_columns else 0.0)
-                home = (ex - int(shift[0]) * n_columns) * n_columns + ey - int(shift[1]) * n_columns
-                for sz in range(-1, 2):
-                    shift[2] = sz
-                    leading = shift[0] if shift[0] != 0.0 else (shift[1] if shift[1] != 0.0 else shift[2])
-                    if leading <= 0.0:
-                        continue
-                    for g in range(column[home], column[home + 1]):
-                        if _is_image_needed(bounds, g, shift, box, reach):
-                            if filling == 1:
-                                source[count] = g
-                                for c in range(3):
-                                    shifts[count, c] = shift[c] * box
-                            count += 1
-                first[ex * width + ey + margin + 1] = count
-        if filling == 0:
-            source = np.empty(count, np.int64)
-            shifts = np.empty((count, 3))
-    return source, shifts, first
-
-
-@piece
-def _gap(bounds, a, b):  # type: ignore[no-untyped-def]
-    """Squared distance of two bounding boxes."""
-    distance = 0.0
-    for c in range(3):
-        d = max(0.0, max(bounds[a, c] - bounds[b, 3 + c], bounds[b, c] - bounds[a, 3 + c]))
-        distance += d * d
-    return distance
+def _columns_within(n_columns, edge, reach):  # type: ignore[no-untyped-def]
+    """Offsets, (n, 2) from 0 to n_columns - 1, of the columns that come within reach of a column."""
+    offsets = np.empty((n_columns * n_columns, 2), np.int64)
+    count = 0
+    for x in range(n_columns):
+        for y in range(n_columns):
+            dx, dy = max(0, min(x, n_columns - x) - 1), max(0, min(y, n_columns - y) - 1)
+            offsets[count, 0], offsets[count, 1] = x, y
+            count += 1 if edge * edge * (dx * dx + dy * dy) <= reach * reach else 0
+    return offsets[:count]
 
 
 @kernel
-def _columns_bounds(bounds, column, first_image, n_groups, n_columns, margin):  # type: ignore[no-untyped-def]
-    """Bounding boxes of extended columns; an empty column's is inside out and touches nothing."""
-    width = n_columns + 2 * margin
-    out = np.empty((first_image.size - 1, 6))
-    for e in range(out.shape[0]):
-        for c in range(3):
-            out[e, c], out[e, 3 + c] = np.inf, -np.inf
-        ex, ey = e // width, e % width - margin
-        low, high = 0, 0
-        if ex < n_columns and 0 <= ey < n_columns:
-            low, high = column[ex * n_columns + ey], column[ex * n_columns + ey + 1]
-        for _ in range(2):
-            for g in range(low, high):
-                for c in range(3):
-                    out[e, c] = min(out[e, c], bounds[g, c])
-                    out[e, 3 + c] = max(out[e, 3 + c], bounds[g, 3 + c])
-            low, high = n_groups + first_image[e], n_groups + first_image[e + 1]
-    return out
-
-
-@kernel
-def _partners(bounds, column, first_image, n_columns, margin, box, reach):  # type: ignore[no-untyped-def]
-    """The wide list of every group: groups behind it and images whose bounding boxes come within reach."""
-    n_groups = column[-1]
-    width = n_columns + 2 * margin
-    edges = _columns_bounds(bounds, column, first_image, n_groups, n_columns, margin)
+def _partners(bounds, column, n_columns, box, reach):  # type: ignore[no-untyped-def]
+    """The wide list of every group: groups behind it whose bounding boxes come within reach."""
     square = reach * reach
-    per_length = n_columns / box
-    start = np.zeros(n_groups + 1, np.int64)
-    partners = np.empty(64 * n_groups + 64, np.int32)
+    offsets = _columns_within(n_columns, box / n_columns, reach)
+    start = np.zeros(column[-1] + 1, np.int64)
+    partners = np.empty(64 * column[-1] + 64, np.int32)
     count = 0
     for home in range(n_columns * n_columns):
         for g in range(column[home], column[home + 1]):
-            x_first = max(0, int(np.floor((bounds[g, 0] - reach) * per_length - 1e-9)))
-            x_last = min(n_columns + margin - 1, int(np.floor((bounds[g, 3] + reach) * per_length + 1e-9)))
-            y_first = max(-margin, int(np.floor((bounds[g, 1] - reach) * per_length - 1e-9)))
-            y_last = min(n_columns + margin - 1, int(np.floor((bounds[g, 4] + reach) * per_length + 1e-9)))
-            for ex in range(x_first, x_last + 1):
-                for ey in range(y_first, y_last + 1):
-                    e = ex * width + ey + margin
-                    dx = max(0.0, max(edges[e, 0] - bounds[g, 3], bounds[g, 0] - edges[e, 3]))
-                    dy = max(0.0, max(edges[e, 1] - bounds[g, 4], bounds[g, 1] - edges[e, 4]))
-                    if dx * dx + dy * dy > square:
-                        continue
-                    low, high = 0, 0
-                    if ex < n_columns and 0 <= ey < n_columns:
-                        low = max(g + 1, column[ex * n_columns + ey])
-                        high = column[ex * n_columns + ey + 1]
-                    for _ in range(2):
-                        if count + high - low > partners.size:
-                            larger = np.empty(2 * partners.size + high - low, np.int32)
-                            for k in range(count):
-                                larger[k] = partners[k]
-                            partners = larger
-                        for b in range(low, high):
-                            partners[count] = b
-                            count += 1 if _gap(bounds, g, b) <= square else 0
-                        low, high = n_groups + first_image[e], n_groups + first_image[e + 1]
+            for k in range(offsets.shape[0]):
+                x, y = home // n_columns + offsets[k, 0], home % n_columns + offsets[k, 1]
+                other = (x % n_columns) * n_columns + y % n_columns
+                low, high = max(g + 1, column[other]), column[other + 1]
+                if count + high - low > partners.size:
+                    larger = np.empty(2 * partners.size + high - low, np.int32)
+                    larger[:count] = partners[:count]
+                    partners = larger
+                for b in range(low, high):
+                    dx, dy, dz = _gap(bounds, g, b, 0, box), _gap(bounds, g, b, 1, box), _gap(bounds, g, b, 2, box)
+                    partners[count] = b
+                    count += 1 if dx * dx + dy * dy + dz * dz <= square else 0
             start[g + 1] = count
     return start, partners
 
 
 @kernel
 def group(where, box, reach):  # type: ignore[no-untyped-def]
-    """Sort particles into groups and list which groups may come within reach (smaller than the box edge).
+    """Sort particles into groups and list which groups may come within reach.
 
     where : (n, 3), positions inside [0, box)
     """
     column_edge = (LANES * box**3 / where.shape[0]) ** (1.0 / 3.0)
     n_columns = max(1, int(box / column_edge + 0.5))
-    margin = min(n_columns, int(reach / box * n_columns) + 1)
     labels, column = _sort(where, box, n_columns, 8 * n_columns)
-    real = _bounds(where, labels)
-    source, shift, first_image = _images(real, column, n_columns, margin, box, reach)
-    n_groups = real.shape[0]
-    bounds = np.empty((n_groups + source.size, 6))
-    for g in range(bounds.shape[0]):
-        for c in range(6):
-            bounds[g, c] = real[g, c] if g < n_groups else real[source[g - n_groups], c] + shift[g - n_groups, c % 3]
-    start, partners = _partners(bounds, column, first_image, n_columns, margin, box, reach)
-    return Groups(labels, source, shift, start, partners)
+    start, partners = _partners(_bounds(where, labels), column, n_columns, box, reach)
+    return Groups(labels, start, partners)
+
+
+@piece
+def room(size, kind):  # type: ignore[no-untyped-def]
+    """An empty array that starts on a cache line, so that no row of lanes straddles two."""
+    out = np.empty(size + LINE, kind)
+    first = (-out.ctypes.data % LINE) // out.itemsize
+    return out[first : first + size]
 
 
 @kernel
-def scatter(values, groups, padding):  # type: ignore[no-untyped-def]
-    """(n, 3) values by label into the slot layout, with room for the images behind; padding slots get a number."""
-    out = np.empty(BLOCK * (groups.labels.size // LANES + groups.image_source.size))
-    for slot in range(groups.labels.size):
-        label = groups.labels[slot]
+def scatter(values, labels):  # type: ignore[no-untyped-def]
+    """(n, 3) values by label into the slot layout; padding slots get zeros."""
+    out = room(3 * labels.size, np.float64)
+    for slot in range(labels.size):
         at = BLOCK * (slot // LANES) + slot % LANES
         for c in range(3):
-            out[at + LANES * c] = values[label, c] if label >= 0 else padding
+            out[at + LANES * c] = values[labels[slot], c] if labels[slot] >= 0 else 0.0
     return out
 
 
 @kernel
-def narrow(position, groups, reach):  # type: ignore[no-untyped-def]
-    """Cut the wide list down to the groups with a particle within reach of each particle now."""
-    square = splat(reach * reach)
-    start = np.zeros(groups.labels.size + 1, np.int64)
-    offsets = np.empty(LANES * groups.start[-1] + LANES, np.int32)
+def gather(values, labels, out):  # type: ignore[no-untyped-def]
+    """Slot layout back to (n, 3) by label."""
+    for slot in range(labels.size):
+        if labels[slot] >= 0:
+            for c in range(3):
+                out[labels[slot], c] = values[BLOCK * (slot // LANES) + LANES * c + slot % LANES]
+
+
+@kernel
+def limits(labels, square, out):  # type: ignore[no-untyped-def]
+    """What the squared distance to a slot must stay below, beside its x: `square`; for padding, what nothing is below."""
+    for slot in range(labels.size):
+        out[BLOCK * (slot // LANES) + slot % LANES] = square if labels[slot] >= 0 else -1.0
+    return out
+
+
+@kernel
+def fix(position, box, fine, coarse):  # type: ignore[no-untyped-def]
+    """Positions within two box edges of the origin as whole numbers of box/2^64 and box/2^32; `fine` may be None."""
+    scale = splat(2.0**50 / box)
+    for at in range(0, position.size, LANES):
+        wrapped = low_bits(scale * load(position, at))
+        if fine is not None:
+            store(fine, at, wrapped)
+        store(coarse, at, whole(wrapped))
+
+
+@kernel
+def narrow(coarse, groups, box, reach, near):  # type: ignore[no-untyped-def]
+    """Cut the wide list down to the groups with a particle within reach of each particle; `near` is overwritten."""
+    ticks = (reach + _MARGIN) * COARSE / box
+    limit = limits(groups.labels, ticks * ticks, room(coarse.size, np.float32))
     count = 0
     for slot in range(groups.labels.size):
         g = slot // LANES
         if groups.labels[slot] >= 0:
             at = BLOCK * g + slot % LANES
-            x, y, z = splat(position[at]), splat(position[at + 4]), splat(position[at + 8])
+            x, y, z = splat(coarse[at]), splat(coarse[at + LANES]), splat(coarse[at + 2 * LANES])
             for k in range(groups.start[g], groups.start[g + 1]):
-                other = BLOCK * np.int64(groups.partners[k])
-                dx, dy, dz = x - load(position, other), y - load(position, other + 4), z - load(position, other + 8)
-                offsets[count] = other
-                count += 1 if any_of(smaller(dx * dx + dy * dy + dz * dz, square)) else 0
-        start[slot + 1] = count
-    return Near(start, offsets)
+                other = np.uint64(BLOCK * groups.partners[np.uint64(k)])
+                dx = real(x - load(coarse, other))
+                dy = real(y - load(coarse, other + LANES))
+                dz = real(z - load(coarse, other + 2 * LANES))
+                near.offsets[np.uint64(count)] = other
+                square = dx * dx + dy * dy + dz * dz
+                count += 1 if any_of(smaller(square, load(limit, other))) else 0
+        near.start[slot + 1] = count
+    near.offsets[count] = 0

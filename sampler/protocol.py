@@ -8,9 +8,10 @@ from typing import Literal, get_args
 
 from sampler.errors import BadRequest
 
-__all__ = ["SUBSTEPS", "Protocol", "Scheme"]
+__all__ = ["SUBSTEPS", "Precision", "Protocol", "Scheme"]
 
 Scheme = Literal["baoab", "obabo", "velocity-verlet"]
+Precision = Literal["mixed", "double"]
 SUBSTEPS = {"baoab": "BAOAB", "obabo": "OBABO", "velocity-verlet": "BAB"}
 _SEGMENT = 4_000_000  # particle-steps: about a second's work
 
@@ -22,6 +23,7 @@ class Protocol:
     friction : of the bath; without one in `scheme` it acts during the equilibration only
     equilibration : steps before sampling starts, made up to a whole number of frame intervals
     steps : steps of each repeat after that
+    precision : "mixed" takes the forces between samples in float32 while a bath acts; all else is float64
     """
 
     seed: int = 1
@@ -29,14 +31,16 @@ class Protocol:
     time_step: float = 0.005
     friction: float = 2.0
     scheme: Scheme = "baoab"
+    precision: Precision = "mixed"
     equilibration: int = 20_000
     steps: int = 200_000
     record_every: int = 10
     frame_every: int = 500
 
     def __post_init__(self) -> None:
-        if self.scheme not in get_args(Scheme):
-            raise BadRequest(f"scheme must be one of {', '.join(get_args(Scheme))}, found {self.scheme!r}")
+        for name, accepted in (("scheme", get_args(Scheme)), ("precision", get_args(Precision))):
+            if getattr(self, name) not in accepted:
+                raise BadRequest(f"{name} must be one of {', '.join(accepted)}, found {getattr(self, name)!r}")
         for name in ("time_step", "friction"):
             value = getattr(self, name)
             if not (math.isfinite(value) and value > 0.0):

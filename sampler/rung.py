@@ -11,15 +11,15 @@ from sampler.noise import chain_key
 from sampler.protocol import Scheme
 from sampler.schemes import COLUMNS, DIVERGED, STOPPED, propagate, substeps
 from sampler.series import Series
+from sampler.slots import Skins
 from sampler.start import first_positions, first_velocities
 from sampler.store import Chain, Segment, read
 
 __all__ = ["advance", "assemble", "sampled_segments"]
 
 Stop = npt.NDArray[np.uint8]
-_NEAR_SKIN = 0.2  # sigma; beyond the cutoff: measured best for dense fluids, harmless in gases
-_WIDE_SKIN = 0.9
-_ROOM = 0.999  # of the box edge that cutoff and skin may span
+_DENSE = 0.4  # sigma^-3; skins of lists, sigma, measured best on either side
+_SKINS = (Skins(0.3, 1.2), Skins(0.2, 1.0))
 
 
 def advance(chain: Chain, index: int, before: Segment | None, stop: Stop) -> Segment | None:
@@ -47,8 +47,9 @@ def advance(chain: Chain, index: int, before: Segment | None, stop: Stop) -> Seg
         where,
         velocity,
         state.box,
-        (_NEAR_SKIN, min(_WIDE_SKIN, _ROOM * state.box - chain.fluid.cutoff)),
+        _SKINS[state.density >= _DENSE],
         substeps(scheme, time_step=protocol.time_step, friction=protocol.friction, temperature=state.temperature),
+        protocol.precision == "mixed" and (settling or protocol.bath),
         key,
         first,
         last - first,

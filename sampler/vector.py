@@ -1,6 +1,7 @@
-"""Explicit lanes: four doubles in one register, for kernels whose inner loop a compiler does not vectorise by itself.
+"""Explicit lanes: eight numbers in one register, for kernels whose inner loop a compiler does not vectorise by itself.
 
-Registered with numba as two types: `Lanes` (4 x float64) with + - * /, and `Mask` (4 x bool).
+Registered with numba as one type for each kind of element: float64, float32, int64, int32, and the truth values that a
+comparison gives. A processor with shorter registers takes each in parts: slower, never different in kind.
 """
 
 from __future__ import annotations
@@ -9,103 +10,160 @@ import operator
 from collections.abc import Callable
 from typing import Any
 
-from llvmlite import ir
+from llvmlite import binding, ir
 from numba.core import cgutils, types
-from numba.core.typing.templates import ConcreteTemplate, infer_global, signature
+from numba.core.typing.templates import AbstractTemplate, infer_global, signature
 from numba.extending import intrinsic, lower_builtin, models, register_model
 
 __all__ = [
-    "WIDTH",
+    "LANES",
     "any_of",
     "both",
-    "count",
+    "broad",
+    "gather",
     "larger",
     "largest",
     "later_lanes",
     "load",
+    "low_bits",
+    "reciprocal",
+    "real",
     "select",
     "smaller",
     "splat",
     "square_root",
     "store",
     "total",
+    "whole",
 ]
 
-WIDTH = 4
+LANES = 8
 _FUSE = ("contract",)
+_KINDS = {
+    types.float64: ir.DoubleType(),
+    types.float32: ir.FloatType(),
+    types.int64: ir.IntType(64),
+    types.int32: ir.IntType(32),
+    types.boolean: ir.IntType(1),
+}
+_REAL_OF_WHOLE = {types.int64: types.float64, types.int32: types.float32}
 _index = ir.IntType(32)
-_lanes_ir = ir.VectorType(ir.DoubleType(), WIDTH)
-_mask_ir = ir.VectorType(ir.IntType(1), WIDTH)
+_CONVERTS_LONG = "avx512dq" in binding.get_host_cpu_features() or not binding.get_default_triple().startswith("x86")
 
 
 class _Lanes(types.Type):
-    def __init__(self) -> None:
-        super().__init__(name="Lanes")
+    """Eight elements of one kind."""
 
+    def __init__(self, element: types.Type) -> None:
+        self.element = element
+        super().__init__(name=f"Lanes({element})")
 
-class _Mask(types.Type):
-    def __init__(self) -> None:
-        super().__init__(name="Mask")
+    @property
+    def is_float(self) -> bool:
+        return self.element in (types.float64, types.float32)
 
 
 @register_model(_Lanes)
 class _LanesModel(models.PrimitiveModel):  # type: ignore[misc]
     def __init__(self, manager: Any, fe_type: Any) -> None:
-        super().__init__(manager, fe_type, _lanes_ir)
+        super().__init__(manager, fe_type, _ir(fe_type.element))
 
 
-@register_model(_Mask)
-class _MaskModel(models.PrimitiveModel):  # type: ignore[misc]
-    def __init__(self, manager: Any, fe_type: Any) -> None:
-        super().__init__(manager, fe_type, _mask_ir)
+def _ir(element: types.Type) -> ir.VectorType:
+    return ir.VectorType(_KINDS[element], LANES)
 
 
-_lanes, _mask = _Lanes(), _Mask()
+def _spread(builder: Any, value: Any) -> Any:
+    """One number in all lanes."""
+    vector = ir.VectorType(value.type, LANES)
+    one = builder.insert_element(ir.Constant(vector, ir.Undefined), value, _index(0))
+    zeros = ir.Constant(ir.VectorType(_index, LANES), [0] * LANES)
+    return builder.shuffle_vector(one, ir.Constant(vector, ir.Undefined), zeros)
 
 
-def _arithmetic(python_operator: Callable[..., Any], instruction: str) -> None:
+def _call(builder: Any, name: str, result: Any, *args: Any) -> Any:
+    kind = ir.FunctionType(result, [arg.type for arg in args])
+    return builder.call(cgutils.get_or_insert_function(builder.module, kind, name), args)
+
+
+def _arithmetic(python_operator: Callable[..., Any], on_floats: str, on_wholes: str) -> None:
     @infer_global(python_operator)
-    class _Typing(ConcreteTemplate):  # type: ignore[misc]
-        cases = [signature(_lanes, _lanes, _lanes)]  # noqa: RUF012
+    class _Typing(AbstractTemplate):  # type: ignore[misc]
+        def generic(self, args: Any, kws: Any) -> Any:
+            lanes = [arg for arg in args if isinstance(arg, _Lanes)]
+            if len(lanes) == 2 and lanes[0] == lanes[1]:
+                return signature(lanes[0], *args)
+            if len(lanes) == 1 and lanes[0].is_float and len(args) == 2:
+                return signature(lanes[0], *[arg if isinstance(arg, _Lanes) else types.float64 for arg in args])
+            return None
 
-    @lower_builtin(python_operator, _Lanes, _Lanes)
-    def _lower(context: Any, builder: Any, sig: Any, args: Any) -> Any:
-        return getattr(builder, instruction)(*args, flags=_FUSE)
+    def lower(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        result, operands = sig.return_type, []
+        for kind, value in zip(sig.args, args, strict=True):
+            if isinstance(kind, _Lanes):
+                operands.append(value)
+            else:
+                operands.append(_spread(builder, context.cast(builder, value, types.float64, result.element)))
+        if result.is_float:
+            return getattr(builder, on_floats)(*operands, flags=_FUSE)
+        return getattr(builder, on_wholes)(*operands)
+
+    for kinds in ((_Lanes, _Lanes), (_Lanes, types.Float), (types.Float, _Lanes)):
+        lower_builtin(python_operator, *kinds)(lower)
 
 
-for _operator, _instruction in (
-    (operator.add, "fadd"),
-    (operator.sub, "fsub"),
-    (operator.mul, "fmul"),
-    (operator.truediv, "fdiv"),
+for _operator, _on_floats, _on_wholes in (
+    (operator.add, "fadd", "add"),
+    (operator.sub, "fsub", "sub"),
+    (operator.mul, "fmul", "mul"),
+    (operator.truediv, "fdiv", ""),
 ):
-    _arithmetic(_operator, _instruction)
+    _arithmetic(_operator, _on_floats, _on_wholes)
 
 
 def _address(context: Any, builder: Any, array_type: Any, array: Any, index: Any) -> Any:
     data = context.make_array(array_type)(context, builder, array).data
-    return builder.bitcast(builder.gep(data, [index]), _lanes_ir.as_pointer())
+    return builder.bitcast(builder.gep(data, [index]), _ir(array_type.dtype).as_pointer())
 
 
 @intrinsic
 def load(typing: Any, array: Any, index: Any) -> Any:
-    """Four consecutive elements of a contiguous float64 array."""
+    """Eight consecutive elements of a contiguous array."""
 
     def build(context: Any, builder: Any, sig: Any, args: Any) -> Any:
-        return builder.load(_address(context, builder, sig.args[0], *args), align=8)
+        align = array.dtype.bitwidth // 8
+        return builder.load(_address(context, builder, array, *args), align=align)
 
-    return _lanes(array, types.intp), build
+    return _Lanes(array.dtype)(array, types.intp), build
 
 
 @intrinsic
 def store(typing: Any, array: Any, index: Any, value: Any) -> Any:
-    """Write four consecutive elements of a contiguous float64 array."""
+    """Write eight consecutive elements of a contiguous array."""
 
     def build(context: Any, builder: Any, sig: Any, args: Any) -> Any:
-        builder.store(args[2], _address(context, builder, sig.args[0], args[0], args[1]), align=8)
+        align = array.dtype.bitwidth // 8
+        builder.store(args[2], _address(context, builder, array, args[0], args[1]), align=align)
         return context.get_dummy_value()
 
-    return types.void(array, types.intp, _lanes), build
+    return types.void(array, types.intp, _Lanes(array.dtype)), build
+
+
+@intrinsic
+def gather(typing: Any, array: Any, indices: Any) -> Any:
+    """Elements of a contiguous array at eight places, int32."""
+
+    def build(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        data = context.make_array(array)(context, builder, args[0]).data
+        kind = _ir(array.dtype)
+        zero = ir.Constant(kind, ir.Undefined)
+        result = zero
+        for lane in range(LANES):
+            at = builder.sext(builder.extract_element(args[1], _index(lane)), ir.IntType(64))
+            result = builder.insert_element(result, builder.load(builder.gep(data, [at])), _index(lane))
+        return result
+
+    return _Lanes(array.dtype)(array, indices), build
 
 
 @intrinsic
@@ -113,11 +171,91 @@ def splat(typing: Any, value: Any) -> Any:
     """The same number in every lane."""
 
     def build(context: Any, builder: Any, sig: Any, args: Any) -> Any:
-        one = builder.insert_element(ir.Constant(_lanes_ir, ir.Undefined), args[0], _index(0))
-        zeros = ir.Constant(ir.VectorType(_index, WIDTH), [0] * WIDTH)
-        return builder.shuffle_vector(one, ir.Constant(_lanes_ir, ir.Undefined), zeros)
+        return _spread(builder, args[0])
 
-    return _lanes(types.float64), build
+    return _Lanes(value)(value), build
+
+
+@intrinsic
+def real(typing: Any, wholes: Any) -> Any:
+    """Whole numbers as floating-point ones of the same size; of 64 bits the upper 52 count."""
+    element = wholes.element
+
+    def build(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        kind = _ir(_REAL_OF_WHOLE[element])
+        if element == types.int32 or _CONVERTS_LONG:
+            return builder.sitofp(args[0], kind)
+        # by bits: (n + 2^63) >> 12 is the mantissa of 2^52 + 2^51 + n/2^12
+        flipped = builder.xor(args[0], _spread(builder, ir.IntType(64)(1 << 63)))
+        mantissa = builder.lshr(flipped, _spread(builder, ir.IntType(64)(12)))
+        bits = builder.or_(mantissa, _spread(builder, ir.IntType(64)(0x433 << 52)))
+        offset = _spread(builder, ir.DoubleType()(2.0**52 + 2.0**51))
+        return builder.fmul(
+            builder.fsub(builder.bitcast(bits, kind), offset), _spread(builder, ir.DoubleType()(4096.0))
+        )
+
+    return _Lanes(_REAL_OF_WHOLE[element])(wholes), build
+
+
+@intrinsic
+def low_bits(typing: Any, value: Any) -> Any:
+    """Numbers within +-2^51 rounded to whole ones, times 2^14, as int64: it wraps where the number passes 2^50."""
+
+    def build(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        shifted = builder.fadd(args[0], _spread(builder, ir.DoubleType()(1.5 * 2.0**52)))
+        bits = builder.bitcast(shifted, _ir(types.int64))
+        return builder.shl(bits, _spread(builder, ir.IntType(64)(14)))
+
+    return _Lanes(types.int64)(_Lanes(types.float64)), build
+
+
+@intrinsic
+def whole(typing: Any, value: Any) -> Any:
+    """float -> int32 of the same lanes (towards zero), or the upper half of int64."""
+
+    def build(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        if value.is_float:
+            return builder.fptosi(args[0], _ir(types.int32))
+        return builder.trunc(builder.lshr(args[0], _spread(builder, ir.IntType(64)(32))), _ir(types.int32))
+
+    return _Lanes(types.int32)(value), build
+
+
+@intrinsic
+def broad(typing: Any, value: Any) -> Any:
+    """The same numbers as float64."""
+
+    def build(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        return args[0] if value.element == types.float64 else builder.fpext(args[0], _ir(types.float64))
+
+    return _Lanes(types.float64)(value), build
+
+
+@intrinsic
+def reciprocal(typing: Any, value: Any) -> Any:
+    """1/value. In float64 to 2e-14 of it: the float32 quotient and one Newton step, cheaper than a division."""
+
+    def build(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        one = _spread(builder, ir.FloatType()(1.0))
+        if value.element == types.float32:
+            return builder.fdiv(one, args[0])
+        guess = builder.fpext(builder.fdiv(one, builder.fptrunc(args[0], one.type)), args[0].type)
+        error = builder.fsub(
+            _spread(builder, ir.DoubleType()(1.0)), builder.fmul(args[0], guess, flags=_FUSE), flags=_FUSE
+        )
+        return builder.fadd(guess, builder.fmul(guess, error, flags=_FUSE), flags=_FUSE)
+
+    return value(value), build
+
+
+@intrinsic
+def square_root(typing: Any, value: Any) -> Any:
+    """Square root of every lane."""
+
+    def build(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        return _call(builder, f"llvm.sqrt.v{LANES}f{value.element.bitwidth}", args[0].type, args[0])
+
+    return value(value), build
 
 
 @intrinsic
@@ -127,73 +265,50 @@ def smaller(typing: Any, left: Any, right: Any) -> Any:
     def build(context: Any, builder: Any, sig: Any, args: Any) -> Any:
         return builder.fcmp_ordered("<", *args)
 
-    return _mask(_lanes, _lanes), build
+    return _Lanes(types.boolean)(left, left), build
 
 
 @intrinsic
 def both(typing: Any, left: Any, right: Any) -> Any:
-    """Lanes that are in two masks."""
+    """Lanes that are true in both."""
 
     def build(context: Any, builder: Any, sig: Any, args: Any) -> Any:
         return builder.and_(*args)
 
-    return _mask(_mask, _mask), build
+    return left(left, left), build
 
 
 @intrinsic
 def later_lanes(typing: Any, lane: Any) -> Any:
-    """Lanes behind the given one: the partners inside a group that come later."""
+    """True in the lanes behind the given one: the partners inside a group that come later."""
 
     def build(context: Any, builder: Any, sig: Any, args: Any) -> Any:
-        wide = ir.VectorType(ir.IntType(64), WIDTH)
-        one = builder.insert_element(ir.Constant(wide, ir.Undefined), args[0], _index(0))
-        zeros = ir.Constant(ir.VectorType(_index, WIDTH), [0] * WIDTH)
-        all_of_it = builder.shuffle_vector(one, ir.Constant(wide, ir.Undefined), zeros)
-        return builder.icmp_signed(">", ir.Constant(wide, list(range(WIDTH))), all_of_it)
+        narrow = builder.trunc(args[0], _index)
+        order = ir.Constant(_ir(types.int32), list(range(LANES)))
+        return builder.icmp_signed(">", order, _spread(builder, narrow))
 
-    return _mask(types.intp), build
+    return _Lanes(types.boolean)(types.intp), build
 
 
 @intrinsic
 def select(typing: Any, mask: Any, chosen: Any, otherwise: Any) -> Any:
-    """`chosen` in the mask's lanes, `otherwise` in the others."""
+    """`chosen` where the mask is true, `otherwise` elsewhere."""
 
     def build(context: Any, builder: Any, sig: Any, args: Any) -> Any:
         return builder.select(*args)
 
-    return _lanes(_mask, _lanes, _lanes), build
+    return chosen(mask, chosen, chosen), build
 
 
 @intrinsic
 def any_of(typing: Any, mask: Any) -> Any:
-    """Whether any lane is in the mask."""
+    """Whether any lane is true."""
 
     def build(context: Any, builder: Any, sig: Any, args: Any) -> Any:
-        packed = builder.bitcast(args[0], ir.IntType(WIDTH))
-        return builder.icmp_unsigned("!=", packed, ir.IntType(WIDTH)(0))
+        packed = builder.bitcast(args[0], ir.IntType(LANES))
+        return builder.icmp_unsigned("!=", packed, ir.IntType(LANES)(0))
 
-    return types.boolean(_mask), build
-
-
-@intrinsic
-def count(typing: Any, mask: Any) -> Any:
-    """One in the mask's lanes, zero in the others."""
-
-    def build(context: Any, builder: Any, sig: Any, args: Any) -> Any:
-        return builder.uitofp(args[0], _lanes_ir)
-
-    return _lanes(_mask), build
-
-
-@intrinsic
-def square_root(typing: Any, value: Any) -> Any:
-    """Square root of every lane."""
-
-    def build(context: Any, builder: Any, sig: Any, args: Any) -> Any:
-        kind = ir.FunctionType(_lanes_ir, [_lanes_ir])
-        return builder.call(cgutils.get_or_insert_function(builder.module, kind, f"llvm.sqrt.v{WIDTH}f64"), args)
-
-    return _lanes(_lanes), build
+    return types.boolean(mask), build
 
 
 @intrinsic
@@ -203,7 +318,20 @@ def larger(typing: Any, left: Any, right: Any) -> Any:
     def build(context: Any, builder: Any, sig: Any, args: Any) -> Any:
         return builder.select(builder.fcmp_ordered(">", *args), *args)
 
-    return _lanes(_lanes, _lanes), build
+    return left(left, left), build
+
+
+def _fold(builder: Any, value: Any, join: Callable[[Any, Any], Any]) -> Any:
+    """Lane 0 after joining the upper half of the lanes onto the lower, until one is left."""
+    width = LANES
+    while width > 1:
+        width //= 2
+        low, high = (
+            ir.Constant(ir.VectorType(_index, width), list(range(first, first + width))) for first in (0, width)
+        )
+        nothing = ir.Constant(value.type, ir.Undefined)
+        value = join(builder.shuffle_vector(value, nothing, low), builder.shuffle_vector(value, nothing, high))
+    return builder.extract_element(value, _index(0))
 
 
 @intrinsic
@@ -211,13 +339,9 @@ def largest(typing: Any, value: Any) -> Any:
     """The largest number of the lanes."""
 
     def build(context: Any, builder: Any, sig: Any, args: Any) -> Any:
-        result = builder.extract_element(args[0], _index(0))
-        for lane in range(1, WIDTH):
-            other = builder.extract_element(args[0], _index(lane))
-            result = builder.select(builder.fcmp_ordered(">", result, other), result, other)
-        return result
+        return _fold(builder, args[0], lambda a, b: builder.select(builder.fcmp_ordered(">", a, b), a, b))
 
-    return types.float64(_lanes), build
+    return value.element(value), build
 
 
 @intrinsic
@@ -225,7 +349,6 @@ def total(typing: Any, value: Any) -> Any:
     """Sum over the lanes, always in the same order."""
 
     def build(context: Any, builder: Any, sig: Any, args: Any) -> Any:
-        parts = [builder.extract_element(args[0], _index(lane)) for lane in range(WIDTH)]
-        return builder.fadd(builder.fadd(parts[0], parts[2]), builder.fadd(parts[1], parts[3]))
+        return _fold(builder, args[0], builder.fadd)
 
-    return types.float64(_lanes), build
+    return value.element(value), build

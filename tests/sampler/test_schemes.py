@@ -9,16 +9,17 @@ from sampler.forces import evaluate, pair_function
 from sampler.noise import chain_key, normals
 from sampler.protocol import SUBSTEPS
 from sampler.schemes import COLUMNS, DIVERGED, DONE, STOPPED, propagate, substeps
+from sampler.slots import Skins
 from sampler.start import first_positions, first_velocities
 
-SKINS = (0.2, 0.9)
+SKINS = Skins(0.2, 0.9)
 
 
 class Trajectory:
     """A small system advanced by the compiled loop."""
 
-    def __init__(self, fluid, state, scheme, *, time_step, friction=1.0, repeat=0, start=None):
-        self.fluid, self.state, self.step = fluid, state, 0
+    def __init__(self, fluid, state, scheme, *, time_step, friction=1.0, repeat=0, start=None, short=False):
+        self.fluid, self.state, self.step, self.short = fluid, state, 0, short
         self.key = chain_key(11, state.temperature, state.density, repeat)
         if start is None:
             self.where, self.velocity = first_positions(fluid, state, self.key), first_velocities(state, self.key)
@@ -31,8 +32,8 @@ class Trajectory:
         samples = np.empty((n_steps // every, len(COLUMNS)))
         frames = np.empty((n_steps // frame_every if frame_every else 0, self.state.particles, 3))
         self.outcome, _ = propagate(
-            pair_function(self.fluid), self.where, self.velocity, self.state.box, SKINS, self.steps, self.key,
-            self.step, n_steps, every, frame_every or 10**9, samples, frames, self.ledger, self.stop,
+            pair_function(self.fluid), self.where, self.velocity, self.state.box, SKINS, self.steps, self.short,
+            self.key, self.step, n_steps, every, frame_every or 10**9, samples, frames, self.ledger, self.stop,
         )  # fmt: skip
         self.step += n_steps
         totals = self.fluid.totals(samples, self.state)
