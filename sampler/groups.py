@@ -11,6 +11,7 @@ Slot layout: coordinate c of lane l in group g stands at [24 g + 8 c + l].
 
 from __future__ import annotations
 
+import math
 from typing import NamedTuple
 
 import numpy as np
@@ -48,7 +49,7 @@ class Near(NamedTuple):
 
 @kernel
 def _sort(where, box, n_columns, n_bins):  # type: ignore[no-untyped-def]
-    """Slots in spatial order: labels of slots and the first group of each column."""
+    """Slots in spatial order: labels, first group of each column, and particles before each bin of each column."""
     n = where.shape[0]
     n_keys = n_columns * n_columns * n_bins
     key = np.empty(n, np.int64)
@@ -74,7 +75,7 @@ def _sort(where, box, n_columns, n_bins):  # type: ignore[no-untyped-def]
         rank = first[key[i]] - first[c * n_bins] + taken[key[i]]
         taken[key[i]] += 1
         labels[LANES * column[c] + rank] = i
-    return labels, column
+    return labels, column, first
 
 
 @kernel
@@ -113,8 +114,24 @@ def _columns_within(n_columns, edge, reach):  # type: ignore[no-untyped-def]
     return offsets[:count]
 
 
+@piece
+def _window(bounds, g, first, column, other, n_bins, box, reach):  # type: ignore[no-untyped-def]
+    """Groups of a column that may come within reach of group g along z: two ranges, as z is periodic."""
+    begin, end, base = column[other], column[other + 1], other * n_bins
+    low = math.floor((bounds[g, 2] - bounds[g, 5] - reach) / box * n_bins)
+    high = math.floor((bounds[g, 2] + bounds[g, 5] + reach) / box * n_bins)
+    if high - low + 1 >= n_bins:
+        return (begin, end), (end, end)
+    low, high = low % n_bins, high % n_bins
+    from_low = begin + (first[base + low] - first[base]) // LANES
+    past_high = begin + (first[base + high + 1] - first[base] + LANES - 1) // LANES
+    if low <= high:
+        return (from_low, past_high), (end, end)
+    return (begin, past_high), (max(past_high, from_low), end)
+
+
 @kernel
-def _partners(bounds, column, n_columns, box, reach):  # type: ignore[no-untyped-def]
+def _partners(bounds, column, first, n_columns, n_bins, box, reach):  # type: ignore[no-untyped-def]
     """The wide list of every group: groups behind it whose bounding boxes come within reach."""
     square = reach * reach
     offsets = _columns_within(n_columns, box / n_columns, reach)
@@ -126,15 +143,17 @@ def _partners(bounds, column, n_columns, box, reach):  # type: ignore[no-untyped
             for k in range(offsets.shape[0]):
                 x, y = home // n_columns + offsets[k, 0], home % n_columns + offsets[k, 1]
                 other = (x % n_columns) * n_columns + y % n_columns
-                low, high = max(g + 1, column[other]), column[other + 1]
-                if count + high - low > partners.size:
-                    larger = np.empty(2 * partners.size + high - low, np.int32)
+                if other < home:
+                    continue
+                if count + column[other + 1] - column[other] > partners.size:
+                    larger = np.empty(2 * partners.size + column[-1], np.int32)
                     larger[:count] = partners[:count]
                     partners = larger
-                for b in range(low, high):
-                    dx, dy, dz = _gap(bounds, g, b, 0, box), _gap(bounds, g, b, 1, box), _gap(bounds, g, b, 2, box)
-                    partners[count] = b
-                    count += 1 if dx * dx + dy * dy + dz * dz <= square else 0
+                for low, high in _window(bounds, g, first, column, other, n_bins, box, reach):
+                    for b in range(max(g + 1, low), high):
+                        dx, dy, dz = _gap(bounds, g, b, 0, box), _gap(bounds, g, b, 1, box), _gap(bounds, g, b, 2, box)
+                        partners[count] = b
+                        count += 1 if dx * dx + dy * dy + dz * dz <= square else 0
             start[g + 1] = count
     return start, partners
 
@@ -147,8 +166,9 @@ def group(where, box, reach):  # type: ignore[no-untyped-def]
     """
     column_edge = (LANES * box**3 / where.shape[0]) ** (1.0 / 3.0)
     n_columns = max(1, int(box / column_edge + 0.5))
-    labels, column = _sort(where, box, n_columns, 8 * n_columns)
-    start, partners = _partners(_bounds(where, labels), column, n_columns, box, reach)
+    n_bins = 8 * n_columns
+    labels, column, first = _sort(where, box, n_columns, n_bins)
+    start, partners = _partners(_bounds(where, labels), column, first, n_columns, n_bins, box, reach)
     return Groups(labels, start, partners)
 
 
