@@ -14,7 +14,7 @@ import numpy as np
 from scipy.spatial import cKDTree
 
 from sampler.fluid import Fluid, State
-from sampler.forces import pair_function
+from sampler.pairs import pair_function
 from sampler.noise import chain_key
 from sampler.schemes import COLUMNS, propagate, substeps
 from sampler.start import first_positions, first_velocities

@@ -2,81 +2,16 @@
 
 from __future__ import annotations
 
-from typing import NamedTuple
-
 import numpy as np
 import numpy.typing as npt
-from numba.extending import overload
 
 from sampler.compiled import kernel, piece
 from sampler.fluid import Fluid
 from sampler.groups import BLOCK, FINE, LANES, Near, fix, gather, group, limits, narrow, scatter
-from sampler.vector import both, broad, later_lanes, load, real, reciprocal, select, smaller, splat, square_root, store, total
+from sampler.pairs import pair_function, strength, terms
+from sampler.vector import both, broad, later_lanes, load, real, select, smaller, splat, store, total
 
-__all__ = ["ForceShifted", "Truncated", "evaluate", "pair_forces", "pair_function"]
-
-
-class Truncated(NamedTuple):
-    """The pair force cut at a distance; the truncations whose force is that of the bare potential."""
-
-    cutoff: float
-
-
-class ForceShifted(NamedTuple):
-    """The pair force with its value at the cutoff taken off."""
-
-    cutoff: float
-    slope: float
-
-
-PairFunction = Truncated | ForceShifted
-
-
-def pair_function(fluid: Fluid) -> PairFunction:
-    """What the kernels need of a fluid."""
-    if fluid.truncation == "force-shifted":
-        return ForceShifted(float(fluid.cutoff), fluid.slope_at_cutoff)
-    return Truncated(float(fluid.cutoff))
-
-
-def _force(pair, square):  # type: ignore[no-untyped-def]
-    """-u'(r)/r from r^2; anything outside the cutoff. Chosen by the type of `pair` when compiled."""
-    raise TypeError("compiled code only")
-
-
-@overload(_force, jit_options={"forceinline": True})
-def _force_by_type(pair, square):  # type: ignore[no-untyped-def]
-    def bare(pair, square):  # type: ignore[no-untyped-def]
-        inverse = reciprocal(square)
-        inverse6 = inverse * inverse * inverse
-        return (48.0 * inverse6 - 24.0) * inverse6 * inverse
-
-    def shifted(pair, square):  # type: ignore[no-untyped-def]
-        inverse = reciprocal(square)
-        inverse6 = inverse * inverse * inverse
-        return (48.0 * inverse6 - 24.0) * inverse6 * inverse + pair.slope * square_root(inverse)
-
-    return bare if pair.instance_class is Truncated else shifted
-
-
-def _terms(pair, square):  # type: ignore[no-untyped-def]
-    """r^-12, r^-6 and, where the potential needs the sum of distances, r. Chosen like `_force`."""
-    raise TypeError("compiled code only")
-
-
-@overload(_terms, jit_options={"forceinline": True})
-def _terms_by_type(pair, square):  # type: ignore[no-untyped-def]
-    def bare(pair, square):  # type: ignore[no-untyped-def]
-        inverse = reciprocal(square)
-        inverse6 = inverse * inverse * inverse
-        return inverse6 * inverse6, inverse6, 0.0 * inverse
-
-    def shifted(pair, square):  # type: ignore[no-untyped-def]
-        inverse = reciprocal(square)
-        inverse6 = inverse * inverse * inverse
-        return inverse6 * inverse6, inverse6, square * square_root(inverse)
-
-    return bare if pair.instance_class is Truncated else shifted
+__all__ = ["evaluate", "pair_forces", "scaled"]
 
 
 @piece
@@ -92,8 +27,8 @@ def _apart(ticks, limit, scale, x, y, z, other):  # type: ignore[no-untyped-def]
 @piece
 def _push(pair, force, zero, other, dx, dy, dz, square, inside):  # type: ignore[no-untyped-def]
     """The force of a group on a particle, lane by lane; the group is pushed back."""
-    strength = select(inside, _force(pair, square), zero)
-    fx, fy, fz = strength * dx, strength * dy, strength * dz
+    pull = select(inside, strength(pair, square), zero)
+    fx, fy, fz = pull * dx, pull * dy, pull * dz
     store(force, other, load(force, other) - fx)
     store(force, other + LANES, load(force, other + LANES) - fy)
     store(force, other + 2 * LANES, load(force, other + 2 * LANES) - fz)
@@ -128,8 +63,8 @@ def pair_forces(pair, ticks, limit, tick, labels, near, force, sums):  # type: i
             next_dx, next_dy, next_dz, next_square, next_inside = _apart(ticks, limit, scale, x, y, z, coming)
             fx, fy, fz = _push(pair, force, zero, other, dx, dy, dz, square, inside)
             px, py, pz = px + fx, py + fy, pz + fz
-            if sums.size > 0:
-                a, b, c = _terms(pair, square)
+            if sums is not None and sums.size > 0:
+                a, b, c = terms(pair, square)
                 s12, s6 = s12 + select(inside, a, zero), s6 + select(inside, b, zero)
                 pairs, distances = pairs + select(inside, one, zero), distances + select(inside, c, zero)
             other, inside = coming, next_inside
@@ -137,7 +72,7 @@ def pair_forces(pair, ticks, limit, tick, labels, near, force, sums):  # type: i
         force[at] += total(px)
         force[at + LANES] += total(py)
         force[at + 2 * LANES] += total(pz)
-    if sums.size > 0:
+    if sums is not None and sums.size > 0:
         sums[0], sums[1], sums[2], sums[3] = total(s12), total(s6), total(pairs), total(distances)
 
 

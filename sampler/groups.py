@@ -18,7 +18,7 @@ import numpy as np
 import numpy.typing as npt
 
 from sampler.compiled import kernel, piece
-from sampler.vector import LANES, any_of, load, low_bits, real, smaller, splat, store, whole
+from sampler.vector import LANES, any_of, load, low_bits, real, smaller, splat, store, upper_half
 
 __all__ = ["BLOCK", "FINE", "COARSE", "LANES", "Groups", "Near", "fix", "gather", "group", "limits", "narrow", "scatter"]
 
@@ -216,7 +216,7 @@ def fix(position, box, fine, coarse):  # type: ignore[no-untyped-def]
         wrapped = low_bits(scale * load(position, at))
         if fine is not None:
             store(fine, at, wrapped)
-        store(coarse, at, whole(wrapped))
+        store(coarse, at, upper_half(wrapped))
 
 
 @kernel

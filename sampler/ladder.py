@@ -6,6 +6,7 @@ import os
 import queue
 import threading
 from collections.abc import Callable, Sequence
+from concurrent.futures import Future, ThreadPoolExecutor, wait
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -37,7 +38,8 @@ class _Work:
 
     chain: Chain
     missing: list[int]
-    before: Segment | None
+    before: Segment | None = None
+    writing: Future[None] | None = None
     taken: bool = False
 
 
@@ -86,7 +88,7 @@ def sample(
     The samples do not depend on `workers`. An interrupt stops the threads at once; finished segments are on disk.
     Raises DivergedRun, after all other repeats are finished, and OSError if a segment cannot be written.
     """
-    crew = _Crew([_Work(chain, list(missing), None) for chain, missing in work if missing])
+    crew = _Crew([_Work(chain, list(missing)) for chain, missing in work if missing])
     threads = [
         threading.Thread(target=crew.labour, daemon=True)
         for _ in range(min(workers or os.cpu_count() or 1, len(crew.pending)))
@@ -105,12 +107,13 @@ def sample(
         crew.stop[0] = 1
         for thread in threads:
             thread.join()
+        crew.writer.shutdown()
     if crew.failures:
         raise crew.failures[0]
 
 
 class _Crew:
-    """Threads that take turns: whoever is free advances the repeat that has come least far."""
+    """Threads that take turns, whoever is free advances the repeat that has come least far; one more writes."""
 
     def __init__(self, pending: list[_Work]) -> None:
         self.pending = pending
@@ -118,6 +121,7 @@ class _Crew:
         self.news: queue.Queue[Progress] = queue.Queue()
         self.stop = np.zeros(1, np.uint8)
         self.failures: list[Exception] = []
+        self.writer = ThreadPoolExecutor(1)
 
     def _next(self) -> _Work | None:
         with self.lock:
@@ -129,31 +133,50 @@ class _Crew:
             return work
 
     def labour(self) -> None:
-        """Advance repeats, a segment at a time, until none is left."""
+        """Advance repeats, a segment at a time, until none is left and all are written."""
         while (work := self._next()) is not None:
             try:
-                progress = self._advance(work)
+                advanced = self._advance(work)
             except (ArithmeticError, ValueError, OSError) as error:
-                self.failures.append(error)
-                work.missing.clear()
-                if isinstance(error, OSError):
-                    self.stop[0] = 1
+                self._fail(work, error)
                 continue
-            if progress is None:
-                return
-            self.news.put(progress)
+            if not advanced:
+                break
             with self.lock:
                 work.taken = False
+        wait([work.writing for work in self.pending if work.writing is not None])
 
-    def _advance(self, work: _Work) -> Progress | None:
+    def _advance(self, work: _Work) -> bool:
+        """Sample the next segment and hand it to the writer; False if stopped before it was finished."""
         chain, index = work.chain, work.missing[0]
         before = work.before
         if index > 0 and (before is None or before.last != chain.segments[index][0]):
             before = read(chain.path(index - 1), chain.identity)
         segment = advance(chain, index, before, self.stop)
         if segment is None:
-            return None
-        write(chain.path(index), segment, chain.identity)
+            return False
+        if work.writing is not None:
+            work.writing.result()
+        if self.stop[0]:
+            return False
+        work.writing = self.writer.submit(self._write, work, index, segment)
         work.before = segment
         del work.missing[0]
-        return Progress(chain, segment, segment.last, chain.segments[-1][1])
+        return True
+
+    def _write(self, work: _Work, index: int, segment: Segment) -> None:
+        chain = work.chain
+        try:
+            write(chain.path(index), segment, chain.identity)
+        except OSError as error:
+            self._fail(work, error)
+        else:
+            self.news.put(Progress(chain, segment, segment.last, chain.segments[-1][1]))
+
+    def _fail(self, work: _Work, error: Exception) -> None:
+        """Give up a repeat; where the disk refuses, all of them."""
+        with self.lock:
+            self.failures.append(error)
+            work.missing.clear()
+        if isinstance(error, OSError):
+            self.stop[0] = 1

@@ -6,7 +6,7 @@ import numpy as np
 import numpy.typing as npt
 
 from sampler.errors import DamagedSegment, DivergedRun
-from sampler.forces import pair_function
+from sampler.pairs import pair_function
 from sampler.noise import chain_key
 from sampler.protocol import Scheme
 from sampler.schemes import COLUMNS, DIVERGED, STOPPED, propagate, substeps

@@ -172,6 +172,6 @@ def exact_forces(pair, slots, box, sums):  # type: ignore[no-untyped-def]
 def quick_forces(pair, slots, box):  # type: ignore[no-untyped-def]
     """Forces in float32 from positions of 32 bits."""
     fix(slots.position, box, None, slots.coarse)
-    tick = np.float32(box / COARSE)
-    pair_forces(pair, slots.coarse, slots.short_limit, tick, slots.groups.labels, slots.near, slots.short_raw, np.empty(0))
-    scaled(slots.short_raw, box / COARSE, slots.force)
+    tick = box / COARSE
+    pair_forces(pair, slots.coarse, slots.short_limit, tick, slots.groups.labels, slots.near, slots.short_raw, None)
+    scaled(slots.short_raw, tick, slots.force)

@@ -17,10 +17,13 @@ from numba.extending import intrinsic, lower_builtin, models, register_model
 
 __all__ = [
     "LANES",
+    "OCTAVE_BITS",
     "any_of",
     "both",
     "broad",
     "gather",
+    "held",
+    "interval",
     "larger",
     "largest",
     "later_lanes",
@@ -34,10 +37,11 @@ __all__ = [
     "square_root",
     "store",
     "total",
-    "whole",
+    "upper_half",
 ]
 
 LANES = 8
+OCTAVE_BITS = {64: 8, 32: 10}  # by size of the number: an octave has 2^bits intervals of a table
 _FUSE = ("contract",)
 _KINDS = {
     types.float64: ir.DoubleType(),
@@ -151,17 +155,16 @@ def store(typing: Any, array: Any, index: Any, value: Any) -> Any:
 
 @intrinsic
 def gather(typing: Any, array: Any, indices: Any) -> Any:
-    """Elements of a contiguous array at eight places, int32."""
+    """Elements of a contiguous array, one for each lane; indices : eight int32."""
 
     def build(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        kind, always = _ir(array.dtype), ir.Constant(_ir(types.boolean), [1] * LANES)
         data = context.make_array(array)(context, builder, args[0]).data
-        kind = _ir(array.dtype)
-        zero = ir.Constant(kind, ir.Undefined)
-        result = zero
-        for lane in range(LANES):
-            at = builder.sext(builder.extract_element(args[1], _index(lane)), ir.IntType(64))
-            result = builder.insert_element(result, builder.load(builder.gep(data, [at])), _index(lane))
-        return result
+        places = builder.gep(data, [args[1]], source_etype=kind.element)
+        places.type = ir.VectorType(data.type, LANES)  # indices in lanes give addresses in lanes
+        name = f"llvm.masked.gather.v{LANES}f{array.dtype.bitwidth}.v{LANES}p0"
+        align = _index(array.dtype.bitwidth // 8)
+        return _call(builder, name, kind, places, align, always, ir.Constant(kind, ir.Undefined))
 
     return _Lanes(array.dtype)(array, indices), build
 
@@ -210,15 +213,46 @@ def low_bits(typing: Any, value: Any) -> Any:
 
 
 @intrinsic
-def whole(typing: Any, value: Any) -> Any:
-    """float -> int32 of the same lanes (towards zero), or the upper half of int64."""
+def upper_half(typing: Any, wholes: Any) -> Any:
+    """The upper 32 bits of 64."""
 
     def build(context: Any, builder: Any, sig: Any, args: Any) -> Any:
-        if value.is_float:
-            return builder.fptosi(args[0], _ir(types.int32))
         return builder.trunc(builder.lshr(args[0], _spread(builder, ir.IntType(64)(32))), _ir(types.int32))
 
-    return _Lanes(types.int32)(value), build
+    return _Lanes(types.int32)(_Lanes(types.int64)), build
+
+
+@intrinsic
+def interval(typing: Any, value: Any) -> Any:
+    """Number of the interval a positive number is in, int32, and its distance from the interval's lower end.
+
+    Intervals are numbered on through the octaves, each of which is divided evenly.
+    """
+    size = value.element.bitwidth
+    rest = {64: 52, 32: 23}[size] - OCTAVE_BITS[size]
+    integer = ir.VectorType(ir.IntType(size), LANES)
+
+    def build(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        whole = builder.bitcast(args[0], integer)
+        number = builder.lshr(whole, ir.Constant(integer, [rest] * LANES))
+        end = builder.and_(whole, ir.Constant(integer, [-(2**rest)] * LANES))
+        number = builder.trunc(number, _ir(types.int32)) if size == 64 else number
+        beyond = builder.fsub(args[0], builder.bitcast(end, args[0].type))
+        return context.make_tuple(builder, sig.return_type, [number, beyond])
+
+    return types.Tuple((_Lanes(types.int32), value))(value), build
+
+
+@intrinsic
+def held(typing: Any, value: Any, least: Any, most: Any) -> Any:
+    """int32 lanes held between two numbers."""
+
+    def build(context: Any, builder: Any, sig: Any, args: Any) -> Any:
+        value, least, most = args[0], *(_spread(builder, builder.trunc(bound, _index)) for bound in args[1:])
+        value = builder.select(builder.icmp_signed(">", value, least), value, least)
+        return builder.select(builder.icmp_signed("<", value, most), value, most)
+
+    return value(value, types.intp, types.intp), build
 
 
 @intrinsic

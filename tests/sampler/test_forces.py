@@ -7,21 +7,39 @@ from hypothesis import strategies as st
 
 from sampler.fluid import Fluid
 from sampler.forces import evaluate
+from sampler.groups import gather
+from sampler.pairs import Tabulated, pair_function, tabulated
+from sampler.potentials import lennard_jones
+from sampler.slots import Skins, exact_forces, quick_forces, slots_of
 
 TRUNCATIONS = ("corrected", "plain", "shifted", "force-shifted")
 
 
 def all_pairs(fluid, positions, box):
-    """Forces and bare sums by the minimum image of every pair, with the fluid's own pair functions."""
+    """Forces, bare sums by the minimum image, with the fluid's own pair functions; sizes of pushes and pulls."""
     n = len(positions)
-    forces, sums = np.zeros((n, 3)), np.zeros(4)
+    forces, sizes, sums = np.zeros((n, 3)), np.zeros(n), np.zeros(4)
     for i in range(n):
         d = positions[i] - np.delete(positions, i, axis=0)
         d -= box * np.round(d / box)
         r = np.sqrt((d * d).sum(axis=1))
         d, r = d[r < fluid.cutoff], r[r < fluid.cutoff]
         forces[i] = (-(fluid.pair_virial(r) / r**2)[:, None] * d).sum(axis=0)
+        sizes[i] = (48 * r**-13 + 24 * r**-7).sum()
         sums += 0.5 * np.array([(r**-12).sum(), (r**-6).sum(), len(r), r.sum()])
+    return forces, sums, sizes
+
+
+def in_slots(pair, positions, box, *, short):
+    """Forces as the loop over steps has them, with lists for particles on the move, and the sums of a sample."""
+    velocity = np.random.default_rng(0).normal(size=positions.shape)
+    slots = slots_of(np.mod(positions, box), velocity, box, pair.cutoff, Skins(0.2, 1.0))
+    forces, sums = np.empty_like(positions), np.empty(0 if short else 4)
+    if short:
+        quick_forces(pair, slots, box)
+    else:
+        exact_forces(pair, slots, box, sums)
+    gather(slots.force, slots.groups.labels, forces)
     return forces, sums
 
 
@@ -37,11 +55,14 @@ def scattered(n, density, seed, *, disorder=0.15):
 
 def assert_equal_to_all_pairs(fluid, positions, box):
     forces, sums = evaluate(fluid, positions, box=box)
-    expected, expected_sums = all_pairs(fluid, positions, box)
+    expected, expected_sums, sizes = all_pairs(fluid, positions, box)
     # 1e-10 of the largest number: rounding of some 1e5 terms is 1e-13
     assert np.abs(forces - expected).max() <= 1e-10 * max(np.abs(expected).max(), 1.0)
     used = slice(None) if fluid.truncation == "force-shifted" else slice(3)
     assert sums[used] == pytest.approx(expected_sums[used], rel=1e-10)
+    # float32: pushes and pulls are off by some ten roundings of 6e-8, of which r^-14 makes fourteen of the first
+    short, _ = in_slots(pair_function(fluid), positions, box, short=True)
+    assert (np.abs(short - expected) <= 3e-6 * sizes[:, None] + 1e-30).all()
 
 
 @settings(max_examples=60, deadline=None, derandomize=True)
@@ -87,3 +108,33 @@ def test_forces_sum_to_zero(truncation):
     positions, box = scattered(500, 0.8, 4)
     forces, _ = evaluate(Fluid(cutoff=3.0, truncation=truncation), positions, box=box)
     assert np.abs(forces.sum(axis=0)).max() < 1e-11 * np.abs(forces).sum()
+
+
+def test_a_table_gives_what_it_was_made_from():
+    fluid = Fluid(cutoff=3.0)
+    positions, box = scattered(500, 0.8, 5)
+    r = np.linspace(0.75, 3.05, 6000)
+    table = tabulated(r, lennard_jones.u(r), cutoff=3.0)
+    expected, powers, sizes = all_pairs(fluid, positions, box)
+    exact, sums = in_slots(table, positions, box, short=False)
+    short, _ = in_slots(table, positions, box, short=True)
+    # cubic in r^2 on 2^8 intervals an octave: relative error of the slope (1/256)^3/24 x 1000 = 2.5e-6 at most;
+    # straight lines on 2^10: (1/1024)^2/12 x 56 = 4.5e-6
+    assert (np.abs(exact - expected) <= 3e-6 * sizes[:, None]).all()
+    assert (np.abs(short - expected) <= 1e-5 * sizes[:, None]).all()
+    assert np.abs(exact - expected).max() > 1e-9  # it is the table that was read
+    factors = np.array([lennard_jones.ENERGY, -3 * lennard_jones.VIRIAL, 9 * lennard_jones.HYPERVIRIAL])
+    assert sums[[0, 1, 3]] == pytest.approx(factors @ powers[:2], rel=1e-5)
+    assert sums[2] == powers[2]
+
+
+def test_a_table_bounds_what_it_is_asked():
+    r = np.linspace(0.9, 2.0, 500)
+    table = tabulated(r, lennard_jones.u(r), cutoff=1.9)
+    assert isinstance(table, Tabulated)
+    positions = np.array([[1.0, 1.0, 1.0], [1.85, 1.0, 1.0], [1.0, 2.9001, 1.0]])
+    forces, sums = in_slots(table, positions, 6.0, short=False)
+    # closer than the table begins, the first interval is continued: still pushed apart
+    assert forces[0, 0] < -30
+    assert forces[0, 1] == 0
+    assert sums[2] == 1

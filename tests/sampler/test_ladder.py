@@ -143,6 +143,30 @@ def test_other_rungs_are_finished_when_one_flies_apart(tmp_path, monkeypatch):
     assert len(load(chains(tmp_path, FLUID, STATES[1:], PROTOCOL)[0])) == 280
 
 
+@pytest.mark.parametrize("workers", [1, 2])
+def test_a_refused_write_ends_the_run_and_what_was_written_is_kept(tmp_path, monkeypatch, uninterrupted, workers):
+    from sampler import ladder
+
+    written = []
+
+    def refuse(path, segment, identity):
+        if len(written) == 5:
+            raise OSError(28, "No space left on device")
+        written.append(path)
+        write(path, segment, identity)
+
+    write = ladder.write
+    monkeypatch.setattr(ladder, "write", refuse)
+    reported = []
+    with pytest.raises(OSError, match="No space left"):
+        sampled(tmp_path, workers=workers, watch=reported.append)
+    assert sorted(tmp_path.rglob("*.h5")) == sorted(written)
+    assert len(reported) == 5
+    monkeypatch.undo()
+    monkeypatch.setattr("sampler.protocol._SEGMENT", 64 * 800)
+    assert_same(sampled(tmp_path), uninterrupted)
+
+
 def test_without_a_bath_momentum_is_zero_and_energy_is_kept(tmp_path):
     protocol = replace(PROTOCOL, scheme="velocity-verlet", time_step=0.002, repeats=1)
     (series,) = sampled(tmp_path, STATES[:1], protocol)
