@@ -236,8 +236,8 @@ class Pooled:
     temperatures: list[float] = field(default_factory=lambda: [1.0, 1.2])
     overlap: np.ndarray = field(default_factory=lambda: np.array([[0.7, 0.3], [0.3, 0.7]]))
 
-    def at(self, temperature: float) -> Reweighted:
-        return self.answer
+    def curve(self, temperatures: list[float]) -> list[Reweighted]:
+        return [self.answer for _ in temperatures]
 
 
 def known(value: float, samples: int = 4000, method: str = "fluctuation") -> Estimate:
