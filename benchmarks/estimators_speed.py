@@ -2,8 +2,8 @@
 
 Run: python benchmarks/estimators_speed.py [--samples 1000000] [--frames 500]
 Prints (1) time and peak memory of `canonry estimate` on a study directory of 8 rungs of N = 500, whose segments are
-made up rather than sampled: correlated energies of the canonical ensembles of a fluid of constant heat capacity; (2) the
-same of g(r) from frames of N = 4000. Each is done three times, in a process of its own; given are median and range.
+made up rather than sampled: correlated energies of the canonical ensembles of a fluid of constant heat capacity; (2)
+the same of g(r) from frames of N = 4000. Each is done three times, in a process of its own; given are median and range.
 Below five minutes on two cores, with 2 GB in the folder for temporary files.
 """
 
