@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Iterator
 from dataclasses import dataclass, replace
-from functools import cached_property
 from itertools import chain
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -19,10 +18,12 @@ from canonry.risks import doubt, guide
 from canonry.sampling import recorded
 from canonry.study import Study
 from estimators.canonical import kinetic_temperature, rung_properties
+from estimators.compiled import is_cached
 from estimators.estimate import Estimate, mean
 from estimators.settle import settled_start
 from estimators.structure import Structure, pair_structure
 from sampler.fluid import State
+from sampler.protocol import Protocol
 from sampler.series import Series
 
 if TYPE_CHECKING:
@@ -36,23 +37,19 @@ _POINTS = 400  # of a ledger curve, at most
 
 @dataclass(frozen=True, eq=False)
 class _Rung:
-    """Samples of one rung after the cut and before, without frames, and what they say alone."""
+    """Samples of one rung after the cut, without frames, and what they say alone.
 
+    state : that asked for, but at the temperature measured where no bath acts
+    temperature : measured, where no bath acts
+    """
+
+    state: State
+    temperature: Estimate | None
     series: list[Series]
     own: dict[str, Estimate]
     structure: Structure | None
-    before: list[Series]
-
-    @cached_property
-    def temperature(self) -> Estimate | None:
-        """Measured, where no bath acts."""
-        return None if self.series[0].bath else kinetic_temperature(self.series)
-
-    @cached_property
-    def state(self) -> State:
-        """The state sampled: that asked for, but at the temperature measured where no bath acts."""
-        state = self.series[0].state
-        return state if self.temperature is None else replace(state, temperature=self.temperature.value)
+    cuts: list[Cut]
+    ledgers: list[Curve]
 
     @property
     def histogram(self) -> Curve:
@@ -60,18 +57,9 @@ class _Rung:
         density, edges = np.histogram(energies, bins=_BINS, density=True)
         return Curve(self.state, None, 0.5 * (edges[1:] + edges[:-1]), density)
 
-    @property
-    def cuts(self) -> Iterator[Cut]:
-        for before, after in zip(self.before, self.series, strict=True):
-            effective = mean({after.chain: after.energy}).effective_samples
-            yield Cut(self.state, before.repeat, len(before) - len(after), len(before), effective)
-
-    @property
-    def ledgers(self) -> Iterator[Curve]:
-        for each in self.before:
-            every = -(-len(each) // _POINTS)
-            conserved = (each.kinetic + each.sampled_energy + each.ledger) / self.state.particles
-            yield Curve(self.state, each.repeat, each.times[::every], (conserved - conserved[0])[::every])
+    def is_finished(self, sampling: Protocol) -> bool:
+        asked = sampling.steps // sampling.record_every
+        return len(self.cuts) == sampling.repeats and all(cut.samples == asked for cut in self.cuts)
 
 
 def findings(study: Study, directory: Path, border: Border, *, watch: Callable[[str], None] | None = None) -> Findings:
@@ -85,12 +73,11 @@ def findings(study: Study, directory: Path, border: Border, *, watch: Callable[[
     rungs: list[_Rung] = []
     unfinished = []
     for number, state in enumerate(study.states, start=1):
-        tell(f"estimating rung {number} of {len(study.states)}")
-        series = recorded(study, directory, state)
-        if series:
-            rungs.append(_rung(series))
-        asked = study.sampling.steps // study.sampling.record_every
-        if len(series) < study.sampling.repeats or any(len(each) < asked for each in series):
+        tell(f"estimating rung {number} of {len(study.states)}{_compiling(study.sampling)}")
+        rung = _rung(recorded(study, directory, state))
+        if rung is not None:
+            rungs.append(rung)
+        if rung is None or not rung.is_finished(study.sampling):
             unfinished.append(state)
     if not rungs:
         raise UserError(f"{directory}: there are no samples yet; what is needed is `canonry run` or `canonry sample`")
@@ -109,6 +96,11 @@ def findings(study: Study, directory: Path, border: Border, *, watch: Callable[[
         ledgers=tuple(ledger for rung in rungs for ledger in rung.ledgers),
         unfinished=tuple(unfinished),
     )
+
+
+def _compiling(sampling: Protocol) -> str:
+    """Words for what the first frames ever on a machine cost."""
+    return "" if sampling.steps < sampling.frame_every or is_cached() else ", compiling for this machine once"
 
 
 def _doubted(findings: Iterable[Iterable[Finding]], reference: Reference) -> Iterator[Finding]:
@@ -133,16 +125,36 @@ def _isochore(study: Study, rungs: list[_Rung], border: Border) -> Isochore:
     )
 
 
-def _rung(series: list[Series]) -> _Rung:
-    settled = [_settled(each) for each in series]
+def _rung(recorded: list[Series]) -> _Rung | None:
+    """None if there are no samples."""
+    if not recorded:
+        return None
+    settled = [_settled(each) for each in recorded]
     structure = pair_structure(settled)
-    light = [_light(each) for each in settled]
+    series = [_light(each) for each in settled]
+    temperature = None if series[0].bath else kinetic_temperature(series)
+    state = series[0].state
+    state = state if temperature is None else replace(state, temperature=temperature.value)
     return _Rung(
-        series=light,
-        own=rung_properties(light, contact=structure.contact if structure else None),
+        state,
+        temperature,
+        series,
+        own=rung_properties(series, contact=structure.contact if structure else None),
         structure=structure,
-        before=[_light(each) for each in series],
+        cuts=[_cut(state, *both) for both in zip(recorded, series, strict=True)],
+        ledgers=[_ledger(state, each) for each in recorded],
     )
+
+
+def _cut(state: State, before: Series, after: Series) -> Cut:
+    effective = mean({after.chain: after.energy}).effective_samples
+    return Cut(state, before.repeat, len(before) - len(after), len(before), effective)
+
+
+def _ledger(state: State, series: Series) -> Curve:
+    every = slice(None, None, -(-len(series) // _POINTS))
+    conserved = (series.kinetic[every] + series.sampled_energy[every] + series.ledger[every]) / state.particles
+    return Curve(state, series.repeat, series.times[every], conserved - conserved[0])
 
 
 def _settled(series: Series) -> Series:
@@ -151,5 +163,6 @@ def _settled(series: Series) -> Series:
 
 
 def _light(series: Series) -> Series:
-    """Without its frames, which take most of the room."""
-    return replace(series, frames=series.frames[:0].copy())
+    """Without frames, and with columns of its own, which do not keep in memory all that was recorded with them."""
+    own = {name: getattr(series, name).copy() for name in ("kinetic", "ledger")}
+    return replace(series, frames=series.frames[:0].copy(), **own)

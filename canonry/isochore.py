@@ -47,8 +47,7 @@ class Isochore:
 
     def properties(self) -> Iterator[Finding]:
         """Of every rung, its own values and the reweighted ones."""
-        for index, (state, properties) in enumerate(self.own.items()):
-            pooled = None if self.pooled is None else self._at_rung(self.pooled, index, state)
+        for (state, properties), pooled in zip(self.own.items(), self._at_rungs(), strict=True):
             others = {} if pooled is None else self._completed(pooled.properties)
             for name, own in self._completed(properties).items():
                 for finding in _both(state, name, own, others.get(name), pooled):
@@ -69,10 +68,17 @@ class Isochore:
                 for name in names:
                     yield Finding(state, name, "reweighted", None, at.effective_samples, "no", at.refused, True)
 
-    def _at_rung(self, pooled: Pooled, index: int, state: State) -> Reweighted:
-        if pooled.overlap[index, index] > 1.0 - _ALONE:
-            return Reweighted(state.temperature, 0.0, {}, "the rung shares too few samples with any other")
-        return pooled.at(state.temperature)
+    def _at_rungs(self) -> list[Reweighted | None]:
+        """What all samples say at each rung, in one pass over them."""
+        if self.pooled is None:
+            return [None] * len(self.own)
+        found = self.pooled.curve([state.temperature for state in self.own])
+        apart = np.diag(self.pooled.overlap) > 1.0 - _ALONE
+        refused = "the rung shares too few samples with any other"
+        return [
+            Reweighted(each.temperature, 0.0, {}, refused) if alone else each
+            for each, alone in zip(found, apart, strict=True)
+        ]
 
     def _completed(self, properties: Properties) -> dict[str, Estimate]:
         """With the heat capacity, where the ideal part is known."""

@@ -4,9 +4,8 @@ from __future__ import annotations
 
 import math
 import operator
-from collections import defaultdict
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from functools import cached_property
 from typing import Any
 
@@ -15,15 +14,13 @@ import numpy.typing as npt
 from scipy import special
 
 from estimators.errors import BadSeries
-from estimators.gamma import Scatter, coarsened, scatter
+from estimators.gamma import Scatter, coarsened
+from estimators.influence import Chain, Influence, State
 from estimators.trust import judgement
 
 __all__ = ["Chain", "Estimate", "State", "centred", "combine", "exact", "mean"]
 
 Floats = npt.NDArray[np.float64]
-Chain = tuple[float, float, int, int]  # temperature, density, particles, repeat
-State = tuple[float, float, int]
-
 NORMAL = 1.959963984540054  # 95 % of a normal variable lies within so many standard deviations
 SKEW = (NORMAL**4 + 2.0 * NORMAL**2 - 3.0) / 18.0
 STEP = 1e-20
@@ -49,18 +46,18 @@ class Estimate:
     underlying: Mapping[State, float] = field(default_factory=dict, repr=False)
     __array_ufunc__ = None  # numpy numbers leave the arithmetic to us
 
-    @cached_property
+    def __post_init__(self) -> None:
+        object.__setattr__(self, "influence", Influence.of(self.influence))
+
+    @property
     def repeats(self) -> dict[State, list[Floats]]:
         """Influence series of each state, one a repeat."""
-        states: dict[State, list[Floats]] = defaultdict(list)
-        for chain, values in self.influence.items():
-            states[chain[:3]].append(values)
-        return dict(states)
+        return Influence.of(self.influence).repeats
 
-    @cached_property
+    @property
     def scatters(self) -> dict[State, Scatter]:
         """How far each state's influences scatter: autocorrelation time, window and their share of the variance."""
-        return {state: scatter(repeats) for state, repeats in self.repeats.items()}
+        return Influence.of(self.influence).scatters
 
     @property
     def variance(self) -> float:
@@ -132,7 +129,7 @@ class Estimate:
     def __add__(self, other: Estimate | float) -> Estimate:
         if isinstance(other, Estimate):
             return _linear(self.value + other.value, [(1.0, self), (1.0, other)], _common_method(self, other))
-        return _linear(self.value + other, [(1.0, self)], self.method)
+        return replace(self, value=float(self.value + other))
 
     def __radd__(self, other: float) -> Estimate:
         return self + other

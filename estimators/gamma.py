@@ -21,7 +21,7 @@ Floats = npt.NDArray[np.float64]
 
 WINDOW_FACTOR = 2.0  # S, assumed ratio of the exponential to the integrated autocorrelation time
 STEADY_WINDOW = 2.0  # autocorrelation times; 86 % of an exponential lies within, at half the noise of the full window
-FIRST_LAGS = 128
+FIRST_LAGS = 256
 BLOCKS = 32
 
 
@@ -103,10 +103,10 @@ def scatter(repeats: Sequence[Floats], *, window: int | None = None) -> Scatter:
     if not math.isfinite(centre):
         raise BadSeries("a series holds entries that are not finite numbers; leave those samples out or repair them")
     centred = [values - centre for values in repeats]
+    if sum(float(values @ values) for values in centred) <= samples * (1e-14 * centre) ** 2:
+        return Scatter(0.0, 0.0, 0.0, 0.5, 0.5, 0, samples, longest)
     covariances, window = _up_to_window(centred, window, longest // 2 + 1)
     gamma0 = float(covariances[0])
-    if gamma0 <= (1e-14 * centre) ** 2:
-        return Scatter(0.0, 0.0, 0.0, 0.5, 0.5, 0, samples, longest)
     total = gamma0 + 2.0 * float(np.sum(covariances[1 : window + 1]))
     if total <= 0.0:
         total, window = gamma0, 0
@@ -126,8 +126,9 @@ def scatter(repeats: Sequence[Floats], *, window: int | None = None) -> Scatter:
 def _skewness(centred: Sequence[Floats], length: int) -> float:
     """Of the sum of all entries, from sums over blocks that are nearly independent of one another."""
     sums = _block_sums(centred, length)
-    squares = float(np.sum(sums**2))
-    return float(np.sum(sums**3)) / squares**1.5 if squares > 0.0 else 0.0
+    squares = sums * sums
+    whole = float(np.sum(squares))
+    return float(np.sum(squares * sums)) / whole**1.5 if whole > 0.0 else 0.0
 
 
 def _steady_tau(correlations: Floats, samples: int) -> float:
@@ -186,9 +187,8 @@ def block_scatter(repeats: Sequence[Floats], *, blocks: int = BLOCKS) -> tuple[f
 
 
 def _block_sums(repeats: Sequence[Floats], length: int) -> Floats:
-    return np.concatenate(
-        [values[: len(values) // length * length].reshape(-1, length).sum(axis=1) for values in repeats]
-    )
+    whole = (values[: len(values) // length * length].reshape(-1, length) for values in repeats)
+    return np.concatenate([np.einsum("bi->b", blocks) for blocks in whole])
 
 
 def coarsened(values: Floats, length: int) -> Floats:

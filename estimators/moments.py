@@ -11,7 +11,9 @@ Gamma method sees the same decay in other units; where they are long, next to no
 from __future__ import annotations
 
 import math
+import os
 from collections.abc import Iterator, Sequence
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 
 import numpy as np
@@ -29,7 +31,7 @@ Indices = npt.NDArray[np.int64]
 POWERS = 8  # 1, U, E, W, W + X, U E, W E, W W
 BLOCKS = 2**14  # over all chains: an error bar's own error, about 1/sqrt(2 BLOCKS), is no concern then
 FEWEST_BLOCKS = 128  # of a chain, however many there are
-CHUNK = 2**12  # samples worked on at once: the matrices of a chunk stay in cache
+CHUNK = 2**13  # samples worked on at once: the matrices of a chunk stay in cache
 PIECE = 2**18  # multiplications of one matrix product: above it OpenBLAS takes threads
 SCANNED = 1024  # energies at which the largest weight is looked for
 
@@ -108,29 +110,38 @@ def moments(mixture: Mixture, runs: Sequence[Run], temperatures: Floats, ineffic
     """
     beta = 1.0 / temperatures
     tops = _tops(mixture, runs, beta)
-    shape = (len(beta), POWERS)
-    coupled, squares = np.zeros((*shape, len(mixture.beta))), np.zeros(len(beta))
-    blocks = [np.empty((*shape, len(run.starts))) for run in runs]
-    for run, sums in zip(runs, blocks, strict=True):
-        for part, samples, ended in run.chunks():
-            energies = run.energies[samples.ravel()]
-            shares, log_density = mixture.claims(energies)
-            log_density[ended.ravel()] = math.inf
-            weights = np.multiply.outer(-beta, energies)
-            weights -= log_density
-            weights -= tops[:, None]
-            np.exp(weights, out=weights)
-            powers = run.powers(samples.ravel())
-            by_block = weights.reshape(-1, *samples.shape).transpose(1, 0, 2)
-            sums[:, :, part] = (by_block @ powers.reshape(-1, *samples.shape).transpose(1, 2, 0)).transpose(1, 2, 0)
-            shared = powers[:, None, :] * shares
-            coupled += _product(weights, shared.reshape(-1, len(energies))).reshape(coupled.shape)
-            squares += inefficiencies[run.rung] * np.einsum("gn,gn->g", weights, weights)
+    with ThreadPoolExecutor(os.cpu_count()) as threads:
+        sums = list(threads.map(lambda run: _sums(mixture, run, beta, tops), runs))
+    blocks = [each for each, _, _ in sums]
+    coupled = sum(each for _, each, _ in sums)
+    squares = sum(inefficiencies[run.rung] * each for run, (_, _, each) in zip(runs, sums, strict=True))
     totals = sum(np.sum(each, axis=2) for each in blocks)
     scale = 1.0 / totals[:, :1]
     for each in blocks:
         each *= scale[:, :, None]
     return Moments(totals * scale, coupled * scale[:, :, None], blocks, 1.0 / (squares * scale[:, 0] ** 2))
+
+
+def _sums(mixture: Mixture, run: Run, beta: Floats, tops: Floats) -> tuple[Floats, Floats, Floats]:
+    """Of a run, with weights exp(-beta E - tops)/D: of its blocks, of what the rungs claim, and of squares, (G,)."""
+    shape = (len(beta), POWERS)
+    blocks, coupled = np.empty((*shape, len(run.starts))), np.zeros((*shape, len(mixture.beta)))
+    squares = np.zeros(len(beta))
+    for part, samples, ended in run.chunks():
+        energies = run.energies[samples.ravel()]
+        shares, log_density = mixture.claims(energies)
+        log_density[ended.ravel()] = math.inf
+        weights = np.multiply.outer(-beta, energies)
+        weights -= log_density
+        weights -= tops[:, None]
+        np.exp(weights, out=weights)
+        powers = run.powers(samples.ravel())
+        by_block = weights.reshape(-1, *samples.shape).transpose(1, 0, 2)
+        blocks[:, :, part] = (by_block @ powers.reshape(-1, *samples.shape).transpose(1, 2, 0)).transpose(1, 2, 0)
+        shared = powers[:, None, :] * shares
+        coupled += _product(weights, shared.reshape(-1, len(energies))).reshape(coupled.shape)
+        squares += np.einsum("gn,gn->g", weights, weights)
+    return blocks, coupled, squares
 
 
 def _product(first: Floats, second: Floats) -> Floats:

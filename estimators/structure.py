@@ -2,13 +2,10 @@
 
 from __future__ import annotations
 
-import os
 from collections.abc import Callable, Sequence
-from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass, replace
 from functools import cached_property
 
-import numba
 import numpy as np
 import numpy.typing as npt
 from scipy.signal import savgol_coeffs
@@ -16,6 +13,7 @@ from scipy.signal import savgol_coeffs
 from estimators.canonical import kinetic_temperature
 from estimators.errors import BadSeries
 from estimators.estimate import Chain, Estimate, exact, mean
+from estimators.pairs import pair_counts
 from sampler.fluid import Fluid, State
 from sampler.series import Series
 
@@ -71,7 +69,10 @@ def pair_structure(series: Sequence[Series], *, bin_width: float = 0.02) -> Stru
     _check(series, bin_width)
     first = series[0]
     bins = _Bins.of(first.fluid, first.state, bin_width)
-    counts = {each.chain: _pair_counts(each.frames, first.state.box, bins) for each in series}
+    counts = {
+        each.chain: pair_counts(each.frames, first.state.box, width=bins.width, number=bins.number).astype(float)
+        for each in series
+    }
     return _Pairs(series, bins, counts).structure()
 
 
@@ -113,44 +114,6 @@ class _Bins:
     @cached_property
     def volumes(self) -> Floats:
         return np.asarray(4.0 / 3.0 * np.pi * np.diff(self.edges**3), dtype=float)
-
-
-def _pair_counts(frames: Floats, box: float, bins: _Bins) -> Floats:
-    """Pairs in each bin of each frame, (m, n)."""
-    counts = np.zeros((len(frames), int(np.sqrt(0.75) * box / bins.width) + 2), dtype=np.int32)
-    workers = os.cpu_count() or 1
-    stretches = zip(np.array_split(frames, workers), np.array_split(counts, workers), strict=True)
-    with ThreadPoolExecutor(workers) as threads:
-        list(threads.map(lambda stretch: _add_pairs(stretch[0], box, 1.0 / bins.width, stretch[1]), stretches))
-    return counts[:, : bins.number].astype(float)
-
-
-@numba.njit(cache=True, nogil=True)
-def _add_pairs(frames, box, per_width, counts):  # type: ignore[no-untyped-def]
-    """Counts every pair of each frame once by its nearest-image distance; bins reach to the corner of the box."""
-    m, n, _ = frames.shape
-    where = np.empty((3, n))
-    places = np.empty(n, np.int32)
-    for f in range(m):
-        for k in range(3):
-            where[k] = frames[f, :, k] - box * np.floor(frames[f, :, k] / box)
-        x, y, z = where[0], where[1], where[2]
-        for i in range(n - 1):
-            others = places[: n - 1 - i]
-            _places(x[i + 1 :], y[i + 1 :], z[i + 1 :], x[i], y[i], z[i], box, per_width, others)
-            for place in others:
-                counts[f, place] += 1
-
-
-@numba.njit(cache=True, nogil=True, fastmath=True)
-def _places(x, y, z, x0, y0, z0, box, per_width, places):  # type: ignore[no-untyped-def]
-    """Bin of each distance; slices that start at zero and no branches let the loop be vectorised."""
-    half = 0.5 * box
-    for j in range(x.size):
-        dx = half - abs(abs(x[j] - x0) - half)
-        dy = half - abs(abs(y[j] - y0) - half)
-        dz = half - abs(abs(z[j] - z0) - half)
-        places[j] = np.int32(np.sqrt(dx * dx + dy * dy + dz * dz) * per_width)
 
 
 @dataclass(frozen=True, eq=False)

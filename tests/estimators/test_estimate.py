@@ -90,6 +90,16 @@ def test_exact_values_carry_no_error(generator):
     assert (cold * four).standard_error == pytest.approx((cold * 4.0).standard_error)
 
 
+def test_a_constant_changes_the_value_and_shares_the_error(generator):
+    """Of long series both are large and dear."""
+    values = mean({COLD: generator.normal(size=500), HOT: generator.normal(size=300)})
+    for moved, value in ((values + 2.5, values.value + 2.5), (1.0 + values - 4.0, values.value - 3.0)):
+        assert moved.value == pytest.approx(value, abs=1e-15)
+        assert moved.influence is values.influence
+        assert moved.scatters is values.scatters
+    assert (2.5 - values).influence[COLD] == pytest.approx(-values.influence[COLD])
+
+
 def test_method_survives_numbers_and_becomes_derived_between_methods(generator):
     values = {COLD: generator.normal(size=500) + 9.0}
     average, fluctuation = mean(values), covariance(values, values)

@@ -16,6 +16,7 @@ from canonry.results import Results
 from estimators.estimate import Estimate, mean
 from estimators.reweight import Reweighted
 from sampler.fluid import State
+from sampler.series import Series
 
 LIQUID = """
 [fluid]
@@ -228,6 +229,41 @@ def test_cross_check_from_structure_is_a_caveat_where_it_fails(monkeypatch: pyte
     assert "T = 1.6" in caveat
 
 
+def test_what_costs_a_moment_is_told(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
+    sampled(tmp_path, states="points = [[1.6, 0.7], [1.3, 0.7]]")
+    for cached, words in ((True, ""), (False, ", compiling for this machine once")):
+        monkeypatch.setattr(canonry.estimation, "is_cached", lambda cached=cached: cached)
+        told: list[str] = []
+        estimate(tmp_path / "study", watch=told.append)
+        assert told == [f"estimating rung {n} of 2{words}" for n in (1, 2)] + ["reweighting between the rungs"]
+    told.clear()
+    (tmp_path / "study" / "study.toml").write_text(
+        (tmp_path / "study" / "study.toml").read_text().replace("steps = 20000", "steps = 100")
+    )
+    estimate(tmp_path / "study", watch=told.append)
+    assert told[0] == "estimating rung 1 of 2"
+
+
+def test_samples_of_a_rung_keep_nothing_else_in_memory(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
+    """A column that is a view would keep all columns, and frames are most of what was recorded."""
+    kept: list[Series] = []
+    honest = canonry.estimation.rung_properties
+
+    def watched(series, **contact):
+        kept.extend(series)
+        return honest(series, **contact)
+
+    monkeypatch.setattr(canonry.estimation, "rung_properties", watched)
+    sampled(tmp_path, states="points = [[1.6, 0.7]]")
+    (series,) = kept
+    columns = [getattr(series, name) for name in ("energy", "sampled_energy", "virial", "hypervirial")]
+    for column in (*columns, series.kinetic, series.ledger):
+        whole = column if column.base is None else column.base
+        assert whole.size <= 20000 // 10
+    assert series.frames.size == 0
+    assert series.frames.base is None
+
+
 @dataclass
 class Pooled:
     """Reweighting that gives what it is told."""
@@ -236,8 +272,8 @@ class Pooled:
     temperatures: list[float] = field(default_factory=lambda: [1.0, 1.2])
     overlap: np.ndarray = field(default_factory=lambda: np.array([[0.7, 0.3], [0.3, 0.7]]))
 
-    def at(self, temperature: float) -> Reweighted:
-        return self.answer
+    def curve(self, temperatures: list[float]) -> list[Reweighted]:
+        return [self.answer for _ in temperatures]
 
 
 def known(value: float, samples: int = 4000, method: str = "fluctuation") -> Estimate:
