@@ -14,8 +14,8 @@ import numpy as np
 from scipy.spatial import cKDTree
 
 from sampler.fluid import Fluid, State
-from sampler.pairs import pair_function
 from sampler.noise import chain_key
+from sampler.pairs import pair_function
 from sampler.schemes import COLUMNS, propagate, substeps
 from sampler.start import first_positions, first_velocities
 

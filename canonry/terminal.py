@@ -57,10 +57,11 @@ def plan_text(study: Study, plan: Plan, border: Border) -> str:
         return " = ".join(each.text(name, value) for each in borders)
 
     bath = f"friction {both('friction', sampling.friction)}" if sampling.bath else "no bath"
+    precision = f"{sampling.precision if sampling.bath else 'double'} precision"
     lines = [
         f"{study.title}",
         f"{study.states[0].particles} particles, cutoff {both('length', fluid.cutoff)}, {fluid.truncation}",
-        f"{sampling.scheme}, time step {both('time', sampling.time_step)}, {bath}",
+        f"{sampling.scheme}, time step {both('time', sampling.time_step)}, {bath}, {precision}",
         f"{sampling.settling} + {sampling.steps} steps, repeats: {plan.repeats}",
         "",
         aligned([*heads, *body]),

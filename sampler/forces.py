@@ -41,18 +41,19 @@ def pair_forces(pair, ticks, limit, tick, labels, near, force, sums):  # type: i
 
     ticks : slot layout, whole numbers of `tick` (sigma); limit : as `limits` gives it
     force : slot layout, in epsilon/sigma per tick
-    sums : (4,) S12, S6, pairs and sum of distances; empty leaves them out, and the work for them
+    sums : (4,), of the first two `terms`, of pairs inside the cutoff, of the third; None or empty to leave them out
     """
     number = force.dtype.type
     zero, one = splat(number(0.0)), splat(number(1.0))
     for at in range(0, force.size, LANES):
         store(force, at, zero)
     scale = tick * tick
-    s12, s6, pairs, distances = zero, zero, zero, zero
+    first, second, third, pairs = zero, zero, zero, zero
     for slot in range(labels.size):
         if labels[slot] < 0:
             continue
-        lane, other = slot % LANES, BLOCK * (slot // LANES)
+        lane = slot % LANES
+        other = np.int64(BLOCK * (slot // LANES))
         at = other + lane
         x, y, z = splat(ticks[at]), splat(ticks[at + LANES]), splat(ticks[at + 2 * LANES])
         px, py, pz = zero, zero, zero
@@ -65,15 +66,15 @@ def pair_forces(pair, ticks, limit, tick, labels, near, force, sums):  # type: i
             px, py, pz = px + fx, py + fy, pz + fz
             if sums is not None and sums.size > 0:
                 a, b, c = terms(pair, square)
-                s12, s6 = s12 + select(inside, a, zero), s6 + select(inside, b, zero)
-                pairs, distances = pairs + select(inside, one, zero), distances + select(inside, c, zero)
+                first, second = first + select(inside, a, zero), second + select(inside, b, zero)
+                third, pairs = third + select(inside, c, zero), pairs + select(inside, one, zero)
             other, inside = coming, next_inside
             dx, dy, dz, square = next_dx, next_dy, next_dz, next_square
         force[at] += total(px)
         force[at + LANES] += total(py)
         force[at + 2 * LANES] += total(pz)
     if sums is not None and sums.size > 0:
-        sums[0], sums[1], sums[2], sums[3] = total(s12), total(s6), total(pairs), total(distances)
+        sums[0], sums[1], sums[2], sums[3] = total(first), total(second), total(pairs), total(third)
 
 
 @kernel

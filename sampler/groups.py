@@ -20,7 +20,20 @@ import numpy.typing as npt
 from sampler.compiled import kernel, piece
 from sampler.vector import LANES, any_of, load, low_bits, real, smaller, splat, store, upper_half
 
-__all__ = ["BLOCK", "FINE", "COARSE", "LANES", "Groups", "Near", "fix", "gather", "group", "limits", "narrow", "scatter"]
+__all__ = [
+    "BLOCK",
+    "COARSE",
+    "FINE",
+    "LANES",
+    "Groups",
+    "Near",
+    "fix",
+    "gather",
+    "group",
+    "limits",
+    "narrow",
+    "scatter",
+]
 
 BLOCK = 3 * LANES  # numbers in a group: three coordinates of eight lanes
 FINE, COARSE = 2.0**64, 2.0**32  # of a whole box edge
@@ -202,7 +215,7 @@ def gather(values, labels, out):  # type: ignore[no-untyped-def]
 
 @kernel
 def limits(labels, square, out):  # type: ignore[no-untyped-def]
-    """What the squared distance to a slot must stay below, beside its x: `square`; for padding, what nothing is below."""
+    """What the squared distance to a slot must stay below, beside its x: `square`; to padding, never fulfilled."""
     for slot in range(labels.size):
         out[BLOCK * (slot // LANES) + slot % LANES] = square if labels[slot] >= 0 else -1.0
     return out

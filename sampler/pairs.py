@@ -13,9 +13,9 @@ import numpy.typing as npt
 from numba.core import types
 from numba.extending import overload
 
-from sampler.fluid import Fluid
 from sampler.compiled import piece
-from sampler.vector import OCTAVE_BITS, gather, held, interval, reciprocal, splat, square_root
+from sampler.fluid import Fluid
+from sampler.vector import OCTAVE_BITS, gather, held, interval, reciprocal, square_root
 
 __all__ = ["ForceShifted", "PairFunction", "Tabulated", "Truncated", "pair_function", "strength", "terms"]
 
@@ -125,29 +125,25 @@ def _shifted_terms(pair, square):  # type: ignore[no-untyped-def]
 def _row(pair, square):  # type: ignore[no-untyped-def]
     """Place in `energy` of the interval of r^2, and how far beyond its lower end."""
     number, beyond = interval(square)
-    row = held(number - splat(np.int32(pair.first)), 0, pair.energy.size // 4 - 1)
-    return row * splat(np.int32(4)), beyond
+    return 4 * held(number - pair.first, 0, pair.energy.size // 4 - 1), beyond
 
 
 def _tabulated_strength(pair, square):  # type: ignore[no-untyped-def]
     row, t = _row(pair, square)
-    one = splat(np.int32(1))
-    b, c, d = gather(pair.energy, row + one), gather(pair.energy, row + one + one), gather(pair.energy, row + one + one + one)
+    b, c, d = gather(pair.energy, row + 1), gather(pair.energy, row + 2), gather(pair.energy, row + 3)
     return -2.0 * b - t * (4.0 * c + 6.0 * t * d)
 
 
 def _short_tabulated_strength(pair, square):  # type: ignore[no-untyped-def]
     number, beyond = interval(square)
-    row = held(number - splat(np.int32(pair.short_first)), 0, pair.short_strength.size // 2 - 1)
-    row = row + row
-    return gather(pair.short_strength, row) + beyond * gather(pair.short_strength, row + splat(np.int32(1)))
+    row = 2 * held(number - pair.short_first, 0, pair.short_strength.size // 2 - 1)
+    return gather(pair.short_strength, row) + beyond * gather(pair.short_strength, row + 1)
 
 
 def _tabulated_terms(pair, square):  # type: ignore[no-untyped-def]
     row, t = _row(pair, square)
-    one = splat(np.int32(1))
-    a, b = gather(pair.energy, row), gather(pair.energy, row + one)
-    c, d = gather(pair.energy, row + one + one), gather(pair.energy, row + one + one + one)
+    a, b = gather(pair.energy, row), gather(pair.energy, row + 1)
+    c, d = gather(pair.energy, row + 2), gather(pair.energy, row + 3)
     slope, bend = b + t * (2.0 * c + 3.0 * t * d), 2.0 * c + 6.0 * t * d
     return a + t * (b + t * (c + t * d)), 2.0 * square * slope, 4.0 * square * (slope + square * bend)
 

@@ -6,8 +6,8 @@ import numpy as np
 import numpy.typing as npt
 
 from sampler.errors import DamagedSegment, DivergedRun
-from sampler.pairs import pair_function
 from sampler.noise import chain_key
+from sampler.pairs import pair_function
 from sampler.protocol import Scheme
 from sampler.schemes import COLUMNS, DIVERGED, STOPPED, propagate, substeps
 from sampler.series import Series

@@ -12,6 +12,7 @@ from typing import Any
 
 from llvmlite import binding, ir
 from numba.core import cgutils, types
+from numba.core.types.containers import Tuple
 from numba.core.typing.templates import AbstractTemplate, infer_global, signature
 from numba.extending import intrinsic, lower_builtin, models, register_model
 
@@ -29,8 +30,8 @@ __all__ = [
     "later_lanes",
     "load",
     "low_bits",
-    "reciprocal",
     "real",
+    "reciprocal",
     "select",
     "smaller",
     "splat",
@@ -43,14 +44,14 @@ __all__ = [
 LANES = 8
 OCTAVE_BITS = {64: 8, 32: 10}  # by size of the number: an octave has 2^bits intervals of a table
 _FUSE = ("contract",)
-_KINDS = {
+_KINDS: dict[Any, Any] = {
     types.float64: ir.DoubleType(),
     types.float32: ir.FloatType(),
     types.int64: ir.IntType(64),
     types.int32: ir.IntType(32),
     types.boolean: ir.IntType(1),
 }
-_REAL_OF_WHOLE = {types.int64: types.float64, types.int32: types.float32}
+_REAL_OF_WHOLE: dict[Any, Any] = {types.int64: types.float64, types.int32: types.float32}
 _index = ir.IntType(32)
 _CONVERTS_LONG = "avx512dq" in binding.get_host_cpu_features() or not binding.get_default_triple().startswith("x86")
 
@@ -97,8 +98,9 @@ def _arithmetic(python_operator: Callable[..., Any], on_floats: str, on_wholes: 
             lanes = [arg for arg in args if isinstance(arg, _Lanes)]
             if len(lanes) == 2 and lanes[0] == lanes[1]:
                 return signature(lanes[0], *args)
-            if len(lanes) == 1 and lanes[0].is_float and len(args) == 2:
-                return signature(lanes[0], *[arg if isinstance(arg, _Lanes) else types.float64 for arg in args])
+            if len(lanes) == 1 and len(args) == 2:
+                scalar = types.float64 if lanes[0].is_float else types.int64
+                return signature(lanes[0], *[arg if isinstance(arg, _Lanes) else scalar for arg in args])
             return None
 
     def lower(context: Any, builder: Any, sig: Any, args: Any) -> Any:
@@ -107,12 +109,12 @@ def _arithmetic(python_operator: Callable[..., Any], on_floats: str, on_wholes: 
             if isinstance(kind, _Lanes):
                 operands.append(value)
             else:
-                operands.append(_spread(builder, context.cast(builder, value, types.float64, result.element)))
+                operands.append(_spread(builder, context.cast(builder, value, kind, result.element)))
         if result.is_float:
             return getattr(builder, on_floats)(*operands, flags=_FUSE)
         return getattr(builder, on_wholes)(*operands)
 
-    for kinds in ((_Lanes, _Lanes), (_Lanes, types.Float), (types.Float, _Lanes)):
+    for kinds in ((_Lanes, _Lanes), (_Lanes, types.Number), (types.Number, _Lanes)):
         lower_builtin(python_operator, *kinds)(lower)
 
 
@@ -120,7 +122,6 @@ for _operator, _on_floats, _on_wholes in (
     (operator.add, "fadd", "add"),
     (operator.sub, "fsub", "sub"),
     (operator.mul, "fmul", "mul"),
-    (operator.truediv, "fdiv", ""),
 ):
     _arithmetic(_operator, _on_floats, _on_wholes)
 
@@ -240,7 +241,7 @@ def interval(typing: Any, value: Any) -> Any:
         beyond = builder.fsub(args[0], builder.bitcast(end, args[0].type))
         return context.make_tuple(builder, sig.return_type, [number, beyond])
 
-    return types.Tuple((_Lanes(types.int32), value))(value), build
+    return Tuple((_Lanes(types.int32), value))(value), build
 
 
 @intrinsic

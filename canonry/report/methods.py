@@ -31,6 +31,10 @@ _SCHEMES = {
     "[obabo]",
     "velocity-verlet": "at constant energy with the velocity Verlet scheme [velocity-verlet]",
 }
+_MIXED = (
+    "Forces between recorded steps were evaluated in single precision; positions, velocities, the thermostat and every "
+    "recorded quantity were kept in double precision."
+)
 _TRUNCATIONS = {
     "corrected": "truncated at {cutoff}, with a homogeneous long-range correction to energy, pressure and their "
     "derivatives",
@@ -144,6 +148,7 @@ def _dynamics(results: Results, setup: Setup) -> list[str]:
         f"{ensemble} at {_counted(states, 'state')} {_SCHEMES[setup.scheme]} "
         f"(time step {_quantity(sampling['time_step'], 'σ √(m/ε)')}{friction}; {repeats} a state of {lengths}, "
         f"recorded every {sampling['record_every']} steps).",
+        *([_MIXED] if setup.bath and sampling["precision"] == "mixed" else []),
         "The end of equilibration was found from the data.",
     ]
 

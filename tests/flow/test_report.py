@@ -34,6 +34,7 @@ seed = 1
 repeats = 2
 time_step = 0.005
 {friction}scheme = "{scheme}"
+precision = "mixed"
 equilibration = 20000
 steps = 200000
 record_every = 10
@@ -462,7 +463,7 @@ def test_methods_and_citations_follow_the_scheme(scheme, authors, absent):
     assert any("Thol" in work and "(2016)" in work for work in works)
     assert [int(number) for number in re.findall(r"\[(\d+)\]", text)] == list(range(1, len(works) + 1))
     assert "[baoab]" not in text
-    assert ("friction" in text) == (scheme != "velocity-verlet")
+    assert ("friction" in text) == ("single precision" in text) == (scheme != "velocity-verlet")
 
 
 @pytest.mark.parametrize(

@@ -264,6 +264,7 @@ def test_a_damaged_segment_is_put_aside_named_and_sampled_again(sampled: Path, l
         ("sampling.time_step", "[compare]", "time_step = 0.002\n[compare]", "is 0.005 there and 0.002"),
         ("sampling.friction", "[compare]", "friction = 3.0\n[compare]", "is 1.0 there and 3.0"),
         ("sampling.scheme", "[compare]", 'scheme = "obabo"\n[compare]', "is baoab there and obabo"),
+        ("sampling.precision", "[compare]", 'precision = "double"\n[compare]', "is mixed there and double"),
         ("sampling.equilibration", "equilibration = 200", "equilibration = 300", "is 200 there and 300"),
         ("sampling.record_every", "record_every = 5", "record_every = 10", "is 5 there and 10"),
         ("sampling.frame_every", "frame_every = 100", "frame_every = 200", "is 100 there and 200"),

@@ -63,7 +63,7 @@ def test_the_shortest_study_gets_every_default(write: Writer) -> None:
     assert [(state.temperature, state.density, state.particles) for state in study.states] == [(1.0, 0.8, 500)]
     sampling = study.sampling
     assert (sampling.seed, sampling.repeats, sampling.scheme, sampling.bath) == (1, 1, "baoab", True)
-    assert (sampling.time_step, sampling.friction) == (0.005, 2.0)
+    assert (sampling.time_step, sampling.friction, sampling.precision) == (0.005, 2.0, "mixed")
     assert (sampling.equilibration, sampling.steps) == (20_000, 200_000)
     assert (sampling.record_every, sampling.frame_every) == (10, 500)
     assert study.compare.against == ()
@@ -229,6 +229,7 @@ REFUSED = [
     ("[state]", "[state]\nparticles = 1", r"state\.particles = 1: what is needed is a whole number from 2"),
     ("[state]", "[sampling]\nseed = -1\n[state]", r"sampling\.seed = -1: what is needed is a whole number from 0"),
     ("[state]", '[sampling]\nscheme = "boab"\n[state]', r'sampling\.scheme = "boab": did you mean "baoab"\?'),
+    ("[state]", '[sampling]\nprecision = "single"\n[state]', r'\.precision = "single": what is accepted is "mixed" or'),
     ("[state]", 'cutoff = "long"\n[state]', r'fluid\.cutoff = "long": a value with a unit needs fluid\.epsilon'),
     ("[state]", SI + 'cutoff = "long"\n[state]', r'cutoff = "long": what is needed is a number with a unit of'),
     ("[state]", SI + 'cutoff = "3 K"\n[state]', r"fluid\.cutoff = \"3 K\": 'K' is not a unit of length"),
@@ -315,7 +316,7 @@ KEYS = {
     "fluid": ("potential", "epsilon", "sigma", "mass", "cutoff", "truncation", "ideal_heat_capacity"),
     "state": ("density", "temperatures", "points", "particles"),
     "sampling": (
-        *("seed", "repeats", "time_step", "friction", "scheme"),
+        *("seed", "repeats", "time_step", "friction", "scheme", "precision"),
         *("equilibration", "steps", "record_every", "frame_every"),
     ),
     "compare": ("against", "tolerance"),

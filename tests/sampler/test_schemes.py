@@ -6,8 +6,8 @@ import pytest
 from estimators.estimate import mean
 from sampler.fluid import Fluid, State
 from sampler.forces import evaluate
-from sampler.pairs import pair_function
 from sampler.noise import chain_key, normals
+from sampler.pairs import pair_function
 from sampler.protocol import SUBSTEPS
 from sampler.schemes import COLUMNS, DIVERGED, DONE, STOPPED, propagate, substeps
 from sampler.slots import Skins
@@ -19,7 +19,9 @@ SKINS = Skins(0.2, 0.9)
 class Trajectory:
     """A small system advanced by the compiled loop."""
 
-    def __init__(self, fluid, state, scheme, *, time_step, friction=1.0, repeat=0, start=None, short=False, skins=SKINS):
+    def __init__(
+        self, fluid, state, scheme, *, time_step, friction=1.0, repeat=0, start=None, short=False, skins=SKINS
+    ):
         self.fluid, self.state, self.step, self.short, self.skins = fluid, state, 0, short, skins
         self.key = chain_key(11, state.temperature, state.density, repeat)
         if start is None:
