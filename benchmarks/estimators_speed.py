@@ -2,9 +2,9 @@
 
 Run: python benchmarks/estimators_speed.py [--samples 1000000] [--frames 500]
 Prints (1) time and peak memory of `canonry estimate` on a study directory of 8 rungs of N = 500, whose segments are
-made up rather than sampled: correlated energies of the canonical ensembles of a fluid of constant heat capacity; (2)
-the same of g(r) from frames of N = 4000. Each is done three times, in a process of its own; given are median and range.
-Below five minutes on two cores, with 2 GB in the folder for temporary files.
+made up rather than sampled: canonical ensembles of a fluid of constant heat capacity, a frame to 4000 samples; (2) the
+same of g(r) from frames of N = 4000. Each is done three times, in a process of its own; given are median and range.
+Below five minutes on two cores, with 1 GB in the folder for temporary files.
 """
 
 from __future__ import annotations
@@ -59,7 +59,7 @@ GROUND, HEAT_CAPACITY = -6.6, 0.9  # U/N = GROUND + HEAT_CAPACITY T
 MEMORIES = (0.9, 0.99)  # of the two equal parts of the energy's fluctuation; autocorrelation times 10 and 100 samples
 
 
-def memory(rng: np.random.Generator, samples: int, memory: float) -> Floats:
+def correlated(rng: np.random.Generator, samples: int, memory: float) -> Floats:
     """Stationary autoregressive normals, (samples,)."""
     noise = rng.standard_normal(samples) * math.sqrt(1.0 - memory**2)
     noise[0] /= math.sqrt(1.0 - memory**2)
@@ -74,11 +74,11 @@ def gamma_like(normals: Floats, shape: float) -> Floats:
 def samples_of(rng: np.random.Generator, state: State, samples: int) -> Floats:
     """What a kernel records, (samples, 6): the energy E has the density E^(C - 1) exp(-E/T) above its ground."""
     particles, temperature = state.particles, state.temperature
-    normals = sum(memory(rng, samples, each) for each in MEMORIES) / math.sqrt(len(MEMORIES))
+    normals = sum(correlated(rng, samples, each) for each in MEMORIES) / math.sqrt(len(MEMORIES))
     energy = temperature * gamma_like(np.asarray(normals), HEAT_CAPACITY * particles)
-    virial = -3.0 * particles + 4.0 * energy + 30.0 * memory(rng, samples, 0.8)
+    virial = -3.0 * particles + 4.0 * energy + 30.0 * correlated(rng, samples, 0.8)
     energy += GROUND * particles
-    kinetic = temperature * gamma_like(memory(rng, samples, 0.9), 1.5 * particles)
+    kinetic = temperature * gamma_like(correlated(rng, samples, 0.9), 1.5 * particles)
     twelfth = (virial - 2.0 * energy) / 8.0  # U = 4 S12 - 4 S6, W = 16 S12 - 8 S6
     sixth = twelfth - 0.25 * energy
     ledger = 1e-3 * np.cumsum(rng.standard_normal(samples)) - kinetic - energy
@@ -111,30 +111,36 @@ def write_study(directory: Path, samples: int, *, frame_every: int = FRAME_EVERY
             store.write(chain.path(index), segment, chain.identity)
 
 
-def estimate(directory: str) -> None:
+def estimate(directory: str) -> float:
+    """Seconds, with the loading of libraries."""
+    started = time.perf_counter()
     from canonry.job import estimate
 
     estimate(directory)
+    return time.perf_counter() - started
 
 
-def structure(frames: int) -> None:
+def structure(frames: int) -> float:
+    """Seconds, once libraries are loaded and kernels compiled."""
     from estimators.structure import pair_structure
 
     state, nothing = State(1.0, 0.8, 4000), [np.zeros(frames)] * 6
     positions = frames_of(np.random.default_rng(2), state, frames)
-    pair_structure([Series(Fluid(), state, 0, True, 1.0, *nothing, frames=positions, frame_stride=1)])
-
-
-def _cost(function: Callable[[Any], None], argument: str | int) -> tuple[float, float]:
-    """Seconds, and the peak memory of the whole process in GB."""
+    series = Series(Fluid(), state, 0, True, 1.0, *nothing, frames=positions, frame_stride=1)
+    pair_structure([series.until(1)])
     started = time.perf_counter()
-    function(argument)
-    seconds = time.perf_counter() - started
+    pair_structure([series])
+    return time.perf_counter() - started
+
+
+def _cost(function: Callable[[Any], float], argument: str | int) -> tuple[float, float]:
+    """Seconds of a call, and the peak memory of the whole process in GB."""
+    seconds = function(argument)
     peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss * (1.0 if sys.platform == "darwin" else 1024.0)
     return seconds, peak / 1e9
 
 
-def cost(function: Callable[[Any], None], argument: str | int) -> str:
+def cost(function: Callable[[Any], float], argument: str | int) -> str:
     """Of several calls, each in a new process that has nothing loaded."""
     costs = []
     for _ in range(RUNS):
@@ -153,7 +159,6 @@ def main() -> None:
         directory = Path(folder) / "study"
         write_study(directory, asked.samples)
         print(f"canonry estimate, 8 rungs of {asked.samples} samples: {cost(estimate, str(directory))}", flush=True)
-    structure(1)  # compiles
     print(f"g(r), {asked.frames} frames of N = 4000: {cost(structure, asked.frames)}")
 
 

@@ -21,7 +21,7 @@ Floats = npt.NDArray[np.float64]
 
 WINDOW_FACTOR = 2.0  # S, assumed ratio of the exponential to the integrated autocorrelation time
 STEADY_WINDOW = 2.0  # autocorrelation times; 86 % of an exponential lies within, at half the noise of the full window
-FIRST_LAGS = 256
+FIRST_LAGS = 128
 BLOCKS = 32
 
 
@@ -83,7 +83,7 @@ def _lagged_products(values: Floats, n_lags: int) -> Floats:
     padded[: len(values)] = values
     heads = padded[: n_stretches * stretch].reshape(n_stretches, stretch)
     whole = np.lib.stride_tricks.sliding_window_view(padded, size)[::stretch]
-    power = np.sum(np.conj(fft.rfft(heads, size)) * fft.rfft(whole, size), axis=0)
+    power = np.einsum("sf,sf->f", np.conj(fft.rfft(heads, size)), fft.rfft(whole, size))
     return np.asarray(fft.irfft(power, size)[:n_lags], dtype=float)
 
 
@@ -156,7 +156,7 @@ def _up_to_window(centred: Sequence[Floats], window: int | None, most_lags: int)
         found = _automatic_window(covariances, sum(map(len, centred)))
         if found is not None or n_lags == most_lags:
             return covariances, n_lags - 1 if found is None else found
-        n_lags = min(4 * n_lags, most_lags)
+        n_lags = min(8 * n_lags, most_lags)
 
 
 def _automatic_window(covariances: Floats, samples: int) -> int | None:
