@@ -53,14 +53,14 @@ def pair_forces(pair, ticks, limit, tick, labels, near, force, sums):  # type: i
         if labels[slot] < 0:
             continue
         lane = slot % LANES
-        other = np.int64(BLOCK * (slot // LANES))
+        other = BLOCK * (slot // LANES)
         at = other + lane
         x, y, z = splat(ticks[at]), splat(ticks[at + LANES]), splat(ticks[at + 2 * LANES])
         px, py, pz = zero, zero, zero
         dx, dy, dz, square, inside = _apart(ticks, limit, scale, x, y, z, other)
         inside = both(inside, later_lanes(lane))
         for k in range(near.start[slot], near.start[slot + 1] + 1):
-            coming = np.int64(near.offsets[np.uint64(k)])
+            coming = int(near.offsets[np.uint64(k)])
             next_dx, next_dy, next_dz, next_square, next_inside = _apart(ticks, limit, scale, x, y, z, coming)
             fx, fy, fz = _push(pair, force, zero, other, dx, dy, dz, square, inside)
             px, py, pz = px + fx, py + fy, pz + fz

@@ -32,6 +32,7 @@ __all__ = [
     "group",
     "limits",
     "narrow",
+    "room",
     "scatter",
 ]
 

@@ -17,7 +17,7 @@ from sampler.compiled import piece
 from sampler.fluid import Fluid
 from sampler.vector import OCTAVE_BITS, gather, held, interval, reciprocal, square_root
 
-__all__ = ["ForceShifted", "PairFunction", "Tabulated", "Truncated", "pair_function", "strength", "terms"]
+__all__ = ["ForceShifted", "PairFunction", "Tabulated", "Truncated", "pair_function", "strength", "tabulated", "terms"]
 
 
 class Truncated(NamedTuple):
