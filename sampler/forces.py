@@ -96,8 +96,9 @@ def _evaluate(pair, where, box):  # type: ignore[no-untyped-def]
     limit = limits(groups.labels, pair.cutoff * pair.cutoff, np.empty(3 * size))
     force, sums, out = np.empty(3 * size), np.empty(4), np.empty_like(where)
     pair_forces(pair, fine, limit, box / FINE, groups.labels, near, force, sums)
+    scaled(force, box / FINE, force)
     gather(force, groups.labels, out)
-    return out * (box / FINE), sums
+    return out, sums
 
 
 def evaluate(

@@ -161,7 +161,8 @@ def _partners(bounds, column, first, n_columns, n_bins, box, reach):  # type: ig
                     continue
                 if count + column[other + 1] - column[other] > partners.size:
                     larger = np.empty(2 * partners.size + column[-1], np.int32)
-                    larger[:count] = partners[:count]
+                    for done in range(count):
+                        larger[done] = partners[done]
                     partners = larger
                 for low, high in _window(bounds, g, first, column, other, n_bins, box, reach):
                     for b in range(max(g + 1, low), high):

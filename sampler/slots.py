@@ -115,7 +115,10 @@ def slots_of(where, velocity, box, cutoff, skins):  # type: ignore[no-untyped-de
     """Slots and both lists of positions, wrapped in place, and velocities, (n, 3) by label."""
     wrap(where, box)
     time = min(_FORESIGHT, _LEAD * (skins.wide - skins.near) / _fastest(velocity))
-    later = where + time * velocity
+    later = np.empty_like(where)
+    for i in range(where.shape[0]):
+        for c in range(3):
+            later[i, c] = where[i, c] + time * velocity[i, c]
     wrap(later, box)
     groups = group(later, box, cutoff + skins.wide)
     n, labels = groups.labels.size, groups.labels
