@@ -1,45 +1,65 @@
-"""Cost of a step of the sampler beside a sampler written by hand with NumPy, both timed in turn in one process.
+"""What sampling costs on this machine: step, growth with size, cores, start, memory, what is not computing.
 
-Run: python benchmarks/sampler_speed.py [--particles 500 4000] [--density 0.8] [--windows 9]
-Prints nanoseconds per particle-step (medians over windows) and the median of the paired ratios; sums are recorded every
-10 steps, list building, random numbers and recording are included. Below a minute.
+Run: python benchmarks/sampler_speed.py [--yardstick FOLDER] [--windows 9]
+About ten minutes on two cores. Steps are whole steps of Langevin dynamics (cutoff 3, sums recorded every 10 steps,
+lists and random numbers included). What is compared is run in turn in one process, and ratios are medians of paired
+windows: a shared machine drifts by more than the differences of interest.
+
+--yardstick : adds a column for another sampler of the same dynamics: FOLDER/common.py with a class
+    CSim(4, positions, velocities, box, cutoff, skin, time_step, friction, temperature) and its run(n_steps, every)
 """
 
 from __future__ import annotations
 
 import argparse
+import importlib
+import os
+import subprocess
+import sys
+import tempfile
 import time
+from collections.abc import Callable, Sequence
+from pathlib import Path
+from typing import Any
 
 import numpy as np
 from scipy.spatial import cKDTree
 
+from sampler import rung
 from sampler.fluid import Fluid, State
+from sampler.ladder import chains, sample, unfinished
 from sampler.noise import chain_key
-from sampler.pairs import pair_function
+from sampler.pairs import pair_function, tabulated
+from sampler.potentials import lennard_jones
+from sampler.protocol import Protocol
 from sampler.schemes import COLUMNS, propagate, substeps
 from sampler.start import first_positions, first_velocities
 
 CUTOFF, TIME_STEP, FRICTION, EVERY = 3.0, 0.005, 2.0, 10
+WINDOW = 1_000_000  # particle-steps of a window: a tenth of a second
+LEAST_STEPS = 200
 
 
 class Compiled:
     """The project's sampler."""
 
-    def __init__(self, state: State) -> None:
-        self.state, self.step = state, 0
-        self.fluid = Fluid(cutoff=CUTOFF)
+    def __init__(self, state: State, *, short: bool, table: bool = False) -> None:
+        self.state, self.step, self.short = state, 0, short
+        fluid = Fluid(cutoff=CUTOFF)
+        r = np.linspace(0.7, CUTOFF + 0.05, 8000)
+        self.pair = tabulated(r, lennard_jones.u(r), cutoff=CUTOFF) if table else pair_function(fluid)
         self.key = chain_key(1, state.temperature, state.density, 0)
-        self.where, self.velocity = first_positions(self.fluid, state, self.key), first_velocities(state, self.key)
+        self.where, self.velocity = first_positions(fluid, state, self.key), first_velocities(state, self.key)
 
     def run(self, n_steps: int) -> None:
-        temperature = self.state.temperature
         propagate(
-            pair_function(self.fluid),
+            self.pair,
             self.where,
             self.velocity,
             self.state.box,
-            (0.2, 0.9),
-            substeps("baoab", time_step=TIME_STEP, friction=FRICTION, temperature=temperature),
+            rung.skins(self.state),
+            substeps("baoab", time_step=TIME_STEP, friction=FRICTION, temperature=self.state.temperature),
+            self.short,
             self.key,
             self.step,
             n_steps,
@@ -54,7 +74,7 @@ class Compiled:
 
 
 class ByHand:
-    """The same dynamics with whole-array operations on a list of neighbouring pairs."""
+    """The same dynamics as one writes it with whole-array operations on a list of neighbouring pairs."""
 
     SKIN = 0.4
 
@@ -101,31 +121,174 @@ class ByHand:
             self.velocity += 0.5 * TIME_STEP * self.force
 
 
-def seconds(run: Compiled | ByHand, n_steps: int) -> float:
-    """Wall time of some steps."""
+class Outside:
+    """A sampler from elsewhere."""
+
+    def __init__(self, sampler: Callable[..., Any], start: Compiled) -> None:
+        state = start.state
+        self.other = sampler(
+            4, start.where, start.velocity, state.box, CUTOFF, 0.45, TIME_STEP, FRICTION, state.temperature
+        )
+
+    def run(self, n_steps: int) -> None:
+        self.other.run(n_steps, EVERY)
+
+
+Sampler = Compiled | ByHand | Outside
+
+
+def settled(state: State, **options: bool) -> Compiled:
+    """A sampler past its start."""
+    sampler = Compiled(state, **options)
+    sampler.run(2000 if state.particles < 10_000 else 400)
+    return sampler
+
+
+def costs(samplers: Sequence[Sampler], particles: Sequence[int], windows: int) -> np.ndarray[Any, Any]:
+    """Nanoseconds per particle-step, (windows, samplers), each window with all samplers in turn."""
+    out = np.empty((windows, len(samplers)))
+    for window in range(windows):
+        for s, (sampler, n) in enumerate(zip(samplers, particles, strict=True)):
+            share = 0.05 if isinstance(sampler, ByHand) else 1.0
+            steps = max(2 if share < 1.0 else LEAST_STEPS, int(share * WINDOW / n) // EVERY * EVERY)
+            start = time.perf_counter()
+            sampler.run(steps)
+            out[window, s] = (time.perf_counter() - start) / steps / n * 1e9
+    return out
+
+
+def step_table(outside: Callable[..., Any] | None, windows: int) -> None:
+    """Cost of a step in both precisions beside a sampler written by hand and one from elsewhere."""
+    names = ["mixed", "double", "table", "by hand", *(["outside"] if outside else [])]
+    print("Cost of a step, ns per particle, and ratios of paired windows")
+    ratios = ["hand/mixed", "hand/double", "table/mixed", *(["mixed/out", "double/out"] if outside else [])]
+    print(f"{'T':>5} {'rho':>5} {'N':>6}", *(f"{name:>8}" for name in names), *(f"{name:>12}" for name in ratios))
+    for temperature, density, sizes in (
+        (1.0, 0.8, (500, 864, 4000, 32_000)),
+        (1.5, 0.3, (500, 4000)),
+        (1.5, 0.1, (500, 4000)),
+    ):
+        for n in sizes:
+            state = State(temperature, density, n)
+            mixed = settled(state, short=True)
+            samplers: list[Sampler] = [mixed, settled(state, short=False), settled(state, short=True, table=True)]
+            samplers += [ByHand(mixed), *([Outside(outside, mixed)] if outside else [])]
+            found = costs(samplers, [n] * len(samplers), windows)
+            pairs = [(3, 0), (3, 1), (2, 0), *([(0, 4), (1, 4)] if outside else [])]
+            shown = [np.median(found[:, a] / found[:, b]) for a, b in pairs]
+            print(
+                f"{temperature:5g} {density:5g} {n:6d}",
+                *(f"{value:8.0f}" for value in np.median(found, axis=0)),
+                *(f"{value:12.2f}" for value in shown),
+                flush=True,
+            )
+
+
+def growth_table(windows: int) -> None:
+    """Exponent of the time of a step in the number of particles."""
+    sizes = (500, 4000, 32_000, 100_000)
+    print("\nGrowth with size at density 0.8: ns per particle-step and exponent of the time of a step")
+    for short in (True, False):
+        found = costs([settled(State(1.0, 0.8, n), short=short) for n in sizes], sizes, max(3, windows // 3))
+        exponent = 1.0 + np.polyfit(np.log(sizes), np.log(np.median(found, axis=0)), 1)[0]
+        numbers = ", ".join(f"N {n}: {value:.0f}" for n, value in zip(sizes, np.median(found, axis=0), strict=True))
+        print(f"{'mixed' if short else 'double':>7}: {numbers}; exponent {exponent:.3f}", flush=True)
+
+
+def ladder_seconds(workers: int, seed: int) -> tuple[float, float]:
+    """Wall time of eight rungs of 500 particles with segments on disk, and the part spent in kernels by a worker."""
+    inside = []
+
+    def watched(*arguments: Any) -> Any:
+        start = time.perf_counter()
+        outcome = propagate(*arguments)
+        inside.append(time.perf_counter() - start)
+        return outcome
+
+    rung.propagate = watched  # type: ignore[assignment]
+    states = [State(1.0 + 0.05 * k, 0.8, 500) for k in range(8)]
+    protocol = Protocol(seed=seed, equilibration=0, steps=16_000)
+    with tempfile.TemporaryDirectory() as folder:
+        work = [(chain, unfinished(chain)[0]) for chain in chains(Path(folder), Fluid(cutoff=CUTOFF), states, protocol)]
+        start = time.perf_counter()
+        sample(work, workers=workers)
+        wall = time.perf_counter() - start
+    rung.propagate = propagate
+    return wall, sum(inside) / workers
+
+
+def ladder_table(windows: int) -> None:
+    """Eight rungs on one and on two cores."""
+    found = np.array([(*ladder_seconds(1, seed), *ladder_seconds(2, seed)) for seed in range(max(3, windows // 2))])
+    gain, outside = found[:, 0] / found[:, 2], 1.0 - found[:, 1] / found[:, 0]
+    print("\nEight rungs of 500 particles, segments written to disk")
+    print(f"  two workers over one: median {np.median(gain):.2f}, best {gain.max():.2f} times as fast")
+    print(f"  not in kernels, one worker: median {np.median(outside):.1%}, least {outside.min():.1%}", flush=True)
+
+
+FIRST_STEP = """
+import time; start = time.perf_counter()
+import tempfile, pathlib
+from sampler.fluid import Fluid, State
+from sampler.ladder import chains, sample, unfinished
+from sampler.protocol import Protocol
+with tempfile.TemporaryDirectory() as folder:
+    work = chains(pathlib.Path(folder), Fluid(), [State(1.0, 0.8, 500)], Protocol(equilibration=0, steps=10, frame_every=10))
+    sample([(chain, unfinished(chain)[0]) for chain in work])
+print(time.perf_counter() - start)
+"""
+
+
+def start_table() -> None:
+    """Seconds from import to the first step, without and with compiled kernels on disk; and of the help text."""
+    with tempfile.TemporaryDirectory() as folder:
+        setting = os.environ | {"XDG_CACHE_HOME": folder}
+        runs = [
+            float(
+                subprocess.run([sys.executable, "-c", FIRST_STEP], env=setting, check=True, capture_output=True).stdout
+            )
+            for _ in range(4)
+        ]
     start = time.perf_counter()
-    run.run(n_steps)
-    return time.perf_counter() - start
+    subprocess.run([sys.executable, "-m", "canonry.cli", "--help"], check=True, capture_output=True)
+    text = time.perf_counter() - start
+    print("\nStart, seconds (where the system honours XDG_CACHE_HOME, the first has nothing compiled)")
+    print(
+        f"  import to first step: {runs[0]:.1f}, then {np.median(runs[1:]):.2f}; `canonry --help`: {text:.2f}",
+        flush=True,
+    )
+
+
+def peak_memory(particles: int, steps: int) -> float:
+    """Peak resident memory of sampling in a process of its own, kB."""
+    code = FIRST_STEP.replace("0.8, 500", f"0.8, {particles}").replace("steps=10", f"steps={steps}")
+    report = "import resource; print(resource.getrusage(resource.RUSAGE_SELF).ru_maxrss)"
+    done = subprocess.run([sys.executable, "-c", code + report], check=True, capture_output=True, text=True)
+    return float(done.stdout.split()[-1]) / (1.0 if sys.platform == "linux" else 1024.0)
+
+
+def memory_table() -> None:
+    """Memory per particle, and with the length of the run."""
+    slope = (peak_memory(100_000, 100) - peak_memory(20_000, 100)) / 80_000
+    longer = (peak_memory(500, 100_000) - peak_memory(500, 10_000)) / 1024.0
+    print(f"\nMemory: {slope:.2f} kB per particle; {longer:+.1f} MB for a run ten times as long")
 
 
 def main() -> None:
-    """Print the table."""
+    """Print the tables."""
     parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
-    parser.add_argument("--particles", type=int, nargs="+", default=[500, 4000])
-    parser.add_argument("--density", type=float, default=0.8)
-    parser.add_argument("--temperature", type=float, default=1.0)
+    parser.add_argument("--yardstick", metavar="FOLDER")
     parser.add_argument("--windows", type=int, default=9)
     options = parser.parse_args()
-    print(f"{'particles':>9} {'compiled, ns':>12} {'by hand, ns':>12} {'by hand / compiled':>18}")
-    for n in options.particles:
-        ours = Compiled(State(options.temperature, options.density, n))
-        ours.run(2000)
-        hand = ByHand(ours)
-        steps = max(EVERY, 400_000 // n // EVERY * EVERY)
-        few = max(2, 30_000 // n)
-        pairs = np.array([(seconds(ours, steps) / steps, seconds(hand, few) / few) for _ in range(options.windows)])
-        a, b = np.median(pairs, axis=0) / n * 1e9
-        print(f"{n:9d} {a:12.0f} {b:12.0f} {np.median(pairs[:, 1] / pairs[:, 0]):18.1f}")
+    outside = None
+    if options.yardstick:
+        sys.path.append(options.yardstick)
+        outside = importlib.import_module("common").CSim
+    step_table(outside, options.windows)
+    growth_table(options.windows)
+    ladder_table(options.windows)
+    start_table()
+    memory_table()
 
 
 if __name__ == "__main__":

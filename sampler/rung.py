@@ -6,6 +6,7 @@ import numpy as np
 import numpy.typing as npt
 
 from sampler.errors import DamagedSegment, DivergedRun
+from sampler.fluid import State
 from sampler.noise import chain_key
 from sampler.pairs import pair_function
 from sampler.protocol import Scheme
@@ -15,7 +16,7 @@ from sampler.slots import Skins
 from sampler.start import first_positions, first_velocities
 from sampler.store import Chain, Segment, read
 
-__all__ = ["advance", "assemble", "sampled_segments"]
+__all__ = ["advance", "assemble", "sampled_segments", "skins"]
 
 Stop = npt.NDArray[np.uint8]
 _DENSE = 0.4  # sigma^-3; skins of lists, sigma, measured best on either side
@@ -47,7 +48,7 @@ def advance(chain: Chain, index: int, before: Segment | None, stop: Stop) -> Seg
         where,
         velocity,
         state.box,
-        _SKINS[state.density >= _DENSE],
+        skins(state),
         substeps(scheme, time_step=protocol.time_step, friction=protocol.friction, temperature=state.temperature),
         protocol.precision == "mixed" and (settling or protocol.bath),
         key,
@@ -68,6 +69,11 @@ def advance(chain: Chain, index: int, before: Segment | None, stop: Stop) -> Seg
             f"apart by step {step}; take a time_step smaller than {protocol.time_step:g}"
         )
     return Segment(first, last, samples, frames, where, velocity, float(heat[0]))
+
+
+def skins(state: State) -> Skins:
+    """Skins of the lists: wider in a dilute fluid, where lists are short and particles go far."""
+    return _SKINS[state.density >= _DENSE]
 
 
 def sampled_segments(chain: Chain) -> list[Segment]:

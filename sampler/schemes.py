@@ -25,6 +25,7 @@ __all__ = ["COLUMNS", "DIVERGED", "DONE", "STOPPED", "Steps", "propagate", "subs
 COLUMNS = ("s12", "s6", "pairs", "distances", "kinetic", "ledger")  # what is recorded of a sample
 DONE, STOPPED, DIVERGED = 0, 1, 2
 _A, _B, _O = 0, 1, 2
+_STRETCH = 256  # slots
 
 
 class Steps(NamedTuple):
@@ -84,6 +85,30 @@ def _kinetic(velocity):  # type: ignore[no-untyped-def]
 
 
 @kernel
+def _pass(slots, scheme, first, past, key, step, noise):  # type: ignore[no-untyped-def]
+    """Substeps between which the forces stay, on a stretch of slots after another, each while it is in the cache.
+
+    noise : (3, _STRETCH), for use here
+    Returns the kinetic energy that the bath took out.
+    """
+    heat = 0.0
+    labels = slots.groups.labels
+    for begin in range(0, labels.size, _STRETCH):
+        end = min(begin + _STRETCH, labels.size)
+        position, speed = slots.position[3 * begin : 3 * end], slots.speed[3 * begin : 3 * end]
+        for s in range(first, past):
+            letter, duration = scheme.letters[s], scheme.durations[s]
+            if letter == _A:
+                _drift(position, speed, duration)
+            elif letter == _B:
+                _kick(speed, slots.force[3 * begin : 3 * end], duration)
+            else:
+                normals(key[0], key[1], np.uint64(step), np.uint64(s), labels[begin:end], noise)
+                heat += _relax(speed, noise, duration, scheme.friction, scheme.temperature)
+    return heat
+
+
+@kernel
 def propagate(  # type: ignore[no-untyped-def]
     pair,
     where,
@@ -112,35 +137,26 @@ def propagate(  # type: ignore[no-untyped-def]
     ledger : (1,), heat that the bath has taken so far
     stop : (1,), uint8; set by another thread to leave early
     """
-    last_drift = 0
+    forced = 0  # substeps up to the last drift, after which the forces are new
     for s in range(scheme.letters.size):
-        last_drift = s if scheme.letters[s] == _A else last_drift
-    sums, nothing = np.empty(4), np.empty(0)
+        forced = s + 1 if scheme.letters[s] == _A else forced
+    sums, nothing, noise = np.empty(4), np.empty(0), np.empty((3, _STRETCH))
     n_samples, n_frames = 0, 0
     slots = slots_of(where, velocity, box, pair.cutoff, skins)
     exact_forces(pair, slots, box, nothing)
     for step in range(first + 1, first + n_steps + 1):
         recorded = step % every == 0
-        for s in range(scheme.letters.size):
-            letter, duration = scheme.letters[s], scheme.durations[s]
-            if letter == _B:
-                _kick(slots.speed, slots.force, duration)
-            elif letter == _O:
-                normals(key[0], key[1], np.uint64(step), np.uint64(s), slots.groups.labels, slots.noise)
-                ledger[0] += _relax(slots.speed, slots.noise, duration, scheme.friction, scheme.temperature)
-            else:
-                _drift(slots.position, slots.speed, duration)
-                if s != last_drift:
-                    continue
-                moved = 2.0 * farthest(slots.position, slots.narrowed_at)
-                if not moved <= box:
-                    return DIVERGED, step
-                if moved > skins.near:
-                    slots = renewed(slots, where, velocity, box, pair.cutoff, skins)
-                if short and not recorded:
-                    quick_forces(pair, slots, box)
-                else:
-                    exact_forces(pair, slots, box, sums if recorded else nothing)
+        ledger[0] += _pass(slots, scheme, 0, forced, key, step, noise)
+        moved = 2.0 * farthest(slots.position, slots.narrowed_at)
+        if not moved <= box:
+            return DIVERGED, step
+        if moved > skins.near:
+            slots = renewed(slots, where, velocity, box, pair.cutoff, skins)
+        if short and not recorded:
+            quick_forces(pair, slots, box)
+        else:
+            exact_forces(pair, slots, box, sums if recorded else nothing)
+        ledger[0] += _pass(slots, scheme, forced, scheme.letters.size, key, step, noise)
         if recorded:
             for c in range(4):
                 samples[n_samples, c] = sums[c]

@@ -40,7 +40,6 @@ class Slots(NamedTuple):
     fine, coarse : positions as whole numbers
     limit, short_limit : squared cutoff, for forces in float64 and float32
     force : epsilon/sigma; raw, short_raw : as `pair_forces` leaves it
-    noise : (3, 8 n_groups)
     """
 
     groups: Groups
@@ -56,7 +55,6 @@ class Slots(NamedTuple):
     force: Floats
     raw: Floats
     short_raw: npt.NDArray[np.float32]
-    noise: Floats
 
 
 @kernel
@@ -137,7 +135,6 @@ def slots_of(where, velocity, box, cutoff, skins):  # type: ignore[no-untyped-de
         room(3 * n, np.float64),
         room(3 * n, np.float64),
         room(3 * n, np.float32),
-        np.empty((3, n)),
     )
     _ahead(slots.position, slots.speed, time, slots.grouped_at)
     _narrow(slots, box, cutoff, skins)
