@@ -226,52 +226,51 @@ def ladder_table(windows: int) -> None:
     print(f"  not in kernels, one worker: median {np.median(outside):.1%}, least {outside.min():.1%}", flush=True)
 
 
-FIRST_STEP = """
+SAMPLING = """
 import time; start = time.perf_counter()
-import tempfile, pathlib
+import pathlib, resource, tempfile
 from sampler.fluid import Fluid, State
 from sampler.ladder import chains, sample, unfinished
 from sampler.protocol import Protocol
+protocol = Protocol(equilibration=0, steps={steps}, record_every=10, frame_every={steps})
 with tempfile.TemporaryDirectory() as folder:
-    work = chains(pathlib.Path(folder), Fluid(), [State(1.0, 0.8, 500)], Protocol(equilibration=0, steps=10, frame_every=10))
+    work = chains(pathlib.Path(folder), Fluid(), [State(1.0, 0.8, {particles})], protocol)
     sample([(chain, unfinished(chain)[0]) for chain in work])
-print(time.perf_counter() - start)
+print(time.perf_counter() - start, resource.getrusage(resource.RUSAGE_SELF).ru_maxrss)
 """
+HELP = "from canonry.cli import main; main(['--help'])"
+
+
+def in_a_new_process(code: str, **setting: str) -> list[float]:
+    """The numbers that Python code prints."""
+    run = [sys.executable, "-c", code]
+    done = subprocess.run(run, env=os.environ | setting, check=True, capture_output=True, text=True)
+    return [float(word) for word in done.stdout.split() if word[0].isdigit()]
 
 
 def start_table() -> None:
     """Seconds from import to the first step, without and with compiled kernels on disk; and of the help text."""
+    first_step = SAMPLING.format(particles=500, steps=10)
     with tempfile.TemporaryDirectory() as folder:
-        setting = os.environ | {"XDG_CACHE_HOME": folder}
-        runs = [
-            float(
-                subprocess.run([sys.executable, "-c", FIRST_STEP], env=setting, check=True, capture_output=True).stdout
-            )
-            for _ in range(4)
-        ]
+        cold, *cached = (in_a_new_process(first_step, XDG_CACHE_HOME=folder)[0] for _ in range(4))
     start = time.perf_counter()
-    subprocess.run([sys.executable, "-m", "canonry.cli", "--help"], check=True, capture_output=True)
+    in_a_new_process(HELP)
     text = time.perf_counter() - start
     print("\nStart, seconds (where the system honours XDG_CACHE_HOME, the first has nothing compiled)")
-    print(
-        f"  import to first step: {runs[0]:.1f}, then {np.median(runs[1:]):.2f}; `canonry --help`: {text:.2f}",
-        flush=True,
-    )
+    print(f"  import to first step {cold:.1f}, then {np.median(cached):.2f}; `canonry --help` {text:.2f}", flush=True)
 
 
 def peak_memory(particles: int, steps: int) -> float:
-    """Peak resident memory of sampling in a process of its own, kB."""
-    code = FIRST_STEP.replace("0.8, 500", f"0.8, {particles}").replace("steps=10", f"steps={steps}")
-    report = "import resource; print(resource.getrusage(resource.RUSAGE_SELF).ru_maxrss)"
-    done = subprocess.run([sys.executable, "-c", code + report], check=True, capture_output=True, text=True)
-    return float(done.stdout.split()[-1]) / (1.0 if sys.platform == "linux" else 1024.0)
+    """Peak resident memory of sampling in a process of its own, kB; not less than this one's, which it forks from."""
+    found = in_a_new_process(SAMPLING.format(particles=particles, steps=steps))[1]
+    return found / (1.0 if sys.platform == "linux" else 1024.0)
 
 
 def memory_table() -> None:
     """Memory per particle, and with the length of the run."""
     slope = (peak_memory(100_000, 100) - peak_memory(20_000, 100)) / 80_000
     longer = (peak_memory(500, 100_000) - peak_memory(500, 10_000)) / 1024.0
-    print(f"\nMemory: {slope:.2f} kB per particle; {longer:+.1f} MB for a run ten times as long")
+    print(f"Memory: {slope:.2f} kB per particle; {longer:+.1f} MB for a run ten times as long\n", flush=True)
 
 
 def main() -> None:
@@ -284,11 +283,11 @@ def main() -> None:
     if options.yardstick:
         sys.path.append(options.yardstick)
         outside = importlib.import_module("common").CSim
+    memory_table()
     step_table(outside, options.windows)
     growth_table(options.windows)
     ladder_table(options.windows)
     start_table()
-    memory_table()
 
 
 if __name__ == "__main__":
