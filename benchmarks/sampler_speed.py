@@ -241,18 +241,18 @@ print(time.perf_counter() - start, resource.getrusage(resource.RUSAGE_SELF).ru_m
 HELP = "from canonry.cli import main; main(['--help'])"
 
 
-def in_a_new_process(code: str, **setting: str) -> list[float]:
-    """The numbers that Python code prints."""
+def in_a_new_process(code: str, **setting: str) -> list[str]:
+    """The words that Python code prints."""
     run = [sys.executable, "-c", code]
     done = subprocess.run(run, env=os.environ | setting, check=True, capture_output=True, text=True)
-    return [float(word) for word in done.stdout.split() if word[0].isdigit()]
+    return done.stdout.split()
 
 
 def start_table() -> None:
     """Seconds from import to the first step, without and with compiled kernels on disk; and of the help text."""
     first_step = SAMPLING.format(particles=500, steps=10)
     with tempfile.TemporaryDirectory() as folder:
-        cold, *cached = (in_a_new_process(first_step, XDG_CACHE_HOME=folder)[0] for _ in range(4))
+        cold, *cached = (float(in_a_new_process(first_step, XDG_CACHE_HOME=folder)[0]) for _ in range(4))
     start = time.perf_counter()
     in_a_new_process(HELP)
     text = time.perf_counter() - start
@@ -262,7 +262,7 @@ def start_table() -> None:
 
 def peak_memory(particles: int, steps: int) -> float:
     """Peak resident memory of sampling in a process of its own, kB; not less than this one's, which it forks from."""
-    found = in_a_new_process(SAMPLING.format(particles=particles, steps=steps))[1]
+    found = float(in_a_new_process(SAMPLING.format(particles=particles, steps=steps))[1])
     return found / (1.0 if sys.platform == "linux" else 1024.0)
 
 

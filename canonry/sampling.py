@@ -98,8 +98,7 @@ def recorded(study: Study, directory: Path, state: State) -> list[Series]:
     """The repeats of one rung as far as they are there, none longer than the study asks; empty ones left out."""
     from sampler.ladder import chains, load
 
-    wanted = study.sampling.steps // study.sampling.record_every
-    series = [load(chain).until(wanted) for chain in chains(directory, study.fluid, [state], study.sampling)]
+    series = [load(chain) for chain in chains(directory, study.fluid, [state], study.sampling)]
     return [each for each in series if len(each)]
 
 

@@ -13,7 +13,7 @@ __all__ = ["SUBSTEPS", "Precision", "Protocol", "Scheme"]
 Scheme = Literal["baoab", "obabo", "velocity-verlet"]
 Precision = Literal["mixed", "double"]
 SUBSTEPS = {"baoab": "BAOAB", "obabo": "OBABO", "velocity-verlet": "BAB"}
-_SEGMENT = 4_000_000  # particle-steps: about a second's work
+_SEGMENT = 10_000_000  # particle-steps: about a second's work
 
 
 @dataclass(frozen=True)

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable, Iterator
+
 import numpy as np
 import numpy.typing as npt
 
@@ -76,24 +78,30 @@ def skins(state: State) -> Skins:
     return _SKINS[state.density >= _DENSE]
 
 
-def sampled_segments(chain: Chain) -> list[Segment]:
+def sampled_segments(chain: Chain) -> Iterator[Segment]:
     """The finished segments after settling, in order, up to the first that is missing or damaged."""
-    found = []
     for index, (first, _) in enumerate(chain.segments):
         if first < chain.protocol.settling:
             continue
         try:
-            found.append(read(chain.path(index), chain.identity))
+            segment = read(chain.path(index), chain.identity)
         except DamagedSegment:
-            break
-    return found
+            return
+        yield segment
 
 
-def assemble(chain: Chain, segments: list[Segment]) -> Series:
-    """The series of one repeat from its segments after settling; possibly empty."""
-    protocol, particles = chain.protocol, chain.state.particles
-    samples = np.concatenate([np.empty((0, len(COLUMNS))), *(segment.samples for segment in segments)])
-    frames = np.concatenate([np.empty((0, particles, 3)), *(segment.frames for segment in segments)])
+def assemble(chain: Chain, segments: Iterable[Segment]) -> Series:
+    """The series of one repeat from its segments after settling, as many steps as are asked for; possibly empty."""
+    protocol = chain.protocol
+    samples = np.empty((protocol.steps // protocol.record_every, len(COLUMNS)))
+    frames = np.empty((protocol.steps // protocol.frame_every, chain.state.particles, 3))
+    n_samples, n_frames = 0, 0
+    for segment in segments:
+        more, more_frames = segment.samples[: len(samples) - n_samples], segment.frames[: len(frames) - n_frames]
+        samples[n_samples : n_samples + len(more)] = more
+        frames[n_frames : n_frames + len(more_frames)] = more_frames
+        n_samples, n_frames = n_samples + len(more), n_frames + len(more_frames)
+    samples, frames = samples[:n_samples], frames[:n_frames]
     totals = chain.fluid.totals(samples, chain.state)
     return Series(
         fluid=chain.fluid,

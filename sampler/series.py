@@ -71,14 +71,6 @@ class Series:
     def after(self, n_samples: int) -> Series:
         """The series without its first n_samples and their frames."""
         n_frames, offset = divmod(self.frame_offset + n_samples, self.frame_stride)
-        return self._cut(slice(n_samples, None), slice(n_frames, None), offset)
-
-    def until(self, n_samples: int) -> Series:
-        """The first n_samples of the series, or as many as there are, and their frames."""
-        n_frames = (self.frame_offset + n_samples) // self.frame_stride
-        return self._cut(slice(n_samples), slice(n_frames), self.frame_offset)
-
-    def _cut(self, samples: slice, frames: slice, frame_offset: int) -> Series:
         names = ("energy", "sampled_energy", "virial", "hypervirial", "kinetic", "ledger")
-        kept = {name: getattr(self, name)[samples] for name in names}
-        return replace(self, frames=self.frames[frames], frame_offset=frame_offset, **kept)
+        kept = {name: getattr(self, name)[n_samples:] for name in names}
+        return replace(self, frames=self.frames[n_frames:], frame_offset=offset, **kept)

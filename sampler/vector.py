@@ -53,7 +53,9 @@ _KINDS: dict[Any, Any] = {
 }
 _REAL_OF_WHOLE: dict[Any, Any] = {types.int64: types.float64, types.int32: types.float32}
 _index = ir.IntType(32)
-_CONVERTS_LONG = "avx512dq" in binding.get_host_cpu_features() or not binding.get_default_triple().startswith("x86")
+_CONVERTS_LONG = binding.get_host_cpu_features().get("avx512dq", False) or not binding.get_default_triple().startswith(
+    "x86"
+)
 
 
 class _Lanes(types.Type):

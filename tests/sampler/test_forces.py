@@ -60,21 +60,35 @@ def assert_equal_to_all_pairs(fluid, positions, box):
     assert np.abs(forces - expected).max() <= 1e-10 * max(np.abs(expected).max(), 1.0)
     used = slice(None) if fluid.truncation == "force-shifted" else slice(3)
     assert sums[used] == pytest.approx(expected_sums[used], rel=1e-10)
+    listed, _ = in_slots(pair_function(fluid), positions, box, short=False)
+    assert np.abs(listed - expected).max() <= 1e-10 * max(np.abs(expected).max(), 1.0)
     # float32: pushes and pulls are off by some ten roundings of 6e-8, of which r^-14 makes fourteen of the first
     short, _ = in_slots(pair_function(fluid), positions, box, short=True)
     assert (np.abs(short - expected) <= 3e-6 * sizes[:, None] + 1e-30).all()
 
 
+ANY_FLUID = {
+    "density": st.floats(0.01, 1.0),
+    "share": st.floats(0.0, 1.0),
+    "truncation": st.sampled_from(TRUNCATIONS),
+    "drift": st.floats(0.0, 1e4),
+    "seed": st.integers(0, 10**6),
+}
+
+
 @settings(max_examples=60, deadline=None, derandomize=True)
-@given(
-    n=st.integers(20, 700),
-    density=st.floats(0.01, 1.0),
-    share=st.floats(0.0, 1.0),
-    truncation=st.sampled_from(TRUNCATIONS),
-    drift=st.floats(0.0, 1e4),
-    seed=st.integers(0, 10**6),
-)
-def test_any_fluid_at_any_density(n, density, share, truncation, drift, seed):
+@given(n=st.integers(20, 700), **ANY_FLUID)
+def test_any_fluid_at_any_density(n, **fluid):
+    assert_any_fluid(n, **fluid)
+
+
+@settings(max_examples=20, deadline=None, derandomize=True)
+@given(n=st.integers(1000, 5000), **ANY_FLUID)
+def test_any_fluid_of_many_particles(n, **fluid):
+    assert_any_fluid(n, **fluid)
+
+
+def assert_any_fluid(n, density, share, truncation, drift, seed):
     positions, box = scattered(n, density, seed)
     cutoff = min(1.2, box / 2) + share * max(0.0, box / 2 - 1.2)
     assert_equal_to_all_pairs(Fluid(cutoff=cutoff, truncation=truncation), positions + drift, box)

@@ -33,13 +33,3 @@ def test_a_cut_is_made_at_the_sample_and_keeps_every_frame_behind_it(stride: int
             start = first + second
             assert all(list(getattr(cut, name)) == list(range(start, 30)) for name in COLUMNS)
             assert numbers_of_frames(cut) == [k for k in range(stride - 1, 30, stride) if k >= start]
-
-
-@pytest.mark.parametrize("stride", [1, 3, 7, 40])
-def test_the_first_samples_keep_their_frames(stride: int) -> None:
-    for start in range(10):
-        for length in range(35):
-            cut = series(30, stride).after(start).until(length)
-            end = min(start + length, 30)
-            assert all(list(getattr(cut, name)) == list(range(start, end)) for name in COLUMNS)
-            assert numbers_of_frames(cut) == [k for k in range(stride - 1, end, stride) if k >= start]
