@@ -27,7 +27,7 @@ Floats = npt.NDArray[np.float64]
 
 
 class Skins(NamedTuple):
-    """Lengths beyond the cutoff at which the two lists are cut."""
+    """Lengths beyond the cutoff at which the two lists are cut; wide is at least twice near."""
 
     near: float
     wide: float
@@ -81,12 +81,13 @@ def farthest(one, other):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _fastest(velocity):  # type: ignore[no-untyped-def]
-    """Largest speed in (n, 3) velocities, and never zero."""
-    most = 1e-300
-    for i in range(velocity.shape[0]):
-        most = max(most, velocity[i, 0] ** 2 + velocity[i, 1] ** 2 + velocity[i, 2] ** 2)
-    return math.sqrt(most)
+def _fastest(speed):  # type: ignore[no-untyped-def]
+    """Largest speed of a particle, and never zero."""
+    most = splat(1e-300)
+    for at in range(0, speed.size, BLOCK):
+        x, y, z = load(speed, at), load(speed, at + LANES), load(speed, at + 2 * LANES)
+        most = larger(most, x * x + y * y + z * z)
+    return math.sqrt(largest(most))
 
 
 @kernel
@@ -97,22 +98,26 @@ def _ahead(position, speed, time, out):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _narrow(slots, box, cutoff, skins):  # type: ignore[no-untyped-def]
-    """Make the near list for a little later; returns whether the wide list covers it."""
-    still = np.zeros_like(slots.speed)
-    _ahead(slots.position, slots.speed, _LEAD * skins.near / farthest(slots.speed, still), slots.narrowed_at)
-    covered = skins.near + 2.0 * farthest(slots.narrowed_at, slots.grouped_at) <= skins.wide
-    if covered:
-        fix(slots.narrowed_at, box, None, slots.coarse)
-        narrow(slots.coarse, slots.groups, box, cutoff + skins.near, slots.near)
-    return covered
+def _aim(slots, skins):  # type: ignore[no-untyped-def]
+    """Choose where the next near list is made for; returns whether the wide list covers it."""
+    _ahead(slots.position, slots.speed, _LEAD * skins.near / _fastest(slots.speed), slots.narrowed_at)
+    return skins.near + 2.0 * farthest(slots.narrowed_at, slots.grouped_at) <= skins.wide
+
+
+@kernel
+def _narrow(slots, box, reach):  # type: ignore[no-untyped-def]
+    fix(slots.narrowed_at, box, None, slots.coarse)
+    narrow(slots.coarse, slots.groups, box, reach, slots.near)
 
 
 @kernel
 def slots_of(where, velocity, box, cutoff, skins):  # type: ignore[no-untyped-def]
     """Slots and both lists of positions, wrapped in place, and velocities, (n, 3) by label."""
     wrap(where, box)
-    time = min(_FORESIGHT, _LEAD * (skins.wide - skins.near) / _fastest(velocity))
+    fastest = 1e-300
+    for i in range(where.shape[0]):
+        fastest = max(fastest, velocity[i, 0] ** 2 + velocity[i, 1] ** 2 + velocity[i, 2] ** 2)
+    time = min(_FORESIGHT, _LEAD * (skins.wide - skins.near) / math.sqrt(fastest))
     later = np.empty_like(where)
     for i in range(where.shape[0]):
         for c in range(3):
@@ -137,7 +142,8 @@ def slots_of(where, velocity, box, cutoff, skins):  # type: ignore[no-untyped-de
         room(3 * n, np.float32),
     )
     _ahead(slots.position, slots.speed, time, slots.grouped_at)
-    _narrow(slots, box, cutoff, skins)
+    _aim(slots, skins)
+    _narrow(slots, box, cutoff + skins.near)
     return slots
 
 
@@ -154,10 +160,11 @@ def renewed(slots, where, velocity, box, cutoff, skins):  # type: ignore[no-unty
 
     where, velocity : (n, 3), for use here
     """
-    if not _narrow(slots, box, cutoff, skins):
-        label_order(slots, where, velocity)
-        slots = slots_of(where, velocity, box, cutoff, skins)
-    return slots
+    if _aim(slots, skins):
+        _narrow(slots, box, cutoff + skins.near)
+        return slots
+    label_order(slots, where, velocity)
+    return slots_of(where, velocity, box, cutoff, skins)
 
 
 @kernel

@@ -1,5 +1,6 @@
 """Ladders on disk: whatever happened on the way, the samples are those of one uninterrupted run."""
 
+import time
 from dataclasses import replace
 
 import numpy as np
@@ -143,6 +144,7 @@ def test_other_rungs_are_finished_when_one_flies_apart(tmp_path, monkeypatch):
     assert len(load(chains(tmp_path, FLUID, STATES[1:], PROTOCOL)[0])) == 280
 
 
+@pytest.mark.filterwarnings("error")
 @pytest.mark.parametrize("workers", [1, 2])
 def test_a_refused_write_ends_the_run_and_what_was_written_is_kept(tmp_path, monkeypatch, uninterrupted, workers):
     from sampler import ladder
@@ -151,6 +153,7 @@ def test_a_refused_write_ends_the_run_and_what_was_written_is_kept(tmp_path, mon
 
     def refuse(path, segment, identity):
         if len(written) == 5:
+            time.sleep(0.2)  # the next segment of this repeat is sampled by now, and waits
             raise OSError(28, "No space left on device")
         written.append(path)
         write(path, segment, identity)

@@ -10,7 +10,7 @@ from sampler.noise import chain_key, normals
 from sampler.pairs import pair_function
 from sampler.protocol import SUBSTEPS
 from sampler.schemes import COLUMNS, DIVERGED, DONE, STOPPED, propagate, substeps
-from sampler.slots import Skins
+from sampler.slots import Skins, exact_forces, label_order, renewed, slots_of
 from sampler.start import first_positions, first_velocities
 
 SKINS = Skins(0.2, 0.9)
@@ -192,6 +192,26 @@ def test_lists_miss_no_pair_on_a_long_way(state, skins, short):
         _, expected = evaluate(fluid, frame, box=state.box)
         # the number of pairs is exact; the sums differ by the rounding of wrapped positions
         assert sums[:3] == pytest.approx(expected[:3], rel=1e-10)
+
+
+def test_groups_are_made_anew_when_particles_of_two_that_were_apart_meet():
+    # two clusters of eight, one group each, just out of reach of one another; then one particle of each moves
+    fluid, box, skins = Fluid(cutoff=2.0), 30.0, Skins(0.2, 1.0)
+    corners = np.stack(np.meshgrid(*[[0.0, 1.2]] * 3, indexing="ij"), axis=-1).reshape(-1, 3) + 5.0
+    where = np.concatenate([corners, corners + np.array([1.2 + 3.1, 0.0, 0.0])])
+    slots = slots_of(where, np.zeros_like(where), box, fluid.cutoff, skins)
+    place = {label: 24 * (slot // 8) + slot % 8 for slot, label in enumerate(slots.groups.labels) if label >= 0}
+    assert slots.groups.start[-1] == 0  # no group meets another
+    for moved in (0.3, 0.65):  # 2 x 0.3 stays within the skin of 0.8 between the lists, 2 x 0.65 does not
+        for label, direction in ((4, 1), (8, -1)):
+            slots.position[place[label]] = where[label, 0] + direction * moved
+        slots = renewed(slots, np.empty_like(where), np.empty_like(where), box, fluid.cutoff, skins)
+        sums, now = np.empty(4), np.empty_like(where)
+        exact_forces(pair_function(fluid), slots, box, sums)
+        label_order(slots, now, np.empty_like(where))
+        _, expected = evaluate(fluid, now, box=box)
+        assert sums[2] == expected[2]
+    assert np.linalg.norm(now[8] - now[4]) == pytest.approx(3.1 - 1.3)
 
 
 def test_forces_in_float32_shift_no_average():
