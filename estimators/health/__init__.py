@@ -1,0 +1,1 @@
+"""Checks that say whether series are canonical, settled and long enough: one small module each."""
