@@ -103,6 +103,8 @@ def assemble(chain: Chain, segments: Iterable[Segment]) -> Series:
         n_samples, n_frames = n_samples + len(more), n_frames + len(more_frames)
     samples, frames = samples[:n_samples], frames[:n_frames]
     totals = chain.fluid.totals(samples, chain.state)
+    kinetic = samples[:, COLUMNS.index("kinetic_x") : COLUMNS.index("kinetic_z") + 1]
+    momentum = samples[:, COLUMNS.index("momentum_x") : COLUMNS.index("momentum_z") + 1]
     return Series(
         fluid=chain.fluid,
         state=chain.state,
@@ -113,8 +115,10 @@ def assemble(chain: Chain, segments: Iterable[Segment]) -> Series:
         sampled_energy=totals.sampled_energy,
         virial=totals.virial,
         hypervirial=totals.hypervirial,
-        kinetic=samples[:, COLUMNS.index("kinetic")],
+        kinetic=kinetic.sum(axis=1),
         ledger=samples[:, COLUMNS.index("ledger")],
         frames=frames,
         frame_stride=protocol.frame_every // protocol.record_every,
+        kinetic_parts=kinetic,
+        momentum=momentum,
     )

@@ -22,7 +22,11 @@ from sampler.vector import load, splat, store, total
 
 __all__ = ["COLUMNS", "DIVERGED", "DONE", "STOPPED", "Steps", "propagate", "substeps"]
 
-COLUMNS = ("s12", "s6", "pairs", "distances", "kinetic", "ledger")  # what is recorded of a sample
+COLUMNS = (
+    *("s12", "s6", "pairs", "distances", "ledger"),
+    *("kinetic_x", "kinetic_y", "kinetic_z", "momentum_x", "momentum_y", "momentum_z"),
+)
+"""What is recorded of a sample."""
 DONE, STOPPED, DIVERGED = 0, 1, 2
 _A, _B, _O = 0, 1, 2
 _STRETCH = 256  # slots
@@ -76,12 +80,14 @@ def _relax(velocity, noise, duration, friction, temperature):  # type: ignore[no
 
 
 @kernel
-def _kinetic(velocity):  # type: ignore[no-untyped-def]
-    double = splat(0.0)
-    for at in range(0, velocity.size, LANES):
-        v = load(velocity, at)
-        double = double + v * v
-    return 0.5 * total(double)
+def _motion(velocity, out):  # type: ignore[no-untyped-def]
+    """Kinetic energies along x, y and z and the total momentum, (6,)."""
+    for c in range(3):
+        square, momentum = splat(0.0), splat(0.0)
+        for at in range(LANES * c, velocity.size, BLOCK):
+            v = load(velocity, at)
+            square, momentum = square + v * v, momentum + v
+        out[c], out[3 + c] = 0.5 * total(square), total(momentum)
 
 
 @kernel
@@ -132,7 +138,7 @@ def propagate(  # type: ignore[no-untyped-def]
     where, velocity : (n, 3), by label
     short : True for forces in float32 between samples
     every, frame_every : sample at steps that these divide
-    samples : (n_steps // every, 6), COLUMNS
+    samples : (n_steps // every, 11), COLUMNS
     frames : (n_steps // frame_every or 0, n, 3), wrapped positions
     ledger : (1,), heat that the bath has taken so far
     stop : (1,), uint8; set by another thread to leave early
@@ -160,8 +166,8 @@ def propagate(  # type: ignore[no-untyped-def]
         if recorded:
             for c in range(4):
                 samples[n_samples, c] = sums[c]
-            samples[n_samples, 4] = _kinetic(slots.speed)
-            samples[n_samples, 5] = ledger[0]
+            samples[n_samples, 4] = ledger[0]
+            _motion(slots.speed, samples[n_samples, 5:])
             n_samples += 1
         if step % frame_every == 0 and n_frames < frames.shape[0]:
             gather(slots.position, slots.groups.labels, frames[n_frames])

@@ -26,6 +26,7 @@ class Series:
     ledger : (n,), kinetic energy that the bath has taken out so far; K + U_dyn + ledger is conserved
     frames : (m, particles, 3), positions inside [0, box), of every frame_stride-th sample; see `frame_samples`
     frame_offset : samples missing of the stride that the first frame ends, less than frame_stride
+    kinetic_parts : (n, 3), kinetic energy along x, y and z; momentum : (n, 3), of all particles; None if not recorded
     interval : time between samples
     bath : whether a thermostat acted; without one the ensemble has constant energy
     """
@@ -44,6 +45,8 @@ class Series:
     frames: Floats
     frame_stride: int
     frame_offset: int = 0
+    kinetic_parts: Floats | None = None
+    momentum: Floats | None = None
 
     def __len__(self) -> int:
         return len(self.energy)
@@ -71,6 +74,7 @@ class Series:
     def after(self, n_samples: int) -> Series:
         """The series without its first n_samples and their frames."""
         n_frames, offset = divmod(self.frame_offset + n_samples, self.frame_stride)
-        names = ("energy", "sampled_energy", "virial", "hypervirial", "kinetic", "ledger")
-        kept = {name: getattr(self, name)[n_samples:] for name in names}
+        names = ("energy", "sampled_energy", "virial", "hypervirial", "kinetic", "ledger", "kinetic_parts", "momentum")
+        columns = {name: getattr(self, name) for name in names}
+        kept = {name: None if values is None else values[n_samples:] for name, values in columns.items()}
         return replace(self, frames=self.frames[n_frames:], frame_offset=offset, **kept)

@@ -6,7 +6,7 @@ import pytest
 from sampler.fluid import Fluid, State
 from sampler.series import Series
 
-COLUMNS = ("energy", "sampled_energy", "virial", "hypervirial", "kinetic", "ledger")
+COLUMNS = ("energy", "sampled_energy", "virial", "hypervirial", "kinetic", "ledger", "kinetic_parts")
 
 
 def series(n: int, stride: int) -> Series:
