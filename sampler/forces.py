@@ -8,10 +8,10 @@ import numpy.typing as npt
 from sampler.compiled import kernel, piece
 from sampler.fluid import Fluid
 from sampler.groups import BLOCK, FINE, LANES, Near, fix, gather, group, limits, narrow, scatter
-from sampler.pairs import pair_function, strength, terms
+from sampler.pairs import curvature, pair_function, strength, terms
 from sampler.vector import both, broad, later_lanes, load, real, select, smaller, splat, store, total
 
-__all__ = ["evaluate", "pair_forces", "scaled"]
+__all__ = ["evaluate", "laplacian", "pair_forces", "scaled"]
 
 
 @piece
@@ -86,19 +86,51 @@ def scaled(values, factor, out):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _evaluate(pair, where, box):  # type: ignore[no-untyped-def]
-    groups = group(where, box, pair.cutoff)
+def _pairs_within(where, box, cutoff):  # type: ignore[no-untyped-def]
+    """Groups of positions inside [0, box), the positions as whole numbers, the near list and the limits."""
+    groups = group(where, box, cutoff)
     size = groups.labels.size
     fine, coarse = np.empty(3 * size, np.int64), np.empty(3 * size, np.int32)
     fix(scatter(where, groups.labels), box, fine, coarse)
     near = Near(np.zeros(size + 1, np.int64), np.empty(LANES * groups.start[-1] + 1, np.int32))
-    narrow(coarse, groups, box, pair.cutoff, near)
-    limit = limits(groups.labels, pair.cutoff * pair.cutoff, np.empty(3 * size))
-    force, sums, out = np.empty(3 * size), np.empty(4), np.empty_like(where)
-    pair_forces(pair, fine, limit, box / FINE, groups.labels, near, force, sums)
+    narrow(coarse, groups, box, cutoff, near)
+    return groups.labels, fine, near, limits(groups.labels, cutoff * cutoff, np.empty(3 * size))
+
+
+@kernel
+def _evaluate(pair, where, box):  # type: ignore[no-untyped-def]
+    labels, fine, near, limit = _pairs_within(where, box, pair.cutoff)
+    force, sums, out = np.empty(fine.size), np.empty(4), np.empty_like(where)
+    pair_forces(pair, fine, limit, box / FINE, labels, near, force, sums)
     scaled(force, box / FINE, force)
-    gather(force, groups.labels, out)
+    gather(force, labels, out)
     return out, sums
+
+
+@kernel
+def _laplacian(pair, where, box):  # type: ignore[no-untyped-def]
+    labels, ticks, near, limit = _pairs_within(where, box, pair.cutoff)
+    scale, zero = (box / FINE) * (box / FINE), splat(0.0)
+    found = zero
+    for slot in range(labels.size):
+        if labels[slot] >= 0:
+            own = BLOCK * (slot // LANES)
+            at = own + slot % LANES
+            x, y, z = splat(ticks[at]), splat(ticks[at + LANES]), splat(ticks[at + 2 * LANES])
+            _, _, _, square, inside = _apart(ticks, limit, scale, x, y, z, own)
+            found = found + select(both(inside, later_lanes(slot % LANES)), curvature(pair, square), zero)
+            for k in range(near.start[slot], near.start[slot + 1]):
+                _, _, _, square, inside = _apart(ticks, limit, scale, x, y, z, near.offsets[k])
+                found = found + select(inside, curvature(pair, square), zero)
+    return 2.0 * total(found)
+
+
+def laplacian(fluid: Fluid, positions: npt.NDArray[np.float64], *, box: float) -> float:
+    """Sum over particles of the Laplacian of U, epsilon/sigma^2, of the pairs inside the cutoff.
+
+    positions : (n, 3), sigma, anywhere; what the jump of the force at the cutoff adds is left out
+    """
+    return float(_laplacian(pair_function(fluid), _wrapped(positions, box), box))
 
 
 def evaluate(
@@ -110,7 +142,11 @@ def evaluate(
     Raises BadRequest if the cutoff is beyond half the box.
     """
     fluid.check_box(box)
+    forces, sums = _evaluate(pair_function(fluid), _wrapped(positions, box), box)
+    return forces, sums
+
+
+def _wrapped(positions: npt.NDArray[np.float64], box: float) -> npt.NDArray[np.float64]:
     where = np.mod(positions, box)
     where[where >= box] = 0.0
-    forces, sums = _evaluate(pair_function(fluid), where, box)
-    return forces, sums
+    return where

@@ -17,7 +17,17 @@ from sampler.compiled import piece
 from sampler.fluid import Fluid
 from sampler.vector import OCTAVE_BITS, gather, held, interval, reciprocal, square_root
 
-__all__ = ["ForceShifted", "PairFunction", "Tabulated", "Truncated", "pair_function", "strength", "tabulated", "terms"]
+__all__ = [
+    "ForceShifted",
+    "PairFunction",
+    "Tabulated",
+    "Truncated",
+    "curvature",
+    "pair_function",
+    "strength",
+    "tabulated",
+    "terms",
+]
 
 
 class Truncated(NamedTuple):
@@ -140,12 +150,35 @@ def _short_tabulated_strength(pair, square):  # type: ignore[no-untyped-def]
     return gather(pair.short_strength, row) + beyond * gather(pair.short_strength, row + 1)
 
 
+@piece
 def _tabulated_terms(pair, square):  # type: ignore[no-untyped-def]
     row, t = _row(pair, square)
     a, b = gather(pair.energy, row), gather(pair.energy, row + 1)
     c, d = gather(pair.energy, row + 2), gather(pair.energy, row + 3)
     slope, bend = b + t * (2.0 * c + 3.0 * t * d), 2.0 * c + 6.0 * t * d
     return a + t * (b + t * (c + t * d)), 2.0 * square * slope, 4.0 * square * (slope + square * bend)
+
+
+def curvature(pair, square):  # type: ignore[no-untyped-def]
+    """u'' + 2 u'/r, the Laplacian of the pair energy, from r^2; without what a jump of the force at the cutoff adds."""
+    raise TypeError("compiled code only")
+
+
+def _truncated_curvature(pair, square):  # type: ignore[no-untyped-def]
+    inverse = reciprocal(square)
+    sixth = inverse * inverse * inverse
+    return (528.0 * sixth - 120.0) * sixth * inverse
+
+
+def _shifted_curvature(pair, square):  # type: ignore[no-untyped-def]
+    inverse = reciprocal(square)
+    sixth = inverse * inverse * inverse
+    return (528.0 * sixth - 120.0) * sixth * inverse - 2.0 * pair.slope * square_root(inverse)
+
+
+def _tabulated_curvature(pair, square):  # type: ignore[no-untyped-def]
+    _, virial, hypervirial = _tabulated_terms(pair, square)
+    return (virial + hypervirial) * reciprocal(square)
 
 
 @overload(strength, jit_options={"forceinline": True})
@@ -158,4 +191,14 @@ def _strength(pair, square):  # type: ignore[no-untyped-def]
 @overload(terms, jit_options={"forceinline": True})
 def _terms(pair, square):  # type: ignore[no-untyped-def]
     functions = {Truncated: _truncated_terms, ForceShifted: _shifted_terms, Tabulated: _tabulated_terms}
+    return functions[pair.instance_class]
+
+
+@overload(curvature, jit_options={"forceinline": True})
+def _curvature(pair, square):  # type: ignore[no-untyped-def]
+    functions = {
+        Truncated: _truncated_curvature,
+        ForceShifted: _shifted_curvature,
+        Tabulated: _tabulated_curvature,
+    }
     return functions[pair.instance_class]

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -76,5 +77,7 @@ class Series:
         n_frames, offset = divmod(self.frame_offset + n_samples, self.frame_stride)
         names = ("energy", "sampled_energy", "virial", "hypervirial", "kinetic", "ledger", "kinetic_parts", "momentum")
         columns = {name: getattr(self, name) for name in names}
-        kept = {name: None if values is None else values[n_samples:] for name, values in columns.items()}
+        kept: dict[str, Any] = {
+            name: None if values is None else values[n_samples:] for name, values in columns.items()
+        }
         return replace(self, frames=self.frames[n_frames:], frame_offset=offset, **kept)

@@ -1,0 +1,49 @@
+"""Stored frames evaluated again: forces, curvature, and energies in a slightly larger and smaller volume."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from sampler.fluid import Fluid, State
+from sampler.forces import evaluate, laplacian
+
+__all__ = ["FrameSums", "reevaluate"]
+
+Floats = npt.NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class FrameSums:
+    """Of each frame, (m,), extensive and in reduced units.
+
+    force_square : sum over particles of the squared force
+    laplacian : sum over particles of the Laplacian of U, without what the jump of the force at the cutoff adds
+    energy, stretched, squeezed : U_dyn, long-range part included, in the volume of the frame and in 1 + change and
+        1 - change of it, at the same scaled positions and with the cutoff as it is
+    """
+
+    force_square: Floats
+    laplacian: Floats
+    energy: Floats
+    stretched: Floats
+    squeezed: Floats
+    change: float
+
+
+def reevaluate(fluid: Fluid, frames: Floats, *, state: State, change: float = 1e-4) -> FrameSums:
+    """Sums of frames, (m, particles, 3), of a state. Raises BadRequest if the cutoff is beyond half the smaller box."""
+    forces = np.array([(evaluate(fluid, frame, box=state.box)[0] ** 2).sum() for frame in frames])
+    curvatures = np.array([laplacian(fluid, frame, box=state.box) for frame in frames])
+    energy, stretched, squeezed = (_energies(fluid, frames, state, 1.0 + part * change) for part in (0.0, 1.0, -1.0))
+    return FrameSums(forces, curvatures, energy, stretched, squeezed, change)
+
+
+def _energies(fluid: Fluid, frames: Floats, state: State, volume: float) -> Floats:
+    """U_dyn of frames, (m,), whose volume is changed by a factor."""
+    edge = volume ** (1.0 / 3.0)
+    there = State(state.temperature, state.density / volume, state.particles)
+    sums = np.array([evaluate(fluid, edge * frame, box=edge * state.box)[1] for frame in frames]).reshape(-1, 4)
+    return fluid.totals(sums, there).sampled_energy
