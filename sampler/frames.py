@@ -2,35 +2,16 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-
 import numpy as np
 import numpy.typing as npt
 
 from sampler.fluid import Fluid, State
 from sampler.forces import evaluate, laplacian
+from sampler.series import FrameSums
 
-__all__ = ["FrameSums", "reevaluate"]
+__all__ = ["reevaluate"]
 
 Floats = npt.NDArray[np.float64]
-
-
-@dataclass(frozen=True)
-class FrameSums:
-    """Of each frame, (m,), extensive and in reduced units.
-
-    force_square : sum over particles of the squared force
-    laplacian : sum over particles of the Laplacian of U, without what the jump of the force at the cutoff adds
-    energy, stretched, squeezed : U_dyn, long-range part included, in the volume of the frame and in 1 + change and
-        1 - change of it, at the same scaled positions and with the cutoff as it is
-    """
-
-    force_square: Floats
-    laplacian: Floats
-    energy: Floats
-    stretched: Floats
-    squeezed: Floats
-    change: float
 
 
 def reevaluate(fluid: Fluid, frames: Floats, *, state: State, change: float = 1e-4) -> FrameSums:

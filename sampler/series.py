@@ -1,4 +1,4 @@
-"""What one repeat of a rung recorded: the record that estimates are made from."""
+"""What one repeat of a rung recorded: the records that estimates are made from."""
 
 from __future__ import annotations
 
@@ -10,7 +10,7 @@ import numpy.typing as npt
 
 from sampler.fluid import Fluid, State
 
-__all__ = ["Series"]
+__all__ = ["FrameSums", "Series"]
 
 Floats = npt.NDArray[np.float64]
 
@@ -81,3 +81,21 @@ class Series:
             name: None if values is None else values[n_samples:] for name, values in columns.items()
         }
         return replace(self, frames=self.frames[n_frames:], frame_offset=offset, **kept)
+
+
+@dataclass(frozen=True)
+class FrameSums:
+    """Of each frame, (m,), extensive and in reduced units.
+
+    force_square : sum over particles of the squared force
+    laplacian : sum over particles of the Laplacian of U, without what the jump of the force at the cutoff adds
+    energy, stretched, squeezed : U_dyn, long-range part included, in the volume of the frame and in 1 + change and
+        1 - change of it, at the same scaled positions and with the cutoff as it is
+    """
+
+    force_square: Floats
+    laplacian: Floats
+    energy: Floats
+    stretched: Floats
+    squeezed: Floats
+    change: float
