@@ -43,8 +43,8 @@ class Trajectory:
         samples, heat = np.empty((n_steps // EVERY, len(COLUMNS))), np.zeros(1)
         frames, stop = np.empty((0, *where.shape)), np.zeros(1, np.uint8)
         propagate(
-            pair_function(FLUID), where, velocity, self.state.box, rung.skins(self.state), self.steps, short, self.key,
-            self.step, n_steps, EVERY, n_steps, samples, frames, heat, stop,
+            pair_function(FLUID), FLUID.sampled_weights, where, velocity, self.state.box, rung.skins(self.state),
+            self.steps, short, self.key, self.step, n_steps, EVERY, n_steps, samples, frames, heat, stop,
         )  # fmt: skip
         self.step += 0 if copy else n_steps
         totals, n = FLUID.totals(samples, self.state), self.state.particles

@@ -54,6 +54,7 @@ class Compiled:
     def run(self, n_steps: int) -> None:
         propagate(
             self.pair,
+            Fluid(cutoff=CUTOFF).sampled_weights,
             self.where,
             self.velocity,
             self.state.box,

@@ -12,10 +12,12 @@ import numpy.typing as npt
 from sampler.errors import BadRequest
 from sampler.potentials import lennard_jones
 
-__all__ = ["Fluid", "State", "Totals", "Truncation"]
+__all__ = ["ELSEWHERE", "Fluid", "State", "Totals", "Truncation"]
 
 Floats = npt.NDArray[np.float64]
 Truncation = Literal["corrected", "plain", "shifted", "force-shifted"]
+ELSEWHERE = "elsewhere"
+"""The potential of a fluid that is sampled elsewhere and whose pair functions are not known here."""
 
 
 @dataclass(frozen=True, order=True)
@@ -66,6 +68,9 @@ class Fluid:
 
     Forces of `corrected` and `plain` conserve the shifted energy: that is `sampled_energy` (U_dyn), the one whose
     canonical ensemble is drawn; averages report `energy` (U).
+
+    With potential `elsewhere` there are no pair functions, see `has_pairs`: cutoff and truncation mean nothing, and
+    whatever needs them raises BadRequest.
     """
 
     cutoff: float = 3.0
@@ -73,15 +78,25 @@ class Fluid:
     potential: str = lennard_jones.NAME
 
     def __post_init__(self) -> None:
-        if self.potential != lennard_jones.NAME:
-            raise BadRequest(f"potential must be '{lennard_jones.NAME}', found {self.potential!r}")
+        if self.potential not in (lennard_jones.NAME, ELSEWHERE):
+            raise BadRequest(f"potential must be '{lennard_jones.NAME}' or '{ELSEWHERE}', found {self.potential!r}")
         if self.truncation not in get_args(Truncation):
             raise BadRequest(f"truncation must be one of {', '.join(get_args(Truncation))}, found {self.truncation!r}")
         if not (math.isfinite(self.cutoff) and self.cutoff > 0.0):
             raise BadRequest(f"cutoff must be a positive number, found {self.cutoff!r}")
 
+    @property
+    def has_pairs(self) -> bool:
+        """Whether the pair functions are known; without them only what was recorded of a fluid is."""
+        return self.potential != ELSEWHERE
+
+    def _require_pairs(self) -> None:
+        if not self.has_pairs:
+            raise BadRequest("the pair functions of a fluid sampled elsewhere are not known here")
+
     def check_box(self, box: float) -> None:
         """Raises BadRequest if the cutoff is beyond half the edge of a periodic cube (sigma)."""
+        self._require_pairs()
         if self.cutoff > 0.5 * box:
             raise BadRequest(
                 f"cutoff {self.cutoff:g} sigma is beyond half the box of edge {box:g} sigma; "
@@ -91,11 +106,13 @@ class Fluid:
     @property
     def energy_at_cutoff(self) -> float:
         """u(r_c) of the untruncated potential, epsilon."""
+        self._require_pairs()
         return float(lennard_jones.u(self.cutoff))
 
     @property
     def slope_at_cutoff(self) -> float:
         """u'(r_c) that a force-shifted fluid subtracts, epsilon/sigma; zero for every other truncation."""
+        self._require_pairs()
         if self.truncation != "force-shifted":
             return 0.0
         return float(lennard_jones.w(self.cutoff)) / self.cutoff
@@ -120,6 +137,12 @@ class Fluid:
         r = np.asarray(r, dtype=float)
         return np.where(r < self.cutoff, lennard_jones.x(r) - r * self.slope_at_cutoff, 0.0)
 
+    @property
+    def sampled_weights(self) -> Floats:
+        """U_dyn but for a constant is the product of these with the bare sums, (4,)."""
+        slope = self.slope_at_cutoff
+        return np.array([*lennard_jones.ENERGY, slope * self.cutoff - self.energy_at_cutoff, -slope])
+
     def totals(self, sums: Floats, state: State) -> Totals:
         """Energies and virials from the bare sums a kernel records.
 
@@ -138,8 +161,19 @@ class Fluid:
             hypervirial=powers @ lennard_jones.HYPERVIRIAL - slope * distances / 9.0,
         )
 
+    def hypervirial(self, energy: Floats, virial: Floats) -> Floats | None:
+        """X of samples, (n,), from their U and W: two sums of powers make up all three.
+
+        None where the truncation puts more than these into U or W (`shifted`, `force-shifted`) or nothing is known.
+        """
+        if not self.has_pairs or self.truncation not in ("corrected", "plain"):
+            return None
+        weights = np.linalg.solve(np.transpose([lennard_jones.ENERGY, lennard_jones.VIRIAL]), lennard_jones.HYPERVIRIAL)
+        return np.asarray(weights[0] * energy + weights[1] * virial, dtype=float)
+
     def tail(self, density: float) -> tuple[float, float, float]:
         """Long-range part of U, W and X per particle, epsilon; zeros unless `corrected`."""
+        self._require_pairs()
         if self.truncation != "corrected":
             return 0.0, 0.0, 0.0
         sums = lennard_jones.tail_sums(self.cutoff, density)
@@ -152,6 +186,7 @@ class Fluid:
 
         -(2 pi/9) rho r_c^3 w(r_c) for `shifted` and `plain`; zero where the force is continuous or the tail holds it.
         """
+        self._require_pairs()
         if self.truncation not in ("shifted", "plain"):
             return 0.0
         edge = float(lennard_jones.w(self.cutoff))

@@ -19,7 +19,7 @@ from numba.extending import intrinsic
 
 from sampler.compiled import kernel, piece
 
-__all__ = ["START", "Key", "chain_key", "draw", "normals", "scramble"]
+__all__ = ["START", "Key", "chain_key", "draw", "normals", "scramble", "uniform"]
 
 Key = tuple[np.uint64, np.uint64]
 START = np.uint64(2**63)  # a step number that no trajectory reaches: draws made before the first step
@@ -153,6 +153,13 @@ def normals(k0, k1, step, substep, labels, out):  # type: ignore[no-untyped-def]
         radius = there * math.sqrt(-2.0 * _logarithm((_number(c) + 0.5) * _UNIT))
         cosine, sine = _turn(_number(d) * _UNIT)
         out[2, i] = radius * cosine
+
+
+@kernel
+def uniform(k0, k1, step, substep):  # type: ignore[no-untyped-def]
+    """A number between 0 and 1 that belongs to no particle."""
+    word, _, _, _ = scramble(_LOW, substep, step & _LOW, step >> _HALF, k0, k1)
+    return (_number(word) + 0.5) * _UNIT
 
 
 def draw(key: Key, step: np.uint64, n: int) -> npt.NDArray[np.float64]:

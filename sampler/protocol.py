@@ -10,9 +10,9 @@ from sampler.errors import BadRequest
 
 __all__ = ["SUBSTEPS", "Precision", "Protocol", "Scheme"]
 
-Scheme = Literal["baoab", "obabo", "velocity-verlet"]
+Scheme = Literal["baoab", "obabo", "metropolised", "velocity-verlet"]
 Precision = Literal["mixed", "double"]
-SUBSTEPS = {"baoab": "BAOAB", "obabo": "OBABO", "velocity-verlet": "BAB"}
+SUBSTEPS = {"baoab": "BAOAB", "obabo": "OBABO", "metropolised": "OBABO", "velocity-verlet": "BAB"}
 _SEGMENT = 10_000_000  # particle-steps: about a second's work
 
 
@@ -23,7 +23,7 @@ class Protocol:
     friction : of the bath; without one in `scheme` it acts during the equilibration only
     equilibration : steps before sampling starts, made up to a whole number of frame intervals
     steps : steps of each repeat after that
-    precision : "mixed" takes the forces between samples in float32 while a bath acts; all else is float64
+    precision : "mixed" takes the forces between samples in float32 under baoab and obabo; all else is float64
     """
 
     seed: int = 1

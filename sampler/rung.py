@@ -47,12 +47,13 @@ def advance(chain: Chain, index: int, before: Segment | None, stop: Stop) -> Seg
     heat = np.array([ledger])
     outcome, step = propagate(
         pair_function(chain.fluid),
+        chain.fluid.sampled_weights,
         where,
         velocity,
         state.box,
         skins(state),
         substeps(scheme, time_step=protocol.time_step, friction=protocol.friction, temperature=state.temperature),
-        protocol.precision == "mixed" and (settling or protocol.bath),
+        protocol.precision == "mixed" and scheme in ("baoab", "obabo"),
         key,
         first,
         last - first,
@@ -121,4 +122,5 @@ def assemble(chain: Chain, segments: Iterable[Segment]) -> Series:
         frame_stride=protocol.frame_every // protocol.record_every,
         kinetic_parts=kinetic,
         momentum=momentum,
+        rejected=samples[:, COLUMNS.index("rejected")] if protocol.scheme == "metropolised" else None,
     )

@@ -2,6 +2,8 @@
 
 baoab : B. Leimkuhler, C. Matthews, J. Chem. Phys. 138, 174102 (2013)
 obabo : thermostat half step before and after velocity Verlet (G. Bussi, M. Parrinello, Phys. Rev. E 75, 056707 (2007))
+metropolised : obabo whose part between the thermostat's is accepted with probability min(1, exp(-d(K + U_dyn)/T)),
+    or undone with velocities turned round: no error of the time step (A. M. Horowitz, Phys. Lett. B 268, 247 (1991))
 velocity-verlet : W. C. Swope, H. C. Andersen, P. H. Berens, K. R. Wilson, J. Chem. Phys. 76, 637 (1982); no O, no bath
 """
 
@@ -15,7 +17,7 @@ import numpy.typing as npt
 
 from sampler.compiled import kernel
 from sampler.groups import BLOCK, LANES, gather
-from sampler.noise import normals
+from sampler.noise import normals, uniform
 from sampler.protocol import SUBSTEPS, Scheme
 from sampler.slots import exact_forces, farthest, label_order, quick_forces, renewed, slots_of, wrap
 from sampler.vector import load, splat, store, total
@@ -25,6 +27,7 @@ __all__ = ["COLUMNS", "DIVERGED", "DONE", "STOPPED", "Steps", "propagate", "subs
 COLUMNS = (
     *("s12", "s6", "pairs", "distances", "ledger"),
     *("kinetic_x", "kinetic_y", "kinetic_z", "momentum_x", "momentum_y", "momentum_z"),
+    "rejected",
 )
 """What is recorded of a sample."""
 DONE, STOPPED, DIVERGED = 0, 1, 2
@@ -39,13 +42,15 @@ class Steps(NamedTuple):
     durations: npt.NDArray[np.float64]
     friction: float
     temperature: float
+    tested: bool
 
 
 def substeps(scheme: Scheme, *, time_step: float, friction: float, temperature: float) -> Steps:
     """The scheme's substeps: a letter that stands n times takes time_step/n each time."""
     letters = SUBSTEPS[scheme]
     durations = np.array([time_step / letters.count(letter) for letter in letters])
-    return Steps(np.array(["ABO".index(letter) for letter in letters]), durations, friction, temperature)
+    numbers = np.array(["ABO".index(letter) for letter in letters])
+    return Steps(numbers, durations, friction, temperature, scheme == "metropolised")
 
 
 @kernel
@@ -115,8 +120,34 @@ def _pass(slots, scheme, first, past, key, step, noise):  # type: ignore[no-unty
 
 
 @kernel
+def _kinetic(velocity):  # type: ignore[no-untyped-def]
+    double = splat(0.0)
+    for at in range(0, velocity.size, LANES):
+        v = load(velocity, at)
+        double = double + v * v
+    return 0.5 * total(double)
+
+
+@kernel
+def _weighed(sums, weights):  # type: ignore[no-untyped-def]
+    return weights[0] * sums[0] + weights[1] * sums[1] + weights[2] * sums[2] + weights[3] * sums[3]
+
+
+@kernel
+def _undo(pair, where, velocity, box, skins, sums):  # type: ignore[no-untyped-def]
+    """Slots of an earlier point of a trajectory, with forces and sums, and velocities turned round."""
+    for i in range(velocity.shape[0]):
+        for c in range(3):
+            velocity[i, c] = -velocity[i, c]
+    slots = slots_of(where, velocity, box, pair.cutoff, skins)
+    exact_forces(pair, slots, box, sums)
+    return slots
+
+
+@kernel
 def propagate(  # type: ignore[no-untyped-def]
     pair,
+    weights,
     where,
     velocity,
     box,
@@ -135,10 +166,11 @@ def propagate(  # type: ignore[no-untyped-def]
 ):
     """Advance a trajectory from step `first` by n_steps, in place; returns DONE, STOPPED or DIVERGED and the step.
 
+    weights : (4,), of the pair sums in U_dyn
     where, velocity : (n, 3), by label
     short : True for forces in float32 between samples
     every, frame_every : sample at steps that these divide
-    samples : (n_steps // every, 11), COLUMNS
+    samples : (n_steps // every, 12), COLUMNS
     frames : (n_steps // frame_every or 0, n, 3), wrapped positions
     ledger : (1,), heat that the bath has taken so far
     stop : (1,), uint8; set by another thread to leave early
@@ -149,10 +181,16 @@ def propagate(  # type: ignore[no-untyped-def]
     sums, nothing, noise = np.empty(4), np.empty(0), np.empty((3, _STRETCH))
     n_samples, n_frames = 0, 0
     slots = slots_of(where, velocity, box, pair.cutoff, skins)
-    exact_forces(pair, slots, box, nothing)
+    exact_forces(pair, slots, box, sums)
+    kept, kept_velocity, rejected = np.empty_like(where), np.empty_like(where), 0
+    verlet = 1 if scheme.tested else 0  # substeps before the part that is tested
     for step in range(first + 1, first + n_steps + 1):
         recorded = step % every == 0
-        ledger[0] += _pass(slots, scheme, 0, forced, key, step, noise)
+        ledger[0] += _pass(slots, scheme, 0, verlet, key, step, noise)
+        if scheme.tested:
+            label_order(slots, kept, kept_velocity)
+            before = _kinetic(slots.speed) + _weighed(sums, weights)
+        ledger[0] += _pass(slots, scheme, verlet, forced, key, step, noise)
         moved = 2.0 * farthest(slots.position, slots.narrowed_at)
         if not moved <= box:
             return DIVERGED, step
@@ -161,13 +199,21 @@ def propagate(  # type: ignore[no-untyped-def]
         if short and not recorded:
             quick_forces(pair, slots, box)
         else:
-            exact_forces(pair, slots, box, sums if recorded else nothing)
-        ledger[0] += _pass(slots, scheme, forced, scheme.letters.size, key, step, noise)
+            exact_forces(pair, slots, box, sums if recorded or scheme.tested else nothing)
+        _pass(slots, scheme, forced, forced + verlet, key, step, noise)
+        if scheme.tested:
+            change = _kinetic(slots.speed) + _weighed(sums, weights) - before
+            if not uniform(key[0], key[1], np.uint64(step), np.uint64(forced)) < math.exp(-change / scheme.temperature):
+                slots = _undo(pair, kept, kept_velocity, box, skins, sums)
+                rejected += 1
+        ledger[0] += _pass(slots, scheme, forced + verlet, scheme.letters.size, key, step, noise)
         if recorded:
             for c in range(4):
                 samples[n_samples, c] = sums[c]
             samples[n_samples, 4] = ledger[0]
             _motion(slots.speed, samples[n_samples, 5:])
+            samples[n_samples, 11] = rejected
+            rejected = 0
             n_samples += 1
         if step % frame_every == 0 and n_frames < frames.shape[0]:
             gather(slots.position, slots.groups.labels, frames[n_frames])

@@ -8,16 +8,21 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
+from sampler.errors import BadRequest
 from sampler.fluid import Fluid, State
 
 __all__ = ["FrameSums", "Series"]
 
 Floats = npt.NDArray[np.float64]
+_COLUMNS = (
+    *("energy", "sampled_energy", "virial", "hypervirial", "kinetic", "ledger"),
+    *("kinetic_parts", "momentum", "rejected"),
+)
 
 
 @dataclass(frozen=True)
 class Series:
-    """Samples of one repeat, equally spaced in time, extensive and in reduced units.
+    """Samples of one repeat, equally spaced in time, extensive and in reduced units; None for what was not recorded.
 
     energy : (n,), U, long-range part included
     sampled_energy : (n,), U_dyn, whose canonical ensemble is drawn
@@ -28,7 +33,9 @@ class Series:
     frames : (m, particles, 3), positions inside [0, box), of every frame_stride-th sample; see `frame_samples`
     frame_offset : samples missing of the stride that the first frame ends, less than frame_stride
     kinetic_parts : (n, 3), kinetic energy along x, y and z; momentum : (n, 3), of all particles; None if not recorded
+    rejected : (n,), steps since the sample before that a Metropolis test undid; None where there is no test
     interval : time between samples
+    freedom : kinetic degrees of freedom where they are not those of our own particles, see `kinetic_freedom`
     bath : whether a thermostat acted; without one the ensemble has constant energy
     """
 
@@ -37,20 +44,33 @@ class Series:
     repeat: int
     bath: bool
     interval: float
-    energy: Floats
-    sampled_energy: Floats
-    virial: Floats
-    hypervirial: Floats
-    kinetic: Floats
-    ledger: Floats
+    energy: Floats | None
+    sampled_energy: Floats | None
+    virial: Floats | None
+    hypervirial: Floats | None
+    kinetic: Floats | None
+    ledger: Floats | None
     frames: Floats
     frame_stride: int
     frame_offset: int = 0
     kinetic_parts: Floats | None = None
     momentum: Floats | None = None
+    rejected: Floats | None = None
+    freedom: int | None = None
 
     def __len__(self) -> int:
-        return len(self.energy)
+        return next((len(getattr(self, name)) for name in _COLUMNS if self.has(name)), 0)
+
+    def has(self, *names: str) -> bool:
+        """Whether all these columns were recorded."""
+        return all(getattr(self, name) is not None for name in names)
+
+    def column(self, name: str) -> Floats:
+        """A column that was recorded. Raises BadRequest if it was not."""
+        values: Floats | None = getattr(self, name)
+        if values is None:
+            raise BadRequest(f"the series at {self.state}, repeat {self.repeat}, has no column {name}")
+        return values
 
     @property
     def chain(self) -> tuple[float, float, int, int]:
@@ -65,6 +85,8 @@ class Series:
     @property
     def kinetic_freedom(self) -> int:
         """Kinetic degrees of freedom: 3N with a bath, 3N - 3 without (the total momentum is zero and stays so)."""
+        if self.freedom is not None:
+            return self.freedom
         return 3 * self.state.particles - (0 if self.bath else 3)
 
     @property
@@ -75,8 +97,7 @@ class Series:
     def after(self, n_samples: int) -> Series:
         """The series without its first n_samples and their frames."""
         n_frames, offset = divmod(self.frame_offset + n_samples, self.frame_stride)
-        names = ("energy", "sampled_energy", "virial", "hypervirial", "kinetic", "ledger", "kinetic_parts", "momentum")
-        columns = {name: getattr(self, name) for name in names}
+        columns = {name: getattr(self, name) for name in _COLUMNS}
         kept: dict[str, Any] = {
             name: None if values is None else values[n_samples:] for name, values in columns.items()
         }
