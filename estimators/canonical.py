@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import operator
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, replace
 from functools import cached_property, reduce
 
@@ -15,10 +15,19 @@ from estimators.errors import BadSeries
 from estimators.estimate import Chain, Estimate, combine, mean
 from sampler.series import Series
 
-__all__ = ["kinetic_temperature", "rung_properties"]
+__all__ = ["NEEDS", "kinetic_temperature", "rung_properties"]
 
 Floats = npt.NDArray[np.float64]
 Recorded = dict[Chain, Floats]
+NEEDS: Mapping[str, tuple[str, ...]] = {
+    "residual_energy": ("energy",),
+    "residual_heat_capacity": ("energy", "sampled_energy"),
+    "pressure": ("virial",),
+    "compressibility_factor": ("virial",),
+    "thermal_pressure": ("virial", "sampled_energy"),
+    "bulk_modulus": ("virial", "hypervirial"),
+}
+"""Columns of the series that a property is made of."""
 
 
 def rung_properties(series: Sequence[Series], *, contact: Estimate | None = None) -> dict[str, Estimate]:
@@ -28,7 +37,7 @@ def rung_properties(series: Sequence[Series], *, contact: Estimate | None = None
     contact : g(r_c), for the bulk modulus of a fluid whose force jumps at the cutoff; without it that key is left out
 
     Keys: residual_energy (U/N), residual_heat_capacity (per particle, d<U>/dT at constant volume), pressure,
-    compressibility_factor, thermal_pressure, bulk_modulus (isothermal).
+    compressibility_factor, thermal_pressure, bulk_modulus (isothermal); those only whose columns (NEEDS) were recorded.
 
     With a bath, at the set temperature T (U_dyn: the energy that the forces conserve, whose ensemble is drawn):
     c_v = cov(U, U_dyn)/(N T^2); P = rho T + <W>/V; gamma_V = rho + cov(W, U_dyn)/(V T^2);
@@ -44,28 +53,30 @@ def rung_properties(series: Sequence[Series], *, contact: Estimate | None = None
     """
     _check(series)
     rung = _ConstantTemperature(series) if series[0].bath else _ConstantEnergy(series)
-    properties = {
-        "residual_energy": rung.mean_of(lambda each: each.energy) / rung.particles,
-        "residual_heat_capacity": rung.heat_capacity,
-        "pressure": rung.pressure,
-        "compressibility_factor": rung.compressibility_factor,
-        "thermal_pressure": rung.thermal_pressure,
+    made: dict[str, Callable[[], Estimate]] = {
+        "residual_energy": lambda: rung.mean_of(_energy) / rung.particles,
+        "residual_heat_capacity": lambda: rung.heat_capacity,
+        "pressure": lambda: rung.pressure,
+        "compressibility_factor": lambda: rung.compressibility_factor,
+        "thermal_pressure": lambda: rung.thermal_pressure,
+        "bulk_modulus": lambda: rung.bulk_modulus,
     }
-    surface = series[0].fluid.surface_hypervirial(rung.density)
-    if surface == 0.0:
-        properties["bulk_modulus"] = rung.bulk_modulus
-    elif contact is not None:
-        properties["bulk_modulus"] = replace(
+    fluid = series[0].fluid
+    surface = fluid.surface_hypervirial(rung.density) if fluid.has_pairs else 0.0
+    if surface and contact is not None:
+        made["bulk_modulus"] = lambda: replace(
             rung.bulk_modulus + contact * (rung.density * surface), method="fluctuation"
         )
-    return properties
+    elif surface:
+        del made["bulk_modulus"]
+    return {name: make() for name, make in made.items() if all(each.has(*NEEDS[name]) for each in series)}
 
 
 def kinetic_temperature(series: Sequence[Series]) -> Estimate:
     """Temperature from the mean kinetic energy of the repeats of one rung, 2<K>/f, epsilon/k_B."""
     _check(series)
     rung = _Rung(series) if series[0].bath else _ConstantEnergy(series)
-    return rung.mean_of(lambda each: each.kinetic) * (2.0 / series[0].kinetic_freedom)
+    return rung.mean_of(_kinetic) * (2.0 / series[0].kinetic_freedom)
 
 
 def _check(series: Sequence[Series]) -> None:
@@ -76,6 +87,26 @@ def _check(series: Sequence[Series]) -> None:
         raise BadSeries("series of different fluids, states or baths given; repeats of one rung share all three")
     if len({each.repeat for each in series}) < len(series):
         raise BadSeries("two series carry the same repeat number; give each repeat once")
+
+
+def _energy(series: Series) -> Floats:
+    return series.column("energy")
+
+
+def _sampled_energy(series: Series) -> Floats:
+    return series.column("sampled_energy")
+
+
+def _virial(series: Series) -> Floats:
+    return series.column("virial")
+
+
+def _stiffness(series: Series) -> Floats:
+    return series.column("virial") + series.column("hypervirial")
+
+
+def _kinetic(series: Series) -> Floats:
+    return series.column("kinetic")
 
 
 def _recorded(series: Sequence[Series], observable: Callable[[Series], Floats]) -> Recorded:
@@ -114,11 +145,11 @@ class _ConstantTemperature(_Rung):
     @property
     def heat_capacity(self) -> Estimate:
         scale = self.particles * self.temperature**2
-        return self.covariance_of(lambda s: s.energy, lambda s: s.sampled_energy) / scale
+        return self.covariance_of(_energy, _sampled_energy) / scale
 
     @property
     def pressure(self) -> Estimate:
-        return self.mean_of(lambda s: s.virial) / self.volume + self.density * self.temperature
+        return self.mean_of(_virial) / self.volume + self.density * self.temperature
 
     @property
     def compressibility_factor(self) -> Estimate:
@@ -127,12 +158,12 @@ class _ConstantTemperature(_Rung):
     @property
     def thermal_pressure(self) -> Estimate:
         scale = self.volume * self.temperature**2
-        return self.covariance_of(lambda s: s.virial, lambda s: s.sampled_energy) / scale + self.density
+        return self.covariance_of(_virial, _sampled_energy) / scale + self.density
 
     @property
     def bulk_modulus(self) -> Estimate:
-        stiffness = self.mean_of(lambda s: s.virial + s.hypervirial) / self.volume
-        softening = self.covariance_of(lambda s: s.virial, lambda s: s.virial) / (self.volume * self.temperature)
+        stiffness = self.mean_of(_stiffness) / self.volume
+        softening = self.covariance_of(_virial, _virial) / (self.volume * self.temperature)
         return replace(stiffness - softening + self.density * self.temperature, method="fluctuation")
 
 
@@ -172,11 +203,11 @@ class _ConstantEnergy(_Rung):
         return self.particles * self.series[0].fluid.tail(self.density)[1]
 
     def _acting(self, each: Series) -> Floats:
-        return each.virial - self._virial_tail
+        return _virial(each) - self._virial_tail
 
     def _per_energy(self, observable: Callable[[Series], Floats]) -> Estimate:
         """d<A>/dE."""
-        return self.covariance_of(observable, lambda s: 1.0 / s.kinetic) * (self._a - 1.0)
+        return self.covariance_of(observable, lambda s: 1.0 / _kinetic(s)) * (self._a - 1.0)
 
     @cached_property
     def temperature(self) -> Estimate:
@@ -185,16 +216,16 @@ class _ConstantEnergy(_Rung):
     @cached_property
     def _capacity(self) -> Estimate:
         """Total heat capacity of the box: dE/dT."""
-        return self._a / (self._per_energy(lambda s: s.kinetic) + 1.0)
+        return self._a / (self._per_energy(_kinetic) + 1.0)
 
     @property
     def heat_capacity(self) -> Estimate:
-        capacity = self._capacity * self._per_energy(lambda s: s.energy) / self.particles
+        capacity = self._capacity * self._per_energy(_energy) / self.particles
         return replace(capacity, method="fluctuation")
 
     @property
     def pressure(self) -> Estimate:
-        return self.temperature * self.density + self.mean_of(lambda s: s.virial) / self.volume
+        return self.temperature * self.density + self.mean_of(_virial) / self.volume
 
     @property
     def compressibility_factor(self) -> Estimate:
@@ -207,9 +238,9 @@ class _ConstantEnergy(_Rung):
     @property
     def bulk_modulus(self) -> Estimate:
         a, density, volume = self._a, self.density, self.volume
-        stiffness = self.mean_of(lambda s: s.virial + s.hypervirial) / volume + self.temperature * density
-        softening = self.covariance_of(self._acting, lambda s: self._acting(s) / s.kinetic) * ((a - 1.0) / volume)
-        exchange = self.covariance_of(lambda s: s.kinetic, lambda s: self._acting(s) / s.kinetic) * (1.0 - 1.0 / a)
+        stiffness = self.mean_of(_stiffness) / volume + self.temperature * density
+        softening = self.covariance_of(self._acting, lambda s: self._acting(s) / _kinetic(s)) * ((a - 1.0) / volume)
+        exchange = self.covariance_of(_kinetic, lambda s: self._acting(s) / _kinetic(s)) * (1.0 - 1.0 / a)
         exchange = (exchange + self.mean_of(self._acting) / a) * density
         heating = combine(
             lambda gamma, capacity, temperature, pressure: volume * gamma / capacity * (temperature * gamma - pressure),

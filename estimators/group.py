@@ -15,6 +15,7 @@ from functools import cached_property
 import numpy as np
 import numpy.typing as npt
 
+from estimators.canonical import NEEDS
 from estimators.estimate import Estimate
 from estimators.mixture import Mixture
 from estimators.moments import POWERS, Moments, Run, claimed, moments
@@ -103,7 +104,7 @@ class Group:
         return self._estimates(values, -self.mixture.response, [0.0] * len(self.runs))
 
     def properties(self, temperature: float, found: Moments, index: int) -> dict[str, Estimate]:
-        """By name, from the moments at a temperature, which is the one with this index."""
+        """By name, from the moments at a temperature, which is the one with this index; of recorded columns only."""
         samples = self.effective_samples(temperature, float(found.kish[index]))
         rows = self._rows(temperature, found.means[index], correction=1.0 / (1.0 - 1.0 / samples))
         values = rows @ found.means[index]
@@ -119,8 +120,12 @@ class Group:
             "compressibility_factor": pressure / (series.state.density * temperature),
             "thermal_pressure": thermal_pressure,
         }
-        surface = series.fluid.surface_hypervirial(series.state.density) != 0.0
-        return properties if surface else properties | {"bulk_modulus": bulk_modulus}
+        if not (series.fluid.has_pairs and series.fluid.surface_hypervirial(series.state.density)):
+            properties["bulk_modulus"] = bulk_modulus
+        return {name: each for name, each in properties.items() if self._has(*NEEDS[name])}
+
+    def _has(self, *columns: str) -> bool:
+        return all(run.series.has(*columns) for run in self.runs)
 
     def _rows(self, temperature: float, means: Floats, *, correction: float) -> Floats:
         """(5, POWERS): of which combinations of powers the properties are the weighted means.

@@ -59,14 +59,17 @@ class Run:
         return np.diff(self.starts, append=len(self.energies))
 
     def powers(self, samples: Indices) -> Floats:
-        """(POWERS, n) of some samples."""
-        series = self.series
-        energy, virial = series.energy[samples] - self.centres[0], series.virial[samples]
-        stiffness = virial + series.hypervirial[samples] - self.centres[2]
+        """(POWERS, n) of some samples; zeros stand for a column that was not recorded."""
+        energy = self._recorded("energy", samples) - self.centres[0]
+        virial = self._recorded("virial", samples)
+        stiffness = virial + self._recorded("hypervirial", samples) - self.centres[2]
         virial = virial - self.centres[1]
         sampled = self.energies[samples]
         rows = (energy, sampled, virial, stiffness, energy * sampled, virial * sampled, virial * virial)
         return np.stack([np.ones(len(samples)), *rows])
+
+    def _recorded(self, name: str, samples: Indices) -> Floats:
+        return self.series.column(name)[samples] if self.series.has(name) else np.zeros(len(samples))
 
     def chunks(self) -> Iterator[tuple[slice, Indices, npt.NDArray[np.bool_]]]:
         """Some blocks at a time: which, their samples (b, L), and where a block that is shorter than L has ended."""

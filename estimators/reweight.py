@@ -132,13 +132,16 @@ def _in_reduced_units(temperature: float) -> str:
 def pool(series: Sequence[Series], *, spoken: Callable[[float], str] = _in_reduced_units) -> Pooled:
     """All repeats of all rungs of one isochore, pooled; series without samples are left out.
 
+    Properties are those whose columns all series have.
+
     spoken : writes a temperature (epsilon/k_B) in the words of a refusal, with its unit
     Raises BadSeries if nothing is left, the series differ in fluid, density or particles, hold entries that are not
-    finite, come twice, or have no bath; NotSolved if the free energies of overlapping rungs cannot be found.
+    finite, come twice, have no bath or no sampled_energy; NotSolved if the free energies of overlapping rungs cannot
+    be found.
     """
     series = [each for each in series if len(each)]
     _check(series)
-    reference_energy = float(np.mean([np.mean(each.sampled_energy) for each in series]))
+    reference_energy = float(np.mean([np.mean(each.column("sampled_energy")) for each in series]))
     by_temperature: dict[float, list[Series]] = defaultdict(list)
     for each in series:
         by_temperature[each.state.temperature].append(each)
@@ -161,15 +164,17 @@ def _check(series: Sequence[Series]) -> None:
             raise BadSeries(f"the series at {each.state} has no bath: only canonical samples can be reweighted")
         if (each.fluid, each.state.density, each.state.particles) != isochore:
             raise BadSeries(f"only one fluid at one density is reweighted together, found {first.state}, {each.state}")
-        columns = (each.energy, each.sampled_energy, each.virial, each.hypervirial)
-        if not all(np.all(np.isfinite(column)) for column in columns):
+        if not each.has("sampled_energy"):
+            raise BadSeries(f"the series at {each.state}, repeat {each.repeat}, has no energy to reweight it by")
+        columns = filter(each.has, ("energy", "sampled_energy", "virial", "hypervirial"))
+        if not all(np.all(np.isfinite(each.column(name))) for name in columns):
             raise BadSeries(f"the series at {each.state}, repeat {each.repeat}, holds entries that are not finite")
     if len({each.chain for each in series}) < len(series):
         raise BadSeries("the same repeat of a rung was given twice")
 
 
 def _rung(temperature: float, repeats: list[Series], reference_energy: float) -> Rung:
-    energies = [each.sampled_energy - reference_energy for each in repeats]
+    energies = [each.column("sampled_energy") - reference_energy for each in repeats]
     samples = sum(map(len, energies))
     effective = mean({each.chain: values for each, values in zip(repeats, energies, strict=True)}).effective_samples
     return Rung(temperature, repeats, energies, max(samples / max(effective, 1.0), 1.0))
@@ -193,10 +198,10 @@ def _solved(rungs: list[Rung]) -> Group:
 
 
 def _centres(series: Sequence[Series]) -> tuple[float, float, float]:
-    """Means of U, W and W + X."""
+    """Means of U, W and W + X; zero for a column that is not recorded throughout."""
     samples = sum(map(len, series))
     energy, virial, hypervirial = (
-        sum(float(np.sum(getattr(each, name))) for each in series) / samples
+        sum(float(np.sum(each.column(name))) for each in series if each.has(name)) / samples
         for name in ("energy", "virial", "hypervirial")
     )
     return energy, virial, virial + hypervirial

@@ -41,6 +41,7 @@ class Structure:
         0.1 sigma on both sides; of those inside alone if the cutoff is half the box
     energy : U/N recomputed from g
     pressure : recomputed from g
+    contact, energy and pressure are None where the pair functions of the fluid are not known
     """
 
     r: Floats
@@ -49,15 +50,15 @@ class Structure:
     coordination: Floats
     first_minimum: Estimate | None
     first_shell: Estimate | None
-    contact: Estimate
-    energy: Estimate
-    pressure: Estimate
+    contact: Estimate | None
+    energy: Estimate | None
+    pressure: Estimate | None
 
 
 def pair_structure(series: Sequence[Series], *, bin_width: float = 0.02) -> Structure | None:
     """Pair structure from the frames of all repeats of one rung; None if there are no frames.
 
-    bin_width : sigma; changed a little so that the cutoff is the edge of a bin
+    bin_width : sigma; changed a little so that the cutoff, where there is one, is the edge of a bin
 
     Inside a bin pairs are taken to lie as r^2 exp(-u/T) does when u and r u' are averaged over it, which leaves the
     cross-checks of energy and pressure free of most of the error of binning.
@@ -78,7 +79,8 @@ def pair_structure(series: Sequence[Series], *, bin_width: float = 0.02) -> Stru
 
 def _check(series: Sequence[Series], bin_width: float) -> None:
     first = series[0]
-    if not 0.0 < bin_width <= 0.5 * first.fluid.cutoff:
+    reach = first.fluid.cutoff if first.fluid.has_pairs else 0.5 * first.state.box
+    if not 0.0 < bin_width <= 0.5 * reach:
         raise BadSeries(f"bin_width must be positive and at most half the cutoff, found {bin_width!r}")
     if any((each.fluid, each.state, each.bath) != (first.fluid, first.state, first.bath) for each in series):
         raise BadSeries("series of different fluids, states or baths given; repeats of one rung share all three")
@@ -99,8 +101,9 @@ class _Bins:
 
     @staticmethod
     def of(fluid: Fluid, state: State, bin_width: float) -> _Bins:
-        inside = round(fluid.cutoff / bin_width)
-        width = fluid.cutoff / inside
+        reach = fluid.cutoff if fluid.has_pairs else 0.5 * state.box
+        inside = round(reach / bin_width)
+        width = reach / inside
         return _Bins(width, int(0.5 * state.box / width * (1.0 + 1e-12)), inside)
 
     @cached_property
@@ -153,6 +156,7 @@ class _Pairs:
 
     def structure(self) -> Structure:
         minimum, shell = self.first_shell() or (None, None)
+        known = self.fluid.has_pairs
         return Structure(
             r=self.bins.centres,
             g=self.g,
@@ -160,9 +164,9 @@ class _Pairs:
             coordination=np.cumsum(self.g * self.ideal) * 2.0 / self.state.particles,
             first_minimum=minimum,
             first_shell=shell,
-            contact=self.contact(),
-            energy=self.energy(),
-            pressure=self.pressure(),
+            contact=self.contact() if known else None,
+            energy=self.energy() if known else None,
+            pressure=self.pressure() if known else None,
         )
 
     @cached_property
