@@ -122,15 +122,13 @@ def line(value: object) -> str:
     return value
 
 
-def choice(options: Collection[Word], later: Collection[str] = ()) -> Reader[Word]:
-    """Reads one of several words; those that are to come later are refused as such."""
+def choice(options: Collection[Word]) -> Reader[Word]:
+    """Reads one of several words."""
 
     def read(value: object) -> Word:
         for option in options:
             if value == option:
                 return option
-        if isinstance(value, str) and value in later:
-            raise NotAccepted(f"not available in this version; what is accepted is {_either(options)}")
         near = difflib.get_close_matches(value, options, n=1) if isinstance(value, str) else []
         offer = f'did you mean "{near[0]}"? ' if near else ""
         raise NotAccepted(f"{offer}what is accepted is {_either(options)}")

@@ -70,8 +70,9 @@ seed = 1
 repeats = 1                  # independent repetitions of every rung
 time_step = 0.005{time}
 # friction = 2.0             # of the bath; by default 2 from density 0.5 on, 1 below
-precision = "mixed"          # forces between records in single precision while a bath acts; or double throughout
-scheme = "baoab"             # baoab, obabo, or velocity-verlet (after equilibration no bath: constant energy)
+precision = "mixed"          # forces between records in single precision under baoab and obabo; or double throughout
+scheme = "baoab"             # baoab, obabo, metropolised (no error of the time step), or velocity-verlet (after
+                             # equilibration no bath: constant energy)
 equilibration = 20000        # steps before the first that counts
 steps = 200000               # per repeat, after equilibration; more can be asked for later
 record_every = 10            # steps

@@ -244,7 +244,7 @@ def _sampling(table: Table, scale: Scale | None, default_friction: float) -> Pro
         repeats=table.read("repeats", whole(1, 10_000), 1),
         time_step=table.read("time_step", quantity("time", 1e-6, 0.1, scale), 0.005),
         friction=table.read("friction", quantity("friction", 1e-3, 1e3, scale), default_friction),
-        scheme=table.read("scheme", choice(get_args(Scheme), later=("metropolised",)), "baoab"),
+        scheme=table.read("scheme", choice(get_args(Scheme)), "baoab"),
         precision=table.read("precision", choice(get_args(Precision)), "mixed"),
         equilibration=table.read("equilibration", whole(0, 10**12), 20_000),
         **counts,

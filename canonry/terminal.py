@@ -11,6 +11,7 @@ from pathlib import Path
 from typing import Any
 
 from canonry.border import Border
+from canonry.failures import failures
 from canonry.notation import symbol_of, unit_text
 from canonry.numbers import plain, with_error
 from canonry.plan import Plan
@@ -57,7 +58,7 @@ def plan_text(study: Study, plan: Plan, border: Border) -> str:
         return " = ".join(each.text(name, value) for each in borders)
 
     bath = f"friction {both('friction', sampling.friction)}" if sampling.bath else "no bath"
-    precision = f"{sampling.precision if sampling.bath else 'double'} precision"
+    precision = f"{'mixed' if sampling.is_mixed else 'double'} precision"
     lines = [
         f"{study.title}",
         f"{study.states[0].particles} particles, cutoff {both('length', fluid.cutoff)}, {fluid.truncation}",
@@ -88,7 +89,10 @@ def _rows_of(directory: Path, table: str) -> list[Row]:
 
 
 def closing_text(directory: Path) -> str:
-    """Temperature, heat capacity and pressure with errors, reference, z and outcome, from the tables of a directory."""
+    """Temperature, heat capacity and pressure with errors, reference, z and outcome, from the tables of a directory.
+
+    Then every health check that failed, with the sentence of its worst reading.
+    """
     headlines = [row for row in _rows_of(directory, "properties") if row["headline"] == "True"]
     known = {row["property"] for row in headlines}
     names = ["heat_capacity" if "heat_capacity" in known else "residual_heat_capacity", "pressure"]
@@ -97,7 +101,8 @@ def closing_text(directory: Path) -> str:
     references = list(dict.fromkeys(row["reference"] for row in verdicts))
     blocks = [_block(values, names, [row for row in verdicts if row["reference"] == each]) for each in references]
     legend = [text for trust, text in _LEGENDS.items() if any(row["trust"] == trust for row in values)]
-    return "\n\n".join([*(blocks or [_block(values, names, [])]), *([", ".join(legend)] if legend else [])])
+    shown = [*(blocks or [_block(values, names, [])]), *([", ".join(legend)] if legend else [])]
+    return "\n\n".join([*shown, _health_text(_rows_of(directory, "health"), values[0])])
 
 
 def verdict_text(verdicts: Sequence[Row], border: Border) -> str:
@@ -140,6 +145,20 @@ def _block(values: Sequence[Row], names: Sequence[str], verdicts: Sequence[Row])
         body.append(cells)
     title = [f"Against {verdicts[0]['reference']}: {_overall(verdicts)}"] if verdicts else []
     return "\n".join([*title, aligned([heads, units, *body])])
+
+
+def _health_text(readings: Sequence[Row], units: Row) -> str:
+    failed = failures(readings)
+    if not failed:
+        return f"Health: all {len(readings)} readings of the checks are within their limits."
+    lines = []
+    for each in failed:
+        (temperature, density), more = each.states[0], len(each.states) - 1
+        at = f"T = {plain(temperature)} {unit_text(units['temperature_unit'])}"
+        at += f", density {plain(density)} {unit_text(units['density_unit'])}"
+        others = f" and {more} more state{'s' if more > 1 else ''}" if more else ""
+        lines.append(wrapped(f"Failed check: {each.check} at {at}{others}. {each.meaning}"))
+    return "\n".join(lines)
 
 
 def _value(row: Row) -> str:

@@ -60,6 +60,11 @@ class Protocol:
         return "O" in SUBSTEPS[self.scheme]
 
     @property
+    def is_mixed(self) -> bool:
+        """Whether forces between samples are taken in float32."""
+        return self.precision == "mixed" and self.scheme in ("baoab", "obabo")
+
+    @property
     def settling(self) -> int:
         """Steps before sampling starts: the equilibration made up to whole frame intervals."""
         return -(-self.equilibration // self.frame_every) * self.frame_every

@@ -53,7 +53,7 @@ def advance(chain: Chain, index: int, before: Segment | None, stop: Stop) -> Seg
         state.box,
         skins(state),
         substeps(scheme, time_step=protocol.time_step, friction=protocol.friction, temperature=state.temperature),
-        protocol.precision == "mixed" and scheme in ("baoab", "obabo"),
+        protocol.is_mixed,
         key,
         first,
         last - first,

@@ -17,6 +17,7 @@ __all__ = ["Setup", "citations", "paragraph", "standing_caveats"]
 
 _WORKS = {
     "baoab": "B. Leimkuhler, C. Matthews, J. Chem. Phys. 138, 174102 (2013)",
+    "metropolised": "A. M. Horowitz, Phys. Lett. B 268, 247 (1991)",
     "obabo": "G. Bussi, M. Parrinello, Phys. Rev. E 75, 056707 (2007)",
     "velocity-verlet": "W. C. Swope, H. C. Andersen, P. H. Berens, K. R. Wilson, J. Chem. Phys. 76, 637 (1982)",
     "constant-energy": "J. L. Lebowitz, J. K. Percus, L. Verlet, Phys. Rev. 153, 250 (1967)",
@@ -27,6 +28,8 @@ _WORKS = {
 }
 _SCHEMES = {
     "baoab": "with Langevin dynamics in the BAOAB splitting [baoab]",
+    "metropolised": "with Langevin dynamics in the OBABO splitting whose velocity Verlet part has to pass a Metropolis "
+    "test [metropolised]",
     "obabo": "with Langevin dynamics in the OBABO splitting, a thermostat half step on either side of velocity Verlet "
     "[obabo]",
     "velocity-verlet": "at constant energy with the velocity Verlet scheme [velocity-verlet]",
@@ -148,7 +151,7 @@ def _dynamics(results: Results, setup: Setup) -> list[str]:
         f"{ensemble} at {_counted(states, 'state')} {_SCHEMES[setup.scheme]} "
         f"(time step {_quantity(sampling['time_step'], 'σ √(m/ε)')}{friction}; {repeats} a state of {lengths}, "
         f"recorded every {sampling['record_every']} steps).",
-        *([_MIXED] if setup.bath and sampling["precision"] == "mixed" else []),
+        *([_MIXED] if setup.scheme in ("baoab", "obabo") and sampling["precision"] == "mixed" else []),
         "The end of equilibration was found from the data.",
     ]
 

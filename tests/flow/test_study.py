@@ -211,7 +211,6 @@ REFUSED = [
     # keys of later versions
     ("[state]", "[until]\npressure = 0.01\n[state]", r"until = .*not available in this version"),
     ("[1.0]", "{ from = 1, to = 2, overlap = 0.2 }", r"state\.temperatures\.overlap = 0\.2: not available"),
-    ("[state]", '[sampling]\nscheme = "metropolised"\n[state]', r'"metropolised": not available .* "baoab"'),
     ("[state]", "[compare.tolerance]\nsound_speed = 0.1\n[state]", r"tolerance\.sound_speed = 0\.1: not available"),
     # missing values
     ("density = 0.8", "", r"state\.density: missing; what is needed is a number from 1e-06 to 2 \(sigma\^-3\)"),

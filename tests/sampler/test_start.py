@@ -57,7 +57,7 @@ def test_sampling_survives_extreme_densities(tmp_path, density, n, cutoff):
 @pytest.mark.parametrize(
     ("change", "words"),
     [
-        ({"scheme": "leap"}, "scheme must be one of baoab, obabo, velocity-verlet, found 'leap'"),
+        ({"scheme": "leap"}, "scheme must be one of baoab, obabo, metropolised, velocity-verlet, found 'leap'"),
         ({"time_step": 0.0}, "time_step must be a positive number, found 0.0"),
         ({"friction": float("nan")}, "friction must be a positive number, found nan"),
         ({"repeats": 0}, "repeats must be at least 1, found 0"),
