@@ -12,10 +12,10 @@ from canonry.keys import Reader, Table, choice, line, one_or_more, open_table, p
 from canonry.quantities import NotAccepted, percent, rounded
 from canonry.units import PROPERTIES, Kind, Scale
 from canonry.writing import study_text
-from sampler.fluid import Fluid, State, Truncation
+from sampler.fluid import ELSEWHERE, Fluid, State, Truncation
 from sampler.protocol import Precision, Protocol, Scheme
 
-__all__ = ["COMPARED", "Compare", "Study", "Tolerance", "load"]
+__all__ = ["COMPARED", "Adopted", "Compare", "Study", "Tolerance", "load", "study_of"]
 
 COMPARED = (
     "residual_energy",
@@ -49,6 +49,14 @@ class Compare:
 
 
 @dataclass(frozen=True)
+class Adopted:
+    """Samples that were taken elsewhere: the file that described them, and what its reader must know of them."""
+
+    source: str
+    notes: tuple[str, ...] = ()
+
+
+@dataclass(frozen=True)
 class Study:
     """One study file, in reduced units.
 
@@ -56,6 +64,7 @@ class Study:
     scale : SI size of the reduced units, None in a study that has none
     ideal_heat_capacity : c_v of the ideal gas, k_B per particle; None when the file says it is unknown
     states : every rung, by density, then by temperature
+    sampling : how samples are taken; of no meaning where they were adopted
     """
 
     title: str
@@ -66,6 +75,7 @@ class Study:
     states: tuple[State, ...]
     sampling: Protocol
     compare: Compare
+    adopted: Adopted | None = None
 
     @property
     def epsilon(self) -> float | None:
@@ -98,16 +108,22 @@ def load(path: str | Path, *, earlier: Study | None = None) -> Study:
 
     earlier : the study that samples were taken for already; defaults that depend on the states are as they were there
     """
-    path = Path(path)
-    top = open_table(path).only(("title", "fluid", "state", "sampling", "compare"), later=("until",))
+    return study_of(open_table(Path(path)), earlier=earlier)
+
+
+def study_of(top: Table, *, earlier: Study | None = None) -> Study:
+    """The study that the content of a file asks for; see `load`."""
+    top.only(("title", "fluid", "state", "sampling", "compare", "adopted"), later=("until",))
+    adopted = _adopted(top)
     fluid = top.table("fluid").only(
         ("potential", "epsilon", "sigma", "mass", "cutoff", "truncation", "ideal_heat_capacity")
     )
     scale = _scale(fluid)
-    states = _states(top.table("state"), scale)
-    sampled = _fluid(fluid, scale, _default(_CUTOFFS, states, earlier.fluid.cutoff if earlier else None), states)
+    states = _states(top.table("state"), scale) if adopted is None else _adopted_states(top.table("state"), scale)
+    cutoff = _default(_CUTOFFS, states, earlier.fluid.cutoff if earlier else None)
+    sampled = _fluid(fluid, scale, cutoff, states, adopted=adopted is not None)
     return Study(
-        title=top.read("title", line, "".join(filter(str.isprintable, path.stem))[:200].strip() or "study"),
+        title=top.read("title", line, "".join(filter(str.isprintable, Path(top.file).stem))[:200].strip() or "study"),
         units=_kind(top.table("state")),
         fluid=sampled,
         scale=scale,
@@ -117,7 +133,46 @@ def load(path: str | Path, *, earlier: Study | None = None) -> Study:
             top.table("sampling"), scale, _default(_FRICTIONS, states, earlier.sampling.friction if earlier else None)
         ),
         compare=_compare(top.table("compare"), scale, sampled),
+        adopted=adopted,
     )
+
+
+def _adopted(top: Table) -> Adopted | None:
+    if "adopted" not in top:
+        return None
+    if "sampling" in top:
+        raise top.refusal("sampling", "the samples of this study were adopted; what is accepted is no such table")
+    table = top.table("adopted").only(("source", "notes"))
+    notes = () if table.content.get("notes", []) == [] else table.read("notes", one_or_more(_sentence))
+    return Adopted(table.read("source", line), notes)
+
+
+def _sentence(value: object) -> str:
+    if not (isinstance(value, str) and value.strip() and value.isprintable()):
+        raise NotAccepted("what is needed is a sentence")
+    return value
+
+
+def _adopted_states(table: Table, scale: Scale | None) -> tuple[State, ...]:
+    """Points with one number of particles for all, or one for each."""
+    table.only(("points", "particles"))
+    points = table.read("points", one_or_more(_point(scale)))
+    counts = table.read("particles", _counts(len(points)))
+    states = (State(*point, count) for point, count in zip(points, counts, strict=True))
+    return tuple(sorted(states, key=lambda state: (state.density, state.temperature)))
+
+
+def _counts(number: int) -> Reader[tuple[int, ...]]:
+    one = whole(2, 10_000_000)
+
+    def read(value: object) -> tuple[int, ...]:
+        if not isinstance(value, list):
+            return (one(value),) * number
+        if len(value) != number:
+            raise NotAccepted(f"what is needed is a whole number, or one for each of the {number} points")
+        return tuple(map(one, value))
+
+    return read
 
 
 def _scale(table: Table) -> Scale | None:
@@ -197,8 +252,13 @@ def _default(defaults: tuple[float, float], states: tuple[State, ...], earlier: 
     return defaults[min(state.density for state in states) >= _LIQUID]
 
 
-def _fluid(table: Table, scale: Scale | None, default_cutoff: float, states: tuple[State, ...]) -> Fluid:
-    potential = table.read("potential", choice(("lennard-jones",)))
+def _fluid(
+    table: Table, scale: Scale | None, default_cutoff: float, states: tuple[State, ...], *, adopted: bool
+) -> Fluid:
+    if adopted and table.content.get("potential") == ELSEWHERE:
+        table.only(("potential", "epsilon", "sigma", "mass", "ideal_heat_capacity"))
+        return Fluid(potential=ELSEWHERE)
+    potential = table.read("potential", choice(("lennard-jones", ELSEWHERE) if adopted else ("lennard-jones",)))
     cutoff = table.read("cutoff", quantity("length", _SMALLEST_CUTOFF, 100.0, scale), default_cutoff)
     truncation: Truncation = table.read("truncation", choice(get_args(Truncation)), "corrected")
     _check_box(table, cutoff, states)
@@ -266,6 +326,8 @@ def _against(table: Table, fluid: Fluid) -> tuple[str, ...]:
     if table.content.get("against", []) == []:
         return ()
     against = table.read("against", one_or_more(choice(names())))
+    if not fluid.has_pairs:
+        raise table.refusal("against", "no reference describes a fluid sampled elsewhere; what is accepted is []")
     fitting = [name for name in names() if find(name).same_model(fluid.truncation, fluid.cutoff)]
     for name in against:
         if name not in fitting:

@@ -35,8 +35,7 @@ def study_text(study: Study) -> str:
             *_fluid(study),
             "\n[state]",
             *_states(study),
-            "\n[sampling]",
-            *_sampling(study),
+            *_origin(study),
             "\n[compare]",
             f"against = [{', '.join(map(_quoted, study.compare.against))}]",
             f"tolerance = {{ {tolerances} }}" if tolerances else "tolerance = {}",
@@ -53,11 +52,11 @@ def _fluid(study: Study) -> list[str]:
     ideal, sizes = study.ideal_heat_capacity, {}
     if study.scale is not None:
         sizes = {"epsilon": study.scale.epsilon, "sigma": study.scale.sigma, "mass": study.scale.mass}
+    cut = [f"cutoff = {study.fluid.cutoff!r}", f"truncation = {_quoted(study.fluid.truncation)}"]
     return [
         f"potential = {_quoted(study.fluid.potential)}",
         *(f"{name} = {_quoted(shortest_text(size, name, None, _UNITS[name]))}" for name, size in sizes.items()),
-        f"cutoff = {study.fluid.cutoff!r}",
-        f"truncation = {_quoted(study.fluid.truncation)}",
+        *(cut if study.fluid.has_pairs else []),
         f"ideal_heat_capacity = {_quoted('unknown') if ideal is None else repr(ideal)}",
     ]
 
@@ -66,7 +65,7 @@ def _states(study: Study) -> list[str]:
     temperature, density = _writer(study, "temperature"), _writer(study, "density")
     ladders = {rho: [state.temperature for state in states] for rho, states in study.isochores.items()}
     first = next(iter(ladders.values()))
-    if all(ladder == first for ladder in ladders.values()):
+    if study.adopted is None and all(ladder == first for ladder in ladders.values()):
         densities = ", ".join(map(density, ladders))
         lines = [
             f"density = {densities if len(ladders) == 1 else f'[{densities}]'}",
@@ -75,7 +74,8 @@ def _states(study: Study) -> list[str]:
     else:
         pairs = (f"[{temperature(state.temperature)}, {density(state.density)}]" for state in study.states)
         lines = [f"points = [{', '.join(pairs)}]"]
-    return [*lines, f"particles = {study.states[0].particles}"]
+    counts = [state.particles for state in study.states]
+    return [*lines, f"particles = {counts[0] if len({*counts}) == 1 else counts}"]
 
 
 def _writer(study: Study, quantity: str) -> Callable[[float], str]:
@@ -83,6 +83,18 @@ def _writer(study: Study, quantity: str) -> Callable[[float], str]:
     if study.units == "reduced" or units == ("1",):
         return repr
     return lambda value: _quoted(shortest_text(value, quantity, study.scale, units))
+
+
+def _origin(study: Study) -> list[str]:
+    """How the samples are taken, or where they are from."""
+    if study.adopted is None:
+        return ["\n[sampling]", *_sampling(study)]
+    notes = "".join(f"\n    {_quoted(note)}," for note in study.adopted.notes)
+    return [
+        "\n[adopted]",
+        f"source = {_quoted(study.adopted.source)}",
+        f"notes = [{notes}\n]" if notes else "notes = []",
+    ]
 
 
 def _sampling(study: Study) -> list[str]:
