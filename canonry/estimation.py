@@ -2,21 +2,23 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterable, Iterator
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from dataclasses import dataclass, replace
 from itertools import chain
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import Any
 
 import numpy as np
 
 from canonry.border import Border
 from canonry.errors import UserError
-from canonry.findings import Curve, Cut, Finding, Findings
+from canonry.findings import Check, Curve, Cut, Finding, Findings
+from canonry.health import Samples, judged, known, marked, of_isochore, of_rung, wavelength
 from canonry.isochore import Isochore, assemble
 from canonry.risks import doubt, guide
 from canonry.sampling import recorded
 from canonry.study import Study
+from canonry.units import Scale
 from estimators.canonical import kinetic_temperature, rung_properties
 from estimators.compiled import is_cached
 from estimators.estimate import Estimate, mean
@@ -26,13 +28,12 @@ from sampler.fluid import State
 from sampler.protocol import Protocol
 from sampler.series import Series
 
-if TYPE_CHECKING:
-    from reference import Reference
-
 __all__ = ["findings"]
 
 _BINS = 60  # of a histogram
+_CONSERVED = ("kinetic", "sampled_energy", "ledger")
 _POINTS = 400  # of a ledger curve, at most
+_CONSERVED = ("kinetic", "sampled_energy", "ledger")
 
 
 @dataclass(frozen=True, eq=False)
@@ -50,10 +51,13 @@ class _Rung:
     structure: Structure | None
     cuts: list[Cut]
     ledgers: list[Curve]
+    checks: list[Check]
 
     @property
-    def histogram(self) -> Curve:
-        energies = np.concatenate([each.energy for each in self.series]) / self.state.particles
+    def histogram(self) -> Curve | None:
+        if not all(each.has("energy") for each in self.series):
+            return None
+        energies = np.concatenate([each.column("energy") for each in self.series]) / self.state.particles
         density, edges = np.histogram(energies, bins=_BINS, density=True)
         return Curve(self.state, None, 0.5 * (edges[1:] + edges[:-1]), density)
 
@@ -74,7 +78,7 @@ def findings(study: Study, directory: Path, border: Border, *, watch: Callable[[
     unfinished = []
     for number, state in enumerate(study.states, start=1):
         tell(f"estimating rung {number} of {len(study.states)}{_compiling(study.sampling)}")
-        rung = _rung(recorded(study, directory, state))
+        rung = _rung(recorded(study, directory, state), study.scale)
         if rung is not None:
             rungs.append(rung)
         if rung is None or not rung.is_finished(study.sampling):
@@ -83,17 +87,27 @@ def findings(study: Study, directory: Path, border: Border, *, watch: Callable[[
         raise UserError(f"{directory}: there are no samples yet; what is needed is `canonry run` or `canonry sample`")
     tell("reweighting between the rungs")
     reference = guide(study.fluid)
-    isochores = [
-        _isochore(study, [rung for rung in rungs if rung.state.density == rho], border) for rho in _densities(rungs)
-    ]
+    states = [rung.state for rung in rungs]
+    isochores = [_isochore(study, own, border) for own in _by_density(rungs)]
+    checks = [check for rung in rungs for check in rung.checks]
+    for isochore, own in zip(isochores, _by_density(rungs), strict=True):
+        checks += of_isochore(isochore, {rung.state: rung.series for rung in own})
+    health = judged(checks)
+
+    def doubted(findings: Iterable[Iterable[Finding]]) -> Iterator[Finding]:
+        """With less trust where a check failed, and with caution where the state may be no stable bulk phase."""
+        for finding in marked(chain.from_iterable(findings), health, states):
+            yield finding.doubted(doubt(finding.state, reference))
+
     return Findings(
-        properties=tuple(_doubted((each.properties() for each in isochores), reference)),
-        curve=tuple(_doubted((each.curve() for each in isochores), reference)),
+        properties=tuple(doubted(each.properties() for each in isochores)),
+        curve=tuple(doubted(each.curve() for each in isochores)),
         structures={rung.state: rung.structure for rung in rungs if rung.structure is not None},
         cuts=tuple(cut for rung in rungs for cut in rung.cuts),
         overlaps=tuple(overlap for isochore in isochores for overlap in isochore.overlaps()),
-        histograms=tuple(rung.histogram for rung in rungs),
+        histograms=tuple(curve for rung in rungs if (curve := rung.histogram) is not None),
         ledgers=tuple(ledger for rung in rungs for ledger in rung.ledgers),
+        health=(*health, *known(states, reference)),
         unfinished=tuple(unfinished),
     )
 
@@ -103,17 +117,15 @@ def _compiling(sampling: Protocol) -> str:
     return "" if sampling.steps < sampling.frame_every or is_cached() else ", compiling for this machine once"
 
 
-def _doubted(findings: Iterable[Iterable[Finding]], reference: Reference) -> Iterator[Finding]:
-    """With caution where the state may be no stable bulk phase."""
-    return (each.doubted(doubt(each.state, reference)) for each in chain.from_iterable(findings))
+def _by_density(rungs: Sequence[_Rung]) -> list[list[_Rung]]:
+    """The rungs of each density, by temperature."""
+    densities = dict.fromkeys(rung.state.density for rung in rungs)
+    return [
+        sorted((each for each in rungs if each.state.density == rho), key=lambda each: each.state) for rho in densities
+    ]
 
 
-def _densities(rungs: list[_Rung]) -> list[float]:
-    return list(dict.fromkeys(rung.state.density for rung in rungs))
-
-
-def _isochore(study: Study, rungs: list[_Rung], border: Border) -> Isochore:
-    rungs = sorted(rungs, key=lambda rung: rung.state)
+def _isochore(study: Study, rungs: Sequence[_Rung], border: Border) -> Isochore:
     series = [each for rung in rungs for each in rung.series]
     temperatures = {rung.state: rung.temperature for rung in rungs if rung.temperature is not None}
     return assemble(
@@ -125,7 +137,7 @@ def _isochore(study: Study, rungs: list[_Rung], border: Border) -> Isochore:
     )
 
 
-def _rung(recorded: list[Series]) -> _Rung | None:
+def _rung(recorded: list[Series], scale: Scale | None) -> _Rung | None:
     """None if there are no samples."""
     if not recorded:
         return None
@@ -135,34 +147,46 @@ def _rung(recorded: list[Series]) -> _Rung | None:
     temperature = None if series[0].bath else kinetic_temperature(series)
     state = series[0].state
     state = state if temperature is None else replace(state, temperature=temperature.value)
+    own = rung_properties(series, contact=structure.contact if structure else None)
+    cuts = [_cut(state, *both) for both in zip(recorded, series, strict=True)]
+    samples = Samples(
+        settled,
+        structure,
+        [(cut.cut, cut.samples) for cut in cuts],
+        bulk_modulus=own.get("bulk_modulus"),
+        wavelength=wavelength(state, scale),
+    )
     return _Rung(
         state,
         temperature,
         series,
-        own=rung_properties(series, contact=structure.contact if structure else None),
+        own=own,
         structure=structure,
-        cuts=[_cut(state, *both) for both in zip(recorded, series, strict=True)],
-        ledgers=[_ledger(state, each) for each in recorded],
+        cuts=cuts,
+        ledgers=[_ledger(state, each) for each in recorded if each.has(*_CONSERVED)],
+        checks=[Check(state, reading) for reading in of_rung(samples)],
     )
 
 
 def _cut(state: State, before: Series, after: Series) -> Cut:
-    effective = mean({after.chain: after.energy}).effective_samples
+    name = next(name for name in ("energy", "virial", "kinetic") if after.has(name))
+    effective = mean({after.chain: after.column(name)}).effective_samples
     return Cut(state, before.repeat, len(before) - len(after), len(before), effective)
 
 
 def _ledger(state: State, series: Series) -> Curve:
     every = slice(None, None, -(-len(series) // _POINTS))
-    conserved = (series.kinetic[every] + series.sampled_energy[every] + series.ledger[every]) / state.particles
+    conserved = np.sum([series.column(name)[every] for name in _CONSERVED], axis=0) / state.particles
     return Curve(state, series.repeat, series.times[every], conserved - conserved[0])
 
 
 def _settled(series: Series) -> Series:
     """Without what the energy or the virial says is not settled, half of it at most."""
-    return series.after(max(settled_start(series.sampled_energy), settled_start(series.virial)))
+    told = [series.column(name) for name in ("sampled_energy", "virial") if series.has(name)]
+    return series.after(max(map(settled_start, told), default=0))
 
 
 def _light(series: Series) -> Series:
     """Without frames, and with columns of its own, which do not keep in memory all that was recorded with them."""
-    own = {name: getattr(series, name).copy() for name in ("kinetic", "ledger")}
-    return replace(series, frames=series.frames[:0].copy(), **own)
+    own: dict[str, Any] = {name: series.column(name).copy() for name in ("kinetic", "ledger") if series.has(name)}
+    return replace(series, frames=series.frames[:0].copy(), kinetic_parts=None, momentum=None, rejected=None, **own)

@@ -9,12 +9,16 @@ import numpy as np
 import numpy.typing as npt
 
 from estimators.estimate import Estimate
+from estimators.health.reading import Reading
 from estimators.structure import Structure
 from sampler.fluid import State
 
-__all__ = ["Curve", "Cut", "Finding", "Findings", "Overlap"]
+__all__ = ["TRUST", "Check", "Curve", "Cut", "Finding", "Findings", "Overlap"]
 
 Floats = npt.NDArray[np.float64]
+
+TRUST = ("ok", "caution", "no")
+"""By weight."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -35,12 +39,21 @@ class Finding:
     headline: bool
     temperature: Estimate | None = None
 
-    def doubted(self, reason: str) -> Finding:
-        """The same with caution at most, for one more reason; itself where the reason is empty."""
+    def doubted(self, reason: str, trust: str = "caution") -> Finding:
+        """The same with this trust at most, for one more reason; itself where the reason is empty."""
         if not reason:
             return self
-        trust = "caution" if self.trust == "ok" else self.trust
-        return replace(self, trust=trust, reason="; ".join(filter(None, (self.reason, reason))))
+        least = max(self.trust, trust, key=TRUST.index)
+        return replace(self, trust=least, reason="; ".join(filter(None, (self.reason, reason))))
+
+
+@dataclass(frozen=True)
+class Check:
+    """What a health check read at a state; `warmer` is the other one where it looked at two neighbouring rungs."""
+
+    state: State
+    reading: Reading
+    warmer: State | None = None
 
 
 @dataclass(frozen=True)
@@ -81,6 +94,7 @@ class Findings:
     curve : on a temperature grid of each isochore
     histograms : probability density of U/N
     ledgers : change of K + U_dyn + ledger per particle over time
+    health : what every check read
     unfinished : states that lack samples the study asks for
     """
 
@@ -91,6 +105,7 @@ class Findings:
     overlaps: tuple[Overlap, ...]
     histograms: tuple[Curve, ...]
     ledgers: tuple[Curve, ...]
+    health: tuple[Check, ...]
     unfinished: tuple[State, ...]
 
     @property

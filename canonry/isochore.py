@@ -8,7 +8,7 @@ from itertools import pairwise
 
 import numpy as np
 
-from canonry.findings import Finding, Overlap
+from canonry.findings import TRUST, Finding, Overlap
 from estimators.estimate import Estimate
 from estimators.reweight import Pooled, Reweighted, pool
 from sampler.fluid import State
@@ -19,7 +19,7 @@ __all__ = ["Isochore", "assemble"]
 _GRID = 61  # temperatures of a curve
 _AGREEMENT = 3.0  # combined standard errors between the reweighted value and the rung's own
 _ALONE = 1e-9  # share of its samples that a rung connected with no other has in common with others, at most
-_TRUST = ("ok", "caution", "no")
+_STEP = 1e-3  # of the temperature, to either side, for a slope
 
 Properties = Mapping[str, Estimate]
 
@@ -28,7 +28,7 @@ Properties = Mapping[str, Estimate]
 class Isochore:
     """States by rising temperature with what each says alone, and all of them pooled.
 
-    pooled : None where there is nothing to pool: a single rung, or no bath
+    pooled : None where there is nothing to pool: a single rung, no bath, no energy
     temperatures : measured, where no bath acts
     """
 
@@ -52,6 +52,18 @@ class Isochore:
             for name, own in self._completed(properties).items():
                 for finding in _both(state, name, own, others.get(name), pooled):
                     yield replace(finding, temperature=self.temperatures.get(state))
+
+    def slopes(self) -> Iterator[tuple[State, Estimate, Estimate]]:
+        """Of every rung with both, its own residual heat capacity and the slope of the reweighted energy."""
+        if self.pooled is None:
+            return
+        states = [*self.own]
+        beside = [state.temperature * (1.0 + step) for state in states for step in (-_STEP, _STEP)]
+        found = [at.properties.get("residual_energy") for at in self.pooled.curve(beside)]
+        for state, low, high in zip(states, found[::2], found[1::2], strict=True):
+            own = self.own[state].get("residual_heat_capacity")
+            if own is not None and low is not None and high is not None:
+                yield state, own, (high - low) / (2.0 * _STEP * state.temperature)
 
     def curve(self) -> Iterator[Finding]:
         """Reweighted values from the coldest rung to the warmest; refused ones carry the reason."""
@@ -82,7 +94,7 @@ class Isochore:
 
     def _completed(self, properties: Properties) -> dict[str, Estimate]:
         """With the heat capacity, where the ideal part is known."""
-        if self.ideal_heat_capacity is None or not properties:
+        if self.ideal_heat_capacity is None or "residual_heat_capacity" not in properties:
             return dict(properties)
         return {**properties, "heat_capacity": properties["residual_heat_capacity"] + self.ideal_heat_capacity}
 
@@ -102,7 +114,8 @@ def assemble(
     spoken : writes a temperature (epsilon/k_B) for the reader
     Raises NotSolved if rungs overlap and yet cannot be pooled.
     """
-    pooled = pool(series, spoken=spoken) if len(own) > 1 and series[0].bath else None
+    weighed = len(own) > 1 and all(each.bath and each.has("sampled_energy") for each in series)
+    pooled = pool(series, spoken=spoken) if weighed else None
     return Isochore(own, pooled, temperatures, ideal_heat_capacity)
 
 
@@ -122,7 +135,7 @@ def _both(
             doubt = "the value from all rungs together lies more than three combined standard errors away"
     trust, reason = own.trust, own.reason
     if doubt:
-        trust, reason = max(trust, "caution", key=_TRUST.index), "; ".join(filter(None, (reason, doubt)))
+        trust, reason = max(trust, "caution", key=TRUST.index), "; ".join(filter(None, (reason, doubt)))
     chosen = other is not None and not doubt
     yield Finding(state, name, own.method, own, own.effective_samples, trust, reason, not chosen)
     if other is not None and pooled is not None:

@@ -22,7 +22,7 @@ if TYPE_CHECKING:
 
 __all__ = ["compare", "estimate", "is_finished", "report", "run"]
 
-_TABLES = ("properties", "curve", "structure", "verdict", "summary")
+_TABLES = ("properties", "curve", "structure", "health", "verdict", "summary")
 _FILES = (*(f"{name}.csv" for name in _TABLES), "report.html")
 
 Place = str | Path
@@ -119,13 +119,14 @@ def is_finished(study: Study, directory: Path, units: Kind | None = None) -> boo
 
 
 def _cover(study: Study, tables: Mapping[str, list[Row]], unit: str) -> bool:
-    """Whether tables hold a state's row and headlines for every state, in these units, the curve, and every outcome."""
+    """Whether tables hold every state and its headlines, in these units, readings, the curve, and every outcome."""
     headlines = [row for row in tables["properties"] if (row["headline"], row["temperature_unit"]) == ("True", unit)]
     states = Counter(row["property"] for row in headlines)
     outcomes = {row["reference"] for row in tables["verdict"] if not row["property"]}
     counts = (len(tables["summary"]), states["residual_heat_capacity"], states["pressure"])
     pooled = study.sampling.bath and len(study.isochores) < len(study.states)
-    return {*counts} == {len(study.states)} and bool(tables["curve"]) == pooled and outcomes == {*study.compare.against}
+    whole = {*counts} == {len(study.states)} and bool(tables["curve"]) == pooled and bool(tables["health"])
+    return whole and outcomes == {*study.compare.against}
 
 
 def _rows(path: Path, columns: Sequence[str]) -> list[Row] | None:

@@ -29,6 +29,7 @@ COLUMNS: Mapping[str, tuple[str, ...]] = {
         "overlap": "density,temperature_a,temperature_b,overlap",
         "reference_curve": "density,temperature,property,value,uncertainty,reference",
         "equilibration": "temperature,density,repeat,cut,samples,effective_samples",
+        "health": "temperature,density,repeat,check,statistic,threshold,passed,touches,meaning",
     }.items()
 }
 """Columns each table must have; it may have more, and no rows."""
@@ -41,7 +42,7 @@ class Results:
     title : the study's title
     study_toml : the study as run, complete with defaults
     units : 'reduced' (energies in epsilon, times in sigma sqrt(m/epsilon)) or 'SI' (kJ/mol, ps)
-    properties, curve, structure, verdict, summary : the tables of the study directory; `headline` holds booleans. A
+    properties, curve, structure, verdict, summary, health : tables of the study directory; `headline` holds booleans. A
         verdict row without temperature and property is the overall outcome of its reference; `tolerance` is a
         difference in the unit of the property, empty where there is none; `reason` says why a row is undecided
     histograms : probability density of the energy per particle, bin centres in rising order, one curve a rung
@@ -50,6 +51,8 @@ class Results:
     reference_curve : the references on a fine temperature grid; `uncertainty` is one standard uncertainty
     equilibration : per repeat, `cut` samples taken off at the start of the `samples` recorded; `effective_samples`
         behind the energy after the cut
+    health : what every check read; an empty `repeat` stands for all repeats together, `touches` lists properties with a
+        space between them; a check of two neighbouring rungs stands at the colder one
     caveats : what this study's reader must know beyond the caveats of the model, one sentence each
     provenance : label to text, in the order shown: versions, seed, machine, wall time
     Raises ValueError when a table lacks a column.
@@ -68,6 +71,7 @@ class Results:
     overlap: pd.DataFrame
     reference_curve: pd.DataFrame
     equilibration: pd.DataFrame
+    health: pd.DataFrame
     caveats: tuple[str, ...] = ()
     provenance: Mapping[str, str] = field(default_factory=dict)
 

@@ -12,12 +12,22 @@ from canonry.numbers import plain
 from canonry.study import Study
 
 if TYPE_CHECKING:
+    from estimators.health.reading import Reading
     from reference import Reference
     from reference.coexistence import Coexistence
     from sampler.fluid import Fluid, State
 
-__all__ = ["doubt", "guide", "risks"]
+__all__ = ["doubt", "guide", "risks", "stability"]
 
+_FREEZING = "M. A. van der Hoef, J. Chem. Phys. 113, 8142 (2000)"
+_MIXED = (
+    "The density is a factor {ratio:.3g} inside the nearer of those of coexisting vapour and liquid ({name}); above "
+    "one the sample is no stable bulk phase, and densities outside that gap are what to sample."
+)
+_FROZEN = (
+    "The density is {ratio:.3g} times that from which the liquid freezes (" + _FREEZING + "); above one the sample may "
+    "be an undercooled liquid, or crystallise, and a lower density or a higher temperature is what to sample."
+)
 _LIQUID = 0.5  # sigma^-3
 _CUTOFFS = (5.0, 3.0)  # sigma, below and above that density
 
@@ -35,6 +45,19 @@ def doubt(state: State, reference: Reference) -> str:
     if _coexisting(state, reference) is not None:
         return "liquid and vapour coexist here"
     return "" if _freezing(state) is None else "beyond freezing"
+
+
+def stability(state: State, reference: Reference) -> Reading | None:
+    """How far a density lies beyond freezing, or inside of coexistence, as a ratio; None where nothing is known."""
+    from estimators.health.reading import Reading
+
+    pair, freezing = _coexistence(reference.name, state.temperature), _freezing_density(state.temperature)
+    known = [(min(state.density / pair.vapour, pair.liquid / state.density), _MIXED)] if pair else []
+    known += [(state.density / freezing, _FROZEN)] if freezing else []
+    if not known:
+        return None
+    ratio, meaning = max(known)
+    return Reading("one-phase", ratio, 1.0, meaning.format(ratio=ratio, name=reference.name))
 
 
 def risks(study: Study, border: Border) -> list[str]:
@@ -58,8 +81,8 @@ def _phases(states: Sequence[State], reference: Reference, border: Border) -> It
     if frozen:
         yield (
             f"{_named([*frozen], border)}: the liquid freezes from density "
-            f"{border.text('density', frozen[min(frozen)])} on{_coldest(frozen)} (M. A. van der Hoef, J. Chem. Phys. "
-            "113, 8142 (2000)); the sample may be an undercooled liquid, or crystallise."
+            f"{border.text('density', frozen[min(frozen)])} on{_coldest(frozen)} ({_FREEZING}); "
+            "the sample may be an undercooled liquid, or crystallise."
         )
 
 
@@ -93,14 +116,18 @@ def _coexistence(reference: str, temperature: float) -> Coexistence | None:
 
 def _freezing(state: State) -> float | None:
     """Density from which the liquid freezes, where a state lies beyond it; None where not, or nothing is known."""
+    freezing = _freezing_density(state.temperature)
+    return freezing if freezing is not None and state.density > freezing else None
+
+
+def _freezing_density(temperature: float) -> float | None:
     from reference.errors import OutOfRange
     from reference.freezing import freezing_density
 
     try:
-        freezing = freezing_density(state.temperature)
+        return freezing_density(temperature)
     except OutOfRange:
         return None
-    return freezing if state.density > freezing else None
 
 
 def _cutoffs(study: Study, border: Border) -> Iterator[str]:

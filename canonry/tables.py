@@ -12,7 +12,8 @@ import numpy as np
 from canonry.border import Border
 from canonry.caveats import caveats
 from canonry.directory import write
-from canonry.findings import Curve, Finding, Findings
+from canonry.findings import TRUST, Check, Curve, Finding, Findings
+from canonry.health import CHECKS
 from canonry.results import COLUMNS, Results
 from canonry.study import Study
 from canonry.units import PROPERTIES
@@ -26,9 +27,8 @@ if TYPE_CHECKING:
 
 __all__ = ["TABLES", "assemble", "save", "verdict_table"]
 
-TABLES = ("properties", "curve", "structure", "verdict", "summary")
+TABLES = ("properties", "curve", "structure", "health", "verdict", "summary")
 _DIGITS = "%.10g"
-_TRUST = ("ok", "caution", "no")
 _SPECIES = "1"  # the only one of a pure fluid
 
 
@@ -63,6 +63,7 @@ def assemble(
                 for cut in findings.cuts
             ),
         ),
+        health=_health(findings, border),
         caveats=tuple(caveats(study, findings, border)),
         provenance=provenance or {},
     )
@@ -149,7 +150,7 @@ def _summary(findings: Findings, border: Border) -> pd.DataFrame:
             row |= {key: cells[key] for key in ("temperature", "temperature_unit", "density", "density_unit")}
             row |= _set_temperature(finding, border)
             row |= {"particles": finding.state.particles, "trust": "ok"}
-        row["trust"] = max(row["trust"], finding.trust, key=_TRUST.index)
+        row["trust"] = max(row["trust"], finding.trust, key=TRUST.index)
         name = finding.property
         row |= {name: cells["value"], f"{name}_error": cells["standard_error"], f"{name}_unit": cells["unit"]}
     return pd.DataFrame(list(rows.values()))
@@ -161,6 +162,30 @@ def _set_temperature(finding: Finding, border: Border) -> dict[str, float]:
         return {}
     (temperature,) = {temperature for temperature, *_ in finding.temperature.influence}
     return {"set_temperature": border.coordinate("temperature", temperature)}
+
+
+def _health(findings: Findings, border: Border) -> pd.DataFrame:
+    """A row for each reading, by state and in the order of the checks; properties that the study has, after a space."""
+    known = {finding.property for finding in findings.properties}
+    order = list(CHECKS)
+
+    def row(check: Check) -> dict[str, Any]:
+        reading = check.reading
+        return {
+            **_state(check.state, border),
+            "repeat": reading.repeat,
+            "check": reading.check,
+            "statistic": _finite(reading.statistic),
+            "threshold": reading.threshold,
+            "passed": reading.passed,
+            "touches": " ".join(name for name in CHECKS[reading.check].touches if name in known),
+            "meaning": reading.meaning,
+        }
+
+    def rank(check: Check) -> tuple[float, float, int]:
+        return check.state.density, check.state.temperature, order.index(check.reading.check)
+
+    return _table("health", map(row, sorted(findings.health, key=rank))).astype({"repeat": "Int64"})
 
 
 def _structure(findings: Findings, border: Border) -> pd.DataFrame:

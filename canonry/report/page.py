@@ -9,7 +9,7 @@ from pathlib import Path
 from canonry.figures import Figure, draw
 from canonry.notation import as_html, unit_text
 from canonry.numbers import plain
-from canonry.report import methods, plots, tables, words
+from canonry.report import health, methods, plots, tables, words
 from canonry.report.rows import at_densities, headline
 from canonry.report.style import CSS
 from canonry.results import Results
@@ -29,6 +29,10 @@ _UNCERTAINTY = (
     "symbol are hidden by it. Standard errors come from the autocorrelation of each estimate's own fluctuation (Gamma "
     "method) and cover chance only, not the limits of the model. The stated accuracy of a reference is read as 95 %, "
     "so half of it enters a deviation as its standard uncertainty."
+)
+_HEALTH = (
+    "A healthy study fails any of its checks by chance in one case out of twenty at most. Every reading, with its "
+    "limit and what it means, is in health.csv; what a failed check touches bears a mark in all tables."
 )
 _CURVES = (
     "Points are the rungs' own values, which the curve does not pass through by construction; where no curve is drawn, "
@@ -55,6 +59,7 @@ def html(results: Results) -> str:
             *_verdict(results),
             *_contents(sets),
             *(part for number, (where, own) in enumerate(sets) for part in _set(number, where, own)),
+            *_health(results, sets),
             *_caveats(results),
             *_methods(results),
             *_provenance(results),
@@ -80,17 +85,16 @@ def _verdict(results: Results) -> Iterator[str]:
     outcome = words.outcome(results)
     yield f'<section class="verdict {outcome or "none"}"><p class="word">{_OUTCOMES[outcome]}</p>'
     yield from _paragraphs([words.question(results), *words.answers(results), *words.agreement(results)])
+    yield from _paragraphs([health.checked(results)])
     doubts = words.doubts(results)
     if doubts:
         yield f"<h3>What should not be trusted</h3>{_list(doubts)}"
-    else:
-        yield from _paragraphs(["The checks mark no value of this study as doubtful; the caveats below still hold."])
     yield "</section>"
 
 
 def _contents(sets: list[tuple[str, Results]]) -> Iterator[str]:
     links = [(f"set-{number}", where.capitalize()) for number, (where, _) in enumerate(sets)]
-    links += [("caveats", "Caveats"), ("methods", "Methods"), ("provenance", "Provenance")]
+    links += [("health", "Health"), ("caveats", "Caveats"), ("methods", "Methods"), ("provenance", "Provenance")]
     items = "".join(f'<li><a href="#{to}">{as_html(text)}</a></li>' for to, text in links)
     yield f"<nav><ul>{items}</ul></nav>"
     yield f'<p class="fine">{as_html(_UNCERTAINTY)}</p>'
@@ -125,6 +129,16 @@ def _sampled(where: str, results: Results, isochore: bool) -> Iterator[str]:
         yield "<h3>Structure: pair distribution g(r)</h3>"
         yield '<p class="fine">Each rung with its 95 % band; dashed: the coldest rung of its density.</p>'
         yield _plots(plots.structure(results, where), "small plots", captions=False)
+
+
+def _health(results: Results, sets: list[tuple[str, Results]]) -> Iterator[str]:
+    yield '<section id="health"><h2>Health</h2>'
+    failed = health.told(results)
+    if failed:
+        yield _list(failed)
+    if len(results.health):
+        yield f'<div class="health">{tables.checks(results, sets)}</div>'
+    yield f'<p class="fine">{escape(_HEALTH)}</p></section>'
 
 
 def _caveats(results: Results) -> Iterator[str]:

@@ -67,4 +67,5 @@ def at_densities(results: Results, densities: list[float]) -> Results:
         overlap=own(results.overlap),
         reference_curve=own(results.reference_curve),
         equilibration=own(results.equilibration),
+        health=own(results.health),
     )

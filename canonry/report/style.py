@@ -42,6 +42,8 @@ caption{text-align:left;font-weight:600;padding:.2rem 0}
 .wide thead th{white-space:normal;max-width:9rem}
 .comparison td:last-child{text-align:left}.comparison .scroll{margin:0 0 .8rem}
 .comparison th,.comparison td{padding-right:.8rem}
+.health th,.health td{text-align:left;white-space:normal;vertical-align:top;padding-right:1.6rem}
+.health td:first-child{white-space:nowrap}.health td:nth-child(2){min-width:13rem;color:var(--soft)}
 .z{display:inline-block;min-width:2.6em}
 .strip{width:60px;height:12px;vertical-align:-1px;margin-right:.2rem}
 .strip .axis{stroke:var(--quiet);stroke-width:1}.strip .within{stroke:var(--rule);stroke-width:6}

@@ -10,6 +10,7 @@ import numpy as np
 
 from canonry.notation import as_html, name_of, symbol_of, unit_text
 from canonry.numbers import plain, with_error
+from canonry.report.health import fared
 from canonry.report.rows import grouped, headline, trusted
 from canonry.results import Results
 from canonry.units import PROPERTIES, unit_label
@@ -17,7 +18,7 @@ from canonry.units import PROPERTIES, unit_label
 if TYPE_CHECKING:
     import pandas as pd
 
-__all__ = ["MARKS", "comparison", "derived", "sampling", "values"]
+__all__ = ["MARKS", "checks", "comparison", "derived", "sampling", "values"]
 
 MARKS = {"ok": "", "caution": "†", "no": "‡"}
 _FIRST = (
@@ -72,6 +73,12 @@ def sampling(results: Results) -> str:
         cells += [f"{rows['effective_samples'].sum():.0f}", _next_overlap(results, density, temperature)]
         body.append(_row(cells))
     return _table([*_state_heads(results, several), *counts], body)
+
+
+def checks(results: Results, sets: Sequence[tuple[str, Results]]) -> str:
+    """One row a health check: what it asks, and how it fared at the states of each set."""
+    heads = ["check", "what holds where it is passed", *(where for where, _ in sets)]
+    return _table(heads, [_row(map(as_html, cells)) for cells in fared(results, [own for _, own in sets])])
 
 
 def _states(results: Results, names: Sequence[str], with_density: bool) -> str:

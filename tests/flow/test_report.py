@@ -10,6 +10,7 @@ import numpy as np
 import pandas as pd
 import pytest
 
+from canonry.health import CHECKS
 from canonry.report.methods import citations, paragraph
 from canonry.report.page import html, write
 from canonry.report.words import doubts, outcome
@@ -209,6 +210,15 @@ def invented(densities=(0.8,), rungs=6, units="reduced", samples=300, scheme="ba
                 {"temperature": t, "density": rho, "repeat": repeat, "cut": 120, "samples": 20000}
                 | {"effective_samples": 2000.0}
                 for t, rho, repeat in repeats
+            ]
+        ),
+        health=pd.DataFrame(
+            [
+                {"temperature": t, "density": rho, "repeat": pd.NA, "check": name, "statistic": 1.0, "threshold": 3.3}
+                | {"passed": True, "touches": "pressure", "meaning": f"What {name} says."}
+                for t, rho in states
+                for name in CHECKS
+                if name != "step-bias"
             ]
         ),
         caveats=("Two repeats are few for the agreement between repeats to mean much.",),

@@ -215,20 +215,6 @@ def test_what_has_not_settled_is_cut_off(monkeypatch: pytest.MonkeyPatch, tmp_pa
     assert 250 <= cut <= 1000
 
 
-def test_cross_check_from_structure_is_a_caveat_where_it_fails(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
-    assert not any("g(r)" in caveat for caveat in sampled(tmp_path, states="points = [[1.6, 0.7]]").caveats)
-    honest = canonry.estimation.pair_structure
-
-    def shifted(series):
-        structure = honest(series)
-        return replace(structure, pressure=structure.pressure + 10.0 * structure.pressure.standard_error)
-
-    monkeypatch.setattr(canonry.estimation, "pair_structure", shifted)
-    (caveat,) = (caveat for caveat in estimate(tmp_path / "study").caveats if "g(r)" in caveat)
-    assert "the pressure recomputed from g(r)" in caveat
-    assert "T = 1.6" in caveat
-
-
 def test_what_costs_a_moment_is_told(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
     sampled(tmp_path, states="points = [[1.6, 0.7], [1.3, 0.7]]")
     for cached, words in ((True, ""), (False, ", compiling for this machine once")):

@@ -1,0 +1,249 @@
+"""Which health checks look at a study, how strictly, and which values a failed one makes doubtful.
+
+Every check has a false-alarm rate of 1 % where it stands alone. All readings of a study that rest on a distribution
+share 5 %: their rate is the smaller of 1 % and 5 % over their number.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
+from dataclasses import dataclass, replace
+from functools import cached_property
+from itertools import pairwise
+from typing import TYPE_CHECKING
+
+from canonry.findings import Check, Finding
+from canonry.isochore import Isochore
+from canonry.risks import stability
+from canonry.units import PROPERTIES, Scale
+from estimators.estimate import Estimate
+from estimators.health.reading import Reading, threshold
+from estimators.structure import Structure
+from sampler.fluid import State
+from sampler.series import FrameSums, Series
+
+if TYPE_CHECKING:
+    from reference import Reference
+
+__all__ = ["CHECKS", "Kind", "Samples", "judged", "known", "marked", "of_isochore", "of_rung", "wavelength"]
+
+_LEVEL = 0.01  # of a check that stands alone
+_STUDY_LEVEL = 0.05  # of all statistical readings of a study together
+_FRAMES = 200  # of a rung that are evaluated again, at most: forces of so many cost a few hundred steps
+
+_EVERY = tuple(PROPERTIES)
+_HEAT = ("residual_heat_capacity", "heat_capacity", "isobaric_heat_capacity", "sound_speed", "grueneisen")
+_MECHANICAL = ("pressure", "compressibility_factor", "thermal_pressure", "bulk_modulus", "enthalpy")
+
+
+@dataclass(frozen=True)
+class Kind:
+    """One kind of check.
+
+    asks : what holds where it is passed, in a few words
+    doubt : what a failure says of the values it touches, and so why the trust left in them is this
+    trust : left at most, "caution" or "no"
+    touches : properties
+    """
+
+    asks: str
+    doubt: str
+    trust: str
+    touches: tuple[str, ...] = _EVERY
+
+
+CHECKS: Mapping[str, Kind] = {
+    "ledger": Kind(
+        "energy changes by what the bath gives and takes, and by nothing else",
+        "energies and forces do not belong to one model, so that no formula for fluctuations holds",
+        "no",
+    ),
+    "kinetic-law": Kind(
+        "kinetic energy is distributed as the temperature asks",
+        "velocities are not those of the temperature stated, and positions may be off by as much",
+        "caution",
+    ),
+    "equal-shares": Kind(
+        "every direction holds its share of kinetic energy, and nothing flows",
+        "kinetic energy is not shared equally, so that the motion of some is not that of the temperature stated",
+        "caution",
+    ),
+    "pair-slope": Kind(
+        "energies of neighbouring rungs differ as their temperatures ask",
+        "this rung or its neighbour is not canonical at its temperature, and reweighting between them rests on that",
+        "caution",
+    ),
+    "force-temperature": Kind(
+        "positions have the temperature stated, from forces and their slopes",
+        "positions are not those of the temperature stated",
+        "caution",
+    ),
+    "step-bias": Kind(
+        "sampling that is exact at any time step gives the same values",
+        "the time step shifts values by more than their error bars",
+        "caution",
+    ),
+    "settled": Kind(
+        "no trend is left, and halves and repeats agree",
+        "the run had not settled, or its repeats are caught in different places; longer ones may give other values",
+        "caution",
+    ),
+    "enough": Kind(
+        "independent samples are enough to tell their own error",
+        "too few independent samples stand behind the error bars, which may be too narrow",
+        "caution",
+    ),
+    "one-phase": Kind(
+        "the sample is one fluid phase",
+        "the sample is not one homogeneous fluid, so that its values depend on its size and history",
+        "no",
+    ),
+    "box": Kind(
+        "the box is wide enough for cutoff and structure",
+        "the box is so small that values depend on its size",
+        "caution",
+    ),
+    "virial-routes": Kind(
+        "pressure is the same from virial, g(r) and a change of volume",
+        "energies, virials and positions on record contradict one another",
+        "caution",
+        ("residual_energy", *_MECHANICAL),
+    ),
+    "heat-routes": Kind(
+        "heat capacity is the same from fluctuations and from the slope of the energy",
+        "the fluctuations of the energy contradict its slope over temperature",
+        "caution",
+        _HEAT,
+    ),
+    "quantum": Kind(
+        "quantum effects are smaller than the error bars",
+        "quantum effects left out are larger than the error bar",
+        "caution",
+        ("residual_energy", "pressure", "compressibility_factor", "enthalpy"),
+    ),
+}
+"""By the name of the check. "no" only where a failure leaves nothing that the values could be values of."""
+
+
+@dataclass(frozen=True, eq=False)
+class Samples:
+    """One rung after the cut, with frames: what its checks look at.
+
+    cuts : samples cut off and samples recorded, of each repeat
+    wavelength : thermal de Broglie wavelength, sigma; None where no mass is known
+    """
+
+    series: Sequence[Series]
+    structure: Structure | None
+    cuts: Sequence[tuple[int, int]]
+    bulk_modulus: Estimate | None
+    wavelength: float | None
+
+    @cached_property
+    def seen(self) -> list[Series]:
+        """The same with some hundred frames in all."""
+        stride = -(-sum(len(each.frames) for each in self.series) // _FRAMES) or 1
+        return [
+            replace(each, frames=each.frames[stride - 1 :: stride], frame_stride=stride * each.frame_stride)
+            for each in self.series
+        ]
+
+    @cached_property
+    def frames(self) -> list[FrameSums] | None:
+        """Of `seen`; None where there are none, or the cutoff leaves no room for a smaller box."""
+        from sampler.errors import BadRequest
+        from sampler.frames import reevaluate
+
+        if not any(len(each.frames) for each in self.seen):
+            return None
+        try:
+            return [reevaluate(each.fluid, each.frames, state=each.state) for each in self.seen]
+        except BadRequest:
+            return None
+
+
+Found = Reading | Sequence[Reading] | None
+Look = Callable[[Samples], Found]
+
+_OF_RUNG: tuple[Look, ...] = ()
+_OF_PAIRS: tuple[Callable[[Sequence[Series], Sequence[Series]], Found], ...] = ()
+_OF_SLOPES: tuple[Callable[[Estimate, Estimate], Found], ...] = ()
+
+
+def of_rung(samples: Samples) -> list[Reading]:
+    """What the checks of one rung read, each as strict as if it stood alone."""
+    return [reading for look in _OF_RUNG for reading in _listed(look(samples))]
+
+
+def of_isochore(isochore: Isochore, series: Mapping[State, Sequence[Series]]) -> Iterator[Check]:
+    """What the checks read that look at the rungs of one density together; series without frames, by temperature."""
+    for state, own, slope in isochore.slopes():
+        for look in _OF_SLOPES:
+            yield from (Check(state, reading) for reading in _listed(look(own, slope)))
+    for colder, warmer in pairwise(series):
+        for both in _OF_PAIRS:
+            found = _listed(both(series[colder], series[warmer]))
+            yield from (Check(colder, reading, warmer) for reading in found)
+
+
+def known(states: Iterable[State], reference: Reference) -> Iterator[Check]:
+    """What is known beforehand of the phase at each state."""
+    found = ((state, stability(state, reference)) for state in states)
+    return (Check(state, reading) for state, reading in found if reading is not None)
+
+
+def judged(checks: Sequence[Check]) -> list[Check]:
+    """The same, where all that rest on a distribution share the false alarms of the study."""
+    alone = threshold(_LEVEL)
+    number = sum(check.reading.threshold == alone for check in checks)
+    together = threshold(min(_LEVEL, _STUDY_LEVEL / max(number, 1)))
+    return [
+        replace(check, reading=replace(check.reading, threshold=together))
+        if check.reading.threshold == alone
+        else check
+        for check in checks
+    ]
+
+
+def marked(findings: Iterable[Finding], checks: Iterable[Check], states: Sequence[State]) -> Iterator[Finding]:
+    """With less trust in what a failed check touches: at its own states, and on the curve up to the rungs beside them.
+
+    states : of all rungs
+    """
+    failed = [(check, _reach(check, states)) for check in checks if not check.reading.passed]
+    for finding in findings:
+        names = dict.fromkeys(check.reading.check for check, reach in failed if _concerns(check, reach, finding))
+        for name in names:
+            finding = finding.doubted(f"{CHECKS[name].doubt} (check {name})", CHECKS[name].trust)
+        yield finding
+
+
+def _reach(check: Check, states: Sequence[State]) -> tuple[float, float]:
+    """Temperatures between which a curve rests on the states of a check."""
+    ladder = sorted(state.temperature for state in states if state.density == check.state.density)
+    if check.warmer is not None:
+        return check.state.temperature, check.warmer.temperature
+    at = ladder.index(check.state.temperature)
+    return ladder[max(at - 1, 0)], ladder[min(at + 1, len(ladder) - 1)]
+
+
+def _concerns(check: Check, reach: tuple[float, float], finding: Finding) -> bool:
+    if finding.estimate is None or finding.property not in CHECKS[check.reading.check].touches:
+        return False
+    between = finding.state.density == check.state.density and reach[0] < finding.state.temperature < reach[1]
+    return between or finding.state in (check.state, check.warmer)
+
+
+def wavelength(state: State, scale: Scale | None) -> float | None:
+    """Thermal de Broglie wavelength, sigma: h / sqrt(2 pi m k_B T); None where no mass is known."""
+    from scipy.constants import Planck
+
+    if scale is None:
+        return None
+    momentum = math.sqrt(2.0 * math.pi * scale.mass * scale.epsilon * state.temperature)
+    return float(Planck / (momentum * scale.sigma))
+
+
+def _listed(found: Found) -> Sequence[Reading]:
+    return () if found is None else (found,) if isinstance(found, Reading) else found
