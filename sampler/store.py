@@ -5,9 +5,10 @@ from __future__ import annotations
 import hashlib
 import json
 import os
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import asdict, dataclass
 from pathlib import Path
+from typing import Any
 
 import h5py
 import numpy as np
@@ -17,7 +18,7 @@ from sampler.errors import DamagedSegment, ForeignDirectory
 from sampler.fluid import Fluid, State
 from sampler.protocol import Protocol
 
-__all__ = ["Chain", "Segment", "read", "set_aside", "write"]
+__all__ = ["Chain", "Segment", "deposit", "read", "retrieve", "set_aside", "write"]
 
 Floats = npt.NDArray[np.float64]
 _ARRAYS = ("samples", "frames", "positions", "velocities")
@@ -76,16 +77,23 @@ class Chain:
 
 def _checksum(arrays: Mapping[str, Floats], facts: Mapping[str, object]) -> str:
     digest = hashlib.sha256(json.dumps(facts, sort_keys=True).encode())
-    for name in _ARRAYS:
-        digest.update(f"{name}{arrays[name].shape}".encode())
-        digest.update(np.ascontiguousarray(arrays[name], dtype="<f8").tobytes())
+    for name, values in arrays.items():
+        digest.update(f"{name}{values.shape}".encode())
+        digest.update(np.ascontiguousarray(values, dtype="<f8").tobytes())
     return digest.hexdigest()
 
 
 def write(path: Path, segment: Segment, identity: Mapping[str, object]) -> None:
-    """Write a segment under a temporary name, force it to disk, then rename. Raises OSError as the system does."""
-    arrays = {name: getattr(segment, name) for name in _ARRAYS}
+    """Write a segment whole or not at all. Raises OSError as the system does."""
     facts = {"identity": dict(identity), "first": segment.first, "last": segment.last, "ledger": segment.ledger}
+    deposit(path, {name: getattr(segment, name) for name in _ARRAYS}, facts)
+
+
+def deposit(path: Path, arrays: Mapping[str, Floats], facts: Mapping[str, object]) -> None:
+    """Write arrays and facts (JSON) under a temporary name with a checksum, force them to disk, then rename.
+
+    Raises OSError as the system does.
+    """
     path.parent.mkdir(parents=True, exist_ok=True)
     temporary = path.with_name(f".{path.name}.{os.getpid()}")
     try:
@@ -111,9 +119,19 @@ def _force_to_disk(path: Path) -> None:
 
 def read(path: Path, identity: Mapping[str, object]) -> Segment:
     """Read a segment back. Raises DamagedSegment if it is not whole, ForeignDirectory if it is of something else."""
+    arrays, facts = retrieve(path, _ARRAYS)
+    _check_identity(path, facts["identity"], dict(identity))
+    return Segment(first=facts["first"], last=facts["last"], ledger=facts["ledger"], **arrays)
+
+
+def retrieve(path: Path, names: Sequence[str] | None = None) -> tuple[dict[str, Floats], dict[str, Any]]:
+    """Arrays and facts as `deposit` has written them. Raises DamagedSegment if they are not whole.
+
+    names : of the arrays, in the order in which they were given; by default in that of the alphabet
+    """
     try:
         with h5py.File(path, "r") as file:
-            arrays = {name: np.asarray(file[name][()], dtype=float) for name in _ARRAYS}
+            arrays = {name: np.asarray(file[name][()], dtype=float) for name in names or sorted(file)}
             facts = json.loads(file.attrs["facts"])
             checksum = file.attrs["checksum"]
         whole = checksum == _checksum(arrays, facts)
@@ -121,8 +139,7 @@ def read(path: Path, identity: Mapping[str, object]) -> Segment:
         raise DamagedSegment(f"{path} cannot be read back ({type(error).__name__})") from error
     if not whole:
         raise DamagedSegment(f"{path} does not match its checksum")
-    _check_identity(path, facts["identity"], dict(identity))
-    return Segment(first=facts["first"], last=facts["last"], ledger=facts["ledger"], **arrays)
+    return arrays, facts
 
 
 def _check_identity(path: Path, found: Mapping[str, object], wanted: Mapping[str, object]) -> None:
