@@ -27,7 +27,7 @@ def test_a_shift_is_seen_and_one_too_small_is_bounded():
     (energy, _) = step_bias(estimates(1, shift=0.1), estimates(2), level=1e-3)
     assert not energy.passed
     assert energy.statistic == pytest.approx(0.1 * 100 / np.sqrt(2), abs=4)
-    assert "shifts u by +0.1" in energy.meaning
+    assert "shifts u by +0.076 +- 0.01" in energy.meaning
     assert "smaller" in energy.meaning
     (energy, pressure) = step_bias(estimates(3), estimates(4), level=1e-3)
     assert energy.passed
