@@ -8,12 +8,19 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
+    from canonry.adoption import adopt
     from canonry.directory import load
     from canonry.job import compare, estimate, run
 
-__all__ = ["compare", "estimate", "load", "run"]
+__all__ = ["adopt", "compare", "estimate", "load", "run"]
 
-_HOMES = {"compare": "canonry.job", "estimate": "canonry.job", "load": "canonry.directory", "run": "canonry.job"}
+_HOMES = {
+    "adopt": "canonry.adoption",
+    "compare": "canonry.job",
+    "estimate": "canonry.job",
+    "load": "canonry.directory",
+    "run": "canonry.job",
+}
 
 
 def __getattr__(name: str) -> object:

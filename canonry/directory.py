@@ -6,11 +6,12 @@ import os
 from dataclasses import asdict
 from pathlib import Path
 
+from canonry.adopted import is_adopted
 from canonry.errors import UserError
 from canonry.study import Study
 from canonry.study import load as load_file
 
-__all__ = ["STUDY", "claim", "continues", "load", "locate", "stored", "write"]
+__all__ = ["STUDY", "claim", "continues", "load", "locate", "must_sample", "stored", "write"]
 
 STUDY = "study.toml"
 
@@ -47,11 +48,21 @@ def stored(directory: Path) -> Study:
     return load_file(file)
 
 
+def must_sample(study: Study, directory: Path) -> None:
+    """Raises UserError if the samples of a study, or those in the directory, were adopted."""
+    if study.adopted is not None or is_adopted(directory):
+        raise UserError(
+            f"{directory}: its samples were adopted, so there is nothing to sample here; what is accepted is `canonry "
+            "estimate`, `canonry compare` and `canonry report`"
+        )
+
+
 def claim(study: Study, directory: Path) -> None:
     """Make a directory that of a study: create it, or see that what it holds may stay, and write its study.toml.
 
     Raises UserError if the directory belongs to another study, holds other things or cannot be written.
     """
+    must_sample(study, directory)
     try:
         directory.mkdir(parents=True, exist_ok=True)
         _check_owner(study, directory)

@@ -39,17 +39,23 @@ def book(directory: Path, *, started: datetime, seconds: float, particle_steps: 
 
 def provenance(study: Study, directory: Path) -> dict[str, str]:
     """Label to text, in the order in which a report shows them."""
-    sessions = _sessions(directory)
-    seconds = sum(float(session["seconds"]) for session in sessions)
     return {
         "canonry": f"canonry {_version('canonry')}",
         "python": platform.python_version(),
         **{name: _version(name) for name in _LIBRARIES},
+        **(_sampled(study, directory) if study.adopted is None else {"samples": f"adopted, {study.adopted.source}"}),
+        "estimated": datetime.now(UTC).strftime("%Y-%m-%d %H:%M UTC"),
+    }
+
+
+def _sampled(study: Study, directory: Path) -> dict[str, str]:
+    sessions = _sessions(directory)
+    seconds = sum(float(session["seconds"]) for session in sessions)
+    return {
         "seed": str(study.sampling.seed),
         "machine": "; ".join(dict.fromkeys(session["machine"] for session in sessions)) or _machine(),
         "sampled": _dates(sessions),
         "wall time of sampling": f"{duration(seconds)} in {len(sessions)} session{'s' if len(sessions) != 1 else ''}",
-        "estimated": datetime.now(UTC).strftime("%Y-%m-%d %H:%M UTC"),
     }
 
 

@@ -96,8 +96,11 @@ def sample(
 
 def recorded(study: Study, directory: Path, state: State) -> list[Series]:
     """The repeats of one rung as far as they are there, none longer than the study asks; empty ones left out."""
+    from canonry.adopted import load as load_adopted
     from sampler.ladder import chains, load
 
+    if study.adopted is not None:
+        return load_adopted(study, directory, state)
     series = [load(chain) for chain in chains(directory, study.fluid, [state], study.sampling)]
     return [each for each in series if len(each)]
 

@@ -57,6 +57,7 @@ UNITS = PROPERTIES | {
     "temperature": Unit("epsilon/k_B", "K", energy=1, boltzmann=-1),
     "density": Unit("sigma^-3", "kg/m3", length=-3, mass=1),
     "length": Unit("sigma", "nm", length=1, prefix=1e-9),
+    "volume": Unit("sigma^3", "nm3", length=3, prefix=1e-27),
     "time": Unit("sigma (m/epsilon)^(1/2)", "ps", energy=-0.5, length=1, mass=0.5, prefix=1e-12),
     "friction": Unit("(epsilon/m)^(1/2)/sigma", "1/ps", energy=0.5, length=-1, mass=-0.5, prefix=1e12),
 }

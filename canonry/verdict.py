@@ -180,6 +180,8 @@ def against(name: str, fluid: Fluid) -> Reference:
 
 
 def _check_model(reference: Reference, fluid: Fluid) -> None:
+    if not fluid.has_pairs:
+        raise UserError(f"--against {reference.name}: no reference describes a fluid that was sampled elsewhere")
     if reference.same_model(fluid.truncation, fluid.cutoff):
         return
     described = reference.fluid

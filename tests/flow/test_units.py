@@ -18,6 +18,7 @@ ARGON = Scale(epsilon=119.8 * Boltzmann, sigma=3.405e-10, mass=39.948 * atomic_m
         ("temperature", 119.8),
         ("density", 1680.32),
         ("length", 0.3405),
+        ("volume", 0.0394777),
         ("time", 2.15635),
         ("friction", 1 / 2.15635),
         ("residual_energy", 0.996072),
