@@ -73,7 +73,7 @@ def gamma_like(normals: Floats, shape: float) -> Floats:
 
 
 def samples_of(rng: np.random.Generator, state: State, samples: int) -> Floats:
-    """What a kernel records, (samples, 12): the energy E has the density E^(C - 1) exp(-E/T) above its ground."""
+    """What a kernel records, (samples, 14): the energy E has the density E^(C - 1) exp(-E/T) above its ground."""
     particles, temperature = state.particles, state.temperature
     normals = sum(correlated(rng, samples, each) for each in MEMORIES) / math.sqrt(len(MEMORIES))
     energy = temperature * gamma_like(np.asarray(normals), HEAT_CAPACITY * particles)
@@ -86,7 +86,7 @@ def samples_of(rng: np.random.Generator, state: State, samples: int) -> Floats:
     pairs = np.full(samples, 26.0 * particles)
     third, momentum = kinetic[:, None] / 3.0, rng.standard_normal((samples, 3))
     return np.column_stack(
-        [twelfth, sixth, pairs, 2.0 * pairs, ledger, third, third, third, momentum, np.zeros(samples)]
+        [twelfth, sixth, pairs, 2.0 * pairs, kinetic, kinetic, ledger, third, third, third, momentum, np.zeros(samples)]
     )
 
 

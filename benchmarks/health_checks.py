@@ -117,7 +117,7 @@ def rescaled(state: State, seed: int, effort: float) -> list[Series]:
         )  # fmt: skip
         velocity *= np.sqrt(3.0 * state.particles * state.temperature / (velocity**2).sum())
         if step >= 3000 and (step + 1) % 10 == 0:
-            sums[0, 5:8] = 0.5 * (velocity**2).sum(axis=0)
+            sums[0, 7:10] = 0.5 * (velocity**2).sum(axis=0)
             samples.append(sums[0].copy())
             if (step + 1) % 500 == 0:
                 frames.append(where.copy())

@@ -48,7 +48,7 @@ class Trajectory:
         )  # fmt: skip
         self.step += 0 if copy else n_steps
         totals, n = FLUID.totals(samples, self.state), self.state.particles
-        conserved = totals.sampled_energy + samples[:, 4:8].sum(axis=1)  # heat and kinetic energy
+        conserved = totals.sampled_energy + samples[:, 6:10].sum(axis=1)  # heat and kinetic energy
         return np.array([totals.energy / n, totals.virial / self.state.volume, conserved / n])
 
 

@@ -11,7 +11,9 @@ from sampler.groups import BLOCK, FINE, LANES, Near, fix, gather, group, limits,
 from sampler.pairs import curvature, pair_function, strength, terms
 from sampler.vector import both, broad, later_lanes, load, real, select, smaller, splat, store, total
 
-__all__ = ["evaluate", "laplacian", "pair_forces", "scaled"]
+__all__ = ["evaluate", "evaluate_with_laplacian", "pair_forces", "scaled"]
+
+Floats = npt.NDArray[np.float64]
 
 
 @piece
@@ -41,14 +43,15 @@ def pair_forces(pair, ticks, limit, tick, labels, near, force, sums):  # type: i
 
     ticks : slot layout, whole numbers of `tick` (sigma); limit : as `limits` gives it
     force : slot layout, in epsilon/sigma per tick
-    sums : (4,), of the first two `terms`, of pairs inside the cutoff, of the third; None or empty to leave them out
+    sums : (5,), of the first two `terms`, of pairs inside the cutoff, of the third, and the sum over particles of the
+        Laplacian of U; None or empty to leave them out
     """
     number = force.dtype.type
     zero, one = splat(number(0.0)), splat(number(1.0))
     for at in range(0, force.size, LANES):
         store(force, at, zero)
     scale = tick * tick
-    first, second, third, pairs = zero, zero, zero, zero
+    first, second, third, pairs, bend = zero, zero, zero, zero, zero
     for slot in range(labels.size):
         if labels[slot] < 0:
             continue
@@ -68,6 +71,7 @@ def pair_forces(pair, ticks, limit, tick, labels, near, force, sums):  # type: i
                 a, b, c = terms(pair, square)
                 first, second = first + select(inside, a, zero), second + select(inside, b, zero)
                 third, pairs = third + select(inside, c, zero), pairs + select(inside, one, zero)
+                bend = bend + select(inside, curvature(pair, square), zero)
             other, inside = coming, next_inside
             dx, dy, dz, square = next_dx, next_dy, next_dz, next_square
         force[at] += total(px)
@@ -75,6 +79,7 @@ def pair_forces(pair, ticks, limit, tick, labels, near, force, sums):  # type: i
         force[at + 2 * LANES] += total(pz)
     if sums is not None and sums.size > 0:
         sums[0], sums[1], sums[2], sums[3] = total(first), total(second), total(pairs), total(third)
+        sums[4] = 2.0 * total(bend)
 
 
 @kernel
@@ -86,67 +91,38 @@ def scaled(values, factor, out):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _pairs_within(where, box, cutoff):  # type: ignore[no-untyped-def]
-    """Groups of positions inside [0, box), the positions as whole numbers, the near list and the limits."""
-    groups = group(where, box, cutoff)
-    size = groups.labels.size
-    fine, coarse = np.empty(3 * size, np.int64), np.empty(3 * size, np.int32)
-    fix(scatter(where, groups.labels), box, fine, coarse)
-    near = Near(np.zeros(size + 1, np.int64), np.empty(LANES * groups.start[-1] + 1, np.int32))
-    narrow(coarse, groups, box, cutoff, near)
-    return groups.labels, fine, near, limits(groups.labels, cutoff * cutoff, np.empty(3 * size))
-
-
-@kernel
 def _evaluate(pair, where, box):  # type: ignore[no-untyped-def]
-    labels, fine, near, limit = _pairs_within(where, box, pair.cutoff)
-    force, sums, out = np.empty(fine.size), np.empty(4), np.empty_like(where)
+    groups = group(where, box, pair.cutoff)
+    size, labels = groups.labels.size, groups.labels
+    fine, coarse = np.empty(3 * size, np.int64), np.empty(3 * size, np.int32)
+    fix(scatter(where, labels), box, fine, coarse)
+    near = Near(np.zeros(size + 1, np.int64), np.empty(LANES * groups.start[-1] + 1, np.int32))
+    narrow(coarse, groups, box, pair.cutoff, near)
+    limit = limits(labels, pair.cutoff * pair.cutoff, np.empty(3 * size))
+    force, sums, out = np.empty(3 * size), np.empty(5), np.empty_like(where)
     pair_forces(pair, fine, limit, box / FINE, labels, near, force, sums)
     scaled(force, box / FINE, force)
     gather(force, labels, out)
     return out, sums
 
 
-@kernel
-def _laplacian(pair, where, box):  # type: ignore[no-untyped-def]
-    labels, ticks, near, limit = _pairs_within(where, box, pair.cutoff)
-    scale, zero = (box / FINE) * (box / FINE), splat(0.0)
-    found = zero
-    for slot in range(labels.size):
-        if labels[slot] >= 0:
-            own = BLOCK * (slot // LANES)
-            at = own + slot % LANES
-            x, y, z = splat(ticks[at]), splat(ticks[at + LANES]), splat(ticks[at + 2 * LANES])
-            _, _, _, square, inside = _apart(ticks, limit, scale, x, y, z, own)
-            found = found + select(both(inside, later_lanes(slot % LANES)), curvature(pair, square), zero)
-            for k in range(near.start[slot], near.start[slot + 1]):
-                _, _, _, square, inside = _apart(ticks, limit, scale, x, y, z, near.offsets[k])
-                found = found + select(inside, curvature(pair, square), zero)
-    return 2.0 * total(found)
-
-
-def laplacian(fluid: Fluid, positions: npt.NDArray[np.float64], *, box: float) -> float:
-    """Sum over particles of the Laplacian of U, epsilon/sigma^2, of the pairs inside the cutoff.
-
-    positions : (n, 3), sigma, anywhere; what the jump of the force at the cutoff adds is left out
-    """
-    return float(_laplacian(pair_function(fluid), _wrapped(positions, box), box))
-
-
-def evaluate(
-    fluid: Fluid, positions: npt.NDArray[np.float64], *, box: float
-) -> tuple[npt.NDArray[np.float64], npt.NDArray[np.float64]]:
+def evaluate(fluid: Fluid, positions: Floats, *, box: float) -> tuple[Floats, Floats]:
     """Forces (n, 3), epsilon/sigma, and the bare sums (4,) that `Fluid.totals` reads, of one configuration.
 
     positions : (n, 3), sigma, anywhere; box : edge of the periodic cube
     Raises BadRequest if the cutoff is beyond half the box.
     """
+    forces, sums = evaluate_with_laplacian(fluid, positions, box=box)
+    return forces, sums[:4]
+
+
+def evaluate_with_laplacian(fluid: Fluid, positions: Floats, *, box: float) -> tuple[Floats, Floats]:
+    """The same with a fifth number: the sum over particles of the Laplacian of U, epsilon/sigma^2.
+
+    What the jump of the force at the cutoff adds to it is left out.
+    """
     fluid.check_box(box)
-    forces, sums = _evaluate(pair_function(fluid), _wrapped(positions, box), box)
-    return forces, sums
-
-
-def _wrapped(positions: npt.NDArray[np.float64], box: float) -> npt.NDArray[np.float64]:
     where = np.mod(positions, box)
     where[where >= box] = 0.0
-    return where
+    forces, sums = _evaluate(pair_function(fluid), where, box)
+    return forces, sums

@@ -6,7 +6,7 @@ import numpy as np
 import numpy.typing as npt
 
 from sampler.fluid import Fluid, State
-from sampler.forces import evaluate, laplacian
+from sampler.forces import evaluate, evaluate_with_laplacian
 from sampler.series import FrameSums
 
 __all__ = ["reevaluate"]
@@ -16,8 +16,9 @@ Floats = npt.NDArray[np.float64]
 
 def reevaluate(fluid: Fluid, frames: Floats, *, state: State, change: float = 1e-4) -> FrameSums:
     """Sums of frames, (m, particles, 3), of a state. Raises BadRequest if the cutoff is beyond half the smaller box."""
-    forces = np.array([(evaluate(fluid, frame, box=state.box)[0] ** 2).sum() for frame in frames])
-    curvatures = np.array([laplacian(fluid, frame, box=state.box) for frame in frames])
+    found = [evaluate_with_laplacian(fluid, frame, box=state.box) for frame in frames]
+    forces = np.array([(force**2).sum() for force, _ in found])
+    curvatures = np.array([sums[4] for _, sums in found])
     energy, stretched, squeezed = (_energies(fluid, frames, state, 1.0 + part * change) for part in (0.0, 1.0, -1.0))
     return FrameSums(forces, curvatures, energy, stretched, squeezed, change)
 

@@ -150,7 +150,6 @@ def _short_tabulated_strength(pair, square):  # type: ignore[no-untyped-def]
     return gather(pair.short_strength, row) + beyond * gather(pair.short_strength, row + 1)
 
 
-@piece
 def _tabulated_terms(pair, square):  # type: ignore[no-untyped-def]
     row, t = _row(pair, square)
     a, b = gather(pair.energy, row), gather(pair.energy, row + 1)
@@ -176,8 +175,11 @@ def _shifted_curvature(pair, square):  # type: ignore[no-untyped-def]
     return (528.0 * sixth - 120.0) * sixth * inverse - 2.0 * pair.slope * square_root(inverse)
 
 
+_terms_of_a_table = piece(_tabulated_terms)
+
+
 def _tabulated_curvature(pair, square):  # type: ignore[no-untyped-def]
-    _, virial, hypervirial = _tabulated_terms(pair, square)
+    _, virial, hypervirial = _terms_of_a_table(pair, square)
     return (virial + hypervirial) * reciprocal(square)
 
 

@@ -122,5 +122,7 @@ def assemble(chain: Chain, segments: Iterable[Segment]) -> Series:
         frame_stride=protocol.frame_every // protocol.record_every,
         kinetic_parts=kinetic,
         momentum=momentum,
+        force_square=samples[:, COLUMNS.index("force_square")],
+        laplacian=samples[:, COLUMNS.index("laplacian")],
         rejected=samples[:, COLUMNS.index("rejected")] if protocol.scheme == "metropolised" else None,
     )

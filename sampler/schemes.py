@@ -25,7 +25,7 @@ from sampler.vector import load, splat, store, total
 __all__ = ["COLUMNS", "DIVERGED", "DONE", "STOPPED", "Steps", "propagate", "substeps"]
 
 COLUMNS = (
-    *("s12", "s6", "pairs", "distances", "ledger"),
+    *("s12", "s6", "pairs", "distances", "laplacian", "force_square", "ledger"),
     *("kinetic_x", "kinetic_y", "kinetic_z", "momentum_x", "momentum_y", "momentum_z"),
     "rejected",
 )
@@ -120,12 +120,13 @@ def _pass(slots, scheme, first, past, key, step, noise):  # type: ignore[no-unty
 
 
 @kernel
-def _kinetic(velocity):  # type: ignore[no-untyped-def]
-    double = splat(0.0)
-    for at in range(0, velocity.size, LANES):
-        v = load(velocity, at)
-        double = double + v * v
-    return 0.5 * total(double)
+def _square(values):  # type: ignore[no-untyped-def]
+    """Sum of squares."""
+    found = splat(0.0)
+    for at in range(0, values.size, LANES):
+        v = load(values, at)
+        found = found + v * v
+    return total(found)
 
 
 @kernel
@@ -170,7 +171,7 @@ def propagate(  # type: ignore[no-untyped-def]
     where, velocity : (n, 3), by label
     short : True for forces in float32 between samples
     every, frame_every : sample at steps that these divide
-    samples : (n_steps // every, 12), COLUMNS
+    samples : (n_steps // every, 14), COLUMNS
     frames : (n_steps // frame_every or 0, n, 3), wrapped positions
     ledger : (1,), heat that the bath has taken so far
     stop : (1,), uint8; set by another thread to leave early
@@ -178,7 +179,7 @@ def propagate(  # type: ignore[no-untyped-def]
     forced = 0  # substeps up to the last drift, after which the forces are new
     for s in range(scheme.letters.size):
         forced = s + 1 if scheme.letters[s] == _A else forced
-    sums, nothing, noise = np.empty(4), np.empty(0), np.empty((3, _STRETCH))
+    sums, nothing, noise = np.empty(5), np.empty(0), np.empty((3, _STRETCH))
     n_samples, n_frames = 0, 0
     slots = slots_of(where, velocity, box, pair.cutoff, skins)
     exact_forces(pair, slots, box, sums)
@@ -189,7 +190,7 @@ def propagate(  # type: ignore[no-untyped-def]
         ledger[0] += _pass(slots, scheme, 0, verlet, key, step, noise)
         if scheme.tested:
             label_order(slots, kept, kept_velocity)
-            before = _kinetic(slots.speed) + _weighed(sums, weights)
+            before = 0.5 * _square(slots.speed) + _weighed(sums, weights)
         ledger[0] += _pass(slots, scheme, verlet, forced, key, step, noise)
         moved = 2.0 * farthest(slots.position, slots.narrowed_at)
         if not moved <= box:
@@ -202,17 +203,18 @@ def propagate(  # type: ignore[no-untyped-def]
             exact_forces(pair, slots, box, sums if recorded or scheme.tested else nothing)
         _pass(slots, scheme, forced, forced + verlet, key, step, noise)
         if scheme.tested:
-            change = _kinetic(slots.speed) + _weighed(sums, weights) - before
+            change = 0.5 * _square(slots.speed) + _weighed(sums, weights) - before
             if not uniform(key[0], key[1], np.uint64(step), np.uint64(forced)) < math.exp(-change / scheme.temperature):
                 slots = _undo(pair, kept, kept_velocity, box, skins, sums)
                 rejected += 1
         ledger[0] += _pass(slots, scheme, forced + verlet, scheme.letters.size, key, step, noise)
         if recorded:
-            for c in range(4):
+            for c in range(5):
                 samples[n_samples, c] = sums[c]
-            samples[n_samples, 4] = ledger[0]
-            _motion(slots.speed, samples[n_samples, 5:])
-            samples[n_samples, 11] = rejected
+            samples[n_samples, 5] = _square(slots.force)
+            samples[n_samples, 6] = ledger[0]
+            _motion(slots.speed, samples[n_samples, 7:])
+            samples[n_samples, 13] = rejected
             rejected = 0
             n_samples += 1
         if step % frame_every == 0 and n_frames < frames.shape[0]:

@@ -16,7 +16,7 @@ __all__ = ["FrameSums", "Series"]
 Floats = npt.NDArray[np.float64]
 _COLUMNS = (
     *("energy", "sampled_energy", "virial", "hypervirial", "kinetic", "ledger"),
-    *("kinetic_parts", "momentum", "rejected"),
+    *("kinetic_parts", "momentum", "force_square", "laplacian", "rejected"),
 )
 
 
@@ -33,6 +33,8 @@ class Series:
     frames : (m, particles, 3), positions inside [0, box), of every frame_stride-th sample; see `frame_samples`
     frame_offset : samples missing of the stride that the first frame ends, less than frame_stride
     kinetic_parts : (n, 3), kinetic energy along x, y and z; momentum : (n, 3), of all particles; None if not recorded
+    force_square : (n,), sum over particles of the squared force; laplacian : (n,), of the Laplacian of U, without what
+        a jump of the force at the cutoff adds; None if not recorded
     rejected : (n,), steps since the sample before that a Metropolis test undid; None where there is no test
     interval : time between samples
     freedom : kinetic degrees of freedom where they are not those of our own particles, see `kinetic_freedom`
@@ -55,6 +57,8 @@ class Series:
     frame_offset: int = 0
     kinetic_parts: Floats | None = None
     momentum: Floats | None = None
+    force_square: Floats | None = None
+    laplacian: Floats | None = None
     rejected: Floats | None = None
     freedom: int | None = None
 

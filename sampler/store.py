@@ -29,7 +29,7 @@ class Segment:
     """Consecutive steps of one repeat.
 
     first, last : the steps are first + 1 to last
-    samples : (n_samples, 12), columns of `sampler.schemes.COLUMNS`
+    samples : (n_samples, 14), columns of `sampler.schemes.COLUMNS`
     frames : (n_frames, particles, 3), positions inside the box
     positions, velocities : (particles, 3), at step `last`
     ledger : kinetic energy that the bath has taken up to step `last`

@@ -34,7 +34,7 @@ def in_slots(pair, positions, box, *, short):
     """Forces as the loop over steps has them, with lists for particles on the move, and the sums of a sample."""
     velocity = np.random.default_rng(0).normal(size=positions.shape)
     slots = slots_of(np.mod(positions, box), velocity, box, pair.cutoff, Skins(0.2, 1.0))
-    forces, sums = np.empty_like(positions), np.empty(0 if short else 4)
+    forces, sums = np.empty_like(positions), np.empty(0 if short else 5)
     if short:
         quick_forces(pair, slots, box)
     else:

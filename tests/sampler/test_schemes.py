@@ -42,8 +42,8 @@ class Trajectory:
         self.step += n_steps
         totals = self.fluid.totals(samples, self.state)
         self.sums = samples[:, :4]
-        self.heat, self.parts, self.momentum = samples[:, 4], samples[:, 5:8], samples[:, 8:11]
-        self.kinetic, self.rejected = self.parts.sum(axis=1), samples[:, 11]
+        self.heat, self.parts, self.momentum = samples[:, 6], samples[:, 7:10], samples[:, 10:13]
+        self.kinetic, self.rejected = self.parts.sum(axis=1), samples[:, 13]
         self.conserved = (self.kinetic + totals.sampled_energy + self.heat) / self.state.particles
         self.frames = frames
         return self
@@ -244,7 +244,7 @@ def test_groups_are_made_anew_when_particles_of_two_that_were_apart_meet():
         for label, direction in ((4, 1), (8, -1)):
             slots.position[place[label]] = where[label, 0] + direction * moved
         slots = renewed(slots, np.empty_like(where), np.empty_like(where), box, fluid.cutoff, skins)
-        sums, now = np.empty(4), np.empty_like(where)
+        sums, now = np.empty(5), np.empty_like(where)
         exact_forces(pair_function(fluid), slots, box, sums)
         label_order(slots, now, np.empty_like(where))
         _, expected = evaluate(fluid, now, box=box)
