@@ -17,8 +17,20 @@ from canonry.findings import Check, Finding
 from canonry.isochore import Isochore
 from canonry.risks import stability
 from canonry.units import PROPERTIES, Scale
-from estimators.estimate import Estimate
+from estimators.estimate import Chain, Estimate
+from estimators.health.box import box
+from estimators.health.enough import enough
+from estimators.health.equal_shares import equal_shares
+from estimators.health.force_temperature import force_temperature
+from estimators.health.heat_routes import heat_routes
+from estimators.health.kinetic_law import kinetic_law
+from estimators.health.ledger import ledger
+from estimators.health.one_phase import one_phase
+from estimators.health.pair_slope import pair_slope
+from estimators.health.quantum import quantum
 from estimators.health.reading import Reading, threshold
+from estimators.health.settled import settled
+from estimators.health.virial_routes import virial_routes
 from estimators.structure import Structure
 from sampler.fluid import State
 from sampler.series import FrameSums, Series
@@ -26,11 +38,11 @@ from sampler.series import FrameSums, Series
 if TYPE_CHECKING:
     from reference import Reference
 
-__all__ = ["CHECKS", "Kind", "Samples", "judged", "known", "marked", "of_isochore", "of_rung", "wavelength"]
+__all__ = ["CHECKS", "LEVEL", "Kind", "Samples", "judged", "known", "marked", "of_isochore", "of_rung", "wavelength"]
 
-_LEVEL = 0.01  # of a check that stands alone
+LEVEL = 0.01  # of a check that stands alone
 _STUDY_LEVEL = 0.05  # of all statistical readings of a study together
-_FRAMES = 200  # of a rung that are evaluated again, at most: forces of so many cost a few hundred steps
+_FRAMES = 120  # of a rung that are evaluated again, at most: of 300 that is 2 % of the time that sampling them took
 
 _EVERY = tuple(PROPERTIES)
 _HEAT = ("residual_heat_capacity", "heat_capacity", "isobaric_heat_capacity", "sound_speed", "grueneisen")
@@ -150,15 +162,15 @@ class Samples:
         ]
 
     @cached_property
-    def frames(self) -> list[FrameSums] | None:
-        """Of `seen`; None where there are none, or the cutoff leaves no room for a smaller box."""
+    def sums(self) -> dict[Chain, FrameSums] | None:
+        """Of the frames of `seen`; None where there are none, or the cutoff leaves no room for a smaller box."""
         from sampler.errors import BadRequest
         from sampler.frames import reevaluate
 
         if not any(len(each.frames) for each in self.seen):
             return None
         try:
-            return [reevaluate(each.fluid, each.frames, state=each.state) for each in self.seen]
+            return {each.chain: reevaluate(each.fluid, each.frames, state=each.state) for each in self.seen}
         except BadRequest:
             return None
 
@@ -166,9 +178,25 @@ class Samples:
 Found = Reading | Sequence[Reading] | None
 Look = Callable[[Samples], Found]
 
-_OF_RUNG: tuple[Look, ...] = ()
-_OF_PAIRS: tuple[Callable[[Sequence[Series], Sequence[Series]], Found], ...] = ()
-_OF_SLOPES: tuple[Callable[[Estimate, Estimate], Found], ...] = ()
+_OF_RUNG: tuple[Look, ...] = (
+    lambda of: ledger(of.series, level=LEVEL),
+    lambda of: kinetic_law(of.series, level=LEVEL),
+    lambda of: equal_shares(of.series, level=LEVEL),
+    lambda of: of.sums and force_temperature(of.seen, of.sums, level=LEVEL),
+    lambda of: settled(of.series, cut=of.cuts, level=LEVEL),
+    lambda of: enough(of.series, level=LEVEL),
+    lambda of: one_phase(of.seen, bulk_modulus=of.bulk_modulus, level=LEVEL),
+    lambda of: box(of.series, of.structure, level=LEVEL),
+    lambda of: of.sums and virial_routes(of.seen, None, of.sums, level=LEVEL),
+    lambda of: virial_routes(of.series, of.structure, None, level=LEVEL),
+    lambda of: of.sums and of.wavelength and quantum(of.seen, of.sums, wavelength=of.wavelength),
+)
+_OF_SLOPES: tuple[Callable[[Estimate, Estimate], Found], ...] = (
+    lambda own, slope: heat_routes(own, slope, level=LEVEL),
+)
+_OF_PAIRS: tuple[Callable[[Sequence[Series], Sequence[Series]], Found], ...] = (
+    lambda colder, warmer: pair_slope(colder, warmer, level=LEVEL),
+)
 
 
 def of_rung(samples: Samples) -> list[Reading]:
@@ -195,9 +223,9 @@ def known(states: Iterable[State], reference: Reference) -> Iterator[Check]:
 
 def judged(checks: Sequence[Check]) -> list[Check]:
     """The same, where all that rest on a distribution share the false alarms of the study."""
-    alone = threshold(_LEVEL)
+    alone = threshold(LEVEL)
     number = sum(check.reading.threshold == alone for check in checks)
-    together = threshold(min(_LEVEL, _STUDY_LEVEL / max(number, 1)))
+    together = threshold(min(LEVEL, _STUDY_LEVEL / max(number, 1)))
     return [
         replace(check, reading=replace(check.reading, threshold=together))
         if check.reading.threshold == alone

@@ -21,12 +21,12 @@ __all__ = ["doubt", "guide", "risks", "stability"]
 
 _FREEZING = "M. A. van der Hoef, J. Chem. Phys. 113, 8142 (2000)"
 _MIXED = (
-    "The density is a factor {ratio:.3g} inside the nearer of those of coexisting vapour and liquid ({name}); above "
-    "one the sample is no stable bulk phase, and densities outside that gap are what to sample."
+    "the density is a factor {ratio:.3g} inside the nearer of those of coexisting vapour and liquid ({name}); above "
+    "one the sample is no stable bulk phase, and densities outside that gap are what to sample"
 )
 _FROZEN = (
-    "The density is {ratio:.3g} times that from which the liquid freezes (" + _FREEZING + "); above one the sample may "
-    "be an undercooled liquid, or crystallise, and a lower density or a higher temperature is what to sample."
+    "the density is {ratio:.3g} times that from which the liquid freezes (" + _FREEZING + "); above one the sample may "
+    "be an undercooled liquid, or crystallise, and a lower density or a higher temperature is what to sample"
 )
 _LIQUID = 0.5  # sigma^-3
 _CUTOFFS = (5.0, 3.0)  # sigma, below and above that density
@@ -62,6 +62,8 @@ def stability(state: State, reference: Reference) -> Reading | None:
 
 def risks(study: Study, border: Border) -> list[str]:
     """One sentence for each density: two phases, freezing, a cutoff too short for its correction."""
+    if not study.fluid.has_pairs:
+        return []
     reference = guide(study.fluid)
     phases = (_phases(states, reference, border) for states in study.isochores.values())
     return [*chain.from_iterable(phases), *_cutoffs(study, border)]

@@ -94,8 +94,9 @@ def closing_text(directory: Path) -> str:
     Then every health check that failed, with the sentence of its worst reading.
     """
     headlines = [row for row in _rows_of(directory, "properties") if row["headline"] == "True"]
-    known = {row["property"] for row in headlines}
-    names = ["heat_capacity" if "heat_capacity" in known else "residual_heat_capacity", "pressure"]
+    known = list(dict.fromkeys(row["property"] for row in headlines))
+    wanted = ["heat_capacity" if "heat_capacity" in known else "residual_heat_capacity", "pressure"]
+    names = [name for name in wanted if name in known] or known[:2]
     values = [row for row in headlines if row["property"] in names]
     verdicts = _rows_of(directory, "verdict")
     references = list(dict.fromkeys(row["reference"] for row in verdicts))
@@ -157,7 +158,7 @@ def _health_text(readings: Sequence[Row], units: Row) -> str:
         at = f"T = {plain(temperature)} {unit_text(units['temperature_unit'])}"
         at += f", density {plain(density)} {unit_text(units['density_unit'])}"
         others = f" and {more} more state{'s' if more > 1 else ''}" if more else ""
-        lines.append(wrapped(f"Failed check: {each.check} at {at}{others}. {each.meaning}"))
+        lines.append(wrapped(f"Failed check: {each.check} at {at}{others}: {each.meaning}."))
     return "\n".join(lines)
 
 

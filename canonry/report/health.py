@@ -17,7 +17,7 @@ if TYPE_CHECKING:
 
 __all__ = ["checked", "fared", "told"]
 
-_NAMED = 3  # temperatures of a cell
+_NAMED, _DIGITS = 3, 5  # temperatures of a cell
 
 
 def checked(results: Results) -> str:
@@ -37,7 +37,9 @@ def checked(results: Results) -> str:
 
 def told(results: Results) -> list[str]:
     """Every check that failed, worst first: where, and the sentence of its worst reading."""
-    return [f"{each.check} at {_where(results, each)}: {each.meaning}" for each in _failures(results)]
+    return [
+        f"{each.check} at {_where(results, each)}: {each.meaning.replace('+-', '±')}." for each in _failures(results)
+    ]
 
 
 def fared(results: Results, sets: Sequence[Results]) -> Iterator[list[str]]:
@@ -57,14 +59,14 @@ def _in_words(readings: pd.DataFrame) -> str:
     states = readings.groupby(["density", "temperature"], as_index=False).agg(passed=("passed", "all"))
     failed = sorted(states["temperature"][~states["passed"]])
     if states.empty:
-        return "– not applicable"
+        return "– nothing to check"
     if not failed:
-        return f"✓ passed at all {len(states)}" if len(states) > 1 else "✓ passed"
+        return f"✓ all {len(states)} pass" if len(states) > 1 else "✓ passes"
     if len(states) == 1:
-        return "✗ failed"
-    shown = [plain(temperature) for temperature in dict.fromkeys(failed)]
+        return "✗ fails"
+    shown = [plain(temperature, _DIGITS) for temperature in dict.fromkeys(failed)]
     where = ", ".join(shown) if len(shown) <= _NAMED else f"{shown[0]} to {shown[-1]}"
-    return f"✗ failed at {len(failed)} of {len(states)}: T = {where}"
+    return f"✗ {len(failed)} of {len(states)} fail: T = {where}"
 
 
 def _where(results: Results, failure: Failure) -> str:

@@ -108,7 +108,8 @@ def _set(number: int, where: str, results: Results) -> Iterator[str]:
     yield tables.values(results, with_density=several)
     yield from _notes(results)
     if isochore:
-        names = [words.heat_capacity_name(results), "pressure", "residual_energy"]
+        known = set(results.properties["property"])
+        names = [name for name in (words.heat_capacity_name(results), "pressure", "residual_energy") if name in known]
         figures = [plots.curves(results, where, name) for name in names]
         figures += [plots.deviations(results, where, names)] if len(results.verdict) else []
         yield _plots(figures)
@@ -138,7 +139,8 @@ def _health(results: Results, sets: list[tuple[str, Results]]) -> Iterator[str]:
         yield _list(failed)
     if len(results.health):
         yield f'<div class="health">{tables.checks(results, sets)}</div>'
-    yield f'<p class="fine">{escape(_HEALTH)}</p></section>'
+    reduced = " Figures within those sentences are in reduced units." if results.units == "SI" else ""
+    yield f'<p class="fine">{escape(_HEALTH + reduced)}</p></section>'
 
 
 def _caveats(results: Results) -> Iterator[str]:
