@@ -16,6 +16,7 @@ __all__ = ["caveats"]
 def caveats(study: Study, findings: Findings, border: Border) -> list[str]:
     """The sentences, in the units of the border."""
     return [
+        *(study.adopted.notes if study.adopted else ()),
         *_unfinished(findings, border),
         *risks(study, border),
         *_measured_temperatures(findings),

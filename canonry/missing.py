@@ -47,10 +47,11 @@ def _lacking(study: Study, state: State, series: Sequence[Series]) -> Iterator[t
     fluid = study.fluid
     framed = any(len(each.frames) for each in series)
     needs: dict[str, Any] = dict(NEEDS)
-    needs["heat_capacity"] = NEEDS["residual_heat_capacity"]
+    flexible = all(not each.has("energy") and each.freedom is not None for each in series)
+    needs["heat_capacity"] = NEEDS["heat_capacity" if flexible else "residual_heat_capacity"]
     for name, columns in needs.items():
         lacking = [_GIVEN_BY[column] for column in columns if not all(each.has(column) for each in series)]
-        if name == "heat_capacity" and study.ideal_heat_capacity is None:
+        if name == "heat_capacity" and study.ideal_heat_capacity is None and not flexible:
             lacking.append("fluid.ideal_heat_capacity")
         if name == "bulk_modulus" and fluid.has_pairs and fluid.surface_hypervirial(state.density) and not framed:
             lacking.append("frames")

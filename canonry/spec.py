@@ -217,7 +217,9 @@ def _rung(layers: _Layers, state: State, study: Study, home: Path) -> Rung:
     frames = _frames(layers, study.scale, home)
     quantities = {COLUMNS[name] for name in columns}
     energies = [name for name in columns if COLUMNS[name] == "energy"]
-    needs_freedom = "kinetic" in columns or ("pressure" in columns and _kinetic_part(layers) == "instantaneous")
+    within = _intramolecular(layers, study) if "potential" in columns else "none"
+    follows = "pressure" in columns and _kinetic_part(layers) == "instantaneous"
+    needs_freedom = follows or "kinetic" in columns or within == "included"
     if "time" not in columns and "interval" not in layers:
         raise layers.top.refusal(
             "interval", "missing; what is needed is a column of the time, or the time between rows"
@@ -239,7 +241,7 @@ def _rung(layers: _Layers, state: State, study: Study, home: Path) -> Rung:
         freedom=layers.needed("kinetic_freedom", _freedom(state.particles), "the kinetic energy needs it")
         if needs_freedom
         else None,
-        intramolecular=_intramolecular(layers, study) if "potential" in columns else "none",
+        intramolecular=within,
         interval=layers.read("interval", quantity("time", 1e-12, 1e12, study.scale)) if "interval" in layers else None,
         frames=frames,
     )
@@ -251,8 +253,8 @@ def _columns(layers: _Layers) -> dict[str, str | int]:
         raise table.refusal("columns", f"missing; what is needed is a table of what each column holds: {_or(COLUMNS)}")
     found = table.table("columns").only(tuple(COLUMNS))
     columns = {name: found.read(name, _column) for name in found.content}
-    if not set(columns) - {"time", "volume"}:
-        raise table.refusal("columns", f"what is needed is at least one of {_or([*COLUMNS][1:-1])}")
+    if not {"potential", "pressure", "virial"} & set(columns):
+        raise table.refusal("columns", "what is needed is at least one of potential, pressure, virial")
     if "pressure" in columns and "virial" in columns:
         raise found.refusal("virial", "pressure is given too; what is needed is either, not both")
     return columns

@@ -26,6 +26,7 @@ NEEDS: Mapping[str, tuple[str, ...]] = {
     "compressibility_factor": ("virial",),
     "thermal_pressure": ("virial", "sampled_energy"),
     "bulk_modulus": ("virial", "hypervirial"),
+    "heat_capacity": ("sampled_energy",),
 }
 """Columns of the series that a property is made of."""
 
@@ -38,6 +39,8 @@ def rung_properties(series: Sequence[Series], *, contact: Estimate | None = None
 
     Keys: residual_energy (U/N), residual_heat_capacity (per particle, d<U>/dT at constant volume), pressure,
     compressibility_factor, thermal_pressure, bulk_modulus (isothermal); those only whose columns (NEEDS) were recorded.
+    Where molecules are flexible there is no `energy`, but a U_dyn that holds what is within molecules, and `freedom`:
+    then heat_capacity, of all that moves, var(U_dyn)/(N T^2) + f/(2 N).
 
     With a bath, at the set temperature T (U_dyn: the energy that the forces conserve, whose ensemble is drawn):
     c_v = cov(U, U_dyn)/(N T^2); P = rho T + <W>/V; gamma_V = rho + cov(W, U_dyn)/(V T^2);
@@ -61,6 +64,13 @@ def rung_properties(series: Sequence[Series], *, contact: Estimate | None = None
         "thermal_pressure": lambda: rung.thermal_pressure,
         "bulk_modulus": lambda: rung.bulk_modulus,
     }
+    freedom = series[0].freedom
+    if freedom is not None and not any(each.has("energy") for each in series):
+        made["heat_capacity"] = lambda: (
+            rung.covariance_of(_sampled_energy, _sampled_energy)
+            * (1.0 / (rung.particles * series[0].state.temperature ** 2))
+            + 0.5 * freedom / rung.particles
+        )
     fluid = series[0].fluid
     surface = fluid.surface_hypervirial(rung.density) if fluid.has_pairs else 0.0
     if surface and contact is not None:

@@ -122,6 +122,8 @@ class Group:
         }
         if not (series.fluid.has_pairs and series.fluid.surface_hypervirial(series.state.density)):
             properties["bulk_modulus"] = bulk_modulus
+        if series.freedom is not None and not any(run.series.has("energy") for run in self.runs):
+            properties["heat_capacity"] = heat_capacity + 0.5 * series.freedom / series.state.particles
         return {name: each for name, each in properties.items() if self._has(*NEEDS[name])}
 
     def _has(self, *columns: str) -> bool:

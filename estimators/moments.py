@@ -23,7 +23,7 @@ from estimators.estimate import Chain
 from estimators.mixture import Mixture
 from sampler.series import Series
 
-__all__ = ["POWERS", "Moments", "Run", "block_starts", "claimed", "moments"]
+__all__ = ["POWERS", "Moments", "Run", "block_starts", "claimed", "energy_name", "moments"]
 
 Floats = npt.NDArray[np.float64]
 Indices = npt.NDArray[np.int64]
@@ -60,7 +60,7 @@ class Run:
 
     def powers(self, samples: Indices) -> Floats:
         """(POWERS, n) of some samples; zeros stand for a column that was not recorded."""
-        energy = self._recorded("energy", samples) - self.centres[0]
+        energy = self._recorded(energy_name(self.series), samples) - self.centres[0]
         virial = self._recorded("virial", samples)
         stiffness = virial + self._recorded("hypervirial", samples) - self.centres[2]
         virial = virial - self.centres[1]
@@ -81,6 +81,11 @@ class Run:
             samples = self.starts[part, None] + np.arange(longest)
             ended = samples >= ends[part, None]
             yield part, np.where(ended, 0, samples), ended
+
+
+def energy_name(series: Series) -> str:
+    """The column that stands for U: U_dyn where there is no other energy."""
+    return "energy" if series.has("energy") else "sampled_energy"
 
 
 def block_starts(samples: int, pooled: int) -> Indices:

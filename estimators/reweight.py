@@ -24,7 +24,7 @@ from estimators.errors import BadSeries
 from estimators.estimate import Estimate, mean
 from estimators.group import Group, Rung
 from estimators.mixture import bennett, polished
-from estimators.moments import Run, block_starts
+from estimators.moments import Run, block_starts, energy_name
 from estimators.overlap import Gap, connected, gaps
 from estimators.trust import FEWEST_SAMPLES
 from sampler.series import Series
@@ -200,9 +200,10 @@ def _solved(rungs: list[Rung]) -> Group:
 def _centres(series: Sequence[Series]) -> tuple[float, float, float]:
     """Means of U, W and W + X; zero for a column that is not recorded throughout."""
     samples = sum(map(len, series))
-    energy, virial, hypervirial = (
+    energy = sum(float(np.sum(each.column(energy_name(each)))) for each in series) / samples
+    virial, hypervirial = (
         sum(float(np.sum(each.column(name))) for each in series if each.has(name)) / samples
-        for name in ("energy", "virial", "hypervirial")
+        for name in ("virial", "hypervirial")
     )
     return energy, virial, virial + hypervirial
 

@@ -59,13 +59,17 @@ _TRUNCATION_CAVEATS = {
 
 @dataclass(frozen=True)
 class Setup:
-    """What the text needs of a study file; quantities as text with their unit."""
+    """What the text needs of a study file; quantities as text with their unit.
+
+    adopted : the file that described the samples, where they were taken elsewhere; there is then no scheme
+    """
 
     potential: str
     truncation: str
     cutoff: str
-    particles: int
+    particles: str
     scheme: str
+    adopted: str
     sampling: Mapping[str, Any]
     against: Sequence[str]
     tolerance: Mapping[str, float | str]
@@ -75,13 +79,15 @@ class Setup:
     def of(cls, results: Results) -> Setup:
         """Read the study of these results, complete with defaults; KeyError where it is not."""
         study = tomllib.loads(results.study_toml)
-        fluid, sampling, compare = study["fluid"], study["sampling"], study.get("compare", {})
+        fluid, sampling, compare = study["fluid"], study.get("sampling", {}), study.get("compare", {})
+        counts = study["state"]["particles"]
         return cls(
             potential=fluid["potential"].replace("lennard-jones", "Lennard-Jones"),
-            truncation=fluid["truncation"],
-            cutoff=_quantity(fluid["cutoff"], "σ"),
-            particles=study["state"]["particles"],
-            scheme=sampling["scheme"],
+            truncation=fluid.get("truncation", ""),
+            cutoff=_quantity(fluid["cutoff"], "σ") if "cutoff" in fluid else "",
+            particles=f"{min(counts)} to {max(counts)}" if isinstance(counts, list) else str(counts),
+            scheme=sampling.get("scheme", ""),
+            adopted=study.get("adopted", {}).get("source", ""),
             sampling=sampling,
             against=compare.get("against", []),
             tolerance=compare.get("tolerance", {}),
@@ -94,9 +100,11 @@ class Setup:
         return self.scheme != "velocity-verlet"
 
     @property
-    def cut(self) -> str:
-        """What is done at the cutoff, in words."""
-        return _TRUNCATIONS[self.truncation].format(cutoff=self.cutoff)
+    def fluid(self) -> str:
+        """The fluid and what is done at the cutoff, in words."""
+        if not self.truncation:
+            return "fluid whose potential is not known here"
+        return f"{self.potential} fluid, {_TRUNCATIONS[self.truncation].format(cutoff=self.cutoff)}"
 
 
 def paragraph(results: Results) -> str:
@@ -118,9 +126,7 @@ def standing_caveats(results: Results) -> list[str]:
     return [
         "All values are results of a model. They are not for the design of pressure equipment or for safety decisions "
         "without checked data, local codes and licensed practice.",
-        f"The {setup.potential} fluid is a model: particles interact in pairs; no real substance follows it exactly. "
-        "Agreement with a reference for the same model says that the sampling is right, not that the model is.",
-        _TRUNCATION_CAVEATS[setup.truncation].format(cutoff=setup.cutoff),
+        *(_model_caveats(setup) if setup.truncation else ["Ideal parts count molecules, not what they are made of."]),
         f"The system holds {setup.particles} particles in a periodic box. The finite size is not corrected for; it "
         "matters most near a critical point, and inside a two-phase region the sample is not a bulk phase.",
         "The time step shifts the sampled ensemble by a little that grows with its square and that no error bar holds; "
@@ -130,13 +136,32 @@ def standing_caveats(results: Results) -> list[str]:
     ]
 
 
+def _model_caveats(setup: Setup) -> list[str]:
+    return [
+        f"The {setup.potential} fluid is a model: particles interact in pairs; no real substance follows it exactly. "
+        "Agreement with a reference for the same model says that the sampling is right, not that the model is.",
+        _TRUNCATION_CAVEATS[setup.truncation].format(cutoff=setup.cutoff),
+    ]
+
+
 def _sentences(results: Results, setup: Setup) -> list[str]:
     return [
-        f"The {setup.potential} fluid, {setup.cut}, was sampled with {setup.particles} particles in a periodic cube.",
-        *_dynamics(results, setup),
+        f"The {setup.fluid}, was sampled with {setup.particles} particles in a periodic cube.",
+        *(_origin(results, setup) if setup.adopted else _dynamics(results, setup)),
         *_estimates(results, setup),
         *_comparison(results),
         *([f"Computed with {results.provenance['canonry']}."] if "canonry" in results.provenance else []),
+    ]
+
+
+def _origin(results: Results, setup: Setup) -> list[str]:
+    """Of samples that were adopted."""
+    repeats = results.equilibration.groupby(["temperature", "density"])["repeat"].nunique()
+    most = _counted(int(repeats.max()), "independent repeat")
+    return [
+        f"Samples of the canonical ensemble at {_counted(len(repeats), 'state')}, at most {most} a state, were taken "
+        f"elsewhere and are described in {setup.adopted}.",
+        "The end of equilibration was found from the data.",
     ]
 
 

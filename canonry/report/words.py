@@ -41,10 +41,12 @@ def outcome(results: Results) -> str:
 def question(results: Results) -> str:
     """What was asked."""
     setup = Setup.of(results)
-    heat, fluid = name_of(heat_capacity_name(results)), f"{setup.potential} fluid, {setup.cut}"
+    known = set(results.properties["property"])
+    asked = [name for name in (heat_capacity_name(results), "pressure") if name in known] or sorted(known)
     against = f", held against {_listed(list(setup.against))}{_tolerances(results, setup)}" if setup.against else ""
     return (
-        f"Asked: {heat} and pressure of the {fluid}; {setup.particles} particles, {states_in_words(results)}{against}."
+        f"Asked: {_listed([name_of(name) for name in asked])} of the {setup.fluid}; {setup.particles} particles, "
+        f"{states_in_words(results)}{against}."
     )
 
 
