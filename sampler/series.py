@@ -35,6 +35,8 @@ class Series:
     kinetic_parts : (n, 3), kinetic energy along x, y and z; momentum : (n, 3), of all particles; None if not recorded
     force_square : (n,), sum over particles of the squared force; laplacian : (n,), of the Laplacian of U, without what
         a jump of the force at the cutoff adds; None if not recorded
+    kinetic_lag : share of the kinetic energy that the scheme is known to lack, per unit of the mean Laplacian a degree
+        of freedom
     rejected : (n,), steps since the sample before that a Metropolis test undid; None where there is no test
     interval : time between samples
     freedom : kinetic degrees of freedom where they are not those of our own particles, see `kinetic_freedom`
@@ -60,6 +62,7 @@ class Series:
     force_square: Floats | None = None
     laplacian: Floats | None = None
     rejected: Floats | None = None
+    kinetic_lag: float = 0.0
     freedom: int | None = None
 
     def __len__(self) -> int:
