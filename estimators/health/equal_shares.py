@@ -8,8 +8,8 @@ from collections.abc import Sequence
 import numpy as np
 
 from estimators.estimate import combine, mean
-from estimators.health.excess import excess, jointly, too_short
-from estimators.health.reading import Reading, deviate, threshold
+from estimators.health.excess import CERTAIN, excess, jointly, too_short
+from estimators.health.reading import Reading, threshold
 from sampler.series import Series
 
 __all__ = ["equal_shares"]
@@ -67,7 +67,7 @@ def _flow(series: Sequence[Series], level: float) -> Reading | None:
         f"{math.sqrt(square.variance):.1g}, of 1 that is thermal; a mean other than zero is a flow, another square a "
         "bath that does not act on the fluid as a whole"
     )
-    width = excess(combine(np.log, square), 0.0, 0.0) if square.value > 0.0 else deviate(0.0)
+    width = excess(combine(np.log, square), 0.0, 0.0) if square.value > 0.0 else CERTAIN
     return Reading(CHECK, jointly(width, *(excess(each, 0.0, 0.0) for each in means)), threshold(level), meaning)
 
 

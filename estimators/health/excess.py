@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import sys
 
 from scipy import special, stats
 
@@ -10,7 +11,12 @@ from estimators.estimate import Estimate
 from estimators.health.reading import deviate
 from estimators.trust import FEWEST_SAMPLES
 
-__all__ = ["excess", "jointly", "too_short"]
+__all__ = ["CERTAIN", "LEAST", "excess", "jointly", "too_short"]
+
+LEAST = sys.float_info.min
+"""The smallest probability that still has a deviate."""
+CERTAIN = deviate(LEAST)
+"""The largest deviate there is, 37.5: of what cannot be chance."""
 
 
 def excess(estimate: Estimate, low: float = -math.inf, high: float = math.inf) -> float:
@@ -23,13 +29,14 @@ def excess(estimate: Estimate, low: float = -math.inf, high: float = math.inf) -
     if beyond <= 0.0 or math.isinf(estimate.variance):
         return 0.0
     if not beyond < math.inf or estimate.variance == 0.0:
-        return deviate(0.0)
-    return deviate(2.0 * float(special.stdtr(estimate.freedom, -beyond / math.sqrt(estimate.variance))))
+        return CERTAIN
+    return deviate(max(2.0 * float(special.stdtr(estimate.freedom, -beyond / math.sqrt(estimate.variance))), LEAST))
 
 
 def jointly(*deviates: float) -> float:
     """The largest of several deviates, made smaller for their number (Bonferroni)."""
-    return deviate(min(2.0 * len(deviates) * float(stats.norm.sf(max(deviates))), 1.0))
+    chance = 2.0 * len(deviates) * float(stats.norm.sf(max(deviates)))
+    return deviate(min(max(chance, LEAST), 1.0))
 
 
 def too_short(estimate: Estimate) -> bool:

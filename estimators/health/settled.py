@@ -9,9 +9,9 @@ import numpy as np
 import numpy.typing as npt
 from scipy import stats
 
-from estimators.estimate import Chain, Estimate, mean
+from estimators.estimate import Chain, Estimate, exact, mean
 from estimators.gamma import coarsened, scatter
-from estimators.health.excess import excess, jointly, too_short
+from estimators.health.excess import LEAST, excess, jointly, too_short
 from estimators.health.reading import Reading, deviate, threshold
 from estimators.settle import rank_normalised_split_rhat
 from estimators.trust import FEWEST_SAMPLES
@@ -22,7 +22,12 @@ __all__ = ["settled"]
 Floats = npt.NDArray[np.float64]
 
 CHECK = "settled"
-OBSERVED = {"sampled_energy": "potential energy", "virial": "virial", "kinetic": "kinetic energy"}
+OBSERVED = {
+    "sampled_energy": "potential energy",
+    "virial": "virial",
+    "kinetic": "kinetic energy",
+    "forces": "squared force beyond that of the temperature",
+}
 COMPARED = ("sampled_energy", "virial")  # between halves and repeats
 LATEST = 0.48  # of the run: a cut is placed in steps of 2 % and no later than half
 RANKED = 2000  # entries of a repeat that are ranked; longer series enter as block sums
@@ -39,14 +44,25 @@ def settled(
     differ in energy, so only halves are compared. A repeat that does not move at all fails by itself.
     None for what holds fewer than 50 effective samples, unless it stands still; None if nothing is left.
     """
-    columns = [name for name in OBSERVED if series and all(each.has(name) for each in series)]
+    columns = [name for name in OBSERVED if series and all(_has(each, name) for each in series)]
     readings = [_still(each) for each in series if len(each) and _stands_still(each, columns)]
     if not readings:
-        found = (_trend(series, columns, level), _agreement(series, columns, level))
+        found = (_trend(series, columns, level), _warming(series, level), _agreement(series, columns, level))
         readings = [each for each in found if each is not None]
     if cut is not None:
         readings += [_cut(each, *both) for each, both in zip(series, cut, strict=True)]
     return readings or None
+
+
+def _has(each: Series, name: str) -> bool:
+    return each.has(*(("force_square", "laplacian") if name == "forces" else (name,)))
+
+
+def _observed(each: Series, name: str) -> Floats:
+    """A column, or what forgets soonest and so shows a slow change of temperature best: sum F^2 - T sum nabla^2 U."""
+    if name != "forces":
+        return each.column(name)
+    return each.column("force_square") - each.state.temperature * each.column("laplacian")
 
 
 def _stands_still(each: Series, columns: Sequence[str]) -> bool:
@@ -54,8 +70,9 @@ def _stands_still(each: Series, columns: Sequence[str]) -> bool:
 
 
 def _still(each: Series) -> Reading:
+    """How many repeats do not move, of none that may."""
     meaning = "every sample of this repeat is the same: it is frozen or a copy of one sample; leave it out"
-    return Reading(CHECK, math.inf, 1.0, meaning, each.repeat)
+    return Reading(CHECK, 1.0, 0.0, meaning, each.repeat)
 
 
 def _cut(each: Series, cut: int, recorded: int) -> Reading:
@@ -68,21 +85,53 @@ def _cut(each: Series, cut: int, recorded: int) -> Reading:
 
 
 def _trend(series: Sequence[Series], columns: Sequence[str], level: float) -> Reading | None:
-    rises, widths = {}, {}
-    for name in columns:
-        values = {each.chain: each.column(name) for each in series if len(each) > 1}
-        if values and not too_short(mean({chain: each - np.mean(each) for chain, each in values.items()})):
-            rises[name], widths[name] = _rise(values)
-    if not rises:
+    long_enough = [each for each in series if len(each) > 1]
+    fits = {name: _rise({each.chain: _observed(each, name) for each in long_enough}) for name in columns if long_enough}
+    fits = {name: fit for name, fit in fits.items() if not too_short(fit[0])}
+    if not fits:
         return None
-    deviates = {name: excess(rise, 0.0, 0.0) for name, rise in rises.items()}
+    deviates = {name: excess(rise, 0.0, 0.0) for name, (rise, _) in fits.items()}
     worst = max(deviates, key=lambda name: deviates[name])
+    rise, width = fits[worst]
     meaning = (
-        f"from begin to end of the run the {OBSERVED[worst]} changes by {rises[worst].value / widths[worst]:+.2g} of "
-        f"its standard deviation, +- {math.sqrt(rises[worst].variance) / widths[worst]:.1g}; a trend means that the "
+        f"from begin to end of the run the {OBSERVED[worst]} changes by {rise.value / width:+.2g} of "
+        f"its standard deviation, +- {math.sqrt(rise.variance) / width:.1g}; a trend means that the "
         "run has not settled or that its temperature was changed, so take a longer equilibration"
     )
     return Reading(CHECK, jointly(*deviates.values()), threshold(level), meaning)
+
+
+def _warming(series: Sequence[Series], level: float) -> Reading | None:
+    """The trend that a change of the bath's temperature would give all columns together, by least squares.
+
+    d<K>/dlnT = <K>, d<U_dyn>/dlnT = var(U_dyn)/T and d<sum F^2 - T_set sum nabla^2 U>/dlnT = <sum F^2>.
+    """
+    names = ("kinetic", "sampled_energy", "forces")
+    if not series or not all(
+        each.bath and len(each) > 1 and all(_has(each, name) for name in names) for each in series
+    ):
+        return None
+    values = {name: {each.chain: _observed(each, name) for each in series} for name in names}
+    if any(too_short(mean(columns)) for columns in values.values()):
+        return None
+    energies = np.concatenate([each.column("sampled_energy") for each in series])
+    answers = {
+        "kinetic": float(np.mean(np.concatenate([each.column("kinetic") for each in series]))),
+        "sampled_energy": float(np.var(energies)) / series[0].state.temperature,
+        "forces": float(np.mean(np.concatenate([each.column("force_square") for each in series]))),
+    }
+    rises = {name: _rise(columns)[0] for name, columns in values.items()}
+    weights = {name: answers[name] / rises[name].variance for name in names}
+    norm = sum(weights[name] * answers[name] for name in names)
+    change = exact(0.0)
+    for name in names:
+        change = change + rises[name] * (weights[name] / norm)
+    meaning = (
+        f"from begin to end of the run the temperature seems to change by {100.0 * change.value:+.2g} %, +- "
+        f"{100.0 * math.sqrt(change.variance):.1g} %, judging by all that depends on it; a trend means that the run "
+        "has not settled or that its temperature was changed"
+    )
+    return Reading(CHECK, excess(change, 0.0, 0.0), threshold(level), meaning)
 
 
 def _rise(values: dict[Chain, Floats]) -> tuple[Estimate, float]:
@@ -105,7 +154,7 @@ def _agreement(series: Sequence[Series], columns: Sequence[str], level: float) -
     if not found:
         return None
     meaning = (
-        f"R-hat between {'halves and repeats' if len(groups) < len(series) else 'halves'} of the run is "
+        f"{'halves and repeats' if len(groups) < len(series) else 'halves'} of the run have R-hat "
         f"{max(ratio for ratio, _ in found):.3f}; more than chance explains means that they are not samples of one "
         "state, so look for a repeat that is caught elsewhere, or take a longer equilibration"
     )
@@ -133,5 +182,5 @@ def _compared(repeats: Sequence[Floats]) -> tuple[float, float] | None:
     own_means = 1.0 + (2 * noise.window + 1) * (len(halves) - 1) / noise.samples
     expected = own_means * 2.0 * noise.tau * float(np.mean([1.0 / len(half) for half in halves]))
     beyond = (ratio**2 - 1.0 + 1.0 / length) / expected
-    chance = 2.0 * float(stats.f.sf(beyond, len(halves) - 1, 2.0 / noise.relative_error**2))
-    return ratio, deviate(min(chance, 1.0))
+    chance = float(stats.f.sf(beyond, len(halves) - 1, 2.0 / noise.relative_error**2))
+    return ratio, deviate(min(max(2.0 * chance, LEAST), 1.0))
