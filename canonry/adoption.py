@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import math
 import os
 import shutil
 from collections import Counter
@@ -12,22 +11,20 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
-import numpy.typing as npt
 
 from canonry.adopted import save
 from canonry.border import Border
 from canonry.directory import STUDY, write
 from canonry.errors import UserError
+from canonry.intake import repeat
 from canonry.keys import Table
 from canonry.missing import missing
 from canonry.notation import unit_text
 from canonry.numbers import plain
-from canonry.recordings import columns, positions
 from canonry.spec import Rung, Spec, read, understood
 from canonry.study import Adopted, Study
-from canonry.suspicion import Times, ensemble, pressure_factor, times, unit_named
+from canonry.suspicion import ensemble, pressures
 from canonry.terminal import aligned, wrapped
-from sampler.fluid import Fluid
 from sampler.series import Series
 
 if TYPE_CHECKING:
@@ -35,9 +32,6 @@ if TYPE_CHECKING:
 
 __all__ = ["Adoption", "adopt", "adoption_text"]
 
-Floats = npt.NDArray[np.float64]
-
-_SAME_VOLUME = 1e-6  # of a volume: digits that are written of it
 _TRUNCATED = (
     "Forces of a potential that is cut without a shift sample the ensemble of the shifted one; with no column "
     "`dynamical` fluctuations are taken with the energy recorded."
@@ -56,7 +50,7 @@ class Adoption:
 
     series : every repeat of every rung
     notes : what its reader must know, one sentence each
-    missing : `temperature, density, property, column, why`: what cannot be said, and which column would let it be said
+    missing : `temperature, density, property, column`: what cannot be said, and which column would let it be said
     """
 
     directory: Path
@@ -78,13 +72,14 @@ def adopt(
     Raises UserError where the description is not complete, or the samples are not what it says.
     """
     if isinstance(spec, Mapping):
-        described = understood(Table("samples", "", _plain(spec)), home=Path())
+        described = understood(Table("samples", "", _as_in_a_file(spec)), home=Path())
     else:
         described = read(Path(spec))
     directory = Path(into)
     _check_new(directory)
     series, notes = _taken_in(described, watch or (lambda words: None))
-    study = replace(described.study, adopted=replace(described.study.adopted or Adopted(""), notes=notes))
+    source = Path(spec).name if isinstance(spec, str | Path) else "arrays"
+    study = replace(described.study, adopted=Adopted(source, notes))
     table = missing(study, series, Border.of(study))
     _make(directory, study, series, table)
     return Adoption(directory, study, tuple(series), notes, table)
@@ -92,33 +87,33 @@ def adopt(
 
 def adoption_text(adoption: Adoption) -> str:
     """What was brought in, what is to be said about it, and what it cannot say."""
-    border = Border.of(adoption.study)
-    states = adoption.study.states
-    units = [unit_text(border.label(name)) for name in ("temperature", "density", "time")]
-    rows = [["T", "density", "molecules", "repeats", "samples", "between", "frames"]]
-    rows.append([units[0], units[1], "", "", "", units[2], ""])
-    for state in states:
-        own = [each for each in adoption.series if each.state == state]
-        rows.append(
-            [plain(border.coordinate(name, getattr(state, name))) for name in ("temperature", "density")]
-            + [str(state.particles), str(len(own)), str(sum(map(len, own)))]
-            + [plain(border.value("time", own[0].interval), 4), str(sum(len(each.frames) for each in own))]
-        )
-    notes = [wrapped(f"Note: {note}") for note in adoption.notes]
-    table = Counter(adoption.missing[["property", "column"]].itertuples(index=False, name=None))
-    lacking = [
-        [name, "everywhere" if count == len(states) else f"{count} of {len(states)} states", column]
-        for (name, column), count in table.items()
+    lacking = Counter(adoption.missing[["property", "column"]].itertuples(index=False, name=None))
+    states = len(adoption.study.states)
+    rows = [("cannot be said", "where", "what would let it be said")]
+    rows += [
+        (name, "everywhere" if count == states else f"{count} of {states} states", column)
+        for (name, column), count in lacking.items()
     ]
-    heads = ["cannot be said", "where", "what would let it be said"]
-    return "\n\n".join(
-        [
-            f"{adoption.directory} holds these samples:\n{aligned(rows)}",
-            *(["\n".join(notes)] if notes else []),
-            *([_left_aligned([heads, *lacking])] if lacking else []),
-            f"Next: canonry report {adoption.directory}",
-        ]
-    )
+    blocks = [
+        f"{adoption.directory} holds these samples:\n{aligned(_overview(adoption))}",
+        "\n".join(wrapped(f"Note: {note}") for note in adoption.notes),
+        _left_aligned(rows) if lacking else "",
+        f"Next: canonry report {adoption.directory}",
+    ]
+    return "\n\n".join(filter(None, blocks))
+
+
+def _overview(adoption: Adoption) -> list[list[str]]:
+    border = Border.of(adoption.study)
+    units = [unit_text(border.label(name)) for name in ("temperature", "density", "time")]
+    rows = [["T", "density", "molecules", "repeats", "samples", "interval", "frames"]]
+    rows.append([*units[:2], "", "", "", units[2], ""])
+    for state in adoption.study.states:
+        own = [each for each in adoption.series if each.state == state]
+        cells = [plain(border.coordinate(name, getattr(state, name))) for name in ("temperature", "density")]
+        cells += [str(state.particles), str(len(own)), str(sum(map(len, own)))]
+        rows.append([*cells, plain(border.value("time", own[0].interval), 4), str(sum(len(s.frames) for s in own))])
+    return rows
 
 
 def _left_aligned(rows: Sequence[Sequence[str]]) -> str:
@@ -126,14 +121,16 @@ def _left_aligned(rows: Sequence[Sequence[str]]) -> str:
     return "\n".join("  ".join(map(str.ljust, row, widths)).rstrip() for row in rows)
 
 
-def _plain(value: Any) -> Any:
-    """Numbers, lists and tables as a file would give them; arrays and data frames as they are."""
+def _as_in_a_file(value: Any) -> Any:
+    """Numbers, lists and tables as a file would give them; what stands under `samples` as it is."""
     if isinstance(value, np.generic):
         return value.item()
-    if isinstance(value, dict):
-        return {key: each if key == "samples" else _plain(each) for key, each in value.items()}
+    if isinstance(value, Path):
+        return str(value)
+    if isinstance(value, Mapping):
+        return {key: each if key == "samples" else _as_in_a_file(each) for key, each in value.items()}
     if isinstance(value, list | tuple):
-        return [_plain(each) for each in value]
+        return [_as_in_a_file(each) for each in value]
     return value
 
 
@@ -164,21 +161,20 @@ def _make(directory: Path, study: Study, series: Sequence[Series], table: pd.Dat
 def _taken_in(spec: Spec, watch: Callable[[str], None]) -> tuple[list[Series], tuple[str, ...]]:
     """All series, once they have been looked at, and what is to be said about them."""
     series: list[list[Series]] = []
-    notes: list[str] = []
+    notes = [*_stated(spec)]
     for rung in spec.rungs:
-        watch(f"reading {rung.table.name}")
+        watch(f"reading {rung.keys.rung.name}")
         own = []
         for number in range(len(rung.repeats)):
-            each, said = _repeat(rung, number, spec.study)
+            each, said = repeat(rung, number, spec.study.fluid)
             own.append(each)
-            notes += (f"{rung.table.name}, repeat {number}: {sentence}." for sentence in said)
+            notes += (f"{rung.keys.rung.name}, repeat {number}: {sentence}." for sentence in said)
         if problem := ensemble(own):
-            raise rung.table.refusal(
-                "columns", f"{problem}; what is needed are canonical samples (NVT) and their units"
-            )
+            raise rung.keys.refusal("columns", f"{problem}; what is needed are canonical samples (NVT) and their units")
         series.append(own)
+    watch("looking at the pressures")
     _check_pressures(spec, series)
-    return [each for own in series for each in own], (*_stated(spec), *notes)
+    return [each for own in series for each in own], tuple(notes)
 
 
 def _stated(spec: Spec) -> Iterator[str]:
@@ -194,142 +190,19 @@ def _stated(spec: Spec) -> Iterator[str]:
     yield from dict.fromkeys(_WITHIN[rung.intramolecular] for rung in spec.rungs if rung.intramolecular in _WITHIN)
 
 
-def _repeat(rung: Rung, number: int, study: Study) -> tuple[Series, tuple[str, ...]]:
-    """One repeat as a series, and what is to be said about its times."""
-    found = columns(rung.repeats[number], rung.columns)
-    found = {name: values * rung.factors[_quantity(name)] for name, values in found.items()}
-    _check_volume(rung, found)
-    rows = _rows(rung, number, found)
-    frames, offset = _frames(rung, number, rows)
-    energies = _energies(rung, {name: values[rows.rows] for name, values in found.items()}, study.fluid)
-    series = Series(
-        fluid=study.fluid,
-        state=rung.state,
-        repeat=number,
-        bath=True,
-        interval=rows.interval,
-        ledger=None,
-        frames=frames,
-        frame_stride=rung.frames.every if rung.frames else 1,
-        frame_offset=offset,
-        freedom=rung.freedom,
-        **energies,
-    )
-    return series, rows.notes
-
-
-def _quantity(column: str) -> str:
-    from canonry.spec import COLUMNS
-
-    return COLUMNS[column]
-
-
-def _rows(rung: Rung, number: int, found: Mapping[str, Floats]) -> Times:
-    if "time" not in found:
-        n = len(next(iter(found.values())))
-        return Times(np.arange(n), rung.interval or 1.0, ())
-    rows = times(found["time"])
-    if rows is None:
-        raise rung.table.refusal("columns", f"the times of repeat {number} do not rise; what is needed is a time")
-    return rows
-
-
-def _check_volume(rung: Rung, found: Mapping[str, Floats]) -> None:
-    if "volume" not in found:
-        return
-    volume = rung.state.volume
-    if float(np.ptp(found["volume"])) > _SAME_VOLUME * volume:
-        raise rung.table.refusal(
-            "columns",
-            "the volume varies: samples at a set pressure are not taken, what is accepted is constant volume (NVT)",
-        )
-    if not math.isclose(float(found["volume"][0]), volume, rel_tol=1e-3):
-        raise rung.table.refusal(
-            "columns",
-            f"the volume recorded is {float(found['volume'][0]) / volume:.6g} times that of the density and molecules "
-            "stated; what is needed are the same",
-        )
-
-
-def _energies(rung: Rung, found: Mapping[str, Floats], fluid: Fluid) -> dict[str, Floats | None]:
-    """The columns of a series, extensive, with the long-range part where it lacked and the model has one."""
-    state = rung.state
-    size = state.particles if rung.per_molecule else 1
-    raw = {name: size * values for name, values in found.items() if _quantity(name) == "energy"}
-    tail = np.zeros(3)
-    if fluid.has_pairs and not rung.long_range:
-        tail = state.particles * np.array(fluid.tail(state.density))
-    potential, dynamical = raw.get("potential"), raw.get("dynamical")
-    sampled = potential if dynamical is None and rung.intramolecular != "left out" else dynamical
-    energy = None if potential is None or rung.intramolecular == "included" else potential + tail[0]
-    virial = _virial(rung, found, raw)
-    virial = None if virial is None else virial + tail[1]
-    hypervirial = raw["hypervirial"] + tail[2] if "hypervirial" in raw else None
-    noisy = rung.kinetic_part == "instantaneous" and "kinetic" not in raw
-    if hypervirial is None and energy is not None and virial is not None and not noisy:
-        hypervirial = fluid.hypervirial(energy, virial)
-    return {
-        "energy": energy,
-        "sampled_energy": None if sampled is None else sampled + tail[0],
-        "virial": virial,
-        "hypervirial": None if noisy else hypervirial,
-        "kinetic": raw.get("kinetic"),
-    }
-
-
-def _virial(rung: Rung, found: Mapping[str, Floats], raw: Mapping[str, Floats]) -> Floats | None:
-    """W, so that the pressure is rho T + <W>/V with the density of molecules."""
-    if "pressure" not in found:
-        return raw.get("virial")
-    state = rung.state
-    ideal = state.particles * state.temperature
-    product = found["pressure"] * state.volume
-    if rung.kinetic_part == "set" or rung.freedom is None:
-        return product - ideal
-    expected = rung.freedom * state.temperature / 3.0
-    part = 2.0 / 3.0 * raw["kinetic"] if "kinetic" in raw else expected
-    return product - part + (0.0 if _is_atomic(rung) else expected - ideal)
-
-
-def _is_atomic(rung: Rung) -> bool:
-    """Whether what moves are the molecules themselves, all of them or but for their common motion."""
-    return rung.freedom in (3 * rung.state.particles, 3 * rung.state.particles - 3)
-
-
-def _frames(rung: Rung, number: int, rows: Times) -> tuple[Floats, int]:
-    """Positions inside the box, and the samples missing of the stride that the first frame ends."""
-    particles = rung.state.particles
-    if rung.frames is None:
-        return np.empty((0, particles, 3)), 0
-    asked = rung.frames
-    table = rung.table.table("frames")
-    if not np.array_equal(rows.rows, np.arange(len(rows.rows))):
-        raise table.refusal("first", "frames are told by row, but rows were left out; what is needed are rows in order")
-    if asked.first > asked.every:
-        raise table.refusal("first", f"what is needed is a row from 1 to {asked.every}, which is every")
-    found = positions(asked.repeats[number], particles) * asked.factor
-    last = asked.first + (len(found) - 1) * asked.every
-    if last > len(rows.rows):
-        reason = f"the last of {len(found)} frames would belong to row {last} of {len(rows.rows)}"
-        raise table.refusal("every", f"{reason}; what is needed is the number of rows from one frame to the next")
-    box = rung.state.box
-    found -= box * np.floor(found / box)
-    found[found >= box] = 0.0
-    return found, asked.every - asked.first
-
-
 def _check_pressures(spec: Spec, series: Sequence[Sequence[Series]]) -> None:
     """Raises UserError if the pressures of a density are in another unit than stated, as far as that shows."""
-    both = [(rung, own) for rung, own in zip(spec.rungs, series, strict=True) if "pressure" in rung.columns]
-    for density in dict.fromkeys(rung.state.density for rung, _ in both):
-        rungs = [rung for rung, _ in both if rung.state.density == density]
-        own = [each for rung, each in both if rung.state.density == density]
-        first = rungs[0]
-        follows = all(rung.kinetic_part == "instantaneous" and "kinetic" in rung.columns for rung in rungs)
-        factor = pressure_factor(own, instantaneous=follows)
-        if factor is None:
-            continue
-        scale = spec.study.scale
-        stated = None if scale is None else scale.factor("pressure") * first.factors["pressure"]
-        if problem := unit_named(factor, stated):
-            raise first.table.refusal("columns", f"{problem}; what is needed is their unit in units.pressure")
+    by_density: dict[float, list[tuple[Rung, Sequence[Series]]]] = {}
+    for rung, own in zip(spec.rungs, series, strict=True):
+        if "pressure" in rung.columns:
+            by_density.setdefault(rung.state.density, []).append((rung, own))
+    for both in by_density.values():
+        first = both[0][0]
+        problem = pressures(
+            [own for _, own in both],
+            follow=all(rung.kinetic_part == "instantaneous" and "kinetic" in rung.columns for rung, _ in both),
+            unit=first.factors["pressure"],
+            scale=spec.study.scale,
+        )
+        if problem:
+            raise first.keys.refusal("units.pressure", f"{problem}; what is needed is the unit they are in")

@@ -130,7 +130,6 @@ def _delimited(path: Path, wanted: Mapping[str, str | int]) -> pd.DataFrame:
         skiprows=first,
         comment="#",
         skipinitialspace=True,
-        float_precision="round_trip",
         encoding="utf-8",
     )
 

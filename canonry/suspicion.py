@@ -4,18 +4,20 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from itertools import pairwise
 
 import numpy as np
 import numpy.typing as npt
 
 from canonry.numbers import plain, with_error
+from canonry.units import Scale
 from estimators.covariance import covariance
 from estimators.estimate import Estimate, mean
+from estimators.structure import pair_structure
 from sampler.series import Series
 
-__all__ = ["Times", "ensemble", "pressure_factor", "times", "unit_named"]
+__all__ = ["Times", "ensemble", "pressures", "times"]
 
 Floats = npt.NDArray[np.float64]
 
@@ -23,10 +25,11 @@ _UNEVEN = 0.05  # of the usual time between rows: what two of them may differ by
 _SURE = 5.0  # standard errors: chance does not do that
 _STILL = 1e-5  # variance of the energy, per particle and T^2, below which it is constant
 _HEAT = (0.8, 1.25)  # mean kinetic energy over that of the temperature stated
-_PRESSURE_UNITS = {"Pa": 1e-6, "Torr": 1.33322e-4, "kPa": 1e-3, "bar": 0.1, "atm": 0.101325, "MPa": 1.0, "GPa": 1e3}
+_UNITS = {"Pa": 1e-6, "Torr": 1.33322e-4, "kPa": 1e-3, "bar": 0.1, "atm": 0.101325, "MPa": 1.0, "GPa": 1e3}
 """MPa."""
-_CLOSE = 0.1  # of a factor between two units
-_FAR = 0.3  # of one, from which on a factor is another one
+_ALIKE = 1.3  # ratio of two units up to which they cannot be told from one another
+_CLOSE = 0.02  # of a known pressure: how well a model is the one stated
+_FRAMES = 50  # of a repeat that are looked at
 
 
 @dataclass(frozen=True)
@@ -57,9 +60,10 @@ def times(values: Floats) -> Times | None:
         )
     uneven = int(np.sum(np.abs(steps - interval) > _UNEVEN * interval))
     if uneven:
+        shortest, longest = (plain(float(each(steps)) / interval, 3) for each in (np.min, np.max))
         notes.append(
-            f"the time between rows is not even: {plain(interval, 4)} as a rule, {uneven} times another, from "
-            f"{plain(float(np.min(steps)), 4)} to {plain(float(np.max(steps)), 4)}; error bars take it as even"
+            f"rows are not even in time: {uneven} of {len(steps)} intervals differ from the usual one, they are from "
+            f"{shortest} to {longest} of it; error bars take them as even"
         )
     return Times(rows, interval, tuple(notes))
 
@@ -76,20 +80,18 @@ def ensemble(series: Sequence[Series]) -> str:
     energies = {each.chain: each.column("sampled_energy") for each in series}
     if all(float(np.var(values)) < _STILL * state.particles * state.temperature**2 for values in energies.values()):
         return "the potential energy hardly changes, as the total energy of a run at constant energy does"
-    if problem := _heat(series):
-        return problem
     if not all(each.has("kinetic") for each in series):
         return ""
     kinetic = {each.chain: each.column("kinetic") for each in series}
     if not all(float(np.var(values)) > 0.0 for values in kinetic.values()):
-        return ""
+        return _heat(series)
     share = covariance(energies, kinetic) / covariance(kinetic, kinetic)
     told = f"{with_error(share.value, share.standard_error)} of the kinetic energy"
     if share.value > max(0.5, _SURE * share.standard_error):
-        return f"the potential energy moves with {told}, none of it is expected: this is a total energy"
+        return f"the potential energy holds {told}, as a total energy does"
     if -share.value > max(0.5, _SURE * share.standard_error):
-        return f"potential and kinetic energy make up for one another ({told}): the total energy was held constant"
-    return ""
+        return f"the potential energy makes up for {told}, as at constant total energy"
+    return _heat(series)
 
 
 def _heat(series: Sequence[Series]) -> str:
@@ -100,38 +102,42 @@ def _heat(series: Sequence[Series]) -> str:
     ratio = found / (0.5 * first.kinetic_freedom * first.state.temperature)
     if _HEAT[0] < ratio < _HEAT[1]:
         return ""
-    return f"the mean kinetic energy is {plain(ratio, 3)} times what temperature and kinetic_freedom make it"
+    return (
+        f"the mean kinetic energy is {plain(ratio, 3)} times what temperature and kinetic_freedom make it, in the unit "
+        "and for the number of molecules that are stated"
+    )
 
 
-def pressure_factor(rungs: Sequence[Sequence[Series]], *, instantaneous: bool) -> Estimate | None:
-    """By what factor the pressures of an isochore are too large, from what their ideal part does; None if unknown.
+def pressures(rungs: Sequence[Sequence[Series]], *, follow: bool, unit: float, scale: Scale | None) -> str:
+    """Why the pressures of an isochore are in another unit than stated; empty where nothing says so.
 
-    rungs : repeats of each, by rising temperature, whose virial is made of a pressure column
-    instantaneous : whether the pressure followed the kinetic energy, which the virial then is to be free of
-
-    A pressure that follows the kinetic energy K moves by 2 K/(3 V). Any pressure rises from one temperature to the next
-    by its covariance with the energy, which scales with it, and by rho dT, which does not.
+    rungs : the repeats of each, by rising temperature, whose virial was made of a pressure column
+    follow : whether these pressures follow the kinetic energy, which was taken off with the unit stated
+    unit : the one stated, in reduced units
     """
-    found = list(_by_kinetic(rungs) if instantaneous else _by_temperature(rungs))
-    found = [each for each in found if 0.0 < each.standard_error < math.inf]
-    if not found:
-        return None
-    weights = [each.standard_error**-2 for each in found]
-    first, *others = (each * (weight / sum(weights)) for each, weight in zip(found, weights, strict=True))
-    for each in others:
-        first = first + each
-    return first
+    stated = None if scale is None else unit * scale.factor("pressure")
+    factor = _joined(list(_by_kinetic(rungs) if follow else _by_temperature(rungs)))
+    if factor is not None and abs(factor.value - 1.0) > max(_ALIKE - 1.0, _SURE * factor.standard_error):
+        told = with_error(factor.value, factor.standard_error)
+        return f"the ideal part of the pressures is {told} times that of the state{_named(factor, stated)}"
+    if stated is None:
+        return ""
+    return next(filter(None, (_against_known(series, stated) for series in rungs)), "")
 
 
 def _by_kinetic(rungs: Sequence[Sequence[Series]]) -> Iterator[Estimate]:
+    """Factors by which pressures are too large, from the part 2 K/(3 V) with which they follow the kinetic energy."""
     for series in rungs:
-        if all(each.has("kinetic", "virial") for each in series):
-            kinetic = {each.chain: each.column("kinetic") for each in series}
-            virial = {each.chain: each.column("virial") for each in series}
-            yield covariance(virial, kinetic) / covariance(kinetic, kinetic) * 1.5 + 1.0
+        kinetic = {each.chain: each.column("kinetic") for each in series}
+        virial = {each.chain: each.column("virial") for each in series}
+        yield covariance(virial, kinetic) / covariance(kinetic, kinetic) * 1.5 + 1.0
 
 
 def _by_temperature(rungs: Sequence[Sequence[Series]]) -> Iterator[Estimate]:
+    """The same from neighbouring temperatures.
+
+    From one to the other P rises by the covariance of P and U, which scales with it, and by rho dT, which does not.
+    """
     for cold, warm in pairwise(rungs):
         if not all(each.has("virial", "sampled_energy") for each in (*cold, *warm)):
             continue
@@ -146,24 +152,64 @@ def _mean_virial(series: Sequence[Series]) -> Estimate:
 
 
 def _coupling(series: Sequence[Series]) -> Estimate:
-    return covariance(
-        {each.chain: each.column("virial") for each in series},
-        {each.chain: each.column("sampled_energy") for each in series},
-    )
+    """Covariance of W and U_dyn."""
+    virial = {each.chain: each.column("virial") for each in series}
+    return covariance(virial, {each.chain: each.column("sampled_energy") for each in series})
 
 
-def unit_named(factor: Estimate, stated: float | None) -> str:
-    """The words for a pressure column whose values are off by a factor; empty where they may be right.
+def _joined(found: Sequence[Estimate]) -> Estimate | None:
+    """The weighted mean of those that have an error bar; None if there are none."""
+    known = [each for each in found if 0.0 < each.standard_error < math.inf]
+    if not known:
+        return None
+    total = sum(each.standard_error**-2 for each in known)
+    first, *others = (each * (each.standard_error**-2 / total) for each in known)
+    for each in others:
+        first = first + each
+    return first
 
-    stated : the unit stated, MPa; None where that is not known
-    """
-    if abs(factor.value - 1.0) < max(_FAR, _SURE * factor.standard_error):
-        return ""
-    told = with_error(factor.value, factor.standard_error)
-    words = f"the ideal part of the pressures is {told} times what density and temperature make it"
+
+def _named(factor: Estimate, stated: float | None) -> str:
+    """The usual unit that a factor belongs to, in words; empty if there is none."""
     if stated is None or factor.value <= 0.0:
-        return words
-    off = {name: abs(math.log(factor.value * size / stated)) for name, size in _PRESSURE_UNITS.items()}
+        return ""
+    off = {name: abs(math.log(factor.value * size / stated)) for name, size in _UNITS.items()}
     name = min(off, key=lambda each: off[each])
-    allowed = max(_CLOSE, 3.0 * factor.standard_error / factor.value)
-    return f"{words}, as in values in {name}" if off[name] < allowed else words
+    allowed = max(math.log(_ALIKE), 3.0 * factor.standard_error / factor.value)
+    return f", as in values in {name}" if off[name] < allowed else ""
+
+
+def _against_known(series: Sequence[Series], stated: float) -> str:
+    """A mean pressure that another unit would bring to the one known from positions or from a reference."""
+    state = series[0].state
+    pressure = _mean_virial(series) / state.volume + state.density * state.temperature
+    for source, value, error in _known(series):
+        allowed = _SURE * math.hypot(pressure.standard_error, error) + _CLOSE * state.density * state.temperature
+        if abs(pressure.value - value) <= allowed:
+            continue
+        for name, size in _UNITS.items():
+            factor = stated / size
+            off = abs(pressure.value / factor - value)
+            near = _SURE * math.hypot(pressure.standard_error / factor, error) + _CLOSE * abs(value)
+            if abs(math.log(factor)) > math.log(_ALIKE) and off < min(near, 0.1 * abs(value)):
+                told = plain(pressure.value / value, 3)
+                return f"the mean pressure is {told} times that {source}, as in values in {name}"
+    return ""
+
+
+def _known(series: Sequence[Series]) -> Iterator[tuple[str, float, float]]:
+    """Pressures with standard error, and where they are from."""
+    from reference import find, names
+
+    first = series[0]
+    if not first.fluid.has_pairs:
+        return
+    structure = pair_structure([replace(each, frames=each.frames[:_FRAMES]) for each in series])
+    if structure is not None and structure.pressure is not None and math.isfinite(structure.pressure.standard_error):
+        yield "of the positions", structure.pressure.value, structure.pressure.standard_error
+    temperature, density = first.state.temperature, first.state.density
+    for reference in map(find, names()):
+        same = reference.same_model(first.fluid.truncation, first.fluid.cutoff)
+        if same and not reference.covers(temperature, density):
+            known = reference.value("pressure", temperature=temperature, density=density)
+            yield f"of {reference.name}", known.value, known.uncertainty
