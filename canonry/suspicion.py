@@ -22,13 +22,14 @@ __all__ = ["Times", "ensemble", "pressures", "times"]
 Floats = npt.NDArray[np.float64]
 
 _UNEVEN = 0.05  # of the usual time between rows: what two of them may differ by
-_SURE = 5.0  # standard errors: chance does not do that
+_SURE = 4.0  # standard errors: chance does that once in 16 000 times
 _STILL = 1e-5  # variance of the energy, per particle and T^2, below which it is constant
 _HEAT = (0.8, 1.25)  # mean kinetic energy over that of the temperature stated
 _UNITS = {"Pa": 1e-6, "Torr": 1.33322e-4, "kPa": 1e-3, "bar": 0.1, "atm": 0.101325, "MPa": 1.0, "GPa": 1e3}
 """MPa."""
 _ALIKE = 1.3  # ratio of two units up to which they cannot be told from one another
 _CLOSE = 0.02  # of a known pressure: how well a model is the one stated
+_NEAR = 0.1  # of a known pressure: within which another unit has to bring it
 _FRAMES = 50  # of a repeat that are looked at
 
 
@@ -170,13 +171,16 @@ def _joined(found: Sequence[Estimate]) -> Estimate | None:
 
 
 def _named(factor: Estimate, stated: float | None) -> str:
-    """The usual unit that a factor belongs to, in words; empty if there is none."""
+    """The usual units that a factor may belong to, in words; empty if there are none."""
     if stated is None or factor.value <= 0.0:
         return ""
     off = {name: abs(math.log(factor.value * size / stated)) for name, size in _UNITS.items()}
-    name = min(off, key=lambda each: off[each])
     allowed = max(math.log(_ALIKE), 3.0 * factor.standard_error / factor.value)
-    return f", as in values in {name}" if off[name] < allowed else ""
+    return _as_in([name for name in off if off[name] < allowed])
+
+
+def _as_in(units: Sequence[str]) -> str:
+    return f", as in values in {' or '.join(units)}" if units else ""
 
 
 def _against_known(series: Sequence[Series], stated: float) -> str:
@@ -187,13 +191,15 @@ def _against_known(series: Sequence[Series], stated: float) -> str:
         allowed = _SURE * math.hypot(pressure.standard_error, error) + _CLOSE * state.density * state.temperature
         if abs(pressure.value - value) <= allowed:
             continue
+        units = []
         for name, size in _UNITS.items():
             factor = stated / size
             off = abs(pressure.value / factor - value)
             near = _SURE * math.hypot(pressure.standard_error / factor, error) + _CLOSE * abs(value)
-            if abs(math.log(factor)) > math.log(_ALIKE) and off < min(near, 0.1 * abs(value)):
-                told = plain(pressure.value / value, 3)
-                return f"the mean pressure is {told} times that {source}, as in values in {name}"
+            if abs(math.log(factor)) > math.log(_ALIKE) and off < min(near, _NEAR * abs(value)):
+                units.append(name)
+        if units:
+            return f"the mean pressure is {plain(pressure.value / value, 3)} times that {source}{_as_in(units)}"
     return ""
 
 
