@@ -17,6 +17,7 @@ from canonry.health import Samples, judged, known, marked, of_isochore, of_rung,
 from canonry.isochore import Isochore, assemble
 from canonry.risks import doubt, guide
 from canonry.sampling import recorded
+from canonry.step_bias import checks as step_bias_checks
 from canonry.study import Study
 from canonry.units import Scale
 from estimators.canonical import kinetic_temperature, rung_properties
@@ -28,7 +29,7 @@ from sampler.fluid import State
 from sampler.protocol import Protocol
 from sampler.series import Series
 
-__all__ = ["findings"]
+__all__ = ["findings", "settled"]
 
 _BINS = 60  # of a histogram
 _CONSERVED = ("kinetic", "sampled_energy", "ledger")
@@ -81,23 +82,24 @@ def findings(study: Study, directory: Path, border: Border, *, watch: Callable[[
         rung = _rung(recorded(study, directory, state), study.scale)
         if rung is not None:
             rungs.append(rung)
-        if rung is None or not rung.is_finished(study.sampling):
+        if rung is None or not (study.adopted or rung.is_finished(study.sampling)):
             unfinished.append(state)
     if not rungs:
         raise UserError(f"{directory}: there are no samples yet; what is needed is `canonry run` or `canonry sample`")
     tell("reweighting between the rungs")
-    reference = guide(study.fluid)
+    reference = guide(study.fluid) if study.fluid.has_pairs else None
     states = [rung.state for rung in rungs]
     isochores = [_isochore(study, own, border) for own in _by_density(rungs)]
     checks = [check for rung in rungs for check in rung.checks]
     for isochore, own in zip(isochores, _by_density(rungs), strict=True):
         checks += of_isochore(isochore, {rung.state: rung.series for rung in own})
+    checks += step_bias_checks(study, directory, {rung.state: rung.own for rung in rungs})
     health = judged(checks)
 
     def doubted(findings: Iterable[Iterable[Finding]]) -> Iterator[Finding]:
         """With less trust where a check failed, and with caution where the state may be no stable bulk phase."""
         for finding in marked(chain.from_iterable(findings), health, states):
-            yield finding.doubted(doubt(finding.state, reference))
+            yield finding.doubted(doubt(finding.state, reference) if reference else "")
 
     return Findings(
         properties=tuple(doubted(each.properties() for each in isochores)),
@@ -107,7 +109,7 @@ def findings(study: Study, directory: Path, border: Border, *, watch: Callable[[
         overlaps=tuple(overlap for isochore in isochores for overlap in isochore.overlaps()),
         histograms=tuple(curve for rung in rungs if (curve := rung.histogram) is not None),
         ledgers=tuple(ledger for rung in rungs for ledger in rung.ledgers),
-        health=(*health, *known(states, reference)),
+        health=(*health, *(known(states, reference) if reference else ())),
         unfinished=tuple(unfinished),
     )
 
@@ -141,16 +143,16 @@ def _rung(recorded: list[Series], scale: Scale | None) -> _Rung | None:
     """None if there are no samples."""
     if not recorded:
         return None
-    settled = [_settled(each) for each in recorded]
-    structure = pair_structure(settled)
-    series = [_light(each) for each in settled]
+    cut = [settled(each) for each in recorded]
+    structure = pair_structure(cut)
+    series = [_light(each) for each in cut]
     temperature = None if series[0].bath else kinetic_temperature(series)
     state = series[0].state
     state = state if temperature is None else replace(state, temperature=temperature.value)
     own = rung_properties(series, contact=structure.contact if structure else None)
     cuts = [_cut(state, *both) for both in zip(recorded, series, strict=True)]
     samples = Samples(
-        settled,
+        cut,
         structure,
         [(cut.cut, cut.samples) for cut in cuts],
         bulk_modulus=own.get("bulk_modulus"),
@@ -180,7 +182,7 @@ def _ledger(state: State, series: Series) -> Curve:
     return Curve(state, series.repeat, series.times[every], conserved - conserved[0])
 
 
-def _settled(series: Series) -> Series:
+def settled(series: Series) -> Series:
     """Without what the energy or the virial says is not settled, half of it at most."""
     told = [series.column(name) for name in ("sampled_energy", "virial") if series.has(name)]
     return series.after(max(map(settled_start, told), default=0))
@@ -188,5 +190,6 @@ def _settled(series: Series) -> Series:
 
 def _light(series: Series) -> Series:
     """Without frames, and with columns of its own, which do not keep in memory all that was recorded with them."""
-    own: dict[str, Any] = {name: series.column(name).copy() for name in ("kinetic", "ledger") if series.has(name)}
-    return replace(series, frames=series.frames[:0].copy(), kinetic_parts=None, momentum=None, rejected=None, **own)
+    own: dict[str, Any] = dict.fromkeys(("kinetic_parts", "momentum", "force_square", "laplacian", "rejected"))
+    own |= {name: series.column(name).copy() for name in ("kinetic", "ledger") if series.has(name)}
+    return replace(series, frames=series.frames[:0].copy(), **own)

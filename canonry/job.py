@@ -12,6 +12,7 @@ from canonry.border import Border
 from canonry.directory import locate, stored, write
 from canonry.results import COLUMNS
 from canonry.sampling import is_complete, sample
+from canonry.step_bias import exact, folder
 from canonry.study import Study
 from canonry.units import Kind
 
@@ -22,7 +23,7 @@ if TYPE_CHECKING:
 
 __all__ = ["compare", "estimate", "is_finished", "report", "run"]
 
-_TABLES = ("properties", "curve", "structure", "health", "verdict", "summary")
+_TABLES = ("properties", "curve", "structure", "health", "budget", "verdict", "summary")
 _FILES = (*(f"{name}.csv" for name in _TABLES), "report.html")
 
 Place = str | Path
@@ -30,18 +31,28 @@ Row = dict[str, str]
 Tell = Callable[[str], None]
 
 
-def run(study: Place, *, into: Place | None = None, workers: int | None = None, units: Kind | None = None) -> Results:
+def run(
+    study: Place,
+    *,
+    into: Place | None = None,
+    workers: int | None = None,
+    units: Kind | None = None,
+    step_bias: bool = False,
+) -> Results:
     """Sample what is missing, write all tables and the report, and return what they hold.
 
     study : a study file, or its directory
     into : the study directory, by default the name of the study file without its suffix, in the current directory
     workers : threads, by default one for every core; results do not depend on it
     units : of tables and report, by default those the study was written in
+    step_bias : sample the ends of each isochore exactly too, to see what the time step shifts
     Raises UserError, or an error of sampler, estimators or reference, each of them also a built-in kind.
     """
     found, directory = locate(Path(study), None if into is None else Path(into))
     Border.of(found, units)
     sample(found, directory, workers=workers)
+    if step_bias:
+        sample(exact(found), folder(directory), workers=workers)
     return report(directory, units=units)
 
 
@@ -125,8 +136,8 @@ def _cover(study: Study, tables: Mapping[str, list[Row]], unit: str) -> bool:
     outcomes = {row["reference"] for row in tables["verdict"] if not row["property"]}
     counts = (len(tables["summary"]), states["residual_heat_capacity"], states["pressure"])
     pooled = study.sampling.bath and len(study.isochores) < len(study.states)
-    whole = {*counts} == {len(study.states)} and bool(tables["curve"]) == pooled and bool(tables["health"])
-    return whole and outcomes == {*study.compare.against}
+    whole = {*counts} == {len(study.states)} and bool(tables["curve"]) == pooled
+    return whole and all(tables[name] for name in ("health", "budget")) and outcomes == {*study.compare.against}
 
 
 def _rows(path: Path, columns: Sequence[str]) -> list[Row] | None:

@@ -29,6 +29,8 @@ COLUMNS: Mapping[str, tuple[str, ...]] = {
         "overlap": "density,temperature_a,temperature_b,overlap",
         "reference_curve": "density,temperature,property,value,uncertainty,reference",
         "equilibration": "temperature,density,repeat,cut,samples,effective_samples",
+        "budget": "temperature,density,property,value,unit,statistical,time_step,cutoff,finite_size,equilibration,"
+        "expanded,coverage_factor",
         "health": "temperature,density,repeat,check,statistic,threshold,passed,touches,meaning",
     }.items()
 }
@@ -42,9 +44,9 @@ class Results:
     title : the study's title
     study_toml : the study as run, complete with defaults
     units : 'reduced' (energies in epsilon, times in sigma sqrt(m/epsilon)) or 'SI' (kJ/mol, ps)
-    properties, curve, structure, verdict, summary, health : tables of the study directory; `headline` holds booleans. A
-        verdict row without temperature and property is the overall outcome of its reference; `tolerance` is a
-        difference in the unit of the property, empty where there is none; `reason` says why a row is undecided
+    properties, curve, structure, verdict, summary, health, budget : tables of the study directory; `headline` holds
+        booleans. A verdict row without temperature and property is the overall outcome of its reference; `tolerance` is
+        a difference in the unit of the property, empty where there is none; `reason` says why a row is undecided
     histograms : probability density of the energy per particle, bin centres in rising order, one curve a rung
     ledger : change of K + U_dyn + ledger per particle since the first sample (of K + U_dyn where no bath acts)
     overlap : shared phase space of neighbouring rungs of an isochore, between 0 and 1
@@ -53,6 +55,8 @@ class Results:
         behind the energy after the cut
     health : what every check read; an empty `repeat` stands for all repeats together, `touches` lists properties with a
         space between them; a check of two neighbouring rungs stands at the colder one
+    budget : what each source adds to the standard uncertainty of a headline value, or words where there is no number;
+        `expanded` is all that is known, in squares, times the coverage factor
     caveats : what this study's reader must know beyond the caveats of the model, one sentence each
     provenance : label to text, in the order shown: versions, seed, machine, wall time
     Raises ValueError when a table lacks a column.
@@ -72,6 +76,7 @@ class Results:
     reference_curve: pd.DataFrame
     equilibration: pd.DataFrame
     health: pd.DataFrame
+    budget: pd.DataFrame
     caveats: tuple[str, ...] = ()
     provenance: Mapping[str, str] = field(default_factory=dict)
 

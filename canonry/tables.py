@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from canonry.border import Border
+from canonry.budget import COVERAGE, Budget, budgets
 from canonry.caveats import caveats
 from canonry.directory import write
 from canonry.findings import TRUST, Check, Curve, Finding, Findings
@@ -27,7 +28,7 @@ if TYPE_CHECKING:
 
 __all__ = ["TABLES", "assemble", "save", "verdict_table"]
 
-TABLES = ("properties", "curve", "structure", "health", "verdict", "summary")
+TABLES = ("properties", "curve", "structure", "health", "budget", "verdict", "summary")
 _DIGITS = "%.10g"
 _SPECIES = "1"  # the only one of a pure fluid
 
@@ -64,6 +65,7 @@ def assemble(
             ),
         ),
         health=_health(findings, border),
+        budget=_table("budget", (_budget(each, border) for each in budgets(study, findings))),
         caveats=tuple(caveats(study, findings, border)),
         provenance=provenance or {},
     )
@@ -186,6 +188,25 @@ def _health(findings: Findings, border: Border) -> pd.DataFrame:
         return check.state.density, check.state.temperature, order.index(check.reading.check)
 
     return _table("health", map(row, sorted(findings.health, key=rank))).astype({"repeat": "Int64"})
+
+
+def _budget(budget: Budget, border: Border) -> dict[str, Any]:
+    name, estimate = budget.finding.property, budget.finding.estimate
+    parts = {
+        part: getattr(budget, part) for part in ("statistical", "time_step", "cutoff", "finite_size", "equilibration")
+    }
+    return {
+        **_state(budget.finding.state, border),
+        "property": name,
+        "value": math.nan if estimate is None else border.value(name, estimate.value),
+        "unit": border.label(name),
+        **{
+            part: size if isinstance(size, str) else float(_DIGITS % border.value(name, size))
+            for part, size in parts.items()
+        },
+        "expanded": COVERAGE * border.value(name, budget.combined),
+        "coverage_factor": COVERAGE,
+    }
 
 
 def _structure(findings: Findings, border: Border) -> pd.DataFrame:

@@ -34,6 +34,11 @@ _HEALTH = (
     "A healthy study fails any of its checks by chance in one case out of twenty at most. Every reading, with its "
     "limit and what it means, is in health.csv; what a failed check touches bears a mark in all tables."
 )
+_BUDGET = (
+    "Each source as one standard uncertainty; the expanded one holds those that are known, in squares, and is about "
+    "95 %. The shift of a finite box is what a closed box of so many particles adds, by the reference nearest to the "
+    "fluid; that of periodic images is not known. Other properties are in budget.csv."
+)
 _CURVES = (
     "Points are the rungs' own values, which the curve does not pass through by construction; where no curve is drawn, "
     "too few samples support it. A reference is dashed."
@@ -116,6 +121,10 @@ def _set(number: int, where: str, results: Results) -> Iterator[str]:
         yield f'<p class="fine">{escape(_CURVES if methods.Setup.of(results).bath else _NO_CURVES)}</p>'
     yield from _tabled("Further properties", tables.derived(results, with_density=several))
     yield from _tabled("Comparison, value by value", "".join(tables.comparison(results)), f"{side} comparison")
+    budget = tables.budget(results, [words.heat_capacity_name(results), "pressure"])
+    if budget:
+        yield f"<details><summary>Uncertainty budget</summary>{budget}"
+        yield f'<p class="fine">{escape(_BUDGET)}</p></details>'
     yield from _sampled(where, results, isochore)
     yield "</section>"
 

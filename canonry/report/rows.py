@@ -68,4 +68,5 @@ def at_densities(results: Results, densities: list[float]) -> Results:
         reference_curve=own(results.reference_curve),
         equilibration=own(results.equilibration),
         health=own(results.health),
+        budget=own(results.budget),
     )

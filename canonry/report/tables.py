@@ -18,7 +18,7 @@ from canonry.units import PROPERTIES, unit_label
 if TYPE_CHECKING:
     import pandas as pd
 
-__all__ = ["MARKS", "checks", "comparison", "derived", "sampling", "values"]
+__all__ = ["MARKS", "budget", "checks", "comparison", "derived", "sampling", "values"]
 
 MARKS = {"ok": "", "caution": "†", "no": "‡"}
 _FIRST = (
@@ -31,6 +31,13 @@ _FIRST = (
     "bulk_modulus",
 )
 _OUTCOMES = {"agrees": "✓ agrees", "disagrees": "✗ disagrees", "undecided": "? undecided"}
+_SOURCES = {
+    "statistical": "statistical",
+    "time_step": "time step",
+    "cutoff": "cutoff and tail",
+    "finite_size": "finite size",
+    "equilibration": "equilibration",
+}
 _STRIP = 4.0
 
 
@@ -79,6 +86,32 @@ def checks(results: Results, sets: Sequence[tuple[str, Results]]) -> str:
     """One row a health check: what it asks, and how it fared at the states of each set."""
     heads = ["check", "what holds where it is passed", *(where for where, _ in sets)]
     return _table(heads, [_row(map(as_html, cells)) for cells in fared(results, [own for _, own in sets])])
+
+
+def budget(results: Results, names: Sequence[str]) -> str:
+    """Of each value of these properties, what each source of uncertainty adds."""
+    rows = results.budget[results.budget["property"].isin(names)].sort_values(["property", "density", "temperature"])
+    factors = " and ".join(f"{factor:g}" for factor in sorted(set(rows["coverage_factor"])))
+    several = rows["density"].nunique() > 1
+    heads = ["value", "", *_SOURCES.values(), f"expanded|coverage factor {factors}"]
+    body = [
+        _row(
+            [
+                plain(row["temperature"]),
+                *([plain(row["density"])] if several else []),
+                f"{as_html(symbol_of(row['property']))} = {_typeset(plain(row['value'], 5))}",
+                as_html(unit_text(row["unit"])),
+                *(_source(row[name]) for name in _SOURCES),
+                plain(row["expanded"], 2),
+            ]
+        )
+        for _, row in rows.iterrows()
+    ]
+    return _table([*_state_heads(results, several), *heads], body) if body else ""
+
+
+def _source(size: float | str) -> str:
+    return size if isinstance(size, str) else plain(size, 2)
 
 
 def _states(results: Results, names: Sequence[str], with_density: bool) -> str:

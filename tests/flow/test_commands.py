@@ -17,6 +17,7 @@ from canonry.cli import main
 from canonry.results import COLUMNS
 from canonry.starter import FLUIDS
 from canonry.study import load
+from canonry.tables import TABLES
 from reference import find, names
 
 ROOT = Path(__file__).parents[2]
@@ -90,7 +91,7 @@ def rows(directory: Path, name: str) -> list[dict[str, str]]:
 def test_run_writes_every_file(sampled: tuple[Path, Result]) -> None:
     directory, _ = sampled
     found = {path.name for path in directory.iterdir()}
-    tables = {f"{name}.csv" for name in ("properties", "curve", "structure", "verdict", "summary")}
+    tables = {f"{name}.csv" for name in TABLES}
     assert found == tables | {"study.toml", "report.html", "sessions.csv", "rungs"}
     assert load(directory / "study.toml").to_toml() == load(directory.with_suffix(".toml")).to_toml()
 

