@@ -40,6 +40,10 @@ N = 256
 LEVEL = 0.01
 FLUID = Fluid(cutoff=3.0)
 LADDERS = ((0.8, (1.0, 1.1, 1.21, 1.33)), (0.3, (2.0, 2.2, 2.42, 2.66)), (0.1, (1.6, 1.8, 2.02, 2.27)))
+RECORDED = (
+    *("energy", "sampled_energy", "virial", "hypervirial", "kinetic", "ledger"),
+    *("kinetic_parts", "momentum", "force_square", "laplacian"),
+)
 LIQUID = State(1.0, 0.8, N)
 READINGS_OF_A_STUDY = 50  # statistical ones, of four rungs: what the level of a study is shared by
 
@@ -87,8 +91,7 @@ def trajectory(chain: Chain, before: Segment | None) -> tuple[list[Segment], Seg
 
 def joined(parts: Sequence[Series]) -> Series:
     """One series of several that follow one another."""
-    columns = ("energy", "sampled_energy", "virial", "hypervirial", "kinetic", "ledger", "kinetic_parts", "momentum")
-    values = {name: np.concatenate([getattr(part, name) for part in parts]) for name in (*columns, "frames")}
+    values = {name: np.concatenate([getattr(part, name) for part in parts]) for name in (*RECORDED, "frames")}
     return replace(parts[0], **values)
 
 
@@ -158,8 +161,7 @@ def late(state: State, seed: int, effort: float) -> list[Series]:
 def frozen(state: State, seed: int, effort: float) -> list[Series]:
     """The second of two repeats does not move."""
     moving, still = repeats(state, seed, effort)
-    names = ("energy", "sampled_energy", "virial", "hypervirial", "kinetic", "ledger", "kinetic_parts", "momentum")
-    held = {name: np.broadcast_to(getattr(still, name)[:1], getattr(still, name).shape).copy() for name in names}
+    held = {name: np.broadcast_to(getattr(still, name)[:1], getattr(still, name).shape).copy() for name in RECORDED}
     return [moving, replace(still, frames=np.broadcast_to(still.frames[:1], still.frames.shape).copy(), **held)]
 
 
