@@ -103,12 +103,13 @@ def _check(study: Path, workers: int | None, as_json: bool) -> None:
     from dataclasses import asdict
 
     from canonry.border import Border
-    from canonry.directory import continues, locate
+    from canonry.directory import continues, locate, must_sample
     from canonry.plan import plan
     from canonry.sampling import left
     from canonry.terminal import left_text, plan_text
 
     found, directory = locate(study)
+    must_sample(found, directory)
     _tell_if_compiling()
     planned = plan(found, workers=workers)
     lacking = left(found, directory) if continues(found, directory) else planned.particle_steps
@@ -125,18 +126,25 @@ def _check(study: Path, workers: int | None, as_json: bool) -> None:
 @_into
 @_workers
 @_units
-def _run(study: Path, into: Path | None, workers: int | None, units: Any) -> None:
+@click.option("--step-bias", is_flag=True, help="Sample the ends exactly too, to see what the time step shifts.")
+def _run(study: Path, into: Path | None, workers: int | None, units: Any, step_bias: bool) -> None:
     """Sample, estimate, compare and report in one go; again: resume, extend, or say that all is there."""
     from canonry.border import Border
-    from canonry.directory import locate
+    from canonry.directory import locate, must_sample
     from canonry.job import is_finished, report
+    from canonry.sampling import left
+    from canonry.step_bias import exact, folder
 
     found, directory = locate(study, into)
+    must_sample(found, directory)
     border = Border.of(found, units)
-    if is_finished(found, directory, units):
+    more = step_bias and left(exact(found), folder(directory)) > 0
+    if is_finished(found, directory, units) and not more:
         click.echo(f"{directory} is finished: nothing is missing.\n")
     else:
         _fill(found, directory, workers, border)
+        if more:
+            _fill(exact(found), folder(directory), workers, border)
         with _working() as watch:
             results = report(directory, units=units, watch=watch)
         _tell_caveats(results)
@@ -212,6 +220,18 @@ def _report(study: Path, into: Path | None, units: Any) -> None:
     with _working() as watch:
         report(directory, units=units, watch=watch)
     click.echo(f"{directory / 'report.html'} is written.")
+
+
+@main.command("adopt")
+@_path("spec")
+@click.option("--into", type=click.Path(path_type=Path), required=True, help="A new or empty directory.")
+def _adopt(spec: Path, into: Path) -> None:
+    """Bring in samples that were taken elsewhere, as SPEC describes them. Then: canonry report DIR."""
+    from canonry.adoption import adopt, adoption_text
+
+    with _working() as watch:
+        adoption = adopt(spec, into=into, watch=watch)
+    click.echo(adoption_text(adoption))
 
 
 @main.command("reference")

@@ -21,7 +21,7 @@ from estimators.estimate import Chain, Estimate
 from estimators.health.box import box
 from estimators.health.enough import enough
 from estimators.health.equal_shares import equal_shares
-from estimators.health.force_temperature import force_temperature
+from estimators.health.force_temperature import both_temperatures, force_temperature
 from estimators.health.heat_routes import heat_routes
 from estimators.health.kinetic_law import kinetic_law
 from estimators.health.ledger import ledger
@@ -163,11 +163,11 @@ class Samples:
 
     @cached_property
     def sums(self) -> dict[Chain, FrameSums] | None:
-        """Of the frames of `seen`; None where there are none, or the cutoff leaves no room for a smaller box."""
+        """Of the frames of `seen`; None where there are none, no pair functions, or no room for a smaller box."""
         from sampler.errors import BadRequest
         from sampler.frames import reevaluate
 
-        if not any(len(each.frames) for each in self.seen):
+        if not (self.seen[0].fluid.has_pairs and any(len(each.frames) for each in self.seen)):
             return None
         try:
             return {each.chain: reevaluate(each.fluid, each.frames, state=each.state) for each in self.seen}
@@ -182,14 +182,15 @@ _OF_RUNG: tuple[Look, ...] = (
     lambda of: ledger(of.series, level=LEVEL),
     lambda of: kinetic_law(of.series, level=LEVEL),
     lambda of: equal_shares(of.series, level=LEVEL),
-    lambda of: of.sums and force_temperature(of.seen, of.sums, level=LEVEL),
+    lambda of: force_temperature(of.seen, of.sums, level=LEVEL),
+    lambda of: both_temperatures(of.seen, of.sums, level=LEVEL),
     lambda of: settled(of.series, cut=of.cuts, level=LEVEL),
     lambda of: enough(of.series, level=LEVEL),
     lambda of: one_phase(of.seen, bulk_modulus=of.bulk_modulus, level=LEVEL),
     lambda of: box(of.series, of.structure, level=LEVEL),
-    lambda of: of.sums and virial_routes(of.seen, None, of.sums, level=LEVEL),
+    lambda of: virial_routes(of.seen, None, of.sums, level=LEVEL) if of.sums else None,
     lambda of: virial_routes(of.series, of.structure, None, level=LEVEL),
-    lambda of: of.sums and of.wavelength and quantum(of.seen, of.sums, wavelength=of.wavelength),
+    lambda of: quantum(of.seen, of.sums, wavelength=of.wavelength) if of.sums and of.wavelength else None,
 )
 _OF_SLOPES: tuple[Callable[[Estimate, Estimate], Found], ...] = (
     lambda own, slope: heat_routes(own, slope, level=LEVEL),
