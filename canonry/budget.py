@@ -24,7 +24,7 @@ from sampler.fluid import Fluid, State
 if TYPE_CHECKING:
     from reference import Reference
 
-__all__ = ["COVERAGE", "NOT_KNOWN", "WITHIN", "Budget", "budgets", "finite_size", "tail"]
+__all__ = ["COVERAGE", "NOT_KNOWN", "WITHIN", "Budget", "budgets", "finite_size", "step", "tail"]
 
 COVERAGE = 2.0  # times the combined standard uncertainty: about 95 %
 NOT_KNOWN = "not known"
@@ -40,7 +40,8 @@ class Budget:
     """Standard uncertainties of one headline value, in its reduced unit, or why there is no number.
 
     statistical : the standard error
-    time_step, cutoff, finite_size : sizes of shifts that are not corrected for; no cutoff can be wrong where the
+    time_step : see `step`; none where sampling is exact
+    cutoff, finite_size : sizes of shifts that are not corrected for; no cutoff can be wrong where the
         potential ends there by definition
     equilibration : `WITHIN` where no trend is left, and halves and repeats agree within their errors
     """
@@ -67,6 +68,8 @@ def budgets(study: Study, findings: Findings) -> Iterator[Budget]:
     states = {finding.state for finding in findings.headlines}
     sizes = {state: finite_size(state, reference) for state in states}
     tails = {state: tail(study.fluid, state, findings.structures.get(state)) for state in states}
+    steps = {state: step(findings, state) for state in states}
+    at_any_step = study.adopted is None and study.sampling.scheme == "metropolised"
     for finding in findings.headlines:
         if finding.estimate is None:
             continue
@@ -74,7 +77,7 @@ def budgets(study: Study, findings: Findings) -> Iterator[Budget]:
         yield Budget(
             finding,
             statistical=finding.estimate.standard_error,
-            time_step=0.0 if study.adopted is None and study.sampling.scheme == "metropolised" else NOT_KNOWN,
+            time_step=0.0 if at_any_step else _size(steps[finding.state], name),
             cutoff=_size(tails[finding.state], name),
             finite_size=_size(sizes[finding.state], name),
             equilibration=WITHIN if finding.state in settled else NOT_KNOWN,
@@ -83,6 +86,14 @@ def budgets(study: Study, findings: Findings) -> Iterator[Budget]:
 
 def _size(shifts: Mapping[str, float], name: str) -> Component:
     return abs(shifts[name]) if name in shifts else NOT_KNOWN
+
+
+def step(findings: Findings, state: State) -> Mapping[str, float]:
+    """Shift from exact sampling by property, or the error of that difference where it is larger; empty without such."""
+    exact = findings.exact.get(state, {})
+    own = {f.property: f.estimate for f in findings.properties if f.state == state and f.method != "reweighted"}
+    shifts = {name: found - exact[name] for name, found in own.items() if found is not None and name in exact}
+    return {name: max(abs(shift.value), shift.standard_error) for name, shift in shifts.items()}
 
 
 def tail(fluid: Fluid, state: State, structure: Structure | None) -> Mapping[str, float]:

@@ -18,6 +18,7 @@ from canonry.isochore import Isochore, assemble
 from canonry.risks import doubt, guide
 from canonry.sampling import recorded
 from canonry.step_bias import checks as step_bias_checks
+from canonry.step_bias import exactly
 from canonry.study import Study
 from canonry.units import Scale
 from estimators.canonical import kinetic_temperature, rung_properties
@@ -93,7 +94,8 @@ def findings(study: Study, directory: Path, border: Border, *, watch: Callable[[
     checks = [check for rung in rungs for check in rung.checks]
     for isochore, own in zip(isochores, _by_density(rungs), strict=True):
         checks += of_isochore(isochore, {rung.state: rung.series for rung in own})
-    checks += step_bias_checks(study, directory, {rung.state: rung.own for rung in rungs})
+    exact = exactly(study, directory)
+    checks += step_bias_checks({rung.state: rung.own for rung in rungs}, exact)
     health = judged(checks)
 
     def doubted(findings: Iterable[Iterable[Finding]]) -> Iterator[Finding]:
@@ -110,6 +112,7 @@ def findings(study: Study, directory: Path, border: Border, *, watch: Callable[[
         histograms=tuple(curve for rung in rungs if (curve := rung.histogram) is not None),
         ledgers=tuple(ledger for rung in rungs for ledger in rung.ledgers),
         health=(*health, *(known(states, reference) if reference else ())),
+        exact=exact,
         unfinished=tuple(unfinished),
     )
 

@@ -95,6 +95,7 @@ class Findings:
     histograms : probability density of U/N
     ledgers : change of K + U_dyn + ledger per particle over time
     health : what every check read
+    exact : estimates by property from sampling that is exact at any time step, where there is such
     unfinished : states that lack samples the study asks for
     """
 
@@ -106,6 +107,7 @@ class Findings:
     histograms: tuple[Curve, ...]
     ledgers: tuple[Curve, ...]
     health: tuple[Check, ...]
+    exact: Mapping[State, Mapping[str, Estimate]]
     unfinished: tuple[State, ...]
 
     @property

@@ -13,7 +13,7 @@ from canonry.study import Study
 from estimators.estimate import Estimate
 from sampler.fluid import State
 
-__all__ = ["checks", "exact", "folder"]
+__all__ = ["checks", "exact", "exactly", "folder"]
 
 Properties = Mapping[str, Estimate]
 
@@ -37,23 +37,29 @@ def folder(directory: Path) -> Path:
     return directory / "step-bias"
 
 
-def checks(study: Study, directory: Path, own: Mapping[State, Properties]) -> Iterator[Check]:
-    """What the check of the time step reads at each rung that has been sampled exactly too.
-
-    own : estimates of each rung alone
-    """
+def exactly(study: Study, directory: Path) -> dict[State, Properties]:
+    """Estimates of each rung that has been sampled exactly too, from those samples alone."""
     from canonry.directory import STUDY
     from canonry.estimation import settled
     from canonry.sampling import recorded
     from estimators.canonical import rung_properties
-    from estimators.health.step_bias import step_bias
 
     if not (folder(directory) / STUDY).exists():
-        return
+        return {}
     with_test = exact(study)
-    for state in with_test.states:
-        series = [settled(each) for each in recorded(with_test, folder(directory), state)]
-        if series and state in own:
-            yield from (
-                Check(state, each) for each in step_bias(own[state], rung_properties(series), level=LEVEL) or ()
-            )
+    found = {
+        state: [settled(each) for each in recorded(with_test, folder(directory), state)] for state in with_test.states
+    }
+    return {state: rung_properties(series) for state, series in found.items() if series}
+
+
+def checks(own: Mapping[State, Properties], exactly: Mapping[State, Properties]) -> Iterator[Check]:
+    """What the check of the time step reads at each rung that has been sampled exactly too.
+
+    own : estimates of each rung alone
+    """
+    from estimators.health.step_bias import step_bias
+
+    for state, properties in exactly.items():
+        if state in own:
+            yield from (Check(state, each) for each in step_bias(own[state], properties, level=LEVEL) or ())

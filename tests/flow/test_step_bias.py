@@ -2,6 +2,7 @@
 
 from pathlib import Path
 
+import pandas as pd
 import pytest
 from click.testing import CliRunner
 
@@ -40,6 +41,10 @@ def test_the_ends_of_each_isochore_are_sampled_exactly_too(tmp_path: Path, monke
     assert len(rows) == 3 * len(ends)  # u, P and c_v of each
     # obabo shifts u by 0.0136 (dt/0.01)^2 at T 1.5 and density 0.84 (measured), 0.035 here; its error is about 0.006
     assert (rows["statistic"] > 3).sum() >= 2
+    budget = pd.read_csv("study/budget.csv", keep_default_na=False).set_index(["temperature", "density", "property"])
+    shifts = budget["time_step"]
+    assert {*shifts[1.4]} == {"not known"}
+    assert all(0.005 < float(shifts[temperature, density, "residual_energy"]) < 0.06 for temperature, density in ends)
     again = CliRunner().invoke(main, ["run", "study.toml", "--step-bias"])
     assert "is finished" in again.stdout
 
