@@ -21,7 +21,7 @@ from estimators.estimate import Chain, Estimate
 from estimators.health.box import box
 from estimators.health.enough import enough
 from estimators.health.equal_shares import equal_shares
-from estimators.health.force_temperature import both_temperatures, force_temperature
+from estimators.health.force_temperature import force_temperature
 from estimators.health.heat_routes import heat_routes
 from estimators.health.kinetic_law import kinetic_law
 from estimators.health.ledger import ledger
@@ -183,7 +183,6 @@ _OF_RUNG: tuple[Look, ...] = (
     lambda of: kinetic_law(of.series, level=LEVEL),
     lambda of: equal_shares(of.series, level=LEVEL),
     lambda of: force_temperature(of.seen, of.sums, level=LEVEL),
-    lambda of: both_temperatures(of.seen, of.sums, level=LEVEL),
     lambda of: settled(of.series, cut=of.cuts, level=LEVEL),
     lambda of: enough(of.series, level=LEVEL),
     lambda of: one_phase(of.seen, bulk_modulus=of.bulk_modulus, level=LEVEL),

@@ -10,12 +10,11 @@ import numpy.typing as npt
 
 from estimators.estimate import Chain, Estimate, combine, mean
 from estimators.health.excess import excess, too_short
-from estimators.health.kinetic_law import LOW_MEAN
 from estimators.health.reading import Reading, threshold
 from sampler.fluid import Fluid, State
 from sampler.series import FrameSums, Series
 
-__all__ = ["both_temperatures", "force_temperature", "surface_laplacian"]
+__all__ = ["force_temperature", "surface_laplacian"]
 
 Floats = npt.NDArray[np.float64]
 
@@ -42,8 +41,15 @@ def force_temperature(
     D. J. Evans, J. Chem. Phys. 109, 6519 (1998)). At constant energy that ratio is off by a term of order 1/N; a
     configuration weighs K^(a-1) there, a = f/2, so that <(a-1) sum F^2 / K> = <sum nabla^2 U> holds without one.
     """
-    off = _off(series, frames, contact)
-    if off is None:
+    if not (series[0].bath or all(each.has("kinetic") for each in series)):
+        return None
+    found = _recorded(series) or _again(series, frames or {})
+    if found is None:
+        return None
+    forces, curvature = (mean({chain: both[k] for chain, both in found.items()}) for k in (0, 1))
+    curvature = curvature + surface_laplacian(series[0].fluid, series[0].state) * contact
+    off = combine(lambda force, slope: force / slope - 1.0, forces, curvature)
+    if too_short(off):
         return None
     return Reading(
         "force-temperature",
@@ -53,51 +59,6 @@ def force_temperature(
         f"{100.0 * off.standard_error:.2f} %) beside the one stated, of which {100.0 * ALLOWED:g} % are allowed to the "
         "time step; if it fails, take a smaller time step, and see that temperature and fluid are those of the samples",
     )
-
-
-def both_temperatures(
-    series: Sequence[Series],
-    frames: Mapping[Chain, FrameSums] | None,
-    *,
-    level: float,
-    contact: Estimate | float = 1.0,
-) -> Reading | None:
-    """The same temperature and the kinetic one taken together, which sees a smaller error than either.
-
-    None without a bath or kinetic energies, or where `force_temperature` says nothing.
-    """
-    if not all(each.bath and each.has("kinetic") for each in series):
-        return None
-    off = _off(series, frames, contact)
-    kinetic = mean({each.chain: each.column("kinetic") for each in series})
-    if off is None or too_short(kinetic):
-        return None
-    moving = kinetic / (0.5 * series[0].kinetic_freedom * series[0].state.temperature) - 1.0
-    share = moving.variance / (off.variance + moving.variance)
-    together = share * _unskewed(off) + (1.0 - share) * moving
-    return Reading(
-        "force-temperature",
-        excess(together, -share * ALLOWED - (1.0 - share) * LOW_MEAN, share * ALLOWED),
-        threshold(level),
-        f"positions and velocities together say a temperature {100.0 * together.value:+.2f} % (standard error "
-        f"{100.0 * together.standard_error:.2f} %) beside the one stated; if it fails, see that the temperature is "
-        "that of the samples, or take a smaller time step",
-    )
-
-
-def _off(
-    series: Sequence[Series], frames: Mapping[Chain, FrameSums] | None, contact: Estimate | float
-) -> Estimate | None:
-    """Share by which the configurational temperature is off."""
-    if not (series[0].bath or all(each.has("kinetic") for each in series)):
-        return None
-    found = _recorded(series) or _again(series, frames or {})
-    if found is None:
-        return None
-    forces, curvature = (mean({chain: both[k] for chain, both in found.items()}) for k in (0, 1))
-    curvature = curvature + surface_laplacian(series[0].fluid, series[0].state) * contact
-    off = combine(lambda force, slope: force / slope - 1.0, forces, curvature)
-    return None if too_short(off) else off
 
 
 def surface_laplacian(fluid: Fluid, state: State) -> float:

@@ -42,4 +42,4 @@ def threshold(level: float) -> float:
 
 def deviate(probability: float) -> float:
     """Standard normal deviation with this two-sided probability of a larger one; finite also for 0."""
-    return float(stats.norm.isf(0.5 * max(probability, math.ulp(0.0))))
+    return float(stats.norm.isf(max(0.5 * probability, math.ulp(0.0))))

@@ -9,7 +9,7 @@ import numpy as np
 import numpy.typing as npt
 from scipy import stats
 
-from estimators.estimate import Chain, Estimate, exact, mean
+from estimators.estimate import Chain, Estimate
 from estimators.gamma import coarsened, scatter
 from estimators.health.excess import LEAST, excess, jointly, too_short
 from estimators.health.reading import Reading, deviate, threshold
@@ -22,12 +22,7 @@ __all__ = ["settled"]
 Floats = npt.NDArray[np.float64]
 
 CHECK = "settled"
-OBSERVED = {
-    "sampled_energy": "potential energy",
-    "virial": "virial",
-    "kinetic": "kinetic energy",
-    "forces": "squared force beyond that of the temperature",
-}
+OBSERVED = {"sampled_energy": "potential energy", "virial": "virial", "kinetic": "kinetic energy"}
 COMPARED = ("sampled_energy", "virial")  # between halves and repeats
 LATEST = 0.48  # of the run: a cut is placed in steps of 2 % and no later than half
 RANKED = 2000  # entries of a repeat that are ranked; longer series enter as block sums
@@ -44,25 +39,14 @@ def settled(
     differ in energy, so only halves are compared. A repeat that does not move at all fails by itself.
     None for what holds fewer than 50 effective samples, unless it stands still; None if nothing is left.
     """
-    columns = [name for name in OBSERVED if series and all(_has(each, name) for each in series)]
+    columns = [name for name in OBSERVED if series and all(each.has(name) for each in series)]
     readings = [_still(each) for each in series if len(each) and _stands_still(each, columns)]
     if not readings:
-        found = (_trend(series, columns, level), _warming(series, level), _agreement(series, columns, level))
+        found = (_trend(series, columns, level), _agreement(series, columns, level))
         readings = [each for each in found if each is not None]
     if cut is not None:
         readings += [_cut(each, *both) for each, both in zip(series, cut, strict=True)]
     return readings or None
-
-
-def _has(each: Series, name: str) -> bool:
-    return each.has(*(("force_square", "laplacian") if name == "forces" else (name,)))
-
-
-def _observed(each: Series, name: str) -> Floats:
-    """A column, or what forgets soonest and so shows a slow change of temperature best: sum F^2 - T sum nabla^2 U."""
-    if name != "forces":
-        return each.column(name)
-    return each.column("force_square") - each.state.temperature * each.column("laplacian")
 
 
 def _stands_still(each: Series, columns: Sequence[str]) -> bool:
@@ -86,7 +70,7 @@ def _cut(each: Series, cut: int, recorded: int) -> Reading:
 
 def _trend(series: Sequence[Series], columns: Sequence[str], level: float) -> Reading | None:
     long_enough = [each for each in series if len(each) > 1]
-    fits = {name: _rise({each.chain: _observed(each, name) for each in long_enough}) for name in columns if long_enough}
+    fits = {name: _rise({each.chain: each.column(name) for each in long_enough}) for name in columns if long_enough}
     fits = {name: fit for name, fit in fits.items() if not too_short(fit[0])}
     if not fits:
         return None
@@ -99,39 +83,6 @@ def _trend(series: Sequence[Series], columns: Sequence[str], level: float) -> Re
         "run has not settled or that its temperature was changed, so take a longer equilibration"
     )
     return Reading(CHECK, jointly(*deviates.values()), threshold(level), meaning)
-
-
-def _warming(series: Sequence[Series], level: float) -> Reading | None:
-    """The trend that a change of the bath's temperature would give all columns together, by least squares.
-
-    d<K>/dlnT = <K>, d<U_dyn>/dlnT = var(U_dyn)/T and d<sum F^2 - T_set sum nabla^2 U>/dlnT = <sum F^2>.
-    """
-    names = ("kinetic", "sampled_energy", "forces")
-    if not series or not all(
-        each.bath and len(each) > 1 and all(_has(each, name) for name in names) for each in series
-    ):
-        return None
-    values = {name: {each.chain: _observed(each, name) for each in series} for name in names}
-    if any(too_short(mean(columns)) for columns in values.values()):
-        return None
-    energies = np.concatenate([each.column("sampled_energy") for each in series])
-    answers = {
-        "kinetic": float(np.mean(np.concatenate([each.column("kinetic") for each in series]))),
-        "sampled_energy": float(np.var(energies)) / series[0].state.temperature,
-        "forces": float(np.mean(np.concatenate([each.column("force_square") for each in series]))),
-    }
-    rises = {name: _rise(columns)[0] for name, columns in values.items()}
-    weights = {name: answers[name] / rises[name].variance for name in names}
-    norm = sum(weights[name] * answers[name] for name in names)
-    change = exact(0.0)
-    for name in names:
-        change = change + rises[name] * (weights[name] / norm)
-    meaning = (
-        f"from begin to end of the run the temperature seems to change by {100.0 * change.value:+.2g} %, +- "
-        f"{100.0 * math.sqrt(change.variance):.1g} %, judging by all that depends on it; a trend means that the run "
-        "has not settled or that its temperature was changed"
-    )
-    return Reading(CHECK, excess(change, 0.0, 0.0), threshold(level), meaning)
 
 
 def _rise(values: dict[Chain, Floats]) -> tuple[Estimate, float]:
