@@ -31,10 +31,10 @@ from sampler.noise import chain_key
 from sampler.pairs import pair_function
 from sampler.protocol import Protocol
 from sampler.rung import advance, assemble, skins
-from sampler.schemes import COLUMNS, propagate, substeps
+from sampler.schemes import propagate, substeps
 from sampler.series import Series
 from sampler.start import first_positions, first_velocities
-from sampler.store import Chain, Segment
+from sampler.store import COLUMNS, Chain, Segment
 
 N = 256
 LEVEL = 0.01

@@ -20,8 +20,9 @@ from sampler import rung
 from sampler.fluid import Fluid, State
 from sampler.noise import chain_key
 from sampler.pairs import pair_function
-from sampler.schemes import COLUMNS, propagate, substeps
+from sampler.schemes import propagate, substeps
 from sampler.start import first_positions, first_velocities
+from sampler.store import COLUMNS
 
 STATES = ((1.0, 0.8, 2.0), (1.5, 0.3, 1.0), (1.3, 0.95, 2.0))  # temperature, density, friction
 TIME_STEP, EVERY, SETTLING = 0.005, 10, 4000

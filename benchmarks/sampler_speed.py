@@ -32,8 +32,9 @@ from sampler.noise import chain_key
 from sampler.pairs import pair_function, tabulated
 from sampler.potentials import lennard_jones
 from sampler.protocol import Protocol
-from sampler.schemes import COLUMNS, propagate, substeps
+from sampler.schemes import propagate, substeps
 from sampler.start import first_positions, first_velocities
+from sampler.store import COLUMNS
 
 CUTOFF, TIME_STEP, FRICTION, EVERY = 3.0, 0.005, 2.0, 10
 WINDOW = 1_000_000  # particle-steps of a window: a tenth of a second

@@ -12,11 +12,11 @@ from sampler.fluid import State
 from sampler.noise import chain_key
 from sampler.pairs import pair_function
 from sampler.protocol import Scheme
-from sampler.schemes import COLUMNS, DIVERGED, STOPPED, propagate, substeps
+from sampler.schemes import DIVERGED, STOPPED, propagate, substeps
 from sampler.series import Series
 from sampler.slots import Skins
 from sampler.start import first_positions, first_velocities
-from sampler.store import Chain, Segment, read
+from sampler.store import COLUMNS, Chain, Segment, read
 
 __all__ = ["advance", "assemble", "sampled_segments", "skins"]
 

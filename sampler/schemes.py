@@ -22,14 +22,8 @@ from sampler.protocol import SUBSTEPS, Scheme
 from sampler.slots import exact_forces, farthest, label_order, quick_forces, renewed, slots_of, wrap
 from sampler.vector import load, splat, store, total
 
-__all__ = ["COLUMNS", "DIVERGED", "DONE", "STOPPED", "Steps", "propagate", "substeps"]
+__all__ = ["DIVERGED", "DONE", "STOPPED", "Steps", "propagate", "substeps"]
 
-COLUMNS = (
-    *("s12", "s6", "pairs", "distances", "laplacian", "force_square", "ledger"),
-    *("kinetic_x", "kinetic_y", "kinetic_z", "momentum_x", "momentum_y", "momentum_z"),
-    "rejected",
-)
-"""What is recorded of a sample."""
 DONE, STOPPED, DIVERGED = 0, 1, 2
 _A, _B, _O = 0, 1, 2
 _STRETCH = 256  # slots

@@ -18,9 +18,15 @@ from sampler.errors import DamagedSegment, ForeignDirectory
 from sampler.fluid import Fluid, State
 from sampler.protocol import Protocol
 
-__all__ = ["Chain", "Segment", "deposit", "read", "retrieve", "set_aside", "write"]
+__all__ = ["COLUMNS", "Chain", "Segment", "deposit", "read", "retrieve", "set_aside", "write"]
 
 Floats = npt.NDArray[np.float64]
+COLUMNS = (
+    *("s12", "s6", "pairs", "distances", "laplacian", "force_square", "ledger"),
+    *("kinetic_x", "kinetic_y", "kinetic_z", "momentum_x", "momentum_y", "momentum_z"),
+    "rejected",
+)
+"""What is recorded of a sample."""
 _ARRAYS = ("samples", "frames", "positions", "velocities")
 
 
@@ -29,7 +35,7 @@ class Segment:
     """Consecutive steps of one repeat.
 
     first, last : the steps are first + 1 to last
-    samples : (n_samples, 14), columns of `sampler.schemes.COLUMNS`
+    samples : (n_samples, 14), columns of COLUMNS
     frames : (n_frames, particles, 3), positions inside the box
     positions, velocities : (particles, 3), at step `last`
     ledger : kinetic energy that the bath has taken up to step `last`
@@ -72,7 +78,13 @@ class Chain:
     @property
     def identity(self) -> dict[str, object]:
         """What all samples of this chain share."""
-        return {**asdict(self.fluid), **asdict(self.state), **self.protocol.identity, "repeat": self.repeat}
+        return {
+            **asdict(self.fluid),
+            **asdict(self.state),
+            **self.protocol.identity,
+            "repeat": self.repeat,
+            "recorded": " ".join(COLUMNS),
+        }
 
 
 def _checksum(arrays: Mapping[str, Floats], facts: Mapping[str, object]) -> str:

@@ -128,6 +128,13 @@ def test_samples_of_another_study_are_refused(tmp_path, change, key):
         sampled(tmp_path, STATES[:1], replace(PROTOCOL, **change))
 
 
+def test_samples_of_a_version_that_recorded_other_things_are_refused(tmp_path, monkeypatch):
+    sampled(tmp_path, STATES[:1])
+    monkeypatch.setattr("sampler.store.COLUMNS", ("s12", "s6"))
+    with pytest.raises(ForeignDirectory, match="was sampled with recorded 's12 s6 pairs .*, asked for is 's12 s6'"):
+        sampled(tmp_path, STATES[:1])
+
+
 def test_other_rungs_are_finished_when_one_flies_apart(tmp_path, monkeypatch):
     from sampler import rung
 

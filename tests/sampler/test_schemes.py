@@ -9,9 +9,10 @@ from sampler.forces import evaluate
 from sampler.noise import chain_key, normals
 from sampler.pairs import pair_function
 from sampler.protocol import SUBSTEPS
-from sampler.schemes import COLUMNS, DIVERGED, DONE, STOPPED, propagate, substeps
+from sampler.schemes import DIVERGED, DONE, STOPPED, propagate, substeps
 from sampler.slots import Skins, exact_forces, label_order, renewed, slots_of
 from sampler.start import first_positions, first_velocities
+from sampler.store import COLUMNS
 
 SKINS = Skins(0.2, 0.9)
 
