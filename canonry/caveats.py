@@ -12,6 +12,8 @@ from sampler.fluid import State
 
 __all__ = ["caveats"]
 
+_FEW = 0.8  # accepted steps
+
 
 def caveats(study: Study, findings: Findings, border: Border) -> list[str]:
     """The sentences, in the units of the border."""
@@ -20,6 +22,7 @@ def caveats(study: Study, findings: Findings, border: Border) -> list[str]:
         *_unfinished(findings, border),
         *risks(study, border),
         *_measured_temperatures(findings),
+        *_acceptance(findings),
     ]
 
 
@@ -31,6 +34,14 @@ def _unfinished(findings: Findings, border: Border) -> Iterator[str]:
 def _measured_temperatures(findings: Findings) -> Iterator[str]:
     if any(finding.temperature is not None for finding in findings.properties):
         yield "No bath acts while samples are taken: temperatures are those of the mean kinetic energy, not those set."
+
+
+def _acceptance(findings: Findings) -> Iterator[str]:
+    shares = [cut.acceptance for cut in findings.cuts if cut.acceptance is not None]
+    if shares:
+        low, high = (f"{100.0 * share:.1f}" for share in (min(shares), max(shares)))
+        advice = "; a smaller time step wastes fewer" if min(shares) < _FEW else ""
+        yield f"The Metropolis test passed {low if low == high else f'{low} to {high}'} % of the steps{advice}."
 
 
 def _listed(states: Sequence[State], border: Border) -> str:

@@ -176,7 +176,8 @@ def _rung(recorded: list[Series], scale: Scale | None) -> _Rung | None:
 def _cut(state: State, before: Series, after: Series) -> Cut:
     name = next(name for name in ("energy", "virial", "kinetic") if after.has(name))
     effective = mean({after.chain: after.column(name)}).effective_samples
-    return Cut(state, before.repeat, len(before) - len(after), len(before), effective)
+    passed = 1.0 - float(np.mean(before.column("rejected"))) if before.has("rejected") else None
+    return Cut(state, before.repeat, len(before) - len(after), len(before), effective, passed)
 
 
 def _ledger(state: State, series: Series) -> Curve:

@@ -58,13 +58,17 @@ class Check:
 
 @dataclass(frozen=True)
 class Cut:
-    """Samples left out at the start of a repeat; `effective_samples` stand behind the energy of the rest."""
+    """Samples left out at the start of a repeat; `effective_samples` stand behind the energy of the rest.
+
+    acceptance : share of the steps that passed the Metropolis test; None where there is none
+    """
 
     state: State
     repeat: int
     cut: int
     samples: int
     effective_samples: float
+    acceptance: float | None = None
 
 
 @dataclass(frozen=True)

@@ -125,5 +125,7 @@ def assemble(chain: Chain, segments: Iterable[Segment]) -> Series:
         force_square=samples[:, COLUMNS.index("force_square")],
         laplacian=samples[:, COLUMNS.index("laplacian")],
         kinetic_lag=0.25 * protocol.time_step**2 if protocol.scheme == "baoab" else 0.0,
-        rejected=samples[:, COLUMNS.index("rejected")] if protocol.scheme == "metropolised" else None,
+        rejected=samples[:, COLUMNS.index("rejected")] / protocol.record_every
+        if protocol.scheme == "metropolised"
+        else None,
     )

@@ -37,7 +37,7 @@ class Series:
         a jump of the force at the cutoff adds; None if not recorded
     kinetic_lag : share of the kinetic energy that the scheme is known to lack, per unit of the mean Laplacian a degree
         of freedom
-    rejected : (n,), steps since the sample before that a Metropolis test undid; None where there is no test
+    rejected : (n,), share of the steps since the sample before that a Metropolis test undid; None where there is none
     interval : time between samples
     freedom : kinetic degrees of freedom where they are not those of our own particles, see `kinetic_freedom`
     bath : whether a thermostat acted; without one the ensemble has constant energy

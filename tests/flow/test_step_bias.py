@@ -54,3 +54,16 @@ def test_exact_sampling_has_no_bias_to_look_for(tmp_path: Path) -> None:
     study.write_text(STUDY.replace("obabo", "metropolised").replace("40000", "500"))
     with pytest.raises(UserError, match=r"scheme = metropolised: .* accepted with --step-bias is baoab or obabo"):
         canonry.run(study, into=tmp_path / "study", step_bias=True)
+
+
+def test_the_share_of_accepted_steps_is_told(tmp_path: Path) -> None:
+    study = tmp_path / "study.toml"
+    text = STUDY.replace("obabo", "metropolised").replace("40000", "2000")
+    study.write_text(text)
+    (told,) = [caveat for caveat in canonry.run(study, into=tmp_path / "coarse").caveats if "Metropolis" in caveat]
+    assert "a smaller time step wastes fewer" in told  # at 0.016 four in ten pass
+    study.write_text(text.replace("0.016", "0.002"))
+    (told,) = [caveat for caveat in canonry.run(study, into=tmp_path / "fine").caveats if "Metropolis" in caveat]
+    shares = [float(word) for word in told.split() if word[0].isdigit()]
+    assert 99 < min(shares) <= max(shares) <= 100
+    assert "wastes" not in told

@@ -131,7 +131,7 @@ def test_samples_of_another_study_are_refused(tmp_path, change, key):
 def test_samples_of_a_version_that_recorded_other_things_are_refused(tmp_path, monkeypatch):
     sampled(tmp_path, STATES[:1])
     monkeypatch.setattr("sampler.store.COLUMNS", ("s12", "s6"))
-    with pytest.raises(ForeignDirectory, match="was sampled with recorded 's12 s6 pairs .*, asked for is 's12 s6'"):
+    with pytest.raises(ForeignDirectory, match=r"was sampled with recorded 's12 s6 pairs .*, asked for is 's12 s6'"):
         sampled(tmp_path, STATES[:1])
 
 
