@@ -130,7 +130,7 @@ def standing_caveats(results: Results) -> list[str]:
         f"The system holds {setup.particles} particles in a periodic box. The finite size is not corrected for; it "
         "matters most near a critical point, and inside a two-phase region the sample is not a bulk phase.",
         "The time step shifts the sampled ensemble by a little that grows with its square and that no error bar holds; "
-        "a run with half the time step shows how much.",
+        "`canonry run --step-bias` shows how much.",
         "The particles move classically. Light atoms at low temperature (hydrogen, helium, neon) show quantum effects "
         "that are absent here.",
     ]
