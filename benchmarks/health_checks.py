@@ -199,7 +199,7 @@ def checks(series: Sequence[Series]) -> tuple[list[Check], list[Series]]:
     structure = pair_structure(cut)
     own = rung_properties(cut, contact=None if structure is None else structure.contact)
     cuts = [(len(before) - len(after), len(before)) for before, after in zip(series, cut, strict=True)]
-    samples = health.Samples(cut, structure, cuts, own.get("bulk_modulus"), None)
+    samples = health.Samples(cut, structure, cuts, own, None)
     return [Check(cut[0].state, reading) for reading in health.of_rung(samples)], cut
 
 

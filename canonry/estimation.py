@@ -158,7 +158,7 @@ def _rung(recorded: list[Series], scale: Scale | None) -> _Rung | None:
         cut,
         structure,
         [(cut.cut, cut.samples) for cut in cuts],
-        bulk_modulus=own.get("bulk_modulus"),
+        own,
         wavelength=wavelength(state, scale),
     )
     return _Rung(

@@ -42,6 +42,7 @@ __all__ = ["CHECKS", "LEVEL", "Kind", "Samples", "judged", "known", "marked", "o
 
 LEVEL = 0.01  # of a check that stands alone
 _STUDY_LEVEL = 0.05  # of all statistical readings of a study together
+_SAMPLES = 100_000  # of a rung that most checks look at, at most
 _FRAMES = 120  # of a rung that are evaluated again, at most: of 300 that is 2 % of the time that sampling them took
 
 _EVERY = tuple(PROPERTIES)
@@ -143,14 +144,20 @@ class Samples:
     """One rung after the cut, with frames: what its checks look at.
 
     cuts : samples cut off and samples recorded, of each repeat
+    own : what the rung says alone
     wavelength : thermal de Broglie wavelength, sigma; None where no mass is known
     """
 
     series: Sequence[Series]
     structure: Structure | None
     cuts: Sequence[tuple[int, int]]
-    bulk_modulus: Estimate | None
+    own: Mapping[str, Estimate]
     wavelength: float | None
+
+    @cached_property
+    def sparse(self) -> list[Series]:
+        """The same at longer intervals where there are very many samples, which are not needed for a clear answer."""
+        return _sparse(self.series)
 
     @cached_property
     def seen(self) -> list[Series]:
@@ -180,12 +187,12 @@ Look = Callable[[Samples], Found]
 
 _OF_RUNG: tuple[Look, ...] = (
     lambda of: ledger(of.series, level=LEVEL),
-    lambda of: kinetic_law(of.series, level=LEVEL),
-    lambda of: equal_shares(of.series, level=LEVEL),
-    lambda of: force_temperature(of.seen, of.sums, level=LEVEL),
-    lambda of: settled(of.series, cut=of.cuts, level=LEVEL),
-    lambda of: enough(of.series, level=LEVEL),
-    lambda of: one_phase(of.seen, bulk_modulus=of.bulk_modulus, level=LEVEL),
+    lambda of: kinetic_law(of.sparse, level=LEVEL),
+    lambda of: equal_shares(of.sparse, level=LEVEL),
+    lambda of: force_temperature(of.sparse, of.sums, level=LEVEL),
+    lambda of: settled(of.sparse, cut=of.cuts, level=LEVEL),
+    lambda of: enough(of.own),
+    lambda of: one_phase(of.seen, bulk_modulus=of.own.get("bulk_modulus"), level=LEVEL),
     lambda of: box(of.series, of.structure, level=LEVEL),
     lambda of: virial_routes(of.seen, None, of.sums, level=LEVEL) if of.sums else None,
     lambda of: virial_routes(of.series, of.structure, None, level=LEVEL),
@@ -211,7 +218,7 @@ def of_isochore(isochore: Isochore, series: Mapping[State, Sequence[Series]]) ->
             yield from (Check(state, reading) for reading in _listed(look(own, slope)))
     for colder, warmer in pairwise(series):
         for both in _OF_PAIRS:
-            found = _listed(both(series[colder], series[warmer]))
+            found = _listed(both(_sparse(series[colder]), _sparse(series[warmer])))
             yield from (Check(colder, reading, warmer) for reading in found)
 
 
@@ -271,6 +278,11 @@ def wavelength(state: State, scale: Scale | None) -> float | None:
         return None
     momentum = math.sqrt(2.0 * math.pi * scale.mass * scale.epsilon * state.temperature)
     return float(Planck / (momentum * scale.sigma))
+
+
+def _sparse(series: Sequence[Series]) -> list[Series]:
+    stride = -(-sum(map(len, series)) // _SAMPLES) or 1
+    return [each.every(stride) for each in series]
 
 
 def _listed(found: Found) -> Sequence[Reading]:

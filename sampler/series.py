@@ -101,6 +101,14 @@ class Series:
         """(m,), index of the sample that each frame belongs to."""
         return self.frame_stride * np.arange(1, len(self.frames) + 1) - 1 - self.frame_offset
 
+    def every(self, stride: int) -> Series:
+        """Each stride-th sample, without frames."""
+        columns = {name: getattr(self, name) for name in _COLUMNS}
+        kept: dict[str, Any] = {
+            name: None if values is None else values[stride - 1 :: stride] for name, values in columns.items()
+        }
+        return replace(self, interval=stride * self.interval, frames=self.frames[:0], frame_offset=0, **kept)
+
     def after(self, n_samples: int) -> Series:
         """The series without its first n_samples and their frames."""
         n_frames, offset = divmod(self.frame_offset + n_samples, self.frame_stride)

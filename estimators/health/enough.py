@@ -3,13 +3,11 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Mapping
 
-from estimators.canonical import rung_properties
 from estimators.estimate import Estimate
 from estimators.health.reading import Reading
 from estimators.trust import FEWEST_SAMPLES, SHORTEST_SERIES
-from sampler.series import Series
 
 __all__ = ["enough"]
 
@@ -18,17 +16,13 @@ LOOSEST = 1.0 / 3.0  # error of an error bar over that bar; a fifth is usual at 
 PROPERTIES = {"residual_energy": "energy", "residual_heat_capacity": "heat capacity"}
 
 
-def enough(series: Sequence[Series], *, level: float) -> list[Reading] | None:
+def enough(found: Mapping[str, Estimate]) -> list[Reading] | None:
     """Effective samples of energy and heat capacity, the length of the longest repeat, and the error of the error bar.
 
-    series : repeats of one rung, already cut
-    level : takes no part; the statistic is the largest of 50 / effective samples, 50 autocorrelation times / longest
-    repeat, and 3 x relative error of the error bar, which must not be above 1. The first two are what trust rests on.
-    None without samples of the potential energy.
+    found : estimates of one rung by property
+    The statistic is the largest of 50 / effective samples, 50 autocorrelation times / longest repeat, and 3 x relative
+    error of the error bar, which must not be above 1. The first two are what trust rests on. None without an energy.
     """
-    if not series or not any(map(len, series)):
-        return None
-    found = rung_properties(series)
     return [_reading(words, found[name]) for name, words in PROPERTIES.items() if name in found] or None
 
 

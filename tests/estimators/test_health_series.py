@@ -411,7 +411,7 @@ def test_effective_samples_behind_energy_and_heat_capacity(n: int, tau: float, o
     """n/tau effective samples: 500 and 25; counted to a sixth near 50, more loosely below."""
     for seed in range(5):
         series = rung(np.random.default_rng(930 + seed), n, tau=tau)
-        readings = listed(enough(series, level=LEVEL))
+        readings = listed(enough(rung_properties(series)))
         assert [each.passed for each in readings] == [ok, ok]
         assert 50.0 * tau / n * 0.5 < readings[0].statistic < 50.0 * tau / n * 2.5 + 0.3
 
@@ -421,7 +421,7 @@ def test_enough_fails_where_trust_says_no() -> None:
         series = rung(np.random.default_rng(940 + seed), 400, tau=8.0)
         found = rung_properties(series)
         for name, reading in zip(
-            ("residual_energy", "residual_heat_capacity"), listed(enough(series, level=LEVEL)), strict=True
+            ("residual_energy", "residual_heat_capacity"), listed(enough(rung_properties(series))), strict=True
         ):
             if found[name].trust == "no":
                 assert not reading.passed, seed
@@ -430,8 +430,8 @@ def test_enough_fails_where_trust_says_no() -> None:
 def test_frozen_energies_are_never_enough() -> None:
     (series, *_) = rung(np.random.default_rng(95), 500)
     still = replace(series, energy=np.ones(500), sampled_energy=np.ones(500))
-    assert not any(each.passed for each in listed(enough([still], level=LEVEL)))
-    assert enough([replace(series, energy=None, sampled_energy=None)], level=LEVEL) is None
+    assert not any(each.passed for each in listed(enough(rung_properties([still]))))
+    assert enough(rung_properties([replace(series, energy=None, sampled_energy=None)])) is None
 
 
 # ledger

@@ -118,7 +118,7 @@ def test_thinned_frames_stay_with_their_samples() -> None:
     series = Series(
         Fluid(), LADDER[0], 0, True, 0.05, *(column,) * 6, frames=frames, frame_stride=stride, frame_offset=offset
     )
-    samples = Samples([series, series], None, [(0, 4000)] * 2, None, None)
+    samples = Samples([series, series], None, [(0, 4000)] * 2, {}, None)
     for each in samples.seen:
         assert 40 <= len(each.frames) <= 60
         assert np.array_equal(each.frames[:, 0, 0], each.frame_samples)

@@ -33,3 +33,11 @@ def test_a_cut_is_made_at_the_sample_and_keeps_every_frame_behind_it(stride: int
             start = first + second
             assert all(list(getattr(cut, name)) == list(range(start, 30)) for name in COLUMNS)
             assert numbers_of_frames(cut) == [k for k in range(stride - 1, 30, stride) if k >= start]
+
+
+@pytest.mark.parametrize("stride", [1, 3, 7])
+def test_each_so_many_samples(stride: int) -> None:
+    thin = series(30, 5).every(stride)
+    assert all(list(getattr(thin, name)) == list(range(stride - 1, 30, stride)) for name in COLUMNS)
+    assert thin.interval == stride * series(30, 5).interval
+    assert len(thin.frames) == 0
