@@ -107,27 +107,30 @@ def terms(pair, square):  # type: ignore[no-untyped-def]
     raise TypeError("compiled code only")
 
 
-def _truncated_strength(pair, square):  # type: ignore[no-untyped-def]
+@piece
+def _powers(square):  # type: ignore[no-untyped-def]
+    """r^-2 and r^-6."""
     inverse = reciprocal(square)
-    sixth = inverse * inverse * inverse
+    return inverse, inverse * inverse * inverse
+
+
+def _truncated_strength(pair, square):  # type: ignore[no-untyped-def]
+    inverse, sixth = _powers(square)
     return (48.0 * sixth - 24.0) * sixth * inverse
 
 
 def _truncated_terms(pair, square):  # type: ignore[no-untyped-def]
-    inverse = reciprocal(square)
-    sixth = inverse * inverse * inverse
+    _, sixth = _powers(square)
     return sixth * sixth, sixth, 0.0 * sixth
 
 
 def _shifted_strength(pair, square):  # type: ignore[no-untyped-def]
-    inverse = reciprocal(square)
-    sixth = inverse * inverse * inverse
+    inverse, sixth = _powers(square)
     return (48.0 * sixth - 24.0) * sixth * inverse + pair.slope * square_root(inverse)
 
 
 def _shifted_terms(pair, square):  # type: ignore[no-untyped-def]
-    inverse = reciprocal(square)
-    sixth = inverse * inverse * inverse
+    inverse, sixth = _powers(square)
     return sixth * sixth, sixth, square * square_root(inverse)
 
 
@@ -164,14 +167,12 @@ def curvature(pair, square):  # type: ignore[no-untyped-def]
 
 
 def _truncated_curvature(pair, square):  # type: ignore[no-untyped-def]
-    inverse = reciprocal(square)
-    sixth = inverse * inverse * inverse
+    inverse, sixth = _powers(square)
     return (528.0 * sixth - 120.0) * sixth * inverse
 
 
 def _shifted_curvature(pair, square):  # type: ignore[no-untyped-def]
-    inverse = reciprocal(square)
-    sixth = inverse * inverse * inverse
+    inverse, sixth = _powers(square)
     return (528.0 * sixth - 120.0) * sixth * inverse - 2.0 * pair.slope * square_root(inverse)
 
 
