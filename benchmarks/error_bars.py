@@ -23,6 +23,7 @@ import numpy.typing as npt
 from scipy.linalg import expm
 from scipy.signal import lfilter
 
+from canonry.estimation import settled
 from estimators.canonical import rung_properties
 from estimators.covariance import covariance
 from estimators.estimate import Estimate, mean
@@ -199,11 +200,6 @@ SYSTEMS = (
     System("Lennard-Jones, rho 0.3, T 2", 0.3, (2.0, 2.2), 2500, liquids),
     System("Lennard-Jones, rho 0.8, T 1", 0.8, (1.0, 1.1), 2500, liquids),
 )
-
-
-def settled(series: Series) -> Series:
-    """Without what energy or virial says is not settled."""
-    return series.after(max(settled_start(series.sampled_energy), settled_start(series.virial)))
 
 
 def _row(estimate: Estimate) -> tuple[float, float, bool]:

@@ -20,10 +20,10 @@ from pathlib import Path
 import numpy as np
 
 from canonry import health
+from canonry.estimation import settled
 from canonry.findings import Check
 from estimators.canonical import rung_properties
 from estimators.health.pair_slope import pair_slope
-from estimators.settle import settled_start
 from estimators.structure import pair_structure
 from sampler.fluid import Fluid, State
 from sampler.forces import evaluate
@@ -195,7 +195,7 @@ FAULTS: dict[str, tuple[tuple[str, ...], Callable[[int, float], list[Series]]]] 
 
 def checks(series: Sequence[Series]) -> tuple[list[Check], list[Series]]:
     """What the checks of a rung read, and its settled series."""
-    cut = [each.after(max(settled_start(each.sampled_energy), settled_start(each.virial))) for each in series]
+    cut = [settled(each) for each in series]
     structure = pair_structure(cut)
     own = rung_properties(cut, contact=None if structure is None else structure.contact)
     cuts = [(len(before) - len(after), len(before)) for before, after in zip(series, cut, strict=True)]

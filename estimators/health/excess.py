@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-import sys
 
 from scipy import special, stats
 
@@ -11,12 +10,10 @@ from estimators.estimate import Estimate
 from estimators.health.reading import deviate
 from estimators.trust import FEWEST_SAMPLES
 
-__all__ = ["CERTAIN", "LEAST", "excess", "jointly", "too_short"]
+__all__ = ["CERTAIN", "excess", "jointly", "too_short"]
 
-LEAST = sys.float_info.min
-"""The smallest probability that still has a deviate."""
-CERTAIN = deviate(LEAST)
-"""The largest deviate there is, 37.5: of what cannot be chance."""
+CERTAIN = deviate(0.0)
+"""The largest deviate there is, 38.5: of what cannot be chance."""
 
 
 def excess(estimate: Estimate, low: float = -math.inf, high: float = math.inf) -> float:
@@ -30,13 +27,12 @@ def excess(estimate: Estimate, low: float = -math.inf, high: float = math.inf) -
         return 0.0
     if not beyond < math.inf or estimate.variance == 0.0:
         return CERTAIN
-    return deviate(max(2.0 * float(special.stdtr(estimate.freedom, -beyond / math.sqrt(estimate.variance))), LEAST))
+    return deviate(2.0 * float(special.stdtr(estimate.freedom, -beyond / math.sqrt(estimate.variance))))
 
 
 def jointly(*deviates: float) -> float:
     """The largest of several deviates, made smaller for their number (Bonferroni)."""
-    chance = 2.0 * len(deviates) * float(stats.norm.sf(max(deviates)))
-    return deviate(min(max(chance, LEAST), 1.0))
+    return deviate(min(2.0 * len(deviates) * float(stats.norm.sf(max(deviates))), 1.0))
 
 
 def too_short(estimate: Estimate) -> bool:

@@ -11,7 +11,7 @@ from scipy import stats
 
 from estimators.estimate import Chain, Estimate
 from estimators.gamma import coarsened, scatter
-from estimators.health.excess import LEAST, excess, jointly, too_short
+from estimators.health.excess import excess, jointly, too_short
 from estimators.health.reading import Reading, deviate, threshold
 from estimators.settle import rank_normalised_split_rhat
 from estimators.trust import FEWEST_SAMPLES
@@ -134,4 +134,4 @@ def _compared(repeats: Sequence[Floats]) -> tuple[float, float] | None:
     expected = own_means * 2.0 * noise.tau * float(np.mean([1.0 / len(half) for half in halves]))
     beyond = (ratio**2 - 1.0 + 1.0 / length) / expected
     chance = float(stats.f.sf(beyond, len(halves) - 1, 2.0 / noise.relative_error**2))
-    return ratio, deviate(min(max(2.0 * chance, LEAST), 1.0))
+    return ratio, deviate(min(2.0 * chance, 1.0))
