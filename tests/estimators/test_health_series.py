@@ -23,7 +23,7 @@ from estimators.health.excess import excess, jointly
 from estimators.health.kinetic_law import kinetic_law
 from estimators.health.ledger import ledger
 from estimators.health.pair_slope import pair_slope
-from estimators.health.reading import Reading, threshold
+from estimators.health.reading import Reading, deviate, threshold
 from estimators.health.settled import settled
 from sampler.fluid import Fluid, State
 from sampler.protocol import Protocol
@@ -525,3 +525,10 @@ def test_a_real_run_passes_and_energies_of_another_truncation_fail(sampled: tupl
     foreign = assemble(replace(chain, fluid=Fluid(cutoff=2.3, truncation="plain")), segments)
     drift, fast, slow = listed(ledger([foreign], level=1e-3))
     assert (drift.passed, fast.passed, slow.passed) == (True, True, False)
+
+
+def test_deviates_are_those_of_a_normal_variable_and_finite_for_no_chance_at_all() -> None:
+    assert deviate(2.0 * float(stats.norm.sf(3.0))) == pytest.approx(3.0)
+    assert deviate(1.0) == 0.0
+    assert 38.0 < deviate(0.0) < 39.0
+    assert deviate(LEVEL) == pytest.approx(threshold(LEVEL))
