@@ -42,7 +42,7 @@ FLUID = Fluid(cutoff=3.0)
 LADDERS = ((0.8, (1.0, 1.1, 1.21, 1.33)), (0.3, (2.0, 2.2, 2.42, 2.66)), (0.1, (1.6, 1.8, 2.02, 2.27)))
 RECORDED = (
     *("energy", "sampled_energy", "virial", "hypervirial", "kinetic", "ledger"),
-    *("kinetic_parts", "momentum", "force_square", "laplacian"),
+    *("kinetic_parts", "momentum", "force_square", "laplacian", "bath_temperature"),
 )
 LIQUID = State(1.0, 0.8, N)
 READINGS_OF_A_STUDY = 50  # statistical ones, of four rungs: what the level of a study is shared by
@@ -116,7 +116,7 @@ def rescaled(state: State, seed: int, effort: float) -> list[Series]:
     for step in range(steps + 3000):
         propagate(
             pair_function(FLUID), FLUID.sampled_weights, where, velocity, state.box, skins(state), step_of, False, key,
-            step, 1, 1, 1, sums, np.empty((0, *where.shape)), np.zeros(1), np.zeros(1, np.uint8),
+            step, 1, 1, 1, sums, np.empty((0, *where.shape)), np.zeros(2), np.zeros(1, np.uint8),
         )  # fmt: skip
         velocity *= np.sqrt(3.0 * state.particles * state.temperature / (velocity**2).sum())
         if step >= 3000 and (step + 1) % 10 == 0:

@@ -41,7 +41,7 @@ class Trajectory:
     def run(self, n_steps: int, *, short: bool, copy: bool = False) -> Any:
         """u, P and the conserved quantity per particle, (3, samples); a copy leaves the trajectory where it is."""
         where, velocity = (self.where.copy(), self.velocity.copy()) if copy else (self.where, self.velocity)
-        samples, heat = np.empty((n_steps // EVERY, len(COLUMNS))), np.zeros(1)
+        samples, heat = np.empty((n_steps // EVERY, len(COLUMNS))), np.zeros(2)
         frames, stop = np.empty((0, *where.shape)), np.zeros(1, np.uint8)
         propagate(
             pair_function(FLUID), FLUID.sampled_weights, where, velocity, self.state.box, rung.skins(self.state),

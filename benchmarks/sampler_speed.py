@@ -69,7 +69,7 @@ class Compiled:
             n_steps,
             np.empty((n_steps // EVERY, len(COLUMNS))),
             np.empty((0, self.state.particles, 3)),
-            np.zeros(1),
+            np.zeros(2),
             np.zeros(1, np.uint8),
         )
         self.step += n_steps

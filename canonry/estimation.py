@@ -194,6 +194,8 @@ def settled(series: Series) -> Series:
 
 def _light(series: Series) -> Series:
     """Without frames, and with columns of its own, which do not keep in memory all that was recorded with them."""
-    own: dict[str, Any] = dict.fromkeys(("kinetic_parts", "momentum", "force_square", "laplacian", "rejected"))
+    own: dict[str, Any] = dict.fromkeys(
+        ("kinetic_parts", "momentum", "force_square", "laplacian", "rejected", "bath_temperature")
+    )
     own |= {name: series.column(name).copy() for name in ("kinetic", "ledger") if series.has(name)}
     return replace(series, frames=series.frames[:0].copy(), **own)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable, Iterator
 
 import numpy as np
@@ -11,7 +12,7 @@ from sampler.errors import DamagedSegment, DivergedRun
 from sampler.fluid import State
 from sampler.noise import chain_key
 from sampler.pairs import pair_function
-from sampler.protocol import Scheme
+from sampler.protocol import SUBSTEPS, Scheme
 from sampler.schemes import DIVERGED, STOPPED, propagate, substeps
 from sampler.series import Series
 from sampler.slots import Skins
@@ -44,7 +45,7 @@ def advance(chain: Chain, index: int, before: Segment | None, stop: Stop) -> Seg
         velocity -= velocity.mean(axis=0)
     samples = np.empty(((last - first) // protocol.record_every, len(COLUMNS)))
     frames = np.empty((0 if settling else (last - first) // protocol.frame_every, state.particles, 3))
-    heat = np.array([ledger])
+    heat = np.array([ledger, 0.0])
     outcome, step = propagate(
         pair_function(chain.fluid),
         chain.fluid.sampled_weights,
@@ -77,6 +78,14 @@ def advance(chain: Chain, index: int, before: Segment | None, stop: Stop) -> Seg
 def skins(state: State) -> Skins:
     """Skins of the lists: wider in a dilute fluid, where lists are short and particles go far."""
     return _SKINS[state.density >= _DENSE]
+
+
+def _kicks(chain: Chain) -> float:
+    """Mean kinetic energy of the bath's random kicks between two samples, per unit of temperature."""
+    protocol = chain.protocol
+    updates = SUBSTEPS[protocol.scheme].count("O")
+    kept = math.exp(-2.0 * protocol.friction * protocol.time_step / updates)
+    return 1.5 * chain.state.particles * protocol.record_every * updates * (1.0 - kept)
 
 
 def sampled_segments(chain: Chain) -> Iterator[Segment]:
@@ -128,4 +137,5 @@ def assemble(chain: Chain, segments: Iterable[Segment]) -> Series:
         rejected=samples[:, COLUMNS.index("rejected")] / protocol.record_every
         if protocol.scheme == "metropolised"
         else None,
+        bath_temperature=samples[:, COLUMNS.index("kicks")] / _kicks(chain) if protocol.bath else None,
     )

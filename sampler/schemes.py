@@ -62,20 +62,23 @@ def _kick(velocity, force, duration):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _relax(velocity, noise, duration, friction, temperature):  # type: ignore[no-untyped-def]
-    """Exact Ornstein-Uhlenbeck update; returns the kinetic energy it took out."""
+def _relax(velocity, noise, duration, friction, temperature, ledger):  # type: ignore[no-untyped-def]
+    """Exact Ornstein-Uhlenbeck update, booked in the ledger."""
     kept = math.exp(-friction * duration)
     width = splat(math.sqrt((1.0 - kept * kept) * temperature))
-    factor, heat = splat(kept), splat(0.0)
+    factor, heat, kicks = splat(kept), splat(0.0), splat(0.0)
     components = (noise[0], noise[1], noise[2])
     for g in range(velocity.size // BLOCK):
         for c in range(3):
             at = BLOCK * g + LANES * c
             old = load(velocity, at)
-            new = factor * old + width * load(components[c], LANES * g)
+            kick = width * load(components[c], LANES * g)
+            new = factor * old + kick
             store(velocity, at, new)
             heat = heat + (old * old - new * new)
-    return 0.5 * total(heat)
+            kicks = kicks + kick * kick
+    ledger[0] += 0.5 * total(heat)
+    ledger[1] += 0.5 * total(kicks)
 
 
 @kernel
@@ -90,13 +93,11 @@ def _motion(velocity, out):  # type: ignore[no-untyped-def]
 
 
 @kernel
-def _pass(slots, scheme, first, past, key, step, noise):  # type: ignore[no-untyped-def]
+def _pass(slots, scheme, first, past, key, step, noise, ledger):  # type: ignore[no-untyped-def]
     """Substeps between which the forces stay, on a stretch of slots after another, each while it is in the cache.
 
     noise : (3, _STRETCH), for use here
-    Returns the kinetic energy that the bath took out.
     """
-    heat = 0.0
     labels = slots.groups.labels
     for begin in range(0, labels.size, _STRETCH):
         end = min(begin + _STRETCH, labels.size)
@@ -109,8 +110,7 @@ def _pass(slots, scheme, first, past, key, step, noise):  # type: ignore[no-unty
                 _kick(speed, slots.force[3 * begin : 3 * end], duration)
             else:
                 normals(key[0], key[1], np.uint64(step), np.uint64(s), labels[begin:end], noise)
-                heat += _relax(speed, noise, duration, scheme.friction, scheme.temperature)
-    return heat
+                _relax(speed, noise, duration, scheme.friction, scheme.temperature, ledger)
 
 
 @kernel
@@ -165,9 +165,9 @@ def propagate(  # type: ignore[no-untyped-def]
     where, velocity : (n, 3), by label
     short : True for forces in float32 between samples
     every, frame_every : sample at steps that these divide
-    samples : (n_steps // every, 14), COLUMNS
+    samples : (n_steps // every, 15), COLUMNS
     frames : (n_steps // frame_every or 0, n, 3), wrapped positions
-    ledger : (1,), heat that the bath has taken so far
+    ledger : (2,), kinetic energy that the bath has taken so far, and that its random kicks had since the last sample
     stop : (1,), uint8; set by another thread to leave early
     """
     forced = 0  # substeps up to the last drift, after which the forces are new
@@ -181,11 +181,11 @@ def propagate(  # type: ignore[no-untyped-def]
     verlet = 1 if scheme.tested else 0  # substeps before the part that is tested
     for step in range(first + 1, first + n_steps + 1):
         recorded = step % every == 0
-        ledger[0] += _pass(slots, scheme, 0, verlet, key, step, noise)
+        _pass(slots, scheme, 0, verlet, key, step, noise, ledger)
         if scheme.tested:
             label_order(slots, kept, kept_velocity)
             before = 0.5 * _square(slots.speed) + _weighed(sums, weights)
-        ledger[0] += _pass(slots, scheme, verlet, forced, key, step, noise)
+        _pass(slots, scheme, verlet, forced, key, step, noise, ledger)
         moved = 2.0 * farthest(slots.position, slots.narrowed_at)
         if not moved <= box:
             return DIVERGED, step
@@ -195,21 +195,21 @@ def propagate(  # type: ignore[no-untyped-def]
             quick_forces(pair, slots, box)
         else:
             exact_forces(pair, slots, box, sums if recorded or scheme.tested else nothing)
-        _pass(slots, scheme, forced, forced + verlet, key, step, noise)
+        _pass(slots, scheme, forced, forced + verlet, key, step, noise, ledger)
         if scheme.tested:
             change = 0.5 * _square(slots.speed) + _weighed(sums, weights) - before
             if not uniform(key[0], key[1], np.uint64(step), np.uint64(forced)) < math.exp(-change / scheme.temperature):
                 slots = _undo(pair, kept, kept_velocity, box, skins, sums)
                 rejected += 1
-        ledger[0] += _pass(slots, scheme, forced + verlet, scheme.letters.size, key, step, noise)
+        _pass(slots, scheme, forced + verlet, scheme.letters.size, key, step, noise, ledger)
         if recorded:
             for c in range(5):
                 samples[n_samples, c] = sums[c]
             samples[n_samples, 5] = _square(slots.force)
             samples[n_samples, 6] = ledger[0]
             _motion(slots.speed, samples[n_samples, 7:])
-            samples[n_samples, 13] = rejected
-            rejected = 0
+            samples[n_samples, 13], samples[n_samples, 14] = rejected, ledger[1]
+            rejected, ledger[1] = 0, 0.0
             n_samples += 1
         if step % frame_every == 0 and n_frames < frames.shape[0]:
             gather(slots.position, slots.groups.labels, frames[n_frames])

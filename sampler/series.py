@@ -17,6 +17,7 @@ Floats = npt.NDArray[np.float64]
 _COLUMNS = (
     *("energy", "sampled_energy", "virial", "hypervirial", "kinetic", "ledger"),
     *("kinetic_parts", "momentum", "force_square", "laplacian", "rejected"),
+    "bath_temperature",
 )
 
 
@@ -38,6 +39,7 @@ class Series:
     kinetic_lag : share of the kinetic energy that the scheme is known to lack, per unit of the mean Laplacian a degree
         of freedom
     rejected : (n,), share of the steps since the sample before that a Metropolis test undid; None where there is none
+    bath_temperature : (n,), T that the bath's random kicks since the sample before had; None without a bath of ours
     interval : time between samples
     freedom : kinetic degrees of freedom where they are not those of our own particles, see `kinetic_freedom`
     bath : whether a thermostat acted; without one the ensemble has constant energy
@@ -62,6 +64,7 @@ class Series:
     force_square: Floats | None = None
     laplacian: Floats | None = None
     rejected: Floats | None = None
+    bath_temperature: Floats | None = None
     kinetic_lag: float = 0.0
     freedom: int | None = None
 

@@ -24,7 +24,7 @@ Floats = npt.NDArray[np.float64]
 COLUMNS = (
     *("s12", "s6", "pairs", "distances", "laplacian", "force_square", "ledger"),
     *("kinetic_x", "kinetic_y", "kinetic_z", "momentum_x", "momentum_y", "momentum_z"),
-    "rejected",
+    *("rejected", "kicks"),
 )
 """What is recorded of a sample."""
 _ARRAYS = ("samples", "frames", "positions", "velocities")
@@ -35,7 +35,7 @@ class Segment:
     """Consecutive steps of one repeat.
 
     first, last : the steps are first + 1 to last
-    samples : (n_samples, 14), columns of COLUMNS
+    samples : (n_samples, 15), columns of COLUMNS
     frames : (n_frames, particles, 3), positions inside the box
     positions, velocities : (particles, 3), at step `last`
     ledger : kinetic energy that the bath has taken up to step `last`

@@ -22,7 +22,12 @@ __all__ = ["settled"]
 Floats = npt.NDArray[np.float64]
 
 CHECK = "settled"
-OBSERVED = {"sampled_energy": "potential energy", "virial": "virial", "kinetic": "kinetic energy"}
+OBSERVED = {
+    "sampled_energy": "potential energy",
+    "virial": "virial",
+    "kinetic": "kinetic energy",
+    "bath_temperature": "temperature of the bath",
+}
 COMPARED = ("sampled_energy", "virial")  # between halves and repeats
 LATEST = 0.48  # of the run: a cut is placed in steps of 2 % and no later than half
 RANKED = 2000  # entries of a repeat that are ranked; longer series enter as block sums

@@ -362,6 +362,18 @@ def test_a_ramp_is_seen_in_the_kinetic_energy_alone() -> None:
     assert agreement.passed
 
 
+def test_a_ramp_of_the_bath_alone_is_seen_in_its_kicks() -> None:
+    """Of N particles they scatter by sqrt(2/3N) = 5 % a sample, so that 1000 tell a slope to 0.6 %."""
+    generator = np.random.default_rng(89)
+    steady = [replace(each, bath_temperature=generator.normal(1.0, 0.05, 500)) for each in rung(generator, 500)]
+    trend, _ = listed(settled(steady, level=1e-3))
+    assert trend.passed
+    rising = [replace(each, bath_temperature=each.bath_temperature + np.linspace(0, 0.04, 500)) for each in steady]
+    trend, _ = listed(settled(rising, level=1e-3))
+    assert "temperature of the bath" in trend.meaning
+    assert not trend.passed
+
+
 def test_a_frozen_repeat_fails_and_is_named() -> None:
     series = rung(np.random.default_rng(88), 2000, repeats=3)
     names = ("energy", "sampled_energy", "virial", "kinetic")

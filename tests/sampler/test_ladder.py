@@ -32,7 +32,7 @@ def sampled(folder, states=STATES, protocol=PROTOCOL, **options):
 def assert_same(first, second):
     assert len(first) == len(second) > 0
     for one, other in zip(first, second, strict=True):
-        for name in ("energy", "sampled_energy", "virial", "hypervirial", "kinetic", "ledger", "frames"):
+        for name in ("energy", "virial", "hypervirial", "kinetic", "ledger", "frames", "bath_temperature"):
             assert np.array_equal(getattr(one, name), getattr(other, name)), name
         assert (one.state, one.repeat) == (other.state, other.repeat)
 
@@ -51,6 +51,8 @@ def test_series_hold_what_was_asked_for(uninterrupted):
         assert each.frames.shape == (28, 64, 3)
         assert each.frame_stride == 10
         assert each.interval == pytest.approx(0.05)
+        noise = (2 / (3 * 64 * 2800)) ** 0.5  # 280 samples of 10 kicks a particle and direction
+        assert each.bath_temperature.mean() == pytest.approx(each.state.temperature, rel=5 * noise)
     starts = [each.energy[0] for each in uninterrupted]
     assert len(set(starts)) == 4
 

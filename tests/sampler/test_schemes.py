@@ -30,7 +30,7 @@ class Trajectory:
         else:
             self.where, self.velocity = start.where.copy(), start.velocity.copy()
         self.steps = substeps(scheme, time_step=time_step, friction=friction, temperature=state.temperature)
-        self.ledger, self.stop = np.zeros(1), np.zeros(1, np.uint8)
+        self.ledger, self.stop = np.zeros(2), np.zeros(1, np.uint8)
 
     def run(self, n_steps, every=1, frame_every=None):
         samples = np.empty((n_steps // every, len(COLUMNS)))
@@ -44,7 +44,7 @@ class Trajectory:
         totals = self.fluid.totals(samples, self.state)
         self.sums = samples[:, :4]
         self.heat, self.parts, self.momentum = samples[:, 6], samples[:, 7:10], samples[:, 10:13]
-        self.kinetic, self.rejected = self.parts.sum(axis=1), samples[:, 13]
+        self.kinetic, self.rejected, self.kicks = self.parts.sum(axis=1), samples[:, 13], samples[:, 14]
         self.conserved = (self.kinetic + totals.sampled_energy + self.heat) / self.state.particles
         self.frames = frames
         return self
@@ -61,7 +61,7 @@ def test_steps_are_those_of_a_plain_evaluation(scheme, short):
     fluid, state = Fluid(cutoff=2.5, truncation="force-shifted"), State(1.2, 0.7, 108)
     n, dt, friction = state.particles, 0.005, 1.5
     compiled = Trajectory(fluid, state, scheme, time_step=dt, friction=friction, short=short)
-    x, v, heat = compiled.where.copy(), compiled.velocity.copy(), 0.0
+    x, v, heat, kicks = compiled.where.copy(), compiled.velocity.copy(), 0.0, 0.0
     compiled.run(30, every=30 if short else 1)
     letters = SUBSTEPS[scheme]
     force, _ = evaluate(fluid, x, box=state.box)
@@ -77,7 +77,9 @@ def test_steps_are_those_of_a_plain_evaluation(scheme, short):
                 noise = np.empty((3, n))
                 normals(*compiled.key, np.uint64(step), np.uint64(s), np.arange(n), noise)
                 kept = np.exp(-friction * part)
-                new = kept * v + np.sqrt((1 - kept**2) * state.temperature) * noise.T
+                kick = np.sqrt((1 - kept**2) * state.temperature) * noise.T
+                new = kept * v + kick
+                kicks += 0.5 * (kick * kick).sum()
                 heat += 0.5 * ((v * v).sum() - (new * new).sum())
                 v = new
     # rounding of 1e-14 in positions grows by chaos: e^(30 steps x 0.005 x ~5) is far below 1e4;
@@ -88,6 +90,7 @@ def test_steps_are_those_of_a_plain_evaluation(scheme, short):
     assert np.abs(v - compiled.velocity).max() < bound
     assert (np.abs(v - compiled.velocity).max() > 1e-8) == short  # float32 it is
     assert compiled.ledger[0] == pytest.approx(heat, abs=n * bound)
+    assert compiled.kicks.sum() == pytest.approx(kicks, rel=1e-9)
     assert compiled.parts[-1] == pytest.approx(0.5 * (v * v).sum(axis=0), rel=bound)
     assert compiled.momentum[-1] == pytest.approx(v.sum(axis=0), abs=n * bound)
 
