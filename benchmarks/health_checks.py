@@ -3,8 +3,9 @@
 Run: python benchmarks/health_checks.py [--studies 250] [--seeds 50] [--effort 2e7] [--workers 2]
 Healthy studies are ladders of four rungs at several states, `effort` particle-steps a rung; printed are the shares of
 readings that fail at the nominal 1 % and of studies with any failure after correction. Faults are planted in one rung
-each, with as many seeds; printed is how many each check caught at the level of a study of such rungs. The full form
-takes half an hour on two cores.
+each, with as many seeds; printed is how many each check caught at the level of a study of such rungs. Pressures in
+another unit than stated are planted where samples are adopted: a rung of pair functions, alone and with positions, and
+two rungs of a fluid without. The full form takes half an hour on two cores.
 """
 
 from __future__ import annotations
@@ -16,12 +17,16 @@ from concurrent.futures import ProcessPoolExecutor
 from dataclasses import replace
 from itertools import pairwise
 from pathlib import Path
+from tempfile import TemporaryDirectory
 
 import numpy as np
 
+import canonry
 from canonry import health
+from canonry.errors import UserError
 from canonry.estimation import settled
 from canonry.findings import Check
+from canonry.units import Scale
 from estimators.canonical import rung_properties
 from estimators.health.pair_slope import pair_slope
 from estimators.structure import pair_structure
@@ -193,6 +198,74 @@ FAULTS: dict[str, tuple[tuple[str, ...], Callable[[int, float], list[Series]]]] 
 }
 
 
+ARGON = {"epsilon": "119.8 K", "sigma": "3.405 angstrom", "mass": "39.948 u"}
+SCALE = Scale(119.8 * 1.380649e-23, 3.405e-10, 39.948 * 1.66053907e-27)
+MPA = {"MPa": 1.0, "bar": 0.1, "kPa": 1e-3, "atm": 0.101325}
+MISTAKEN = (*(("bar", "MPa"), ("MPa", "bar"), ("kPa", "bar"), ("bar", "kPa")), ("atm", "bar"), ("bar", "bar"))
+"""Units in which pressures are written, and stated; the last two differ by 1.3 % and not at all."""
+PAIRS, ELSEWHERE = {"potential": "lennard-jones", "cutoff": 3.0, "truncation": "corrected"}, {"potential": "elsewhere"}
+FLUIDS = ((PAIRS, "a rung"), (PAIRS, "a rung with positions"), (ELSEWHERE, "two rungs"))
+
+
+def misstated(seed: int, effort: float) -> dict[str, set[str]]:
+    """What notices that pressures are in another unit than stated, by the case."""
+    warm = replace(LIQUID, temperature=1.1)
+    both = [repeats(LIQUID, seed, effort), repeats(warm, seed, effort)]
+    return {
+        f"{fluid['potential']}, {kind}, {written} stated as {stated}": adopted(
+            both if kind == "two rungs" else both[:1],
+            fluid=fluid,
+            written=written,
+            stated=stated,
+            framed="positions" in kind,
+        )
+        for fluid, kind in FLUIDS
+        for written, stated in MISTAKEN
+    }
+
+
+def adopted(
+    rungs: Sequence[Sequence[Series]], *, fluid: dict[str, object], written: str, stated: str, framed: bool
+) -> set[str]:
+    """Health checks that fail on what is adopted, or "adoption" where it refuses the pressures."""
+    spec = {
+        "molecules": N,
+        "columns": {"time": "t", "potential": "U", "dynamical": "U_dyn", "pressure": "P"},
+        "units": {"time": "reduced", "energy": "reduced", "length": "reduced", "pressure": stated},
+        **{"energy": "total", "long_range": True, "pressure_kinetic": "set", "intramolecular": False},
+        "fluid": fluid | ARGON,
+        "rungs": [described(each, MPA[written] / SCALE.factor("pressure"), framed=framed) for each in rungs],
+    }
+    with TemporaryDirectory() as home:
+        try:
+            canonry.adopt(spec, into=Path(home) / "study")
+        except UserError as problem:
+            if "units.pressure" not in str(problem):
+                raise
+            return {"adoption"}
+        found = canonry.estimate(Path(home) / "study").health
+    return set(found["check"][~found["passed"].astype(bool)])
+
+
+def described(series: Sequence[Series], unit: float, *, framed: bool) -> dict[str, object]:
+    """A rung as its description has it, pressures in this unit (epsilon/sigma^3)."""
+    state = series[0].state
+    tables = [
+        {
+            "t": each.times,
+            "U": each.column("energy"),
+            "U_dyn": each.column("sampled_energy"),
+            "P": (each.column("virial") + state.particles * state.temperature) / state.volume / unit,
+        }
+        for each in series
+    ]
+    rung: dict[str, object] = {"temperature": state.temperature, "density": state.density, "samples": tables}
+    if framed:
+        first, every = int(series[0].frame_samples[0]) + 1, series[0].frame_stride
+        rung["frames"] = {"samples": [each.frames for each in series], "first": first, "every": every}
+    return rung
+
+
 def checks(series: Sequence[Series]) -> tuple[list[Check], list[Series]]:
     """What the checks of a rung read, and its settled series."""
     cut = [settled(each) for each in series]
@@ -234,6 +307,10 @@ def _faulty(argument: tuple[str, int, float]) -> tuple[str, set[str]]:
     return argument[0], caught(*argument)
 
 
+def _misstated(argument: tuple[int, float]) -> dict[str, set[str]]:
+    return misstated(*argument)
+
+
 def false_alarms(studies: Iterator[list[Check]]) -> None:
     """Print shares of failed readings at 1 % and of studies with a failure after correction."""
     failed: Counter[str] = Counter()
@@ -249,8 +326,16 @@ def false_alarms(studies: Iterator[list[Check]]) -> None:
         print(f"  {name:18} {failed[name]:4d} of {seen[name]:5d} readings fail alone, {failed[name] / seen[name]:.2%}")
 
 
+def tell(name: str, found: Sequence[set[str]], wanted: Sequence[str]) -> None:
+    """Print in how many seeds anything wanted was found, and all that was."""
+    hits = sum(bool(each & set(wanted)) for each in found)
+    every = Counter(check for each in found for check in each)
+    listed = ", ".join(f"{check} {number}" for check, number in every.most_common())
+    print(f"  {name:58} {hits:3d} of {len(found)} by {' or '.join(wanted)}   ({listed})", flush=True)
+
+
 def main() -> None:
-    """Print both tables."""
+    """Print all tables."""
     parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
     parser.add_argument("--studies", type=int, default=250)
     parser.add_argument("--seeds", type=int, default=50)
@@ -258,16 +343,17 @@ def main() -> None:
     parser.add_argument("--workers", type=int, default=2)
     options = parser.parse_args()
     with ProcessPoolExecutor(options.workers) as pool:
-        work = [(name, seed, options.effort) for name in FAULTS for seed in range(options.seeds)]
-        hits: Counter[str] = Counter()
-        others: dict[str, Counter[str]] = {name: Counter() for name in FAULTS}
-        for name, found in pool.map(_faulty, work):
-            hits[name] += bool(found & set(FAULTS[name][0]))
-            others[name].update(found)
         print("Planted faults, seeds in which a check named for it failed; and all that failed")
+        work = [(name, seed, options.effort) for name in FAULTS for seed in range(options.seeds)]
+        found: dict[str, list[set[str]]] = {name: [] for name in FAULTS}
+        for name, failed in pool.map(_faulty, work):
+            found[name].append(failed)
         for name, (wanted, _) in FAULTS.items():
-            every = ", ".join(f"{check} {number}" for check, number in others[name].most_common())
-            print(f"  {name:34} {hits[name]:3d} of {options.seeds} by {' or '.join(wanted)}   ({every})", flush=True)
+            tell(name, found[name], wanted)
+        print("\nPressures in another unit than stated, adopted; seeds in which adoption or a check says so")
+        seeds = list(pool.map(_misstated, [(seed, options.effort) for seed in range(options.seeds)]))
+        for name in seeds[0]:
+            tell(name, [each[name] for each in seeds], ("adoption", "virial-routes"))
         false_alarms(pool.map(_healthy, [(number, options.effort) for number in range(options.studies)]))
 
 

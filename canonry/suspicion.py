@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
 from itertools import pairwise
 
@@ -13,7 +13,7 @@ import numpy.typing as npt
 from canonry.numbers import plain, with_error
 from canonry.units import Scale
 from estimators.covariance import covariance
-from estimators.estimate import Estimate, mean
+from estimators.estimate import Chain, Estimate, mean
 from estimators.structure import pair_structure
 from sampler.series import Series
 
@@ -137,25 +137,35 @@ def _by_kinetic(rungs: Sequence[Sequence[Series]]) -> Iterator[Estimate]:
 def _by_temperature(rungs: Sequence[Sequence[Series]]) -> Iterator[Estimate]:
     """The same from neighbouring temperatures.
 
-    From one to the other P rises by the covariance of P and U, which scales with it, and by rho dT, which does not.
+    From one to the other P rises by the covariance of P and U, which scales with it, and by rho dT, which does not. The
+    first holds for any observable, so that U may be taken off as often as leaves the least noise.
     """
     for cold, warm in pairwise(rungs):
         if not all(each.has("virial", "sampled_energy") for each in (*cold, *warm)):
             continue
         low, high = cold[0].state, warm[0].state
-        rise = _mean_virial(warm) - _mean_virial(cold)
-        fluctuation = (_coupling(cold) + _coupling(warm)) * (0.5 / low.temperature - 0.5 / high.temperature)
+        energies = [{each.chain: each.column("sampled_energy") for each in rung} for rung in (cold, warm)]
+        virials = [{each.chain: each.column("virial") for each in rung} for rung in (cold, warm)]
+        slope = _slope(virials, energies)
+        rests = [
+            {chain: values - slope * energy[chain] for chain, values in virial.items()}
+            for virial, energy in zip(virials, energies, strict=True)
+        ]
+        coupling = covariance(rests[0], energies[0]) + covariance(rests[1], energies[1])
+        fluctuation = coupling * (0.5 / low.temperature - 0.5 / high.temperature)
+        rise = mean(rests[1]) - mean(rests[0])
         yield (rise - fluctuation) / (low.particles * (high.temperature - low.temperature)) + 1.0
+
+
+def _slope(values: Sequence[Mapping[Chain, Floats]], over: Sequence[Mapping[Chain, Floats]]) -> float:
+    """Of the straight lines through the samples of each rung, the same for all; 0 where nothing varies."""
+    pairs = list(zip(values, over, strict=True))
+    width = sum(covariance(x, x).value for _, x in pairs)
+    return sum(covariance(y, x).value for y, x in pairs) / width if width > 0.0 else 0.0
 
 
 def _mean_virial(series: Sequence[Series]) -> Estimate:
     return mean({each.chain: each.column("virial") for each in series})
-
-
-def _coupling(series: Sequence[Series]) -> Estimate:
-    """Covariance of W and U_dyn."""
-    virial = {each.chain: each.column("virial") for each in series}
-    return covariance(virial, {each.chain: each.column("sampled_energy") for each in series})
 
 
 def _joined(found: Sequence[Estimate]) -> Estimate | None:
