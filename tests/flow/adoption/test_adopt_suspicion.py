@@ -1,0 +1,120 @@
+"""Samples from elsewhere that are not what they are said to be."""
+
+from typing import Any
+
+import numpy as np
+import pandas as pd
+import pytest
+
+import canonry
+from canonry.errors import UserError
+from canonry.suspicion import times
+from sampler.series import Series
+from tests.flow.adoption.conftest import NAMES, Home, description, table, taken_in
+
+
+def test_times_that_stand_twice_go_back_or_are_uneven_are_said(home: Home) -> None:
+    def restarted(series: Series) -> pd.DataFrame:
+        whole = table(series)
+        return pd.concat([whole[:1500], whole[1400:]])
+
+    adoption = taken_in(home, restarted)
+    assert [len(each) for each in adoption.series] == [3000] * 6
+    np.testing.assert_array_equal(adoption.series[0].energy, home.series[home.study.states[0]][0].energy)
+    assert "rungs[1], repeat 0: 100 of 3100 rows carry a time that stands there again" in adoption.notes[0]
+    assert adoption.notes[0] in canonry.estimate("got").caveats
+
+    plain = times(np.arange(100.0))
+    assert (plain.interval, plain.notes, list(plain.rows)) == (1.0, (), list(range(100)))
+    gaps = times(np.delete(np.arange(100.0), [40, 41, 70]))
+    assert len(gaps.rows) == 97
+    assert "2 of 96 intervals differ from the usual one, they are from 1 to 3 of it" in gaps.notes[0]
+    assert times(np.arange(100.0)[::-1]) is None
+    later = times(np.array([0.0, 1.0, 2.0, 1.0, 2.0, 3.0]))
+    assert list(later.rows) == [0, 3, 4, 5]
+    with pytest.raises(UserError, match=r"columns\.time = \"K\": in rungs\[1\], the times of repeat 0 do not rise"):
+        canonry.adopt(
+            description(home, columns={"time": "K", "potential": "U"})
+            | {
+                "rungs": [
+                    {"temperature": 1.2, "density": 0.7, "samples": [table(home.series[home.study.states[0]][0])]}
+                ]
+            },
+            into="again",
+        )
+
+
+MISTAKEN = {
+    "a total energy": (
+        lambda each: table(each).assign(U=each.energy + each.kinetic, U_dyn=each.sampled_energy + each.kinetic),
+        r"the potential energy holds (0\.9|1\.0).* of the kinetic energy, as a total energy does",
+    ),
+    "constant energy": (
+        lambda each: table(each).assign(K=400.0 - each.sampled_energy),
+        r"the potential energy makes up for -(1|0\.99).* of the kinetic energy, as at constant total energy",
+    ),
+    "the total energy of a run at constant energy": (
+        lambda each: table(each).assign(U_dyn=1e-3 * np.sin(each.times)),
+        "the potential energy hardly changes",
+    ),
+    "kinetic energies of a molecule": (
+        lambda each: table(each).assign(K=each.kinetic / 64),
+        r"the mean kinetic energy is 0\.015[56] times what temperature and kinetic_freedom make it",
+    ),
+}
+
+
+@pytest.mark.parametrize("mistake", MISTAKEN)
+def test_energies_of_another_kind_are_seen_through(home: Home, mistake: str) -> None:
+    make, message = MISTAKEN[mistake]
+    with pytest.raises(UserError, match=message):
+        taken_in(home, make)
+
+
+SIZES = {"epsilon": "119.8 K", "sigma": "3.405 angstrom", "mass": "39.948 u"}
+
+
+@pytest.mark.parametrize(("stated", "true"), [("bar", "MPa"), ("MPa", "bar"), ("kPa", "bar"), ("MPa", "atm")])
+@pytest.mark.parametrize("witness", ["kinetic", "temperatures", "two temperatures", "reference", "positions"])
+def test_pressures_in_another_unit_than_stated_are_seen_through(
+    home: Home, stated: str, true: str, witness: str
+) -> None:
+    """By how they follow the kinetic energy, by their rise with temperature, and by what is known of the fluid.
+
+    Two temperatures tell the unit with no pair functions at all, kinetic energies or positions.
+    """
+    scale = home.study.scale
+    unit = {"bar": 0.1, "MPa": 1.0, "kPa": 1e-3, "atm": 0.101325}[true] / scale.factor("pressure")
+    part = "instantaneous" if witness == "kinetic" else "set"
+    columns = ("time", "potential", "dynamical", "kinetic", "pressure")
+    if witness == "two temperatures":
+        columns = ("time", "potential", "dynamical", "pressure")
+    if witness in ("reference", "positions"):
+        columns = ("time", "pressure")
+    spec = description(
+        home,
+        columns={holds: NAMES[holds] for holds in columns},
+        units={"energy": "reduced", "pressure": stated, "time": "reduced", "length": "reduced"},
+        pressure_kinetic=part,
+        fluid=home_fluid("plain" if witness == "positions" else "corrected"),
+        long_range=witness != "positions",
+        intramolecular=False,
+    )
+    if witness == "two temperatures":
+        spec["fluid"] = {**SIZES, "potential": "elsewhere"}
+    spec["rungs"] = spec["rungs"][: {"temperatures": 3, "two temperatures": 2}.get(witness, 1)]
+    for rung, series in zip(spec["rungs"], home.series.values(), strict=False):
+        made = [table(each, kinetic_part=part, sizes={"pressure": unit}) for each in series]
+        if witness == "positions":
+            tail = series[0].fluid.tail(0.7)[1] * 0.7
+            made = [each.assign(P=each["P"] - tail / unit) for each in made]
+            rung["frames"] = {"samples": [each.frames for each in series], "first": 50, "every": 50}
+        rung["samples"] = made
+    with pytest.raises(UserError, match=rf"units\.pressure = \"{stated}\": .* as in values in .*\b{true}\b.*;"):
+        canonry.adopt(spec, into="got")
+    spec["units"]["pressure"] = true
+    canonry.adopt(spec, into="got")
+
+
+def home_fluid(truncation: str) -> dict[str, Any]:
+    return {"potential": "lennard-jones", "cutoff": 2.2, "truncation": truncation, **SIZES}
