@@ -60,6 +60,14 @@ class Adoption:
     missing: pd.DataFrame
 
 
+@dataclass(frozen=True, eq=False)
+class _Taken:
+    """A repeat, and names of the doubts that its notes leave."""
+
+    series: Series
+    doubts: tuple[str, ...]
+
+
 def adopt(
     spec: str | Path | Mapping[str, Any], *, into: str | Path, watch: Callable[[str], None] | None = None
 ) -> Adoption:
@@ -77,11 +85,12 @@ def adopt(
         described = read(Path(spec))
     directory = Path(into)
     _check_new(directory)
-    series, notes = _taken_in(described, watch or (lambda words: None))
+    taken, notes = _taken_in(described, watch or (lambda words: None))
+    series = [each.series for each in taken]
     source = Path(spec).name if isinstance(spec, str | Path) else "arrays"
     study = replace(described.study, adopted=Adopted(source, notes))
     table = missing(study, series, Border.of(study))
-    _make(directory, study, series, table)
+    _make(directory, study, taken, table)
     return Adoption(directory, study, tuple(series), notes, table)
 
 
@@ -139,13 +148,13 @@ def _check_new(directory: Path) -> None:
         raise UserError(f"--into {directory}: it exists already; what is needed is a new or empty directory")
 
 
-def _make(directory: Path, study: Study, series: Sequence[Series], table: pd.DataFrame) -> None:
+def _make(directory: Path, study: Study, taken: Sequence[_Taken], table: pd.DataFrame) -> None:
     """Write everything beside the directory, then give it its name. Raises UserError if the system refuses."""
     beside = directory.with_name(f".{directory.name}.{os.getpid()}")
     try:
         beside.mkdir(parents=True)
-        for each in series:
-            save(each, beside, source=study.adopted.source if study.adopted else "")
+        for each in taken:
+            save(each.series, beside, source=study.adopted.source if study.adopted else "", doubts=each.doubts)
         write(beside / "missing.csv", table.to_csv(index=False, lineterminator="\n"))
         write(beside / STUDY, study.to_toml())
         os.replace(beside, directory)
@@ -158,9 +167,10 @@ def _make(directory: Path, study: Study, series: Sequence[Series], table: pd.Dat
         shutil.rmtree(beside, ignore_errors=True)
 
 
-def _taken_in(spec: Spec, watch: Callable[[str], None]) -> tuple[list[Series], tuple[str, ...]]:
+def _taken_in(spec: Spec, watch: Callable[[str], None]) -> tuple[list[_Taken], tuple[str, ...]]:
     """All series, once they have been looked at, and what is to be said about them."""
     series: list[list[Series]] = []
+    taken = []
     notes = [*_stated(spec)]
     for rung in spec.rungs:
         watch(f"reading {rung.keys.rung.name}")
@@ -168,13 +178,14 @@ def _taken_in(spec: Spec, watch: Callable[[str], None]) -> tuple[list[Series], t
         for number in range(len(rung.repeats)):
             each, said = repeat(rung, number, spec.study.fluid)
             own.append(each)
-            notes += (f"{rung.keys.rung.name}, repeat {number}: {sentence}." for sentence in said)
+            taken.append(_Taken(each, tuple(note.doubt for note in said if note.doubt)))
+            notes += (f"{rung.keys.rung.name}, repeat {number}: {note.says}." for note in said)
         if problem := ensemble(own):
             raise rung.keys.refusal("columns", f"{problem}; what is needed are canonical samples (NVT) and their units")
         series.append(own)
     watch("looking at the pressures")
     _check_pressures(spec, series)
-    return [each for own in series for each in own], tuple(notes)
+    return taken, tuple(notes)
 
 
 def _stated(spec: Spec) -> Iterator[str]:

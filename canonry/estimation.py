@@ -10,11 +10,13 @@ from typing import Any
 
 import numpy as np
 
+from canonry.adopted import doubts
 from canonry.border import Border
 from canonry.errors import UserError
 from canonry.findings import Check, Curve, Cut, Finding, Findings
-from canonry.health import Samples, judged, known, marked, of_isochore, of_rung, wavelength
+from canonry.health import Samples, judged, known, of_isochore, of_rung, wavelength
 from canonry.isochore import Isochore, assemble
+from canonry.marking import marked
 from canonry.risks import doubt, guide
 from canonry.sampling import recorded
 from canonry.step_bias import checks as step_bias_checks
@@ -97,10 +99,11 @@ def findings(study: Study, directory: Path, border: Border, *, watch: Callable[[
     exact = exactly(study, directory)
     checks += step_bias_checks({rung.state: rung.own for rung in rungs}, exact)
     health = judged(checks)
+    noticed = {state: doubts(directory, state) for state in states} if study.adopted else {}
 
     def doubted(findings: Iterable[Iterable[Finding]]) -> Iterator[Finding]:
         """With less trust where a check failed, and with caution where the state may be no stable bulk phase."""
-        for finding in marked(chain.from_iterable(findings), health, states):
+        for finding in marked(chain.from_iterable(findings), health, states, noticed):
             yield finding.doubted(doubt(finding.state, reference) if reference else "")
 
     return Findings(

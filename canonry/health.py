@@ -13,7 +13,7 @@ from functools import cached_property
 from itertools import pairwise
 from typing import TYPE_CHECKING
 
-from canonry.findings import Check, Finding
+from canonry.findings import Check
 from canonry.isochore import Isochore
 from canonry.risks import stability
 from canonry.units import PROPERTIES, Scale
@@ -38,7 +38,7 @@ from sampler.series import FrameSums, Series
 if TYPE_CHECKING:
     from reference import Reference
 
-__all__ = ["CHECKS", "LEVEL", "Kind", "Samples", "judged", "known", "marked", "of_isochore", "of_rung", "wavelength"]
+__all__ = ["CHECKS", "LEVEL", "Kind", "Samples", "judged", "known", "of_isochore", "of_rung", "wavelength"]
 
 LEVEL = 0.01  # of a check that stands alone
 _STUDY_LEVEL = 0.05  # of all statistical readings of a study together
@@ -239,35 +239,6 @@ def judged(checks: Sequence[Check]) -> list[Check]:
         else check
         for check in checks
     ]
-
-
-def marked(findings: Iterable[Finding], checks: Iterable[Check], states: Sequence[State]) -> Iterator[Finding]:
-    """With less trust in what a failed check touches: at its own states, and on the curve up to the rungs beside them.
-
-    states : of all rungs
-    """
-    failed = [(check, _reach(check, states)) for check in checks if not check.reading.passed]
-    for finding in findings:
-        names = dict.fromkeys(check.reading.check for check, reach in failed if _concerns(check, reach, finding))
-        for name in names:
-            finding = finding.doubted(f"{CHECKS[name].doubt} (check {name})", CHECKS[name].trust)
-        yield finding
-
-
-def _reach(check: Check, states: Sequence[State]) -> tuple[float, float]:
-    """Temperatures between which a curve rests on the states of a check."""
-    ladder = sorted(state.temperature for state in states if state.density == check.state.density)
-    if check.warmer is not None:
-        return check.state.temperature, check.warmer.temperature
-    at = ladder.index(check.state.temperature)
-    return ladder[max(at - 1, 0)], ladder[min(at + 1, len(ladder) - 1)]
-
-
-def _concerns(check: Check, reach: tuple[float, float], finding: Finding) -> bool:
-    if finding.estimate is None or finding.property not in CHECKS[check.reading.check].touches:
-        return False
-    between = finding.state.density == check.state.density and reach[0] < finding.state.temperature < reach[1]
-    return between or finding.state in (check.state, check.warmer)
 
 
 def wavelength(state: State, scale: Scale | None) -> float | None:

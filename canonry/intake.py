@@ -9,6 +9,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
+from canonry.notes import Note
 from canonry.recordings import columns, positions
 from canonry.spec import Rung
 from canonry.stated import COLUMNS
@@ -24,7 +25,7 @@ _SAME_VOLUME = 1e-6  # relative: digits that are written of a volume
 _STATED_VOLUME = 1e-3  # relative: digits that people give of a density
 
 
-def repeat(rung: Rung, number: int, fluid: Fluid) -> tuple[Series, tuple[str, ...]]:
+def repeat(rung: Rung, number: int, fluid: Fluid) -> tuple[Series, tuple[Note, ...]]:
     """The repeat with this number, and what is to be said about its times.
 
     Raises UserError where it cannot be read, or is not what was stated.

@@ -10,6 +10,7 @@ from itertools import pairwise
 import numpy as np
 import numpy.typing as npt
 
+from canonry.notes import Note
 from canonry.numbers import plain, with_error
 from canonry.units import Scale
 from estimators.covariance import covariance
@@ -22,6 +23,7 @@ __all__ = ["Times", "ensemble", "pressures", "times"]
 Floats = npt.NDArray[np.float64]
 
 _UNEVEN = 0.05  # of the usual time between rows: what two of them may differ by
+_FEW_UNEVEN = 0.01  # of the intervals: what cannot change an error bar by more
 _SURE = 4.0  # standard errors: chance does that once in 16 000 times
 _STILL = 1e-5  # variance of the energy, per particle and T^2, below which it is constant
 _HEAT = (0.8, 1.25)  # mean kinetic energy over that of the temperature stated
@@ -39,7 +41,7 @@ class Times:
 
     rows: npt.NDArray[np.int_]
     interval: float
-    notes: tuple[str, ...]
+    notes: tuple[Note, ...]
 
 
 def times(values: Floats) -> Times | None:
@@ -53,19 +55,18 @@ def times(values: Floats) -> Times | None:
         return None
     steps = np.diff(values[rows])
     interval = float(np.median(steps))
-    notes = []
+    notes: list[Note] = []
     if len(rows) < len(values):
-        notes.append(
-            f"{len(values) - len(rows)} of {len(values)} rows carry a time that stands there again further down; the "
-            "later row counts"
-        )
+        said = f"{len(values) - len(rows)} of {len(values)} rows carry a time that stands there again further down"
+        notes.append(Note(f"{said}; the later row counts", "times-again"))
     uneven = int(np.sum(np.abs(steps - interval) > _UNEVEN * interval))
     if uneven:
         shortest, longest = (plain(float(each(steps)) / interval, 3) for each in (np.min, np.max))
-        notes.append(
+        said = (
             f"rows are not even in time: {uneven} of {len(steps)} intervals differ from the usual one, they are from "
             f"{shortest} to {longest} of it; error bars take them as even"
         )
+        notes.append(Note(said, "times-uneven" if uneven > _FEW_UNEVEN * len(steps) else ""))
     return Times(rows, interval, tuple(notes))
 
 

@@ -10,8 +10,10 @@ import pytest
 import canonry.health
 from canonry.failures import failures
 from canonry.findings import Check, Finding
-from canonry.health import CHECKS, Samples, judged, marked, wavelength
+from canonry.health import CHECKS, Samples, judged, wavelength
 from canonry.job import run
+from canonry.marking import marked
+from canonry.notes import DOUBTS
 from canonry.report.page import html
 from canonry.risks import guide, stability
 from canonry.terminal import closing_text
@@ -50,7 +52,7 @@ def finding(state: State, name: str = "pressure", trust: str = "ok", reason: str
 
 
 def touched(checks: list[Check], states: list[State], name: str = "pressure") -> list[State]:
-    found = marked([finding(state, name) for state in states], checks, LADDER)
+    found = marked([finding(state, name) for state in states], checks, LADDER, {})
     return [each.state for each in found if each.trust != "ok"]
 
 
@@ -94,19 +96,28 @@ def test_a_failed_check_marks_what_it_touches_only() -> None:
     assert touched(failed, LADDER, "pressure") == []
 
 
+def test_what_was_noticed_on_adoption_marks_as_far_as_a_check_does() -> None:
+    between = [at(0.95), at(1.1), at(1.19), at(1.3)]
+    found = [*marked(map(finding, [*LADDER, *between]), [], LADDER, {LADDER[1]: ["times-uneven"]})]
+    doubtful = [each for each in found if each.trust == "caution"]
+    assert [each.state for each in doubtful] == [LADDER[1], *between[:3]]
+    assert {each.reason for each in doubtful} == {DOUBTS["times-uneven"].reason}
+    assert {name for doubt in DOUBTS.values() for name in doubt.touches} <= set(PROPERTIES)
+
+
 def test_the_reason_names_the_check_once_and_keeps_what_was_there() -> None:
     failed = [check("ledger", LADDER[1]), check("ledger", LADDER[1]), check("settled", LADDER[1])]
-    (found,) = marked([finding(LADDER[1], trust="caution", reason="too few")], failed, LADDER)
+    (found,) = marked([finding(LADDER[1], trust="caution", reason="too few")], failed, LADDER, {})
     assert found.trust == "no"
     assert found.reason.startswith("too few; ")
     assert found.reason.count("(check ledger)") == found.reason.count("(check settled)") == 1
-    (mild,) = marked([finding(LADDER[1], trust="no", reason="too few")], [check("settled", LADDER[1])], LADDER)
+    (mild,) = marked([finding(LADDER[1], trust="no", reason="too few")], [check("settled", LADDER[1])], LADDER, {})
     assert mild.trust == "no"
 
 
 def test_refused_values_need_no_further_reason() -> None:
     refused = replace(finding(at(1.1)), estimate=None, trust="no", reason="no overlap")
-    assert [*marked([refused], [check("ledger", LADDER[1])], LADDER)] == [refused]
+    assert [*marked([refused], [check("ledger", LADDER[1])], LADDER, {})] == [refused]
 
 
 def test_thinned_frames_stay_with_their_samples() -> None:

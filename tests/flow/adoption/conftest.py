@@ -102,12 +102,12 @@ def description(home: Home, *, columns: Mapping[str, Any] = NAMES, **changes: An
     return whole | changes
 
 
-def taken_in(home: Home, make: Callable[[Series], Any] = table, **changes: Any) -> Adoption:
+def taken_in(home: Home, make: Callable[[Series], Any] = table, into: str = "got", **changes: Any) -> Adoption:
     """Adopted from data frames that `make` makes."""
     whole = description(home, **changes)
     for rung, series in zip(whole["rungs"], home.series.values(), strict=True):
         rung["samples"] = [make(each) for each in series]
-    return canonry.adopt(whole, into="got")
+    return canonry.adopt(whole, into=into)
 
 
 def assert_same(found: pd.DataFrame, wanted: pd.DataFrame, *, but: set[str] = frozenset()) -> None:

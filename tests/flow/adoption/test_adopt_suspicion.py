@@ -7,6 +7,7 @@ import pandas as pd
 import pytest
 
 import canonry
+import canonry.notes
 from canonry.errors import UserError
 from canonry.suspicion import times
 from sampler.series import Series
@@ -22,13 +23,17 @@ def test_times_that_stand_twice_go_back_or_are_uneven_are_said(home: Home) -> No
     assert [len(each) for each in adoption.series] == [3000] * 6
     np.testing.assert_array_equal(adoption.series[0].energy, home.series[home.study.states[0]][0].energy)
     assert "rungs[1], repeat 0: 100 of 3100 rows carry a time that stands there again" in adoption.notes[0]
-    assert adoption.notes[0] in canonry.estimate("got").caveats
+    results = canonry.estimate("got")
+    assert adoption.notes[0] in results.caveats
+    for each in (results.properties, results.curve):
+        assert (each["trust"] != "ok").all()
+        assert each["reason"].str.contains("rows carry the same times as later ones and were left out").all()
 
     plain = times(np.arange(100.0))
     assert (plain.interval, plain.notes, list(plain.rows)) == (1.0, (), list(range(100)))
     gaps = times(np.delete(np.arange(100.0), [40, 41, 70]))
     assert len(gaps.rows) == 97
-    assert "2 of 96 intervals differ from the usual one, they are from 1 to 3 of it" in gaps.notes[0]
+    assert "2 of 96 intervals differ from the usual one, they are from 1 to 3 of it" in gaps.notes[0].says
     assert times(np.arange(100.0)[::-1]) is None
     later = times(np.array([0.0, 1.0, 2.0, 1.0, 2.0, 3.0]))
     assert list(later.rows) == [0, 3, 4, 5]
@@ -42,6 +47,31 @@ def test_times_that_stand_twice_go_back_or_are_uneven_are_said(home: Home) -> No
             },
             into="again",
         )
+
+
+def test_times_that_are_uneven_here_and_there_leave_no_doubt_and_else_at_their_own_rung(home: Home) -> None:
+    """A sample in 70 lacks, which makes that share of the intervals uneven; then one in 700."""
+    doubted = canonry.notes.DOUBTS["times-uneven"].reason
+    for spacing, doubtful in ((70, {1.2}), (700, set())):
+
+        def thinned(series: Series, spacing: int = spacing) -> pd.DataFrame:
+            whole = table(series)
+            lacking = whole.index % spacing == spacing // 2
+            return whole[~lacking] if series.state.temperature == 1.2 else whole
+
+        adoption = taken_in(home, thinned, into=f"thinned-{spacing}")
+        assert len(adoption.notes) == 2
+        assert all("error bars take them as even" in note for note in adoption.notes)
+        results = canonry.estimate(adoption.directory)
+        found = results.properties["reason"].str.contains(doubted, regex=False)
+        assert set(results.properties["temperature"][found]) == doubtful
+        assert set(results.properties["trust"][found]) <= {"caution", "no"}
+        assert set(results.properties["property"][found]) == (
+            set(results.properties["property"]) if doubtful else set()
+        )
+        near = results.curve["temperature"] < 1.4
+        marks = results.curve["reason"].str.contains(doubted, regex=False)
+        assert (marks == near & bool(doubtful)).all()
 
 
 MISTAKEN = {
