@@ -96,22 +96,25 @@ def _new(file: Path, fluid: str | None) -> None:
 
 @main.command("check")
 @_path("study")
+@click.option("--bias", help="Of the energy per particle, to propose a time step for: 0.002, or '0.01 kJ/mol'.")
 @_workers
 @_json
-def _check(study: Path, workers: int | None, as_json: bool) -> None:
+def _check(study: Path, bias: str | None, workers: int | None, as_json: bool) -> None:
     """Validate a study and show its plan: cost, overlaps, warnings. Samples nothing."""
     from dataclasses import asdict
 
     from canonry.border import Border
     from canonry.directory import continues, locate, must_sample
     from canonry.plan import plan
+    from canonry.proposal import bias_of
     from canonry.sampling import left
     from canonry.terminal import left_text, plan_text
 
     found, directory = locate(study)
     must_sample(found, directory)
+    allowed = None if bias is None else bias_of(bias, found)
     _tell_if_compiling()
-    planned = plan(found, workers=workers)
+    planned = plan(found, workers=workers, bias=allowed, directory=directory)
     lacking = left(found, directory) if continues(found, directory) else planned.particle_steps
     if as_json:
         click.echo(json.dumps(asdict(planned) | {"particle_steps_left": lacking}, indent=1))

@@ -3,10 +3,8 @@
 from __future__ import annotations
 
 import os
-import time
-from collections.abc import Iterator, Sequence
-from concurrent.futures import ThreadPoolExecutor
-from dataclasses import dataclass, replace
+from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import dataclass
 from itertools import pairwise
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -15,20 +13,21 @@ import numpy as np
 import numpy.typing as npt
 
 from canonry.border import Border
+from canonry.pilot import Pilot, pilot
+from canonry.proposal import Proposal, proposals
 from canonry.risks import guide, risks
 from canonry.study import Study
 
 if TYPE_CHECKING:
     from reference import Reference
-    from sampler.fluid import Fluid, State
-    from sampler.protocol import Protocol
+    from sampler.fluid import State
 
 __all__ = ["Plan", "Rung", "plan", "predicted_overlap"]
 
 Floats = npt.NDArray[np.float64]
 
-_TRIAL = 2_000_000  # particle-steps of a trial run: about half a second
-_MOST_TRIALS = 3
+_PILOT = 2_000_000  # particle-steps: a fifth of a second, and as much to settle
+_MOST_DENSITIES = 3  # tried
 _SPREAD = 8.0  # standard deviations
 _FINE = 24  # points a standard deviation
 _LEAST_OVERLAP = 0.03  # below it too few samples connect two rungs for reweighting between them
@@ -55,6 +54,7 @@ class Plan:
 
     seconds : wall time of the sampling on this machine with this many workers
     guide : name of the reference behind the predicted overlaps and warnings
+    bias : of the residual energy, as stated; None where no time step was asked for
     """
 
     rungs: tuple[Rung, ...]
@@ -63,6 +63,8 @@ class Plan:
     seconds: float
     guide: str
     warnings: tuple[str, ...]
+    bias: float | None = None
+    proposals: tuple[Proposal, ...] = ()
 
     @property
     def particle_steps(self) -> int:
@@ -70,11 +72,20 @@ class Plan:
         return sum(rung.particle_steps for rung in self.rungs)
 
 
-def plan(study: Study, *, workers: int | None = None, border: Border | None = None) -> Plan:
-    """The plan of a study; its cost from short trial runs with the compiled kernel, which write nothing.
+def plan(
+    study: Study,
+    *,
+    workers: int | None = None,
+    border: Border | None = None,
+    bias: float | None = None,
+    directory: Path | None = None,
+) -> Plan:
+    """The plan of a study; its cost from short runs with the compiled kernel, which write nothing.
 
     border : the units of the warnings, by default those the study was written in
-    Raises BadRequest or DivergedRun where a trial run shows that the study cannot be sampled as asked.
+    bias : of the residual energy per particle, reduced, for which to propose a time step; see `canonry.proposal`
+    directory : of the study, where its shifts may have been measured already
+    Raises BadRequest or DivergedRun where a short run shows that the study cannot be sampled as asked.
     """
     workers = min(workers or os.cpu_count() or 1, len(study.states) * study.sampling.repeats)
     spoken = guide(study.fluid)
@@ -84,8 +95,17 @@ def plan(study: Study, *, workers: int | None = None, border: Border | None = No
         Rung(state, steps, steps * state.particles * study.sampling.repeats, overlaps[state]) for state in study.states
     )
     border = border or Border.of(study)
-    warnings = [*risks(study, border), *_gaps(rungs, border)]
-    return Plan(rungs, study.sampling.repeats, workers, _seconds(study, steps, workers), spoken.name, tuple(warnings))
+    pilots = _pilots(study, workers)
+    return Plan(
+        rungs,
+        study.sampling.repeats,
+        workers,
+        seconds=_seconds(study, {state: each.seconds_per_step * steps for state, each in pilots.items()}, workers),
+        guide=spoken.name,
+        warnings=(*risks(study, border), *_gaps(rungs, border)),
+        bias=bias,
+        proposals=() if bias is None else proposals(study, bias=bias, workers=workers, directory=directory),
+    )
 
 
 def predicted_overlap(
@@ -134,39 +154,21 @@ def _gaps(rungs: Sequence[Rung], border: Border) -> Iterator[str]:
             )
 
 
-def _seconds(study: Study, steps: int, workers: int) -> float:
-    """Wall time: repeats shared among the workers, none shorter than the longest of them."""
+def _pilots(study: Study, workers: int) -> Mapping[State, Pilot]:
+    """At the coldest and the warmest state of a few densities."""
     densities = sorted(study.isochores)
-    tried = [densities[round(k)] for k in np.linspace(0, len(densities) - 1, min(len(densities), _MOST_TRIALS))]
-    costs = [_seconds_per_step(study, study.isochores[density], workers) for density in tried]
-    each = [steps * float(np.interp(state.density, tried, costs)) for state in study.states]
-    repeats = study.sampling.repeats
-    return max(max(each), sum(each) * repeats / workers)
+    chosen = np.linspace(0, len(densities) - 1, min(len(densities), _MOST_DENSITIES))
+    isochores = [study.isochores[densities[round(k)]] for k in chosen]
+    ends = [state for states in isochores for state in (states[0], states[-1])]
+    return pilot(study, ends, particle_steps=_PILOT, workers=workers)
 
 
-def _seconds_per_step(study: Study, states: Sequence[State], workers: int) -> float:
-    """Of one worker, while all of them run a trial at a state in the middle of the isochore."""
-    state = states[len(states) // 2]
-    stretch = _trial(study.sampling, state.particles)
-    with ThreadPoolExecutor(workers) as threads:
-        times = list(threads.map(lambda repeat: _timed(study.fluid, state, stretch, repeat), range(workers)))
-    return float(np.mean(times)) / stretch.steps
+def _seconds(study: Study, taken: Mapping[State, float], workers: int) -> float:
+    """Wall time: repeats shared among the workers, none shorter than the longest of them.
 
-
-def _trial(protocol: Protocol, particles: int) -> Protocol:
-    """The protocol cut down to two segments, one to settle and one to be timed."""
-    record_every = min(protocol.record_every, 100)
-    steps = record_every * max(1, round(_TRIAL / (particles * record_every)))
-    return replace(protocol, record_every=record_every, frame_every=steps, equilibration=steps, steps=steps, repeats=1)
-
-
-def _timed(fluid: Fluid, state: State, protocol: Protocol, repeat: int) -> float:
-    """Wall time of the second of two segments, s."""
-    from sampler.rung import advance
-    from sampler.store import Chain
-
-    chain, stop = Chain(Path(), fluid, state, protocol, repeat), np.zeros(1, np.uint8)
-    before = advance(chain, 0, None, stop)
-    started = time.perf_counter()
-    advance(chain, 1, before, stop)
-    return time.perf_counter() - started
+    taken : seconds a repeat takes, at some of the states
+    """
+    tried = sorted({state.density for state in taken})
+    costs = [np.mean([seconds for state, seconds in taken.items() if state.density == each]) for each in tried]
+    each = [float(np.interp(state.density, tried, costs)) for state in study.states]
+    return max(max(each), sum(each) * study.sampling.repeats / workers)

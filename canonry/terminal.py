@@ -6,7 +6,7 @@ import csv
 import math
 import shutil
 import textwrap
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
@@ -15,6 +15,7 @@ from canonry.failures import failures
 from canonry.notation import symbol_of, unit_text
 from canonry.numbers import plain, with_error
 from canonry.plan import Plan
+from canonry.proposal import Proposal
 from canonry.provenance import duration
 from canonry.study import Study
 from canonry.units import UNITS, Kind
@@ -71,7 +72,46 @@ def plan_text(study: Study, plan: Plan, border: Border) -> str:
         f"{plan.workers} worker{'' if plan.workers == 1 else 's'} on this machine.",
         f"Overlaps are predicted from the heat capacity of {plan.guide}.",
     ]
-    return "\n".join([*lines, *(wrapped(f"Warning: {warning}") for warning in plan.warnings)])
+    told = [*_step_texts(study, plan, border), *(f"Warning: {warning}" for warning in plan.warnings)]
+    return "\n".join([*lines, *map(wrapped, told)])
+
+
+def _step_texts(study: Study, plan: Plan, border: Border) -> Iterator[str]:
+    """What time step is proposed for the bias asked for, a sentence a density."""
+    if plan.bias is None:
+        return
+    if study.sampling.scheme == "metropolised":
+        yield "Time step: metropolised shifts nothing, whatever the time step."
+    elif not plan.proposals:
+        yield f"Time step: none is proposed for {study.sampling.scheme}; what is needed is a scheme with a bath."
+    for each in plan.proposals:
+        yield _step_text(each, border.text("residual_energy", plan.bias), border)
+
+
+def _step_text(proposal: Proposal, bias: str, border: Border) -> str:
+    density, temperature = (border.text(name, getattr(proposal.state, name)) for name in ("density", "temperature"))
+    why = " (a run with a longer one may fly apart)" if proposal.is_limit else ""
+    known = "measured" if proposal.measured else "predicted"
+    shifts = " and ".join(
+        f"{symbol_of(name)} by {_signed(border.value(name, shift.value), border.value(name, shift.standard_error))} "
+        f"{unit_text(border.label(name))}"
+        for name, shift in proposal.shifts.items()
+    )
+    return (
+        f"Density {density}: a time step of at most {_rounded_down(border, proposal.time_step)}{why} keeps the shift "
+        f"of u below {bias}. That of the study shifts {shifts}, {known} at T = {temperature}."
+    )
+
+
+def _rounded_down(border: Border, time_step: float) -> str:
+    """A time step to two digits, none of them rounded up, with its unit."""
+    value = border.value("time", time_step)
+    last = 10.0 ** (math.floor(math.log10(value)) - 1)
+    return f"{plain(math.floor(value / last) * last, 2)} {unit_text(border.label('time'))}"
+
+
+def _signed(value: float, error: float) -> str:
+    return f"{'+' if value > 0.0 else ''}{with_error(value, error)}"
 
 
 def left_text(directory: Path, particle_steps: int, plan: Plan) -> str:

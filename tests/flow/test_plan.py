@@ -1,18 +1,27 @@
 """The plan: steps, cost, predicted overlaps and warnings."""
 
+import json
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
 import pytest
+from click.testing import CliRunner
 from scipy import integrate
 
 import canonry.plan
+import canonry.proposal
 from canonry.border import Border
+from canonry.cli import main
+from canonry.errors import UserError
 from canonry.job import estimate, run
+from canonry.pilot import Pilot, pilot
 from canonry.plan import plan, predicted_overlap
+from canonry.proposal import bias_of
 from canonry.study import Study, load
 from reference import find
 from reference.freezing import freezing_density
+from sampler.fluid import State
 
 STUDY = """
 [fluid]
@@ -40,7 +49,8 @@ DEFAULTS = {
 
 @pytest.fixture(autouse=True)
 def quick(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
-    monkeypatch.setattr(canonry.plan, "_TRIAL", 10_000)
+    monkeypatch.setattr(canonry.plan, "_PILOT", 10_000)
+    monkeypatch.setattr(canonry.proposal, "_PARTICLE_STEPS", 1_500_000)
     monkeypatch.chdir(tmp_path)
 
 
@@ -102,9 +112,11 @@ def test_steps_are_those_of_the_study() -> None:
 def test_cost_is_shared_among_workers(
     monkeypatch: pytest.MonkeyPatch, workers: int, repeats: int, expected: float
 ) -> None:
-    monkeypatch.setattr(
-        canonry.plan, "_timed", lambda fluid, state, protocol, repeat: 10.0 * state.density * protocol.steps / 21_000
-    )
+    def costs(study: Study, states: list[State], *, particle_steps: int, workers: int) -> dict[State, Pilot]:
+        return {state: replace(made, seconds_per_step=10.0 * state.density / 21_000) for state in states}
+
+    (made,) = pilot(study(), study().states[:1], particle_steps=2560, workers=1).values()
+    monkeypatch.setattr(canonry.plan, "pilot", costs)
     asked = study(states="points = [[1.5, 0.1], [1.5, 0.2], [1.5, 0.3]]", particles=864, repeats=repeats)
     assert plan(asked, workers=workers).seconds == pytest.approx(expected, rel=1e-9)
 
@@ -180,3 +192,108 @@ def test_warnings_come_in_the_units_of_the_study() -> None:
     asked = load("study.toml")
     assert "cutoff of 1.0215 nm at least, not 0.85125 nm" in plan(asked).warnings[0]
     assert "cutoff of 3 σ at least" in plan(asked, border=Border("reduced", asked.scale)).warnings[0]
+
+
+LIQUID = {"states": "density = [0.6, 0.7]\ntemperatures = [1.2, 2.0]", "particles": 108, "cutoff": 2.5}
+SAMPLING = "[sampling]\n"
+
+
+def with_sampling(keys: str, *, steps: int = 20_000, **changes: object) -> Study:
+    text = STUDY.format(**DEFAULTS | LIQUID | changes).replace("steps = 20000", f"steps = {steps}")
+    Path("study.toml").write_text(text.replace(SAMPLING, f"{SAMPLING}{keys}\n"))
+    return load("study.toml")
+
+
+def test_a_time_step_is_proposed_for_the_worst_state_of_each_density() -> None:
+    asked = with_sampling('scheme = "obabo"\ntime_step = 0.008')
+    proposed, twice = (plan(asked, bias=bias).proposals for bias in (0.001, 0.004))
+    assert [each.state for each in proposed] == [State(2.0, 0.6, 108), State(2.0, 0.7, 108)]
+    for each, other in zip(proposed, twice, strict=True):
+        shift = each.shifts["residual_energy"]
+        # 0.0119 (dt/0.01)^2 at T 1.5 and density 0.84 (measured); shifts grow with both, and these are not far away
+        assert 0.002 < shift.value < 0.012
+        assert shift.standard_error < 0.15 * shift.value
+        allowed = 0.008 * np.sqrt(0.001 / (shift.value + 2.0 * shift.standard_error))
+        assert each.time_step == pytest.approx(allowed, rel=1e-9)
+        assert other.time_step == pytest.approx(2.0 * allowed, rel=1e-9)
+        assert each.shifts["pressure"].value > 0.0
+        assert not each.measured
+        assert not each.is_limit
+    assert plan(asked).proposals == ()
+
+
+def test_no_time_step_is_proposed_beyond_what_is_known() -> None:
+    (proposed,) = plan(with_sampling("", states="points = [[1.2, 0.7]]"), bias=1.0).proposals
+    assert proposed.is_limit
+    # where trajectories hold: 0.0173 at T 2, longer when colder (both measured)
+    assert 0.011 < proposed.time_step < 0.02
+
+
+def test_large_systems_are_tried_small() -> None:
+    few, many = (plan(with_sampling("", particles=n, cutoff=2.0), bias=0.001).proposals for n in (256, 4000))
+    assert [each.state.particles for each in many] == [4000, 4000]
+    assert [each.shifts for each in many] == [each.shifts for each in few]
+
+
+def test_schemes_without_a_proposal_say_so() -> None:
+    for scheme, told in (
+        ("metropolised", "Time step: metropolised shifts nothing, whatever the time step."),
+        ("velocity-verlet", "Time step: none is proposed for velocity-verlet; what is needed is a scheme with a bath."),
+    ):
+        with_sampling(f'scheme = "{scheme}"')
+        shown = CliRunner().invoke(main, ["check", "study.toml", "--bias", "0.001"])
+        assert shown.exit_code == 0, shown.output
+        assert told in " ".join(shown.stdout.split())
+
+
+def test_a_shift_seen_against_exact_sampling_is_used() -> None:
+    # 0.012 (dt/0.01)^2 is 0.03, the standard error of the difference about 0.005
+    liquid = {"states": "points = [[1.5, 0.85]]", "particles": 64, "cutoff": 2.0}
+    asked = with_sampling('scheme = "obabo"\ntime_step = 0.016', steps=200_000, **liquid)
+    run("study.toml", into="study", step_bias=True)
+    (proposed,) = plan(asked, bias=0.002, directory=Path("study")).proposals
+    (predicted,) = plan(asked, bias=0.002, directory=Path("elsewhere")).proposals
+    assert (proposed.measured, predicted.measured) == (True, False)
+    seen, told = (each.shifts["residual_energy"] for each in (proposed, predicted))
+    assert abs(seen.value - told.value) < 4.0 * np.hypot(seen.standard_error, told.standard_error) + 0.2 * told.value
+    assert seen.value > 3.0 * seen.standard_error
+    shown = CliRunner().invoke(main, ["check", "study.toml", "--bias", "0.002"])
+    words = " ".join(shown.stdout.split())
+    assert "measured at T = " in words
+    assert "predicted at" not in words
+
+
+def test_a_bias_that_is_none_is_refused() -> None:
+    reduced = study()
+    assert bias_of("0.002", reduced) == 0.002
+    for text, reason in (
+        ("0.01 kJ/mol", "needs fluid.epsilon, fluid.sigma and fluid.mass"),
+        ("little", "needs fluid.epsilon, fluid.sigma and fluid.mass"),
+        ("nan", "what is needed is a number from 1e-09"),
+        ("-0.1", "what is needed is a number from 1e-09"),
+    ):
+        with pytest.raises(UserError, match=f"^--bias {text}: .*{reason}"):
+            bias_of(text, reduced)
+
+
+def test_a_bias_may_carry_a_unit() -> None:
+    text = STUDY.format(**DEFAULTS | {"states": 'points = [["179.7 K", 0.7]]'})
+    scale = 'epsilon = "119.8 K"\nsigma = "3.405 angstrom"\nmass = "39.948 u"\n[state]'
+    Path("study.toml").write_text(text.replace("[state]", scale))
+    asked = load("study.toml")
+    # epsilon is 119.8 K times 8.31446 J/(mol K)
+    assert bias_of("0.01 kJ/mol", asked) == pytest.approx(10.0 / (119.8 * 8.31446), rel=1e-5)
+    with pytest.raises(UserError, match=r"^--bias 3 MPa: 'MPa' is not a unit of residual energy"):
+        bias_of("3 MPa", asked)
+    shown = CliRunner().invoke(main, ["check", "study.toml", "--bias", "0.01 kJ/mol"])
+    assert shown.exit_code == 0, shown.output
+    words = " ".join(shown.stdout.split())
+    assert "keeps the shift of u below 0.01 kJ/mol. That of the study shifts u by " in words
+    assert "predicted at T = 179.7 K." in words
+    sentences = shown.stdout[shown.stdout.index("Density") :]
+    assert all(len(row) <= 80 for row in sentences.splitlines())
+    made = json.loads(CliRunner().invoke(main, ["check", "study.toml", "--bias", "0.01 kJ/mol", "--json"]).stdout)
+    assert made["bias"] == pytest.approx(0.0100394, rel=1e-5)
+    (proposed,) = made["proposals"]
+    assert set(proposed["shifts"]) == {"residual_energy", "pressure"}
+    assert set(proposed["shifts"]["pressure"]) == {"value", "standard_error"}

@@ -1,0 +1,107 @@
+"""Pilots: short runs at chosen states, the same for any number of workers, that write nothing."""
+
+from dataclasses import replace
+from pathlib import Path
+
+import numpy as np
+import pytest
+
+from canonry.pilot import Pilot, pilot
+from canonry.study import Study, load
+from sampler.errors import BadRequest, DivergedRun
+from sampler.fluid import State
+from sampler.ladder import chains, sample
+from sampler.ladder import load as load_series
+from sampler.protocol import Protocol
+
+STUDY = """
+[fluid]
+potential = "lennard-jones"
+cutoff = 2.0
+truncation = "shifted"
+[state]
+density = 0.7
+temperatures = [1.2, 1.4]
+particles = 64
+[sampling]
+seed = 5
+scheme = "obabo"
+time_step = 0.004
+friction = 3.0
+record_every = 20
+repeats = 2
+"""
+STATES = (State(1.4, 0.7, 64), State(1.3, 0.65, 80))  # the latter not of the study
+COLUMNS = ("energy", "virial", "kinetic", "laplacian", "force_square")
+PARTICLE_STEPS = 640_000
+
+
+@pytest.fixture
+def study(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Study:
+    monkeypatch.chdir(tmp_path)
+    Path("study.toml").write_text(STUDY)
+    return load("study.toml")
+
+
+def test_pilots_are_the_same_for_any_number_of_workers(study: Study) -> None:
+    alone, crowded = (pilot(study, STATES, particle_steps=PARTICLE_STEPS, workers=n) for n in (1, 5))
+    assert list(alone) == list(crowded) == list(STATES)
+    for state in STATES:
+        for name in COLUMNS:
+            assert np.array_equal(alone[state].series.column(name), crowded[state].series.column(name))
+
+
+def test_a_pilot_is_sampled_as_the_study_would_be(study: Study, tmp_path: Path) -> None:
+    """The same samples as from a study of these few steps, settled as long, by way of files."""
+    state = STATES[1]
+    found = pilot(study, STATES, particle_steps=PARTICLE_STEPS, workers=2)[state].series
+    steps = PARTICLE_STEPS // state.particles
+    protocol = Protocol(
+        seed=5, time_step=0.004, friction=3.0, scheme="obabo", record_every=20, equilibration=steps, steps=steps,
+        frame_every=steps,
+    )  # fmt: skip
+    (chain,) = chains(tmp_path / "kept", study.fluid, [state], protocol)
+    sample([(chain, [0, 1])])
+    kept = load_series(chain)
+    assert found.interval == kept.interval == pytest.approx(0.08)
+    assert (found.fluid, found.state, found.bath) == (kept.fluid, kept.state, True)
+    assert 200 <= len(found) <= len(kept) == 400
+    assert np.array_equal(found.column("energy"), kept.column("energy")[-len(found) :])
+
+
+def test_a_pilot_writes_nothing_and_knows_its_cost(study: Study) -> None:
+    found = pilot(study, STATES[:1], particle_steps=1, workers=2)[STATES[0]]
+    assert [path.name for path in Path().iterdir()] == ["study.toml"]
+    assert len(found.series) == 1  # a whole record interval, however little is asked for
+    assert 0.0 < found.seconds_per_step < 1.0
+
+
+def test_what_is_not_settled_is_left_out(study: Study, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr("estimators.settle.settled_start", lambda values: len(values) // 4)
+    (found,) = pilot(study, STATES[:1], particle_steps=PARTICLE_STEPS, workers=1).values()
+    assert len(found.series) == 500 - 125
+
+
+def test_the_seed_matters(study: Study) -> None:
+    other = replace(study, sampling=replace(study.sampling, seed=6))
+    first, second = (pilot(each, STATES[:1], particle_steps=6400, workers=1)[STATES[0]] for each in (study, other))
+    assert isinstance(first, Pilot)
+    assert not np.array_equal(first.series.column("energy"), second.series.column("energy"))
+
+
+def test_records_are_not_too_far_apart(study: Study) -> None:
+    rare = replace(study, sampling=replace(study.sampling, record_every=500, frame_every=500))
+    (found,) = pilot(rare, STATES[:1], particle_steps=PARTICLE_STEPS, workers=1).values()
+    assert found.series.interval == pytest.approx(100 * 0.004)
+
+
+def test_nothing_asked_for_is_nothing(study: Study) -> None:
+    assert pilot(study, [], particle_steps=6400, workers=2) == {}
+
+
+def test_states_that_cannot_be_sampled_are_refused(study: Study) -> None:
+    with pytest.raises(BadRequest, match="beyond half the box"):
+        pilot(study, [State(1.4, 0.7, 20)], particle_steps=6400, workers=1)
+    wild = replace(study, sampling=replace(study.sampling, time_step=0.1))
+    with pytest.raises(DivergedRun, match="flew apart"):
+        pilot(wild, STATES[:1], particle_steps=PARTICLE_STEPS, workers=1)
