@@ -8,8 +8,9 @@ together: a rung's samples scatter about that rung's mean.
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
+from collections import defaultdict
+from collections.abc import Callable, Iterator, Sequence
+from dataclasses import dataclass, replace
 from functools import cached_property
 
 import numpy as np
@@ -18,7 +19,7 @@ import numpy.typing as npt
 from estimators.canonical import NEEDS
 from estimators.estimate import Estimate
 from estimators.mixture import Mixture
-from estimators.moments import POWERS, Moments, Run, claimed, moments
+from estimators.moments import POWERS, Moments, Run, block_starts, claimed, energy_name, moments
 from sampler.series import Series
 
 __all__ = ["Group", "Rung"]
@@ -31,36 +32,45 @@ THINNED = 4096  # samples of a rung that are enough for links
 
 @dataclass(frozen=True)
 class Rung:
-    """All repeats of one temperature; energies (n,) each, dynamical, less one constant for the whole isochore."""
+    """All repeats of one state.
+
+    features : (d, n) of each repeat, less one constant for the whole group
+    slopes : (d,), of the features in the reduced potential of this state
+    inefficiency : 2 tau of the reduced potential
+    """
 
     temperature: float
+    density: float
     repeats: list[Series]
-    energies: list[Floats]
+    features: list[Floats]
+    slopes: Floats
     inefficiency: float
 
-    @property
+    @cached_property
     def samples(self) -> int:
-        return sum(map(len, self.energies))
+        return sum(map(len, self.repeats))
 
     @property
     def recorded(self) -> Iterator[tuple[Series, Floats]]:
-        """Its repeats with their energies."""
-        return zip(self.repeats, self.energies, strict=True)
+        """Its repeats with their features."""
+        return zip(self.repeats, self.features, strict=True)
 
     @cached_property
     def thinned(self) -> Floats:
+        """(d, m), of samples over all of the rung."""
         stride = -(-self.samples // THINNED)
-        return np.concatenate([energies[::stride] for energies in self.energies])
+        return np.concatenate([features[:, ::stride] for features in self.features], axis=1)
 
     @cached_property
     def mean_energy(self) -> float:
-        return sum(float(np.sum(energies)) for energies in self.energies) / self.samples
+        """Of U_dyn, less a constant."""
+        return self.temperature * sum(float(np.sum(self.slopes @ each)) for each in self.features) / self.samples
 
     @cached_property
     def heat_capacity(self) -> float:
-        """var(E)/T^2 of the whole system."""
-        squares = sum(float(np.sum((energies - self.mean_energy) ** 2)) for energies in self.energies)
-        return squares / self.samples / self.temperature**2
+        """var(U_dyn)/T^2 of the whole system."""
+        mean = self.mean_energy / self.temperature
+        return sum(float(np.sum((self.slopes @ each - mean) ** 2)) for each in self.features) / self.samples
 
     def surviving(self, temperature: float) -> float:
         """Independent samples of the rung that survive reweighting to a temperature, at constant heat capacity C.
@@ -77,11 +87,43 @@ class Rung:
 
 @dataclass(frozen=True)
 class Group:
-    """Rungs that overlap, solved together."""
+    """Rungs that overlap, solved together.
+
+    runs : their repeats as they are at one density, none before that is said, see `seen`
+    elsewhere : whether that is another density than some of them were sampled at
+    """
 
     rungs: list[Rung]
     mixture: Mixture
     runs: list[Run]
+    elsewhere: bool = False
+
+    def seen(self, density: float, look: Callable[[Series, float], Series] | None = None) -> Group:
+        """The group with energies and virials as they are at a density.
+
+        look : gives those of a series that was sampled at another one
+        """
+        repeats = [(index, *each) for index, rung in enumerate(self.rungs) for each in rung.recorded]
+        views = [
+            series if look is None or series.state.density == density else look(series, density)
+            for _, series, _ in repeats
+        ]
+        samples = sum(map(len, views))
+        constant = sum(float(np.sum(view.column("sampled_energy"))) for view in views) / samples
+        centres = _centres(views)
+        runs = [
+            Run(
+                index,
+                series.chain,
+                view,
+                features,
+                view.column("sampled_energy") - constant,
+                centres,
+                block_starts(len(view), samples),
+            )
+            for (index, series, features), view in zip(repeats, views, strict=True)
+        ]
+        return replace(self, runs=runs, elsewhere=any(rung.density != density for rung in self.rungs))
 
     def moments(self, temperatures: Floats) -> Moments:
         """At the temperatures (G,), all of them in one pass over the samples."""
@@ -90,17 +132,34 @@ class Group:
     def effective_samples(self, temperature: float, kish: float) -> float:
         """Independent samples behind weights that are worth `kish`.
 
-        Beyond the outermost rungs at most what should survive of every rung: there the weights themselves tell too
-        much, as the heaviest are those of samples that nobody drew.
+        Beyond the outermost rungs, and at another density, at most what should survive of every rung: there the weights
+        themselves tell too much, as the heaviest are those of samples that nobody drew.
         """
+        if self.elsewhere:
+            return min(kish, self._carried(temperature))
         if self.rungs[0].temperature <= temperature <= self.rungs[-1].temperature:
             return kish
         return min(kish, sum(rung.surviving(temperature) for rung in self.rungs))
 
-    def free_energies(self, reference_energy: float) -> list[Estimate]:
-        """F/T less that of the group's first rung."""
-        beta = self.mixture.beta
-        values = self.mixture.free_energies + (beta - beta[0]) * reference_energy
+    def _carried(self, temperature: float) -> float:
+        """Independent samples that survive the change of the reduced potential if that is normal at every rung.
+
+        <w>^2/<w^2> is then exp(-s^2), with s its standard deviation.
+        """
+        changes: dict[int, list[Floats]] = defaultdict(list)
+        for run in self.runs:
+            changes[run.rung].append(run.energies / temperature - self.rungs[run.rung].slopes @ run.features)
+        return sum(
+            self.rungs[rung].samples / self.rungs[rung].inefficiency * math.exp(-float(np.var(np.concatenate(each))))
+            for rung, each in changes.items()
+        )
+
+    def free_energies(self, constants: Floats) -> list[Estimate]:
+        """F/T less that of the group's first rung.
+
+        constants : (d,), taken off the features
+        """
+        values = self.mixture.free_energies + (self.mixture.slopes - self.mixture.slopes[0]) @ constants
         return self._estimates(values, -self.mixture.response, [0.0] * len(self.runs))
 
     def properties(self, temperature: float, found: Moments, index: int) -> dict[str, Estimate]:
@@ -177,3 +236,14 @@ class Group:
             )
             for row, value in enumerate(values)
         ]
+
+
+def _centres(series: Sequence[Series]) -> tuple[float, float, float]:
+    """Means of U, W and W + X; zero for a column that is not recorded throughout."""
+    samples = sum(map(len, series))
+    energy = sum(float(np.sum(each.column(energy_name(each)))) for each in series) / samples
+    virial, hypervirial = (
+        sum(float(np.sum(each.column(name))) for each in series if each.has(name)) / samples
+        for name in ("virial", "hypervirial")
+    )
+    return energy, virial, virial + hypervirial

@@ -1,9 +1,11 @@
 """The mixture of several canonical ensembles that their pooled samples are drawn from.
 
-Of ensembles k with N_k samples each, a sample of energy E has the density D(E) = sum_k N_k exp(f_k - beta_k E), and
-p_k = N_k exp(f_k - beta_k E) / D is the share of it that ensemble k claims. The f_k (beta_k times the Helmholtz energy,
-up to one constant) are those for which every ensemble claims as many samples as it has: M. R. Shirts and J. D. Chodera,
-J. Chem. Phys. 129, 124105 (2008); of two ensembles: C. H. Bennett, J. Comput. Phys. 22, 245 (1976).
+In ensemble k a sample has the reduced potential u_k = s_k . x, with d features x of the sample and d slopes s_k of the
+ensemble: at one density the energy and 1/T. Of ensembles with N_k samples each, a sample has the density
+D = sum_k N_k exp(f_k - u_k), and p_k = N_k exp(f_k - u_k) / D is the share of it that ensemble k claims. The f_k (the
+Helmholtz energy over T, up to one constant) are those for which every ensemble claims as many samples as it has:
+M. R. Shirts and J. D. Chodera, J. Chem. Phys. 129, 124105 (2008); of two ensembles: C. H. Bennett, J. Comput. Phys. 22,
+245 (1976).
 """
 
 from __future__ import annotations
@@ -15,8 +17,6 @@ import numpy as np
 import numpy.typing as npt
 from scipy.optimize import brentq
 from scipy.special import expit
-
-from estimators.errors import NotSolved
 
 __all__ = ["Mixture", "bennett", "polished"]
 
@@ -30,26 +30,26 @@ FAR = 50.0  # exp(-FAR) is nothing
 
 @dataclass(frozen=True)
 class Mixture:
-    """Ensembles at inverse temperatures beta (K,) with `counts` (K,) samples and free energies (K,), the first one 0.
+    """Ensembles of slopes (K, d) with `counts` (K,) samples and free energies (K,), the first one 0.
 
     response : (K, K), inverse of diag(counts) - sum p p^T with the first row and column zero: how far the free energies
     move when claims do
     overlap : (K, K), sum p_i p_j / N_i: chance that a sample of i might as well be one of j; rows sum to 1
     """
 
-    beta: Floats
+    slopes: Floats
     counts: Floats
     free_energies: Floats
     response: Floats
     overlap: Floats
 
-    def claims(self, energies: Floats) -> tuple[Floats, Floats]:
-        """Shares p, (K, n), and log D, (n,), of samples at the energies (n,)."""
-        return _claims(self.beta, np.log(self.counts) + self.free_energies, energies)
+    def claims(self, features: Floats) -> tuple[Floats, Floats]:
+        """Shares p, (K, n), and log D, (n,), of samples with the features (d, n)."""
+        return _claims(self.slopes, np.log(self.counts) + self.free_energies, features)
 
 
-def _claims(beta: Floats, offsets: Floats, energies: Floats) -> tuple[Floats, Floats]:
-    exponents = offsets[:, None] - np.multiply.outer(beta, energies)
+def _claims(slopes: Floats, offsets: Floats, features: Floats) -> tuple[Floats, Floats]:
+    exponents = offsets[:, None] - slopes @ features
     top = np.max(exponents, axis=0)
     exponents -= top
     shares = np.exp(exponents, out=exponents)
@@ -58,17 +58,17 @@ def _claims(beta: Floats, offsets: Floats, energies: Floats) -> tuple[Floats, Fl
     return shares, top + np.log(total)
 
 
-def polished(beta: Floats, counts: Floats, start: Floats, energies: Sequence[Floats]) -> Mixture:
+def polished(slopes: Floats, counts: Floats, start: Floats, features: Sequence[Floats]) -> Mixture | None:
     """The mixture whose free energies solve the equations on all samples, by Newton steps from a good start.
 
     start : (K,), free energies, good to about 1
-    energies : each (n,), all samples of all ensembles
-    Raises NotSolved when the steps do not die out.
+    features : each (d, n), all samples of all ensembles
+    None when the steps do not die out.
     """
     free_energies = start - start[0]
     for _ in range(STEPS):
-        claimed, products = _claim_sums(beta, np.log(counts) + free_energies, energies)
-        step = np.zeros(len(beta))
+        claimed, products = _claim_sums(slopes, np.log(counts) + free_energies, features)
+        step = np.zeros(len(counts))
         try:
             step[1:] = np.linalg.solve((np.diag(claimed) - products)[1:, 1:], (counts - claimed)[1:])
         except np.linalg.LinAlgError:
@@ -80,32 +80,29 @@ def polished(beta: Floats, counts: Floats, start: Floats, energies: Sequence[Flo
         if largest < SOLVED:
             response = np.zeros_like(products)
             response[1:, 1:] = np.linalg.inv((np.diag(counts) - products)[1:, 1:])
-            return Mixture(beta, counts, free_energies, response, products / counts[:, None])
-    raise NotSolved(
-        f"the free energies of the {len(beta)} rungs at temperatures {', '.join(f'{1.0 / b:g}' for b in beta)} could "
-        "not be found from their samples; sample them longer or set rungs between them"
-    )
+            return Mixture(slopes, counts, free_energies, response, products / counts[:, None])
+    return None
 
 
-def _claim_sums(beta: Floats, offsets: Floats, energies: Sequence[Floats]) -> tuple[Floats, Floats]:
+def _claim_sums(slopes: Floats, offsets: Floats, features: Sequence[Floats]) -> tuple[Floats, Floats]:
     """Sums over all samples of p, (K,), and of p p^T, (K, K)."""
-    claimed, products = np.zeros(len(beta)), np.zeros((len(beta), len(beta)))
-    for series in energies:
-        for start in range(0, len(series), CHUNK):
-            shares, _ = _claims(beta, offsets, series[start : start + CHUNK])
+    claimed, products = np.zeros(len(slopes)), np.zeros((len(slopes), len(slopes)))
+    for series in features:
+        for start in range(0, series.shape[1], CHUNK):
+            shares, _ = _claims(slopes, offsets, series[:, start : start + CHUNK])
             claimed += np.sum(shares, axis=1)
             products += shares @ shares.T
     return claimed, products
 
 
-def bennett(beta: tuple[float, float], first: Floats, second: Floats) -> tuple[float, Floats, Floats]:
-    """Free energy of the second ensemble less that of the first, and how evenly both claim each sample.
+def bennett(first: Floats, second: Floats) -> tuple[float, Floats, Floats]:
+    """Free energy of a second ensemble less that of a first, and how evenly both claim each sample.
 
-    first, second : (n,), (m,), energies sampled at the inverse temperatures beta
+    first, second : (n,), (m,), the second's reduced potential less the first's, of samples of the first and the second
     Returns the difference and 4 p_1 p_2 of the samples of the first (n,) and of the second (m,): 1 where both claim a
     sample alike, 0 where only one does.
     """
-    works = (beta[1] - beta[0]) * np.concatenate([first, second]) + np.log(len(first) / len(second))
+    works = np.concatenate([first, second]) + np.log(len(first) / len(second))
     unclaimed = lambda difference: float(np.sum(expit(difference - works))) - len(second)  # noqa: E731
     difference = brentq(unclaimed, np.min(works) - FAR, np.max(works) + FAR, xtol=1e-6)
     shares = expit(difference - works)

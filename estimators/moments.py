@@ -1,6 +1,7 @@
 """Weighted moments of pooled samples at many temperatures at once, over all samples and over blocks of them.
 
-A sample of energy E weighs exp(-E/T)/D(E) at temperature T. Whatever is averaged there is a combination of a few
+A sample whose energy at the density asked for is E weighs exp(-E/T)/D at temperature T, with D its density in the
+mixture that it was drawn from. Whatever is averaged there is a combination of a few
 powers of what was recorded, the same ones at every temperature: one pass over the samples, and products of small
 matrices, serve any number of temperatures and properties.
 
@@ -33,15 +34,19 @@ BLOCKS = 2**14  # over all chains: an error bar's own error, about 1/sqrt(2 BLOC
 FEWEST_BLOCKS = 128  # of a chain, however many there are
 CHUNK = 2**13  # samples worked on at once: the matrices of a chunk stay in cache
 PIECE = 2**18  # multiplications of one matrix product: above it OpenBLAS takes threads
-SCANNED = 1024  # energies at which the largest weight is looked for
+SCANNED = 1024  # samples of a run among which the largest weight is looked for
+HEAVIEST = 300.0  # log of a weight over the largest found so: one sample then counts alone, and nothing is supported
 
 
 @dataclass(frozen=True)
 class Run:
-    """One repeat inside a group.
+    """One repeat inside a group, seen at one density.
 
     rung : index of its rung in the group
-    energies : (n,), E: dynamical, less one constant for the whole isochore
+    chain : what was sampled
+    series : energies and virials at the density at which it is seen
+    features : (d, n), of the samples as they were drawn
+    energies : (n,), E: dynamical, less one constant for the whole group
     centres : U, W and W + X less these constants enter the powers, so that no digits are lost
     starts : (B,), first samples of its blocks
     """
@@ -49,6 +54,7 @@ class Run:
     rung: int
     chain: Chain
     series: Series
+    features: Floats
     energies: Floats
     centres: tuple[float, float, float]
     starts: Indices
@@ -117,7 +123,7 @@ def moments(mixture: Mixture, runs: Sequence[Run], temperatures: Floats, ineffic
     inefficiencies : (K,), of the energy at each rung
     """
     beta = 1.0 / temperatures
-    tops = _tops(mixture, runs, beta)
+    tops = np.max([_top(mixture, run, beta) for run in runs], axis=0)
     with ThreadPoolExecutor(os.cpu_count()) as threads:
         sums = list(threads.map(lambda run: _sums(mixture, run, beta, tops), runs))
     blocks = [each for each, _, _ in sums]
@@ -133,21 +139,21 @@ def moments(mixture: Mixture, runs: Sequence[Run], temperatures: Floats, ineffic
 def _sums(mixture: Mixture, run: Run, beta: Floats, tops: Floats) -> tuple[Floats, Floats, Floats]:
     """Of a run, with weights exp(-beta E - tops)/D: of its blocks, of what the rungs claim, and of squares, (G,)."""
     shape = (len(beta), POWERS)
-    blocks, coupled = np.empty((*shape, len(run.starts))), np.zeros((*shape, len(mixture.beta)))
+    blocks, coupled = np.empty((*shape, len(run.starts))), np.zeros((*shape, len(mixture.counts)))
     squares = np.zeros(len(beta))
     for part, samples, ended in run.chunks():
-        energies = run.energies[samples.ravel()]
-        shares, log_density = mixture.claims(energies)
+        shares, log_density = mixture.claims(run.features[:, samples.ravel()])
         log_density[ended.ravel()] = math.inf
-        weights = np.multiply.outer(-beta, energies)
+        weights = np.multiply.outer(-beta, run.energies[samples.ravel()])
         weights -= log_density
         weights -= tops[:, None]
+        np.minimum(weights, HEAVIEST, out=weights)
         np.exp(weights, out=weights)
         powers = run.powers(samples.ravel())
         by_block = weights.reshape(-1, *samples.shape).transpose(1, 0, 2)
         blocks[:, :, part] = (by_block @ powers.reshape(-1, *samples.shape).transpose(1, 2, 0)).transpose(1, 2, 0)
         shared = powers[:, None, :] * shares
-        coupled += _product(weights, shared.reshape(-1, len(energies))).reshape(coupled.shape)
+        coupled += _product(weights, shared.reshape(-1, samples.size)).reshape(coupled.shape)
         squares += np.einsum("gn,gn->g", weights, weights)
     return blocks, coupled, squares
 
@@ -166,17 +172,15 @@ def _product(first: Floats, second: Floats) -> Floats:
 
 def claimed(mixture: Mixture, run: Run) -> Floats:
     """What every rung claims of each block of a run, (K, B)."""
-    sums = np.empty((len(mixture.beta), len(run.starts)))
+    sums = np.empty((len(mixture.counts), len(run.starts)))
     for part, samples, ended in run.chunks():
-        shares, _ = mixture.claims(run.energies[samples.ravel()])
+        shares, _ = mixture.claims(run.features[:, samples.ravel()])
         sums[:, part] = np.sum(np.where(ended, 0.0, shares.reshape(-1, *samples.shape)), axis=2)
     return sums
 
 
-def _tops(mixture: Mixture, runs: Sequence[Run], beta: Floats) -> Floats:
-    """About the largest log weight at each beta, (G,); as a function of the energy it is concave."""
-    low = min(float(np.min(run.energies)) for run in runs)
-    high = max(float(np.max(run.energies)) for run in runs)
-    energies = np.linspace(low, high, SCANNED)
-    _, log_density = mixture.claims(energies)
-    return np.asarray(np.max(-np.multiply.outer(beta, energies) - log_density, axis=1), dtype=float)
+def _top(mixture: Mixture, run: Run, beta: Floats) -> Floats:
+    """About the largest log weight of a run at each beta, (G,), from samples over the whole run."""
+    samples = slice(None, None, max(len(run.energies) // SCANNED, 1))
+    _, log_density = mixture.claims(run.features[:, samples])
+    return np.asarray(np.max(-np.multiply.outer(beta, run.energies[samples]) - log_density, axis=1), dtype=float)

@@ -40,20 +40,28 @@ class Gap:
         return f"{both} do not overlap, set {listed} between them"
 
 
-def connected(rungs: Sequence[Rung]) -> npt.NDArray[np.int64]:
-    """(K,), equal labels for rungs that share 10 effective samples or are connected through others that do."""
+def connected(
+    rungs: Sequence[Rung], comparable: Callable[[Rung, Rung], bool] = lambda one, other: True
+) -> npt.NDArray[np.int64]:
+    """(K,), equal labels for rungs that share 10 effective samples or are connected through others that do.
+
+    comparable : whether two rungs may share any
+    """
     labels = np.arange(len(rungs))
     for distance in range(1, len(rungs)):
         for i, j in zip(range(len(rungs)), range(distance, len(rungs)), strict=False):
-            if labels[i] != labels[j] and _shared_samples(rungs[i], rungs[j]) >= LINKED:
+            if labels[i] == labels[j] or not comparable(rungs[i], rungs[j]):
+                continue
+            if _shared_samples(rungs[i], rungs[j]) >= LINKED:
                 labels[labels == labels[j]] = labels[i]
     return labels
 
 
-def _shared_samples(cold: Rung, hot: Rung) -> float:
+def _shared_samples(first: Rung, second: Rung) -> float:
     """Effective samples of two rungs that either might have drawn."""
-    _, *evenness = bennett((1.0 / cold.temperature, 1.0 / hot.temperature), cold.thinned, hot.thinned)
-    pairs = zip(evenness, (cold, hot), strict=True)
+    change = second.slopes - first.slopes
+    _, *evenness = bennett(change @ first.thinned, change @ second.thinned)
+    pairs = zip(evenness, (first, second), strict=True)
     return sum(float(np.mean(even)) * rung.samples / rung.inefficiency for even, rung in pairs)
 
 

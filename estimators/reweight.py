@@ -20,16 +20,15 @@ from functools import cached_property
 import numpy as np
 import numpy.typing as npt
 
-from estimators.errors import BadSeries
+from estimators.errors import BadSeries, NotSolved
 from estimators.estimate import Estimate, mean
 from estimators.group import Group, Rung
 from estimators.mixture import bennett, polished
-from estimators.moments import Run, block_starts, energy_name
 from estimators.overlap import Gap, connected, gaps
 from estimators.trust import FEWEST_SAMPLES
 from sampler.series import Series
 
-__all__ = ["Pooled", "Reweighted", "pool"]
+__all__ = ["Pooled", "Reweighted", "check", "pool", "rung_of", "solved"]
 
 Floats = npt.NDArray[np.float64]
 
@@ -64,7 +63,7 @@ class Pooled:
     temperatures: list[float]
     gaps: list[Gap]
     _groups: list[Group]
-    _reference_energy: float
+    _constants: Floats
     _spoken: Callable[[float], str]
 
     @cached_property
@@ -82,7 +81,7 @@ class Pooled:
         by_temperature = {
             rung.temperature: estimate
             for group in self._groups
-            for rung, estimate in zip(group.rungs, group.free_energies(self._reference_energy), strict=True)
+            for rung, estimate in zip(group.rungs, group.free_energies(self._constants), strict=True)
         }
         return [by_temperature[temperature] for temperature in self.temperatures]
 
@@ -140,7 +139,7 @@ def pool(series: Sequence[Series], *, spoken: Callable[[float], str] = _in_reduc
     be found.
     """
     series = [each for each in series if len(each)]
-    _check(series)
+    check(series)
     reference_energy = float(np.mean([np.mean(each.column("sampled_energy")) for each in series]))
     by_temperature: dict[float, list[Series]] = defaultdict(list)
     for each in series:
@@ -148,21 +147,27 @@ def pool(series: Sequence[Series], *, spoken: Callable[[float], str] = _in_reduc
     rungs = [_rung(*item, reference_energy) for item in sorted(by_temperature.items(), key=lambda item: item[0])]
     labels = connected(rungs)
     groups = [
-        _solved([rung for rung, own in zip(rungs, labels, strict=True) if own == label]) for label in np.unique(labels)
+        solved([rung for rung, own in zip(rungs, labels, strict=True) if own == label]).seen(rungs[0].density)
+        for label in np.unique(labels)
     ]
     temperatures = [rung.temperature for rung in rungs]
-    return Pooled(temperatures, gaps(rungs, labels), groups, reference_energy, spoken)
+    return Pooled(temperatures, gaps(rungs, labels), groups, np.array([reference_energy]), spoken)
 
 
-def _check(series: Sequence[Series]) -> None:
+def check(series: Sequence[Series], *, densities: bool = False) -> None:
+    """Raises BadSeries where series cannot be reweighted together.
+
+    densities : whether they may be of several
+    """
     if not series:
         raise BadSeries("no samples to reweight: every series is empty; sample longer or cut less")
     first = series[0]
-    isochore = (first.fluid, first.state.density, first.state.particles)
     for each in series:
         if not each.bath:
             raise BadSeries(f"the series at {each.state} has no bath: only canonical samples can be reweighted")
-        if (each.fluid, each.state.density, each.state.particles) != isochore:
+        if (each.fluid, each.state.particles) != (first.fluid, first.state.particles):
+            raise BadSeries(f"only one fluid and box is reweighted together, found {first.state}, {each.state}")
+        if not densities and each.state.density != first.state.density:
             raise BadSeries(f"only one fluid at one density is reweighted together, found {first.state}, {each.state}")
         if not each.has("sampled_energy"):
             raise BadSeries(f"the series at {each.state}, repeat {each.repeat}, has no energy to reweight it by")
@@ -174,58 +179,56 @@ def _check(series: Sequence[Series]) -> None:
 
 
 def _rung(temperature: float, repeats: list[Series], reference_energy: float) -> Rung:
-    energies = [each.column("sampled_energy") - reference_energy for each in repeats]
-    samples = sum(map(len, energies))
-    effective = mean({each.chain: values for each, values in zip(repeats, energies, strict=True)}).effective_samples
-    return Rung(temperature, repeats, energies, max(samples / max(effective, 1.0), 1.0))
+    features = [(each.column("sampled_energy") - reference_energy)[None] for each in repeats]
+    return rung_of(temperature, repeats, features, np.array([1.0 / temperature]))
 
 
-def _solved(rungs: list[Rung]) -> Group:
-    beta = np.array([1.0 / rung.temperature for rung in rungs])
+def rung_of(temperature: float, repeats: list[Series], features: list[Floats], slopes: Floats) -> Rung:
+    """A rung with its inefficiency; see `Rung`."""
+    samples = sum(map(len, repeats))
+    potentials = {each.chain: slopes @ values for each, values in zip(repeats, features, strict=True)}
+    inefficiency = max(samples / max(mean(potentials).effective_samples, 1.0), 1.0)
+    return Rung(temperature, repeats[0].state.density, repeats, features, slopes, inefficiency)
+
+
+def solved(rungs: list[Rung]) -> Group:
+    """Rungs that overlap as a group, not yet seen at a density; raises NotSolved where no free energies are found."""
+    slopes = np.array([rung.slopes for rung in rungs])
     mixture = polished(
-        beta,
+        slopes,
         np.array([float(rung.samples) for rung in rungs]),
-        _thinned_solution(beta, [rung.thinned[:: -(-len(rung.thinned) // START)] for rung in rungs]),
-        [energies for rung in rungs for energies in rung.energies],
+        _thinned_solution(slopes, [rung.thinned[:, :: -(-rung.thinned.shape[1] // START)] for rung in rungs]),
+        [features for rung in rungs for features in rung.features],
     )
-    repeats = [(index, series, energies) for index, rung in enumerate(rungs) for series, energies in rung.recorded]
-    centres, pooled = _centres([series for _, series, _ in repeats]), sum(rung.samples for rung in rungs)
-    runs = [
-        Run(index, series.chain, series, energies, centres, block_starts(len(series), pooled))
-        for index, series, energies in repeats
-    ]
-    return Group(rungs, mixture, runs)
+    if mixture is None:
+        raise NotSolved(
+            f"the free energies of the {len(rungs)} rungs at temperatures "
+            f"{', '.join(f'{rung.temperature:g}' for rung in rungs)} could not be found from their samples; sample "
+            "them longer or set rungs between them"
+        )
+    return Group(rungs, mixture, [])
 
 
-def _centres(series: Sequence[Series]) -> tuple[float, float, float]:
-    """Means of U, W and W + X; zero for a column that is not recorded throughout."""
-    samples = sum(map(len, series))
-    energy = sum(float(np.sum(each.column(energy_name(each)))) for each in series) / samples
-    virial, hypervirial = (
-        sum(float(np.sum(each.column(name))) for each in series if each.has(name)) / samples
-        for name in ("virial", "hypervirial")
-    )
-    return energy, virial, virial + hypervirial
-
-
-def _thinned_solution(beta: Floats, energies: list[Floats]) -> Floats:
+def _thinned_solution(slopes: Floats, features: list[Floats]) -> Floats:
     """Free energies (K,) solved on thinned samples, from the sum of the neighbours' pairwise differences.
 
     Where that fails the start itself is returned: whether it is good enough shows when it is polished.
     """
-    pairs = zip(beta, beta[1:], energies, energies[1:], strict=False)
-    steps = [bennett((low, high), first, second)[0] for low, high, first, second in pairs]
+    changes = zip(np.diff(slopes, axis=0), features, features[1:], strict=False)
+    steps = [bennett(change @ first, change @ second)[0] for change, first, second in changes]
     start = np.concatenate([[0.0], np.cumsum(steps)])
-    if len(beta) == 1:
+    if len(slopes) == 1:
         return start
     with _quiet():
         from pymbar import MBAR
         from pymbar.utils import ParameterError
 
-        reduced = np.multiply.outer(beta, np.concatenate(energies))
+        reduced = slopes @ np.concatenate(features, axis=1)
         protocol = ({"method": "adaptive", "options": {"min_sc_iter": 0}},)
         try:
-            solution = MBAR(reduced, list(map(len, energies)), initial_f_k=start, solver_protocol=protocol).f_k
+            solution = MBAR(
+                reduced, [each.shape[1] for each in features], initial_f_k=start, solver_protocol=protocol
+            ).f_k
         except (ParameterError, ArithmeticError, ValueError):
             return start
     return np.asarray(solution, dtype=float)

@@ -171,6 +171,38 @@ class Fluid:
         weights = np.linalg.solve(np.transpose([lennard_jones.ENERGY, lennard_jones.VIRIAL]), lennard_jones.HYPERVIRIAL)
         return np.asarray(weights[0] * energy + weights[1] * virial, dtype=float)
 
+    def power_sums(self, energy: Floats, sampled_energy: Floats, virial: Floats) -> Floats | None:
+        """Sums of powers that U (first) and U_dyn (second) of samples are linear in, (2, 2, n), long-range included.
+
+        None unless `corrected`: only then do both scale with all distances, the cutoff among them, see `rescaled`.
+        """
+        if not self.has_pairs or self.truncation != "corrected":
+            return None
+        whole = np.linalg.solve([lennard_jones.ENERGY, lennard_jones.VIRIAL], [energy, virial])
+        pairs = (energy - sampled_energy) / self.energy_at_cutoff
+        edge = np.array([self.cutoff**-power for power in lennard_jones.EXPONENTS])
+        return np.stack([whole, whole - np.multiply.outer(edge, pairs)])
+
+    @staticmethod
+    def slopes(compression: float) -> Floats:
+        """Of the power sums in the energy once all densities are this many times as high, (2,)."""
+        return lennard_jones.ENERGY * _growth(compression)
+
+    @staticmethod
+    def rescaled(sums: Floats, compression: float) -> Totals:
+        """Energies and virials of samples whose density is made this many times as high by scaling all distances.
+
+        sums : (2, 2, n), as `power_sums` gives them
+        The cutoff is scaled along, so that tail and shift are those of a slightly different one.
+        """
+        whole, sampled = sums * _growth(compression)[:, None]
+        return Totals(
+            energy=lennard_jones.ENERGY @ whole,
+            sampled_energy=lennard_jones.ENERGY @ sampled,
+            virial=lennard_jones.VIRIAL @ whole,
+            hypervirial=lennard_jones.HYPERVIRIAL @ whole,
+        )
+
     def tail(self, density: float) -> tuple[float, float, float]:
         """Long-range part of U, W and X per particle, epsilon; zeros unless `corrected`."""
         self._require_pairs()
@@ -191,3 +223,8 @@ class Fluid:
             return 0.0
         edge = float(lennard_jones.w(self.cutoff))
         return -2.0 * math.pi / 9.0 * density * self.cutoff**3 * edge
+
+
+def _growth(compression: float) -> Floats:
+    """What the power sums are multiplied by when all densities are, (2,)."""
+    return np.array([compression ** (power / 3.0) for power in lennard_jones.EXPONENTS])

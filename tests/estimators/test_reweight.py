@@ -16,7 +16,7 @@ import pytest
 from scipy.signal import lfilter
 from scipy.stats import binomtest
 
-from estimators import moments
+from estimators import moments, reweight
 from estimators.errors import BadSeries, NotSolved
 from estimators.estimate import Estimate
 from estimators.gamma import scatter
@@ -220,9 +220,10 @@ def test_error_bars_of_correlated_samples_are_those_of_a_refitted_block_bootstra
         drawn = rng.integers(0, samples - block + 1, (3, samples // block))
         picked = (drawn[:, :, None] + np.arange(block)).reshape(3, samples)
         e, u = (np.take_along_axis(each, picked, axis=1) for each in (sampled, energy))
-        mixture = polished(1.0 / temperatures, np.full(3, float(samples)), start, list(e))
+        mixture = polished(1.0 / temperatures[:, None], np.full(3, float(samples)), start, [each[None] for each in e])
+        assert mixture is not None
         e, u = e.ravel(), u.ravel()
-        weights = np.exp(-np.multiply.outer(1.0 / targets, e) - mixture.claims(e)[1])
+        weights = np.exp(-np.multiply.outer(1.0 / targets, e) - mixture.claims(e[None])[1])
         mean_u, mean_e, mean_ue = (weights @ each / np.sum(weights, axis=1) for each in (u, e, u * e))
         replicas.append([mean_u, (mean_ue - mean_u * mean_e) / targets**2])
     expected = np.std(replicas, axis=0, ddof=1) / PARTICLES
@@ -406,10 +407,13 @@ def test_what_cannot_be_pooled_is_refused() -> None:
         pool([series, replace(other, virial=np.full(100, np.nan))])
 
 
-def test_equations_without_a_solution_are_reported_in_our_words() -> None:
-    energies = [np.linspace(0.0, 1.0, 50), np.linspace(1e6, 1e6 + 1.0, 50)]
-    with pytest.raises(NotSolved, match="2 rungs at temperatures 1, 2 could not be found"):
-        polished(np.array([1.0, 0.5]), np.array([50.0, 50.0]), np.zeros(2), energies)
+def test_equations_without_a_solution_are_reported_in_our_words(monkeypatch: pytest.MonkeyPatch) -> None:
+    energies = [np.linspace(0.0, 1.0, 50)[None], np.linspace(1e6, 1e6 + 1.0, 50)[None]]
+    assert polished(np.array([[1.0], [0.5]]), np.array([50.0, 50.0]), np.zeros(2), energies) is None
+    rungs = [harmonic(np.random.default_rng(36), temperature, 500) for temperature in (1.0, 1.2)]
+    monkeypatch.setattr(reweight, "polished", lambda *_: None)
+    with pytest.raises(NotSolved, match=r"2 rungs at temperatures 1, 1\.2 could not be found"):
+        pool(rungs)
 
 
 def test_no_notice_of_a_library_reaches_the_user() -> None:
