@@ -22,12 +22,29 @@ _GIVEN_BY = {
     "sampled_energy": "potential, or dynamical",
     "virial": "pressure or virial",
     "hypervirial": "hypervirial",
+    "kinetic": "kinetic",
+    "frames": "frames",
+    "rungs": "rungs of another temperature",
 }
-"""Column of a series -> columns of a description that it is made of."""
+"""Column of a series, or what else a check needs -> columns or keys of a description that give it."""
+_RECORDED = ("energy", "sampled_energy", "virial", "hypervirial", "kinetic")
+_CHECKS = {
+    "kinetic-law": ("kinetic",),
+    "pair-slope": ("sampled_energy", "rungs"),
+    "heat-routes": ("energy", "sampled_energy", "rungs"),
+    "force-temperature": ("frames",),
+    "enough": ("energy",),
+    "one-phase": ("frames",),
+    "box": ("frames",),
+    "virial-routes": ("virial", "sampled_energy", "frames"),
+    "quantum": ("frames",),
+}
+"""What a health check needs in full; one that is not here takes what there is, or what cannot be adopted."""
+_OF_PAIRS = ("force-temperature", "virial-routes", "quantum")  # these need pair functions, which no column gives
 
 
 def missing(study: Study, series: Sequence[Series], border: Border) -> pd.DataFrame:
-    """One row for each property that cannot be said at a state; in the units of the border."""
+    """One row for each property not said and each health check not made at a state; in the units of the border."""
     import pandas as pd
 
     rows = [
@@ -44,18 +61,28 @@ def missing(study: Study, series: Sequence[Series], border: Border) -> pd.DataFr
 
 
 def _lacking(study: Study, state: State, series: Sequence[Series]) -> Iterator[tuple[str, str]]:
-    fluid = study.fluid
-    framed = any(len(each.frames) for each in series)
+    fluid, given = study.fluid, _given(study, state, series)
     needs: dict[str, Any] = dict(NEEDS)
-    flexible = all(not each.has("energy") and each.freedom is not None for each in series)
+    flexible = "energy" not in given and all(each.freedom is not None for each in series)
     needs["heat_capacity"] = NEEDS["heat_capacity" if flexible else "residual_heat_capacity"]
     for name, columns in needs.items():
-        lacking = [_GIVEN_BY[column] for column in columns if not all(each.has(column) for each in series)]
+        lacking = [_GIVEN_BY[column] for column in columns if column not in given]
         if name == "heat_capacity" and study.ideal_heat_capacity is None and not flexible:
             lacking.append("fluid.ideal_heat_capacity")
-        if name == "bulk_modulus" and fluid.has_pairs and fluid.surface_hypervirial(state.density) and not framed:
-            lacking.append("frames")
+        if name == "bulk_modulus" and fluid.has_pairs and fluid.surface_hypervirial(state.density):
+            lacking += [] if "frames" in given else ["frames"]
         if lacking:
             yield name, "; ".join(lacking)
-    if not framed:
+    if "frames" not in given:
         yield "g(r)", "frames"
+    for check, columns in _CHECKS.items():
+        possible = check not in _OF_PAIRS or (fluid.has_pairs and (check != "quantum" or study.scale is not None))
+        if possible and not given.issuperset(columns):
+            yield f"check {check}", "; ".join(_GIVEN_BY[column] for column in columns if column not in given)
+
+
+def _given(study: Study, state: State, series: Sequence[Series]) -> set[str]:
+    """Of what stands in `_GIVEN_BY`, all that there is."""
+    given = {name for name in _RECORDED if all(each.has(name) for each in series)}
+    given |= {"frames"} if any(len(each.frames) for each in series) else set()
+    return given | ({"rungs"} if len(study.isochores[state.density]) > 1 else set())

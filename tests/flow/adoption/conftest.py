@@ -39,6 +39,7 @@ equilibration = 2000
 steps = 30000
 frame_every = 500
 """
+SIZES = {"epsilon": "119.8 K", "sigma": "3.405 angstrom", "mass": "39.948 u"}
 NAMES = {"time": "t", "potential": "U", "dynamical": "U_dyn", "kinetic": "K", "pressure": "P", "virial": "W"}
 
 

@@ -11,7 +11,7 @@ import canonry.notes
 from canonry.errors import UserError
 from canonry.suspicion import times
 from sampler.series import Series
-from tests.flow.adoption.conftest import NAMES, Home, description, table, taken_in
+from tests.flow.adoption.conftest import NAMES, SIZES, Home, description, table, taken_in
 
 
 def test_times_that_stand_twice_go_back_or_are_uneven_are_said(home: Home) -> None:
@@ -99,9 +99,6 @@ def test_energies_of_another_kind_are_seen_through(home: Home, mistake: str) -> 
     make, message = MISTAKEN[mistake]
     with pytest.raises(UserError, match=message):
         taken_in(home, make)
-
-
-SIZES = {"epsilon": "119.8 K", "sigma": "3.405 angstrom", "mass": "39.948 u"}
 
 
 @pytest.mark.parametrize(("stated", "true"), [("bar", "MPa"), ("MPa", "bar"), ("kPa", "bar"), ("MPa", "atm")])

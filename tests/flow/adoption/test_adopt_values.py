@@ -9,12 +9,13 @@ import pandas as pd
 import pytest
 
 import canonry
+from canonry.health import CHECKS
 from canonry.job import report
 from estimators.canonical import rung_properties
 from estimators.reweight import pool
 from sampler.fluid import Fluid
 from sampler.series import Series
-from tests.flow.adoption.conftest import ARGON, NAMES, Home, assert_same, command, description, table, taken_in
+from tests.flow.adoption.conftest import ARGON, NAMES, SIZES, Home, assert_same, command, description, table, taken_in
 
 
 @pytest.mark.parametrize("kinetic_part", ["set", "instantaneous"])
@@ -109,12 +110,68 @@ def test_what_a_lacking_column_would_say_is_absent_and_named(home: Home, column:
         assert results.curve.empty
     assert_same(results.properties, wanted, but=LACKING[column])
     told = adoption.missing.groupby("property")["column"].agg(lambda rows: " and ".join(sorted(set(rows)))).to_dict()
-    assert set(told) == LACKING[column] | {"g(r)"}
+    assert {name for name in told if not name.startswith("check ")} == LACKING[column] | {"g(r)"}
     assert told["g(r)"] == "frames"
     assert all(column in told[name] for name in LACKING[column] - {"bulk_modulus"})
     pd.testing.assert_frame_equal(pd.read_csv("got/missing.csv"), adoption.missing)
     closing = command("estimate", "got").output
     assert ("P" if column == "potential" else "c_v") in closing
+
+
+FRAMED = ("force-temperature", "one-phase", "box", "virial-routes", "quantum")
+NEVER = {"ledger", "equal-shares", "step-bias"}  # no column brings the bath's heat, single directions, other sampling
+
+
+@pytest.mark.parametrize(
+    ("lacking", "rungs", "checks"),
+    [
+        ((), 3, {}),
+        (
+            ("frames",),
+            3,
+            dict.fromkeys(FRAMED, "frames"),
+        ),
+        (("kinetic",), 3, {"kinetic-law": "kinetic"}),
+        (("pressure", "kinetic"), 3, {"kinetic-law": "kinetic", "virial-routes": "pressure or virial"}),
+        ((), 1, dict.fromkeys(("pair-slope", "heat-routes"), "rungs of another temperature")),
+        (
+            ("potential", "dynamical"),
+            1,
+            {
+                "pair-slope": "potential, or dynamical; rungs of another temperature",
+                "heat-routes": "potential, without a part from within molecules; potential, or dynamical; rungs of "
+                "another temperature",
+                "enough": "potential, without a part from within molecules",
+                "virial-routes": "potential, or dynamical",
+            },
+        ),
+    ],
+)
+@pytest.mark.parametrize("potential", ["lennard-jones", "elsewhere"])
+def test_health_checks_are_made_or_named_with_the_column_they_lack(
+    home: Home, lacking: tuple[str, ...], rungs: int, checks: dict[str, str], potential: str
+) -> None:
+    """Every check of samples from elsewhere is in one of both tables, but those that no column lets be made."""
+    named = {holds: NAMES[holds] for holds in ("time", "potential", "dynamical", "kinetic", "pressure")}
+    spec = description(
+        home, columns={holds: name for holds, name in named.items() if holds not in lacking}, intramolecular=False
+    )
+    spec["fluid"] = (spec["fluid"] if potential == "lennard-jones" else {"potential": potential}) | SIZES
+    spec["rungs"] = spec["rungs"][:rungs]
+    for rung, series in zip(spec["rungs"], home.series.values(), strict=False):
+        rung["samples"] = list(map(table, series))
+        if "frames" not in lacking:
+            rung["frames"] = {"samples": [each.frames for each in series], "first": 50, "every": 50}
+    adoption = canonry.adopt(spec, into="got")
+    told = adoption.missing[adoption.missing["property"].str.startswith("check ")]
+    named = {(row["property"].removeprefix("check "), row["column"]) for _, row in told.iterrows()}
+    never = NEVER
+    if potential == "elsewhere":
+        never = NEVER | {"force-temperature", "virial-routes", "quantum"}
+    assert named == {(check, column) for check, column in checks.items() if check not in never}
+    made = set(canonry.estimate("got").health["check"])
+    assert made | {check for check, _ in named} == set(CHECKS) - never
+    assert made & {check for check, _ in named} <= {"one-phase"}, "without frames the bulk modulus alone is looked at"
 
 
 def test_the_kinetic_energy_of_the_moment_that_stays_in_a_pressure_is_said(home: Home) -> None:
