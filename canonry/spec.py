@@ -77,6 +77,7 @@ def understood(top: Table, *, home: Path) -> Spec:
     scale = _study(top, fluid, [State(1.0, 1e-5, 1000)], "reduced").scale
     keys = [Layers(table, top) for table in tables]
     states = [_state(each, scale) for each in keys]
+    _check_molecules(keys, states)
     study = _study(top, fluid, states, "SI" if any(map(_is_in_si, tables)) else "reduced")
     rungs = [_rung(each, state, study, home) for each, state in zip(keys, states, strict=True)]
     return Spec(study, tuple(sorted(rungs, key=lambda rung: (rung.state.density, rung.state.temperature))))
@@ -146,6 +147,16 @@ def _state(keys: Layers, scale: Scale | None) -> State:
         raise rung.refusal("volume", "density is given too; what is needed is either, not both")
     volume = rung.read("volume", quantity("volume", 0.5 * molecules, 1e6 * molecules, scale))
     return State(temperature, rounded(molecules / volume), molecules)
+
+
+def _check_molecules(keys: Sequence[Layers], states: Sequence[State]) -> None:
+    """Raises UserError if rungs of one density, whose samples are weighed together, differ in molecules."""
+    first: dict[float, tuple[str, int]] = {}
+    for each, state in zip(keys, states, strict=True):
+        rung, molecules = first.setdefault(state.density, (each.rung.name, state.particles))
+        if state.particles != molecules:
+            reason = f"{rung}, of the same density, has {molecules}; what is accepted is one number for each density"
+            raise each.refusal("molecules", reason)
 
 
 def _rung(keys: Layers, state: State, study: Study, home: Path) -> Rung:

@@ -51,6 +51,17 @@ WRONG: dict[str, tuple[dict[str, Any], str]] = {
         {"rungs": [{"temperature": 1.2, "density": 0.7, "volume": 91.4}]},
         r"rungs\[1\]\.volume = 91\.4: density is given too",
     ),
+    "molecules that differ": (
+        {
+            "rungs": [
+                {"temperature": 1.2, "density": 0.7},
+                {"temperature": 1.2, "density": 0.6, "molecules": 32},
+                {"temperature": 1.4, "density": 0.7, "molecules": 63},
+            ]
+        },
+        r"^samples: rungs\[3\]\.molecules = 63: rungs\[1\], of the same density, has 64; what is accepted is one "
+        r"number for each density$",
+    ),
     "twice": (
         {"rungs": [{"temperature": 1.2, "density": 0.7}, {"temperature": 1.2, "density": 0.7}]},
         "stands there twice",
