@@ -60,7 +60,7 @@ def pilot(
     ]
     if not runs:
         return {}
-    load = [replace(runs[k % len(runs)], repeat=k // len(runs)) for k in range(len(runs), workers)]
+    load = [runs[k % len(runs)] for k in range(len(runs), workers)]
     with ThreadPoolExecutor(workers) as threads:
         segments = list(threads.map(_timed, [*runs, *load]))
     return {

@@ -6,6 +6,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 
+import canonry.pilot
 from canonry.pilot import Pilot, pilot
 from canonry.study import Study, load
 from sampler.errors import BadRequest, DivergedRun
@@ -74,6 +75,16 @@ def test_a_pilot_writes_nothing_and_knows_its_cost(study: Study) -> None:
     assert [path.name for path in Path().iterdir()] == ["study.toml"]
     assert len(found.series) == 1  # a whole record interval, however little is asked for
     assert 0.0 < found.seconds_per_step < 1.0
+
+
+@pytest.mark.parametrize(("workers", "runs"), [(1, 2), (2, 2), (5, 5)])
+def test_a_step_is_timed_with_all_workers_busy(
+    study: Study, monkeypatch: pytest.MonkeyPatch, workers: int, runs: int
+) -> None:
+    timed, made = canonry.pilot._timed, []
+    monkeypatch.setattr(canonry.pilot, "_timed", lambda chain: made.append(chain) or timed(chain))
+    assert len(pilot(study, STATES, particle_steps=6400, workers=workers)) == 2
+    assert len(made) == runs
 
 
 def test_what_is_not_settled_is_left_out(study: Study, monkeypatch: pytest.MonkeyPatch) -> None:

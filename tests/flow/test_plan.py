@@ -263,6 +263,16 @@ def test_a_shift_seen_against_exact_sampling_is_used() -> None:
     assert "predicted at" not in words
 
 
+def test_a_shift_lost_in_noise_is_not_used() -> None:
+    liquid = {"states": "points = [[1.5, 0.85]]", "particles": 64, "cutoff": 2.0}
+    # 0.003, the standard error of the difference about 0.05
+    asked = with_sampling('scheme = "obabo"\ntime_step = 0.005', steps=2000, **liquid)
+    run("study.toml", into="study", step_bias=True)
+    (proposed,) = plan(asked, bias=0.002, directory=Path("study")).proposals
+    assert not proposed.measured
+    assert proposed.shifts["residual_energy"].standard_error < 0.001
+
+
 def test_a_bias_that_is_none_is_refused() -> None:
     reduced = study()
     assert bias_of("0.002", reduced) == 0.002
