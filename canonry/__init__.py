@@ -11,14 +11,16 @@ if TYPE_CHECKING:
     from canonry.adoption import adopt
     from canonry.directory import load
     from canonry.job import compare, estimate, run
+    from canonry.reweighting import reweight
 
-__all__ = ["adopt", "compare", "estimate", "load", "run"]
+__all__ = ["adopt", "compare", "estimate", "load", "reweight", "run"]
 
 _HOMES = {
     "adopt": "canonry.adoption",
     "compare": "canonry.job",
     "estimate": "canonry.job",
     "load": "canonry.directory",
+    "reweight": "canonry.reweighting",
     "run": "canonry.job",
 }
 

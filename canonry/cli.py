@@ -130,24 +130,25 @@ def _check(study: Path, bias: str | None, workers: int | None, as_json: bool) ->
 @_workers
 @_units
 @click.option("--step-bias", is_flag=True, help="Sample the ends exactly too, to see what the time step shifts.")
-def _run(study: Path, into: Path | None, workers: int | None, units: Any, step_bias: bool) -> None:
+@click.option("--second-size", type=int, metavar="N", help="Sample the ends with N particles too.")
+@click.option("--constant-energy", is_flag=True, help="Sample the ends without a bath too: c_v by another route.")
+def _run(study: Path, into: Path | None, workers: int | None, units: Any, **wanted: Any) -> None:
     """Sample, estimate, compare and report in one go; again: resume, extend, or say that all is there."""
+    from canonry.beside import asked
     from canonry.border import Border
     from canonry.directory import locate, must_sample
     from canonry.job import is_finished, report
-    from canonry.sampling import left
-    from canonry.step_bias import exact, folder
 
     found, directory = locate(study, into)
     must_sample(found, directory)
     border = Border.of(found, units)
-    more = step_bias and left(exact(found), folder(directory)) > 0
-    if is_finished(found, directory, units) and not more:
+    beside = asked(found, directory, **wanted)
+    if is_finished(found, directory, units, beside=beside):
         click.echo(f"{directory} is finished: nothing is missing.\n")
     else:
         _fill(found, directory, workers, border)
-        if more:
-            _fill(exact(found), folder(directory), workers, border)
+        for each in beside:
+            _fill(each.study, each.place, workers, border)
         with _working() as watch:
             results = report(directory, units=units, watch=watch)
         _tell_caveats(results)
@@ -184,6 +185,32 @@ def _estimate(study: Path, into: Path | None, units: Any) -> None:
     _close(directory, "Tables")
     if (directory / "report.html").exists():
         click.echo(f"The report.html there is older; `canonry report {directory}` writes it anew.")
+
+
+@main.command("reweight")
+@_path("study")
+@_into
+@click.option("-T", "--temperature", "temperatures", multiple=True, help='Such as 1.05 or "120 K"; may be repeated.')
+@click.option("--density", "densities", multiple=True, help='Such as 0.803 or "1.36 g/cm3"; may be repeated.')
+@click.option("--epsilon", help="Of another fluid: times that of the study, or with a unit.")
+@click.option("--sigma", help="Of another fluid: times that of the study, or with a unit.")
+@_units
+@_json
+def _reweight(study: Path, into: Path | None, units: Any, as_json: bool, **asked: Any) -> None:
+    """Properties at states never sampled, from all rungs together; refused where they have no support."""
+    from canonry.border import Border
+    from canonry.directory import locate, stored
+    from canonry.reweighting import reweight
+    from canonry.terminal import reweighted_text
+
+    _, directory = locate(study, into)
+    with _working() as watch:
+        table = reweight(directory, units=units, watch=watch, **asked)
+    if as_json:
+        click.echo(table.to_json(orient="records", indent=1))
+    else:
+        records = [dict(zip(table.columns, row, strict=True)) for row in table.itertuples(index=False)]
+        click.echo(reweighted_text(records, Border.of(stored(directory), units)))
 
 
 @main.command("compare")

@@ -14,7 +14,7 @@ from pathlib import Path
 from canonry.directory import write
 from canonry.study import Study
 
-__all__ = ["SESSIONS", "book", "duration", "provenance"]
+__all__ = ["SESSIONS", "book", "duration", "provenance", "rate"]
 
 SESSIONS = "sessions.csv"
 _COLUMNS = ("started", "seconds", "particle_steps", "canonry", "machine")
@@ -57,6 +57,13 @@ def _sampled(study: Study, directory: Path) -> dict[str, str]:
         "sampled": _dates(sessions),
         "wall time of sampling": f"{duration(seconds)} in {len(sessions)} session{'s' if len(sessions) != 1 else ''}",
     }
+
+
+def rate(directory: Path) -> float:
+    """Particle-steps a second of all sampling so far; 0 where none is on record."""
+    sessions = _sessions(directory)
+    seconds = sum(float(session["seconds"]) for session in sessions)
+    return sum(float(session["particle_steps"]) for session in sessions) / seconds if seconds else 0.0
 
 
 def duration(seconds: float) -> str:

@@ -16,7 +16,7 @@ from canonry.directory import write
 from canonry.findings import TRUST, Check, Curve, Finding, Findings
 from canonry.health import CHECKS
 from canonry.results import COLUMNS, Results
-from canonry.study import Study
+from canonry.study import COMPARED, Study
 from canonry.units import PROPERTIES
 from canonry.verdict import Comparison, Verdict
 from sampler.fluid import State
@@ -26,7 +26,7 @@ if TYPE_CHECKING:
 
     from reference import Reference
 
-__all__ = ["TABLES", "assemble", "save", "verdict_table"]
+__all__ = ["TABLES", "assemble", "estimates_table", "save", "verdict_table"]
 
 TABLES = ("properties", "curve", "structure", "health", "budget", "verdict", "summary")
 _DIGITS = "%.10g"
@@ -47,8 +47,8 @@ def assemble(
         title=study.title,
         study_toml=study.to_toml(),
         units=border.kind,
-        properties=_estimates("properties", findings.properties, border),
-        curve=_estimates("curve", findings.curve, border),
+        properties=estimates_table(findings.properties, border),
+        curve=estimates_table(findings.curve, border),
         structure=_structure(findings, border),
         verdict=verdict_table(comparisons, border),
         summary=_summary(findings, border),
@@ -102,8 +102,9 @@ def _finite(value: float) -> float:
     return value if math.isfinite(value) else math.nan
 
 
-def _estimates(name: str, findings: Iterable[Finding], border: Border) -> pd.DataFrame:
-    return _table(name, (_estimate(finding, border) for finding in findings))
+def estimates_table(findings: Iterable[Finding], border: Border) -> pd.DataFrame:
+    """One row a finding, with the columns of properties.csv."""
+    return _table("properties", (_estimate(finding, border) for finding in findings))
 
 
 def _estimate(finding: Finding, border: Border) -> dict[str, Any]:
@@ -283,7 +284,8 @@ def _overlaps(findings: Findings, border: Border) -> pd.DataFrame:
 def _reference_curve(study: Study, findings: Findings, references: Sequence[Reference], border: Border) -> pd.DataFrame:
     """The references wherever they hold, at the rungs and on the grid of the curve."""
     ideal = {} if study.ideal_heat_capacity is None else {"ideal_heat_capacity": study.ideal_heat_capacity}
-    points = dict.fromkeys((f.state, f.property) for f in (*findings.curve, *findings.headlines))
+    told = (*findings.curve, *findings.headlines)
+    points = dict.fromkeys((f.state, f.property) for f in told if f.property in COMPARED)
     rows = []
     for reference in references:
         for state, name in sorted(points):

@@ -20,7 +20,7 @@ from canonry.provenance import duration
 from canonry.study import Study
 from canonry.units import UNITS, Kind
 
-__all__ = ["aligned", "closing_text", "left_text", "plan_text", "verdict_text", "wrapped"]
+__all__ = ["aligned", "closing_text", "left_text", "plan_text", "reweighted_text", "verdict_text", "wrapped"]
 
 _MARKS = {"ok": "", "caution": "*", "no": "!", "": ""}
 _LEGENDS = {"caution": "* with caution", "no": "! not to be trusted"}
@@ -161,6 +161,23 @@ def verdict_text(verdicts: Sequence[Row], border: Border) -> str:
         ]
         blocks.append(f"Against {reference}: {_overall(own)}\n{aligned([heads, units + [''] * 5, *body])}")
     return "\n\n".join(blocks)
+
+
+def reweighted_text(rows: Sequence[Row], border: Border) -> str:
+    """One row a state: heat capacity, pressure and energy; then why there is none at the others."""
+    answered = [row for row in rows if math.isfinite(_number(row["value"]))]
+    refused = {(row["temperature"], row["density"]): row["reason"] for row in rows if row not in answered}
+    known = list(dict.fromkeys(row["property"] for row in answered))
+    heat = "heat_capacity" if "heat_capacity" in known else "residual_heat_capacity"
+    names = [name for name in (heat, "pressure", "residual_energy") if name in known]
+    shown = [_block([row for row in answered if row["property"] in names], names, [])] if answered else []
+    legend = [text for trust, text in _LEGENDS.items() if any(row["trust"] == trust for row in answered)]
+    shown += [", ".join(legend)] if legend else []
+    labels = [unit_text(border.label(name)) for name in ("temperature", "density")]
+    for (temperature, density), reason in refused.items():
+        at = f"T = {plain(temperature)} {labels[0]}, density {plain(density)} {labels[1]}"
+        shown.append(wrapped(f"Refused at {at}: {reason}."))
+    return "\n\n".join(shown)
 
 
 def _block(values: Sequence[Row], names: Sequence[str], verdicts: Sequence[Row]) -> str:

@@ -14,8 +14,7 @@ from __future__ import annotations
 import math
 from collections import defaultdict
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, replace
-from typing import Any
+from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
@@ -33,7 +32,6 @@ __all__ = ["Field", "field", "rescaled"]
 Floats = npt.NDArray[np.float64]
 Look = Callable[[Series, float], Series]
 
-_LOST = ("kinetic", "ledger", "kinetic_parts", "momentum", "force_square", "laplacian", "rejected", "bath_temperature")
 NEAR = 0.05  # relative difference of densities beyond which rungs are not looked at as neighbours
 
 
@@ -100,21 +98,9 @@ def field(series: Sequence[Series], *, look: Look | None = None) -> Field:
 def rescaled(series: Series, density: float) -> Series:
     """Energies and virials of samples whose distances are all scaled to another density, and the cutoff with them.
 
-    Nothing else is kept of them. Raises BadSeries where the fluid's energy is no sum of powers.
+    Raises BadSeries where the fluid's energy is no sum of powers.
     """
-    compression = density / series.state.density
-    totals = series.fluid.rescaled(_power_sums(series), compression)
-    lost: dict[str, Any] = dict.fromkeys(_LOST)
-    return replace(
-        series,
-        state=replace(series.state, density=density),
-        energy=totals.energy,
-        sampled_energy=totals.sampled_energy,
-        virial=totals.virial,
-        hypervirial=totals.hypervirial,
-        frames=series.frames[:0],
-        **lost,
-    )
+    return series.moved(density, series.fluid.rescaled(_power_sums(series), density / series.state.density))
 
 
 def _power_sums(series: Series) -> Floats:

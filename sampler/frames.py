@@ -5,11 +5,11 @@ from __future__ import annotations
 import numpy as np
 import numpy.typing as npt
 
-from sampler.fluid import Fluid, State
+from sampler.fluid import Fluid, State, Totals
 from sampler.forces import evaluate, evaluate_with_laplacian
 from sampler.series import FrameSums
 
-__all__ = ["reevaluate"]
+__all__ = ["reevaluate", "totals_at"]
 
 Floats = npt.NDArray[np.float64]
 
@@ -19,13 +19,19 @@ def reevaluate(fluid: Fluid, frames: Floats, *, state: State, change: float = 1e
     found = [evaluate_with_laplacian(fluid, frame, box=state.box) for frame in frames]
     forces = np.array([(force**2).sum() for force, _ in found])
     curvatures = np.array([sums[4] for _, sums in found])
-    energy, stretched, squeezed = (_energies(fluid, frames, state, 1.0 + part * change) for part in (0.0, 1.0, -1.0))
+    energy, stretched, squeezed = (
+        totals_at(fluid, frames, state=state, density=state.density / (1.0 + part * change)).sampled_energy
+        for part in (0.0, 1.0, -1.0)
+    )
     return FrameSums(forces, curvatures, energy, stretched, squeezed, change)
 
 
-def _energies(fluid: Fluid, frames: Floats, state: State, volume: float) -> Floats:
-    """U_dyn of frames, (m,), whose volume is changed by a factor."""
-    edge = volume ** (1.0 / 3.0)
-    there = State(state.temperature, state.density / volume, state.particles)
-    sums = np.array([evaluate(fluid, edge * frame, box=edge * state.box)[1] for frame in frames]).reshape(-1, 4)
-    return fluid.totals(sums, there).sampled_energy
+def totals_at(fluid: Fluid, frames: Floats, *, state: State, density: float) -> Totals:
+    """Energies and virials of frames of a state, scaled to the box of another density.
+
+    Raises BadRequest if the cutoff is beyond half that box.
+    """
+    there = State(state.temperature, density, state.particles)
+    edge = there.box / state.box
+    sums = np.array([evaluate(fluid, edge * frame, box=there.box)[1] for frame in frames]).reshape(-1, 4)
+    return fluid.totals(sums, there)

@@ -9,7 +9,7 @@ import numpy as np
 import numpy.typing as npt
 
 from sampler.errors import BadRequest
-from sampler.fluid import Fluid, State
+from sampler.fluid import Fluid, State, Totals
 
 __all__ = ["FrameSums", "Series"]
 
@@ -111,6 +111,20 @@ class Series:
             name: None if values is None else values[stride - 1 :: stride] for name, values in columns.items()
         }
         return replace(self, interval=stride * self.interval, frames=self.frames[:0], frame_offset=0, **kept)
+
+    def at_frames(self) -> Series:
+        """The samples that a frame belongs to, with the frames."""
+        kept: dict[str, Any] = {
+            name: self.column(name)[self.frame_samples] if self.has(name) else None for name in _COLUMNS
+        }
+        interval = self.frame_stride * self.interval
+        return replace(self, interval=interval, frame_stride=1, frame_offset=0, **kept)
+
+    def moved(self, density: float, totals: Totals) -> Series:
+        """The same samples at another density, with the energies and virials that they have there and nothing else."""
+        kept: dict[str, Any] = dict.fromkeys(_COLUMNS)
+        kept |= {name: getattr(totals, name) for name in ("energy", "sampled_energy", "virial", "hypervirial")}
+        return replace(self, state=replace(self.state, density=density), frames=self.frames[:0], **kept)
 
     def after(self, n_samples: int) -> Series:
         """The series without its first n_samples and their frames."""
