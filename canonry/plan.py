@@ -26,7 +26,7 @@ __all__ = ["Plan", "Rung", "plan", "predicted_overlap"]
 
 Floats = npt.NDArray[np.float64]
 
-_PILOT = 2_000_000  # particle-steps: a fifth of a second, and as much to settle
+_TRIAL = 2_000_000  # particle-steps: a fifth of a second, and as much to settle
 _MOST_DENSITIES = 3  # tried
 _SPREAD = 8.0  # standard deviations
 _FINE = 24  # points a standard deviation
@@ -160,7 +160,7 @@ def _pilots(study: Study, workers: int) -> Mapping[State, Pilot]:
     chosen = np.linspace(0, len(densities) - 1, min(len(densities), _MOST_DENSITIES))
     isochores = [study.isochores[densities[round(k)]] for k in chosen]
     ends = [state for states in isochores for state in (states[0], states[-1])]
-    return pilot(study, ends, particle_steps=_PILOT, workers=workers)
+    return pilot(study, ends, particle_steps=_TRIAL, workers=workers)
 
 
 def _seconds(study: Study, taken: Mapping[State, float], workers: int) -> float:

@@ -49,7 +49,7 @@ DEFAULTS = {
 
 @pytest.fixture(autouse=True)
 def quick(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
-    monkeypatch.setattr(canonry.plan, "_PILOT", 10_000)
+    monkeypatch.setattr(canonry.plan, "_TRIAL", 10_000)
     monkeypatch.setattr(canonry.proposal, "_PARTICLE_STEPS", 1_500_000)
     monkeypatch.chdir(tmp_path)
 
