@@ -289,14 +289,9 @@ def study(number: int, effort: float) -> list[Check]:
 
 def caught(name: str, seed: int, effort: float) -> set[str]:
     """Checks that fail on a planted fault, at the level of a study."""
-    strict = health.threshold(0.05 / READINGS_OF_A_STUDY)
-    alone = health.threshold(LEVEL)
     found, _ = checks(FAULTS[name][1](seed, effort))
-    return {
-        each.reading.check
-        for each in found
-        if not each.reading.statistic <= (strict if each.reading.threshold == alone else each.reading.threshold)
-    }
+    readings = [each.reading.at(0.05 / READINGS_OF_A_STUDY) for each in found]
+    return {each.check for each in readings if not each.passed}
 
 
 def _healthy(argument: tuple[int, float]) -> list[Check]:

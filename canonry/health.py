@@ -28,7 +28,7 @@ from estimators.health.ledger import ledger
 from estimators.health.one_phase import one_phase
 from estimators.health.pair_slope import pair_slope
 from estimators.health.quantum import quantum
-from estimators.health.reading import Reading, threshold
+from estimators.health.reading import Reading
 from estimators.health.settled import settled
 from estimators.health.virial_routes import virial_routes
 from estimators.structure import Structure
@@ -230,15 +230,9 @@ def known(states: Iterable[State], reference: Reference) -> Iterator[Check]:
 
 def judged(checks: Sequence[Check]) -> list[Check]:
     """The same, where all that rest on a distribution share the false alarms of the study."""
-    alone = threshold(LEVEL)
-    number = sum(check.reading.threshold == alone for check in checks)
-    together = threshold(min(LEVEL, _STUDY_LEVEL / max(number, 1)))
-    return [
-        replace(check, reading=replace(check.reading, threshold=together))
-        if check.reading.threshold == alone
-        else check
-        for check in checks
-    ]
+    number = sum(check.reading.level is not None for check in checks)
+    level = min(LEVEL, _STUDY_LEVEL / max(number, 1))
+    return [replace(check, reading=check.reading.at(level)) for check in checks]
 
 
 def wavelength(state: State, scale: Scale | None) -> float | None:

@@ -9,7 +9,7 @@ import numpy as np
 
 from estimators.estimate import combine, mean
 from estimators.health.excess import CERTAIN, excess, jointly, too_short
-from estimators.health.reading import Reading, threshold
+from estimators.health.reading import Reading
 from sampler.series import Series
 
 __all__ = ["equal_shares"]
@@ -45,7 +45,7 @@ def _shares(series: Sequence[Series], level: float) -> Reading | None:
         f"{100.0 * off[worst].value:+.2g} %, +- {100.0 * math.sqrt(off[worst].variance):.1g}; a difference means that "
         "the thermostat or the forces favour a direction, or that the samples are not in equilibrium"
     )
-    return Reading(CHECK, jointly(*(excess(each, 0.0, 0.0) for each in off)), threshold(level), meaning)
+    return Reading.deviation(CHECK, jointly(*(excess(each, 0.0, 0.0) for each in off)), level, meaning)
 
 
 def _flow(series: Sequence[Series], level: float) -> Reading | None:
@@ -68,7 +68,7 @@ def _flow(series: Sequence[Series], level: float) -> Reading | None:
         "bath that does not act on the fluid as a whole"
     )
     width = excess(combine(np.log, square), 0.0, 0.0) if square.value > 0.0 else CERTAIN
-    return Reading(CHECK, jointly(width, *(excess(each, 0.0, 0.0) for each in means)), threshold(level), meaning)
+    return Reading.deviation(CHECK, jointly(width, *(excess(each, 0.0, 0.0) for each in means)), level, meaning)
 
 
 def _still(largest: float) -> Reading:

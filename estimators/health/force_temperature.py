@@ -10,7 +10,7 @@ import numpy.typing as npt
 
 from estimators.estimate import Chain, Estimate, combine, mean
 from estimators.health.excess import excess, too_short
-from estimators.health.reading import Reading, threshold
+from estimators.health.reading import Reading
 from sampler.fluid import Fluid, State
 from sampler.series import FrameSums, Series
 
@@ -51,10 +51,10 @@ def force_temperature(
     off = combine(lambda force, slope: force / slope - 1.0, forces, curvature)
     if too_short(off):
         return None
-    return Reading(
+    return Reading.deviation(
         "force-temperature",
         excess(_unskewed(off), -ALLOWED, ALLOWED),
-        threshold(level),
+        level,
         f"forces and their slopes say a temperature {100.0 * off.value:+.2f} % (standard error "
         f"{100.0 * off.standard_error:.2f} %) beside the one stated, of which {100.0 * ALLOWED:g} % are allowed to the "
         "time step; if it fails, take a smaller time step, and see that temperature and fluid are those of the samples",

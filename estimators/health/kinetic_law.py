@@ -13,7 +13,7 @@ import numpy as np
 from estimators.covariance import covariance
 from estimators.estimate import combine, mean
 from estimators.health.excess import CERTAIN, excess, jointly, too_short
-from estimators.health.reading import Reading, threshold
+from estimators.health.reading import Reading
 from sampler.series import Series
 
 __all__ = ["kinetic_law"]
@@ -51,7 +51,7 @@ def kinetic_law(series: Sequence[Series], *, level: float) -> Reading | None:
         "variance a thermostat that does not draw the canonical ensemble"
     )
     statistic = jointly(excess(average, 1.0 - LOW_MEAN, 1.0 - _lag(series)), off)
-    return Reading(CHECK, statistic, threshold(level), meaning)
+    return Reading.deviation(CHECK, statistic, level, meaning)
 
 
 def _lag(series: Sequence[Series]) -> float:

@@ -24,7 +24,7 @@ import numpy.typing as npt
 
 from estimators.estimate import Estimate, mean
 from estimators.health.excess import excess
-from estimators.health.reading import Reading, threshold
+from estimators.health.reading import Reading
 from sampler.series import Series
 
 __all__ = ["ledger"]
@@ -77,7 +77,7 @@ def _drift(series: Sequence[Series], level: float) -> Reading:
         f"+- {math.sqrt(rate.variance) / state.particles:.1g}; a drift means that forces, energies and booked heat do "
         "not belong together or that the time step is too large"
     )
-    return Reading(CHECK, statistic, threshold(level), meaning)
+    return Reading.deviation(CHECK, statistic, level, meaning)
 
 
 def _squared_changes(
@@ -102,7 +102,7 @@ def _fast(series: Sequence[Series], level: float) -> Reading:
         f"{math.sqrt(share.value):.2g} of what the kinetic energy does, {LOOSE:g} at most being usual; more means that "
         "they were not taken at the same instant or that the time step is far too large"
     )
-    return Reading(CHECK, excess(share, high=LOOSE**2), threshold(level), meaning)
+    return Reading.deviation(CHECK, excess(share, high=LOOSE**2), level, meaning)
 
 
 def _slow(series: Sequence[Series], level: float) -> Reading:
@@ -115,4 +115,4 @@ def _slow(series: Sequence[Series], level: float) -> Reading:
         f"fluid, by {ratio:.2g} of the variance that the time step explains, {SHARE:g} at most being usual; more means "
         "that energies and forces have different cutoffs or truncations"
     )
-    return Reading(CHECK, excess(beyond, high=0.0), threshold(level), meaning)
+    return Reading.deviation(CHECK, excess(beyond, high=0.0), level, meaning)

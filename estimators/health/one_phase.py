@@ -11,7 +11,7 @@ import numpy.typing as npt
 from estimators.compiled import kernel
 from estimators.estimate import Estimate, combine, mean
 from estimators.health.excess import excess
-from estimators.health.reading import Reading, threshold
+from estimators.health.reading import Reading
 from sampler.series import Series
 
 __all__ = ["crystalline_order", "number_variance", "one_phase"]
@@ -52,10 +52,10 @@ def _homogeneity(series: Sequence[Series], level: float) -> Reading:
         mean({each.chain: number_variance(each.frames, each.state.box, parts) for each in series}) for parts in (3, 2)
     )
     inverse = combine(lambda half, third: 3.0 / half - 2.0 / third, halves, thirds)
-    return Reading(
+    return Reading.deviation(
         CHECK,
         excess(inverse, low=0.0),
-        threshold(level),
+        level,
         f"particle numbers in sub-boxes of half and a third of the edge vary {halves.value:.3g} and {thirds.value:.3g} "
         f"times as much as in an ideal gas, so that the inverse compressibility of a homogeneous fluid would be "
         f"{inverse.value:.3g} (standard error {inverse.standard_error:.2g}); a negative one means two phases in the "
@@ -83,10 +83,10 @@ def number_variance(frames: Floats, box: float, parts: int) -> Floats:
 def _order(each: Series, level: float) -> Reading:
     order = mean({each.chain: crystalline_order(each.frames, each.state.box)})
     allowed = ALLOWED_ORDER[0] + ALLOWED_ORDER[1] / math.sqrt(each.state.particles)
-    return Reading(
+    return Reading.deviation(
         CHECK,
         excess(order, high=allowed),
-        threshold(level),
+        level,
         f"bonds between neighbours have the order Q6 = {order.value:.3f} (standard error {order.standard_error:.2g}), "
         f"of which {allowed:.2g} is allowed to chance; a liquid has about half of that, a crystal 0.4 to 0.57: choose "
         "a state on the fluid side of freezing",
@@ -150,10 +150,10 @@ def _order_of_bonds(frames, box, reach):  # type: ignore[no-untyped-def]
 
 
 def _stability(bulk_modulus: Estimate, level: float) -> Reading:
-    return Reading(
+    return Reading.deviation(
         CHECK,
         excess(bulk_modulus, low=0.0),
-        threshold(level),
+        level,
         f"the bulk modulus is {bulk_modulus.value:.3g} (standard error {bulk_modulus.standard_error:.2g}); a negative "
         "one belongs to no stable phase: choose a state outside the two-phase region",
     )

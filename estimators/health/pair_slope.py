@@ -15,7 +15,7 @@ from scipy.special import expit
 
 from estimators.estimate import Chain, Estimate, centred, mean
 from estimators.health.excess import excess
-from estimators.health.reading import Reading, threshold
+from estimators.health.reading import Reading
 from sampler.series import Series
 
 __all__ = ["pair_slope"]
@@ -53,7 +53,7 @@ def pair_slope(colder: Sequence[Series], warmer: Sequence[Series], *, level: flo
         "its temperature, or that the time step is too large"
     )
     bounds = sorted(expected * (1.0 + sign * STEP_ERROR) for sign in (-1.0, 1.0))
-    return Reading(CHECK, excess(slope, *bounds), threshold(level), meaning)
+    return Reading.deviation(CHECK, excess(slope, *bounds), level, meaning)
 
 
 def _slope(rungs: Sequence[Sequence[Series]], expected: float) -> Estimate | None:

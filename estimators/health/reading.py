@@ -7,7 +7,7 @@ normal gives the normal deviate of the same two-sided probability, so that one t
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from scipy import stats
 
@@ -21,6 +21,8 @@ class Reading:
     statistic, threshold : the check is passed as long as the first is not above the second
     meaning : one sentence with the measured figure: what a failure means and what to do about it
     repeat : None for all repeats of a rung together
+    level : rate of false alarms where the statistic is a deviation in standard errors; None where no distribution
+        stands behind the threshold
     """
 
     check: str
@@ -28,6 +30,16 @@ class Reading:
     threshold: float
     meaning: str
     repeat: int | None = None
+    level: float | None = None
+
+    @classmethod
+    def deviation(cls, check: str, statistic: float, level: float, meaning: str, repeat: int | None = None) -> Reading:
+        """Of a statistic that is a deviation in standard errors, with this rate of false alarms."""
+        return cls(check, statistic, threshold(level), meaning, repeat, level)
+
+    def at(self, level: float) -> Reading:
+        """The same with another rate of false alarms; itself where it has none."""
+        return self if self.level is None else replace(self, threshold=threshold(level), level=level)
 
     @property
     def passed(self) -> bool:

@@ -12,7 +12,7 @@ from scipy import stats
 from estimators.estimate import Chain, Estimate
 from estimators.gamma import coarsened, scatter
 from estimators.health.excess import excess, jointly, too_short
-from estimators.health.reading import Reading, deviate, threshold
+from estimators.health.reading import Reading, deviate
 from estimators.settle import rank_normalised_split_rhat
 from estimators.trust import FEWEST_SAMPLES
 from sampler.series import Series
@@ -87,7 +87,7 @@ def _trend(series: Sequence[Series], columns: Sequence[str], level: float) -> Re
         f"its standard deviation, +- {math.sqrt(rise.variance) / width:.1g}; a trend means that the "
         "run has not settled or that its temperature was changed, so take a longer equilibration"
     )
-    return Reading(CHECK, jointly(*deviates.values()), threshold(level), meaning)
+    return Reading.deviation(CHECK, jointly(*deviates.values()), level, meaning)
 
 
 def _rise(values: dict[Chain, Floats]) -> tuple[Estimate, float]:
@@ -114,7 +114,7 @@ def _agreement(series: Sequence[Series], columns: Sequence[str], level: float) -
         f"{max(ratio for ratio, _ in found):.3f}; more than chance explains means that they are not samples of one "
         "state, so look for a repeat that is caught elsewhere, or take a longer equilibration"
     )
-    return Reading(CHECK, jointly(*(beyond for _, beyond in found)), threshold(level), meaning)
+    return Reading.deviation(CHECK, jointly(*(beyond for _, beyond in found)), level, meaning)
 
 
 def _compared(repeats: Sequence[Floats]) -> tuple[float, float] | None:

@@ -35,4 +35,4 @@ def _reading(name: str, sampled: Estimate, exact: Estimate, level: float) -> Rea
         else f"nothing below {2.0 * error:.2g} can be seen with so many samples"
     )
     meaning = f"the time step shifts {LOOKED_AT[name]} by {shift:+.2g} +- {error:.1g} in reduced units; {seen}"
-    return Reading(CHECK, statistic, limit, meaning)
+    return Reading.deviation(CHECK, statistic, level, meaning)

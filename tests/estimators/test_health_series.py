@@ -155,7 +155,7 @@ def test_false_alarms_of_healthy_rungs_are_as_rare_as_stated(name: str, healthy:
 @pytest.mark.parametrize("name", CHECKS)
 def test_readings_name_their_check_and_share_the_threshold(name: str, healthy: list[list[Series]]) -> None:
     for reading in listed(CHECKS[name](healthy[0], level=0.003)):
-        assert (reading.check, reading.threshold) == (name, threshold(0.003))
+        assert (reading.check, reading.level, reading.threshold) == (name, 0.003, threshold(0.003))
         assert reading.meaning[0].islower()
         assert not reading.meaning.endswith(".")
 

@@ -69,12 +69,14 @@ def test_the_table_of_touches_names_properties_and_trust() -> None:
 
 @pytest.mark.parametrize(("number", "level"), [(1, 0.01), (5, 0.01), (6, 0.05 / 6), (400, 0.05 / 400)])
 def test_readings_share_the_false_alarms_of_the_study(number: int, level: float) -> None:
-    """Those that rest on a distribution, at the threshold of 1 % each at first; a limit of another kind stays."""
-    statistical = [Check(LADDER[0], Reading("ledger", 1.0, threshold(0.01), ""))] * number
-    other = Check(LADDER[0], Reading("one-phase", 0.9, 1.0, ""))
-    found = judged([*statistical, other])
-    assert {each.reading.threshold for each in found[:-1]} == {threshold(level)}
-    assert found[-1] == other
+    """Those that rest on a distribution, however strict each is at first; a limit of another kind stays as it is."""
+    statistical = [
+        Check(LADDER[0], Reading.deviation("ledger", 1.0, 0.01 / (1 + index % 2), "")) for index in range(number)
+    ]
+    others = [Check(LADDER[0], Reading("one-phase", 0.9, limit, "")) for limit in (1.0, threshold(0.01))]
+    found = judged([*statistical, *others])
+    assert {(each.reading.threshold, each.reading.level) for each in found[:-2]} == {(threshold(level), level)}
+    assert found[-2:] == others
 
 
 def test_a_failed_check_marks_its_state_and_the_curve_to_the_rungs_beside_it() -> None:
@@ -179,8 +181,8 @@ def studied(tmp_path_factory: pytest.TempPathFactory) -> tuple[Path, str]:
 
     def look(samples: Samples) -> list[Reading]:
         wrong = samples.series[0].state.temperature == 1.6
-        limit = threshold(0.01)
-        return [Reading("kinetic-law", 9.0 if wrong else 0.5, limit, "the bath is 2 % too warm; repair it", 0)]
+        meaning = "the bath is 2 % too warm; repair it"
+        return [Reading.deviation("kinetic-law", 9.0 if wrong else 0.5, 0.01, meaning, 0)]
 
     with pytest.MonkeyPatch.context() as patch:
         patch.setattr(canonry.health, "_OF_RUNG", (look,))
