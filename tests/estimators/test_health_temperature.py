@@ -7,7 +7,7 @@ import pytest
 from scipy.signal import lfilter
 
 from estimators.health.force_temperature import force_temperature
-from estimators.health.kinetic_law import LOW_MEAN, kinetic_law
+from estimators.health.kinetic_law import STEP_ERROR, kinetic_law
 from sampler.fluid import Fluid, State
 from sampler.series import Series
 
@@ -64,4 +64,4 @@ def test_kinetic_energy_must_be_as_low_as_the_scheme_makes_it():
     # the mean statistic of a deviation of 1.25 errors that is not allowed for, over that of none
     assert known > unknown + 0.3
     # no lag beyond what is allowed is believed
-    assert kinetic_law([rung(3, moving=1 - LOW_MEAN, lag=1.0)], level=1e-3).passed
+    assert kinetic_law([rung(3, moving=1 - STEP_ERROR, lag=1.0)], level=1e-3).passed
