@@ -3,7 +3,7 @@
 Finite size: a box of N particles that no particle leaves has the free energy F_N = F + (T/2) ln(2 pi N rho T / B_T),
 from the sum over N of the grand ensemble (J. L. Lebowitz, J. K. Percus, Phys. Rev. 122, 1675 (1961)). Its derivatives
 shift every property by 1/N; bulk moduli B_T are those of the reference nearest to the fluid. What periodic images add
-beyond that is not known.
+beyond that shows only where a second size was sampled, which is then what counts.
 """
 
 from __future__ import annotations
@@ -18,13 +18,15 @@ import numpy as np
 from canonry.findings import Finding, Findings
 from canonry.risks import guide
 from canonry.study import Study
+from estimators.estimate import Estimate
+from estimators.health.excess import too_short
 from estimators.structure import Structure
 from sampler.fluid import Fluid, State
 
 if TYPE_CHECKING:
     from reference import Reference
 
-__all__ = ["COVERAGE", "NOT_KNOWN", "WITHIN", "Budget", "budgets", "finite_size", "step", "tail"]
+__all__ = ["COVERAGE", "NOT_KNOWN", "WITHIN", "Budget", "budgets", "finite_size", "size", "step", "tail"]
 
 COVERAGE = 2.0  # times the combined standard uncertainty: about 95 %
 NOT_KNOWN = "not known"
@@ -42,7 +44,7 @@ class Budget:
     statistical : the standard error
     time_step : see `step`; none where sampling is exact
     cutoff, finite_size : sizes of shifts that are not corrected for; no cutoff can be wrong where the
-        potential ends there by definition
+        potential ends there by definition; the other is measured where there is a second size, see `size`
     equilibration : `WITHIN` where no trend is left, and halves and repeats agree within their errors
     """
 
@@ -66,7 +68,7 @@ def budgets(study: Study, findings: Findings) -> Iterator[Budget]:
     readings = [check for check in findings.health if check.reading.check == "settled"]
     settled = {each.state for each in readings} - {each.state for each in readings if not each.reading.passed}
     states = {finding.state for finding in findings.headlines}
-    sizes = {state: finite_size(state, reference) for state in states}
+    sizes = {state: {**finite_size(state, reference), **size(findings, state)} for state in states}
     tails = {state: tail(study.fluid, state, findings.structures.get(state)) for state in states}
     steps = {state: step(findings, state) for state in states}
     at_any_step = study.adopted is None and study.sampling.scheme == "metropolised"
@@ -90,10 +92,38 @@ def _size(shifts: Mapping[str, float], name: str) -> Component:
 
 def step(findings: Findings, state: State) -> Mapping[str, float]:
     """Shift from exact sampling by property, or the error of that difference where it is larger; empty without such."""
-    exact = findings.exact.get(state, {})
-    own = {f.property: f.estimate for f in findings.properties if f.state == state and f.method != "reweighted"}
-    shifts = {name: found - exact[name] for name, found in own.items() if found is not None and name in exact}
-    return {name: max(abs(shift.value), shift.standard_error) for name, shift in shifts.items()}
+    exact, own = findings.exact.get(state, {}), _alone(findings, state)
+    both = {name: (found, exact[name]) for name, found in own.items() if name in exact}
+    return {
+        name: max(abs(found.value - other.value), math.hypot(found.standard_error, other.standard_error))
+        for name, (found, other) in both.items()
+    }
+
+
+def size(findings: Findings, state: State) -> Mapping[str, float]:
+    """Shift from infinitely many particles by property, or its error where that is larger; empty without a second size.
+
+    Taken to go as 1/N: the difference of N and M particles times (1/N)/(1/N - 1/M). Of several sizes the one counts
+    that tells the shift best.
+    """
+    shifts: dict[str, list[Estimate]] = {}
+    for other, properties in findings.sizes.items():
+        if (other.temperature, other.density) == (state.temperature, state.density):
+            reach = other.particles / (other.particles - state.particles)
+            for name, found in _alone(findings, state).items():
+                if name in properties and not too_short(properties[name]):
+                    shifts.setdefault(name, []).append((found - properties[name]) * reach)
+    best = {name: min(each, key=lambda shift: shift.standard_error) for name, each in shifts.items()}
+    return {name: max(abs(shift.value), shift.standard_error) for name, shift in best.items()}
+
+
+def _alone(findings: Findings, state: State) -> dict[str, Estimate]:
+    """What a rung says alone."""
+    return {
+        each.property: each.estimate
+        for each in findings.properties
+        if each.state == state and each.method != "reweighted" and each.estimate is not None
+    }
 
 
 def tail(fluid: Fluid, state: State, structure: Structure | None) -> Mapping[str, float]:

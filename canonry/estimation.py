@@ -11,6 +11,7 @@ from typing import Any
 import numpy as np
 
 from canonry.adopted import doubts
+from canonry.beside import Rung, exactly, found, other_sizes
 from canonry.border import Border
 from canonry.errors import UserError
 from canonry.findings import Check, Curve, Cut, Finding, Findings
@@ -19,8 +20,6 @@ from canonry.isochore import Isochore, assemble
 from canonry.marking import marked
 from canonry.risks import doubt, guide
 from canonry.sampling import recorded
-from canonry.step_bias import checks as step_bias_checks
-from canonry.step_bias import exactly
 from canonry.study import Study
 from canonry.units import Scale
 from estimators.canonical import kinetic_temperature, rung_properties
@@ -96,8 +95,13 @@ def findings(study: Study, directory: Path, border: Border, *, watch: Callable[[
     checks = [check for rung in rungs for check in rung.checks]
     for isochore, own in zip(isochores, _by_density(rungs), strict=True):
         checks += of_isochore(isochore, {rung.state: rung.series for rung in own})
-    exact = exactly(study, directory)
-    checks += step_bias_checks({rung.state: rung.own for rung in rungs}, exact)
+    beside = found(study, directory)
+    for each in beside:
+        checks += each.checks(
+            Rung(rung.state, rung.own, rung.series, isochore.pooled)
+            for isochore, own in zip(isochores, _by_density(rungs), strict=True)
+            for rung in own
+        )
     health = judged(checks)
     noticed = {state: doubts(directory, state) for state in states} if study.adopted else {}
 
@@ -115,7 +119,8 @@ def findings(study: Study, directory: Path, border: Border, *, watch: Callable[[
         histograms=tuple(curve for rung in rungs if (curve := rung.histogram) is not None),
         ledgers=tuple(ledger for rung in rungs for ledger in rung.ledgers),
         health=(*health, *(known(states, reference) if reference else ())),
-        exact=exact,
+        exact=exactly(beside),
+        sizes=other_sizes(beside),
         unfinished=tuple(unfinished),
     )
 

@@ -100,6 +100,7 @@ class Findings:
     ledgers : change of K + U_dyn + ledger per particle over time
     health : what every check read
     exact : estimates by property from sampling that is exact at any time step, where there is such
+    sizes : the same from sampling with other numbers of particles, by states with those numbers
     unfinished : states that lack samples the study asks for
     """
 
@@ -112,6 +113,7 @@ class Findings:
     ledgers: tuple[Curve, ...]
     health: tuple[Check, ...]
     exact: Mapping[State, Mapping[str, Estimate]]
+    sizes: Mapping[State, Mapping[str, Estimate]]
     unfinished: tuple[State, ...]
 
     @property

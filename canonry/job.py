@@ -8,11 +8,11 @@ from collections.abc import Callable, Mapping, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+from canonry.beside import Beside, asked
 from canonry.border import Border
 from canonry.directory import locate, stored, write
 from canonry.results import COLUMNS
 from canonry.sampling import is_complete, sample
-from canonry.step_bias import exact, folder
 from canonry.study import Study
 from canonry.units import Kind
 
@@ -38,6 +38,8 @@ def run(
     workers: int | None = None,
     units: Kind | None = None,
     step_bias: bool = False,
+    second_size: int | None = None,
+    constant_energy: bool = False,
 ) -> Results:
     """Sample what is missing, write all tables and the report, and return what they hold.
 
@@ -46,13 +48,16 @@ def run(
     workers : threads, by default one for every core; results do not depend on it
     units : of tables and report, by default those the study was written in
     step_bias : sample the ends of each isochore exactly too, to see what the time step shifts
+    second_size : sample them with so many particles too, to see what the size of the box shifts
+    constant_energy : sample them without a bath too, for the heat capacity by another route
     Raises UserError, or an error of sampler, estimators or reference, each of them also a built-in kind.
     """
     found, directory = locate(Path(study), None if into is None else Path(into))
     Border.of(found, units)
+    beside = asked(found, directory, step_bias=step_bias, second_size=second_size, constant_energy=constant_energy)
     sample(found, directory, workers=workers)
-    if step_bias:
-        sample(exact(found), folder(directory), workers=workers)
+    for each in beside:
+        sample(each.study, each.place, workers=workers)
     return report(directory, units=units)
 
 
@@ -120,9 +125,15 @@ def compare(
     return verdict_table([held_against(headlines, reference, study) for reference in references], border)
 
 
-def is_finished(study: Study, directory: Path, units: Kind | None = None) -> bool:
-    """Whether all samples, tables and the report of a study are there and in these units; takes a moment only."""
-    if not is_complete(study, directory, _FILES):
+def is_finished(study: Study, directory: Path, units: Kind | None = None, *, beside: Sequence[Beside] = ()) -> bool:
+    """Whether all samples, tables and the report of a study are there and in these units; takes a moment only.
+
+    beside : samplings whose samples are to be there too
+    """
+    above = [f"../{name}" for name in _FILES]
+    if not (
+        is_complete(study, directory, _FILES) and all(is_complete(each.study, each.place, above) for each in beside)
+    ):
         return False
     tables = {name: _rows(directory / f"{name}.csv", columns) for name, columns in COLUMNS.items() if name in _TABLES}
     found = {name: rows for name, rows in tables.items() if rows is not None}

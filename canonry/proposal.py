@@ -124,19 +124,20 @@ def _predicted(study: Study, run: Pilot) -> _Shifts:
 
 def _measured(study: Study, directory: Path) -> dict[State, _Shifts]:
     """Shifts from exact sampling at each state where that of the energy is resolved."""
+    from canonry.beside import exactly, found
     from canonry.directory import continues
     from canonry.estimation import settled
     from canonry.sampling import recorded
-    from canonry.step_bias import exactly
     from estimators.canonical import rung_properties
 
-    found = {}
-    for state, exact in exactly(study, directory).items() if continues(study, directory) else ():
+    shifts = {}
+    there = found(study, directory) if continues(study, directory) else []
+    for state, exact in exactly(there).items():
         series = [settled(each) for each in recorded(study, directory, state)]
         if series:
             own = rung_properties(series)
-            found[state] = {name: _difference(own[name], exact[name]) for name in ("residual_energy", "pressure")}
-    return {state: shifts for state, shifts in found.items() if shifts["residual_energy"].is_resolved}
+            shifts[state] = {name: _difference(own[name], exact[name]) for name in ("residual_energy", "pressure")}
+    return {state: each for state, each in shifts.items() if each["residual_energy"].is_resolved}
 
 
 def _difference(sampled: Estimate, exact: Estimate) -> Shift:
