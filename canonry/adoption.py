@@ -23,7 +23,7 @@ from canonry.notation import unit_text
 from canonry.numbers import plain
 from canonry.spec import Rung, Spec, read, understood
 from canonry.study import Adopted, Study
-from canonry.suspicion import ensemble, pressures
+from canonry.suspicion import ensemble, pressures, shows_unit
 from canonry.terminal import aligned, wrapped
 from sampler.series import Series
 
@@ -38,6 +38,10 @@ _TRUNCATED = (
 )
 _NOISY = "The pressures hold the kinetic energy of each moment and there is no column `kinetic` to take it off."
 _NO_TAIL = "Energy and pressure hold no part from beyond the cutoff."
+_UNIT_UNSEEN = (
+    "nothing shows whether its pressures are in the unit stated; another temperature would, or a column `kinetic` with "
+    "pressures that hold the kinetic energy of the moment."
+)
 _WITHIN = {
     "included": "The potential energy holds a part from within molecules, so that no residual energy can be told.",
     "left out": "The potential energy leaves out the part from within molecules, and with it what fluctuations need.",
@@ -184,7 +188,7 @@ def _taken_in(spec: Spec, watch: Callable[[str], None]) -> tuple[list[_Taken], t
             raise rung.keys.refusal("columns", f"{problem}; what is needed are canonical samples (NVT) and their units")
         series.append(own)
     watch("looking at the pressures")
-    _check_pressures(spec, series)
+    notes += _checked_pressures(spec, series)
     return taken, tuple(notes)
 
 
@@ -201,19 +205,17 @@ def _stated(spec: Spec) -> Iterator[str]:
     yield from dict.fromkeys(_WITHIN[rung.intramolecular] for rung in spec.rungs if rung.intramolecular in _WITHIN)
 
 
-def _check_pressures(spec: Spec, series: Sequence[Sequence[Series]]) -> None:
-    """Raises UserError if the pressures of a density are in another unit than stated, as far as that shows."""
+def _checked_pressures(spec: Spec, series: Sequence[Sequence[Series]]) -> Iterator[str]:
+    """What is to be said of the unit of pressures. Raises UserError if at a density it is another than stated."""
     by_density: dict[float, list[tuple[Rung, Sequence[Series]]]] = {}
     for rung, own in zip(spec.rungs, series, strict=True):
         if "pressure" in rung.columns:
             by_density.setdefault(rung.state.density, []).append((rung, own))
     for both in by_density.values():
         first = both[0][0]
-        problem = pressures(
-            [own for _, own in both],
-            follow=all(rung.kinetic_part == "instantaneous" and "kinetic" in rung.columns for rung, _ in both),
-            unit=first.factors["pressure"],
-            scale=spec.study.scale,
-        )
-        if problem:
+        rungs, scale = [own for _, own in both], spec.study.scale
+        follow = all(rung.kinetic_part == "instantaneous" and "kinetic" in rung.columns for rung, _ in both)
+        if not shows_unit(rungs, follow=follow, scale=scale):
+            yield f"{first.keys.rung.name}: {_UNIT_UNSEEN}"
+        elif problem := pressures(rungs, follow=follow, unit=first.factors["pressure"], scale=scale):
             raise first.keys.refusal("units.pressure", f"{problem}; what is needed is the unit they are in")

@@ -18,7 +18,7 @@ from estimators.estimate import Chain, Estimate, mean
 from estimators.structure import pair_structure
 from sampler.series import Series
 
-__all__ = ["Times", "ensemble", "pressures", "times"]
+__all__ = ["Times", "ensemble", "pressures", "shows_unit", "times"]
 
 Floats = npt.NDArray[np.float64]
 
@@ -125,6 +125,13 @@ def pressures(rungs: Sequence[Sequence[Series]], *, follow: bool, unit: float, s
     if stated is None:
         return ""
     return next(filter(None, (_against_known(series, stated) for series in rungs)), "")
+
+
+def shows_unit(rungs: Sequence[Sequence[Series]], *, follow: bool, scale: Scale | None) -> bool:
+    """Whether `pressures` has anything to go by: kinetic energies, a second temperature or a known pressure."""
+    if follow or any(True for _ in _by_temperature(rungs)):
+        return True
+    return scale is not None and any(True for series in rungs for _ in _known(series))
 
 
 def _by_kinetic(rungs: Sequence[Sequence[Series]]) -> Iterator[Estimate]:

@@ -145,3 +145,27 @@ def test_pressures_in_another_unit_than_stated_are_seen_through(
 
 def home_fluid(truncation: str) -> dict[str, Any]:
     return {"potential": "lennard-jones", "cutoff": 2.2, "truncation": truncation, **SIZES}
+
+
+@pytest.mark.parametrize(
+    ("shown_by", "rungs", "changes"),
+    [
+        ("", 1, {}),
+        ("temperatures", 2, {}),
+        ("kinetic", 1, {"columns": NAMES, "pressure_kinetic": "instantaneous"}),
+        ("reference", 1, {"fluid": home_fluid("corrected")}),
+    ],
+)
+def test_that_nothing_shows_the_unit_of_pressures_is_said(
+    home: Home, shown_by: str, rungs: int, changes: dict[str, Any]
+) -> None:
+    columns = {holds: NAMES[holds] for holds in ("time", "potential", "pressure")}
+    spec = description(
+        home, **{"columns": columns, "fluid": {**SIZES, "potential": "elsewhere"}, "intramolecular": False} | changes
+    )
+    spec["rungs"] = spec["rungs"][:rungs]
+    for rung, series in zip(spec["rungs"], home.series.values(), strict=False):
+        rung["samples"] = [table(each, kinetic_part=spec["pressure_kinetic"]) for each in series]
+    notes = canonry.adopt(spec, into="got").notes
+    told = [note for note in notes if note.startswith("rungs[1]: nothing shows whether its pressures are in the unit")]
+    assert len(told) == (0 if shown_by else 1)
