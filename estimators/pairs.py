@@ -1,22 +1,75 @@
-"""Pairs of particles in a periodic cube, counted by their nearest-image distance."""
+"""Pairs of particles in a periodic cube, counted by their nearest-image distance, and the bins they are counted in."""
 
 from __future__ import annotations
 
 import os
+from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
+from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 import numpy.typing as npt
 
 from estimators.compiled import kernel
+from sampler.fluid import Fluid, State
 
-__all__ = ["pair_counts"]
+__all__ = ["Bins", "pair_counts"]
 
 Floats = npt.NDArray[np.float64]
+PairFunction = Callable[[Floats], Floats]
 
+POINTS = 8  # Gauss-Legendre points in a bin
 BLOCK = 512  # pairs of one particle that are binned at once
 CLOSE = 2.0**-21  # relative error of a distance in single precision, at most: 8 roundings
 GRAINS = 2.0  # absolute error of a distance between grid points, at most
+
+
+@dataclass(frozen=True)
+class Bins:
+    """Equal bins from 0 to half the box, one edge at the cutoff; `inside` of them lie within the cutoff."""
+
+    width: float
+    number: int
+    inside: int
+
+    @staticmethod
+    def of(fluid: Fluid, state: State, bin_width: float) -> Bins:
+        reach = fluid.cutoff if fluid.has_pairs else 0.5 * state.box
+        inside = round(reach / bin_width)
+        width = reach / inside
+        return Bins(width, int(0.5 * state.box / width * (1.0 + 1e-12)), inside)
+
+    @cached_property
+    def edges(self) -> Floats:
+        return self.width * np.arange(self.number + 1, dtype=float)
+
+    @cached_property
+    def centres(self) -> Floats:
+        return self.edges[:-1] + 0.5 * self.width
+
+    def parted(self, parts: int) -> Bins:
+        """Each of them cut into as many."""
+        return Bins(self.width / parts, self.number * parts, self.inside * parts)
+
+    @cached_property
+    def nodes(self) -> tuple[Floats, Floats]:
+        """Points of each bin, (n, POINTS), and their parts of its volume, rows of sum 1."""
+        points, parts = np.polynomial.legendre.leggauss(POINTS)
+        r = self.centres[:, None] + 0.5 * self.width * points
+        parts = parts * r**2
+        return r, parts / np.sum(parts, axis=1, keepdims=True)
+
+    def means(self, function: PairFunction, energy: PairFunction, temperature: float) -> Floats:
+        """Means of a pair function over each bin, weighted by r^2 exp(-u/T), (n,)."""
+        r, parts = self.nodes
+        energies = energy(r)
+        parts = parts * np.exp((np.min(energies, axis=1, keepdims=True) - energies) / temperature)
+        return np.asarray(np.sum(parts * function(r), axis=1) / np.sum(parts, axis=1), dtype=float)
+
+    @cached_property
+    def volumes(self) -> Floats:
+        return np.asarray(4.0 / 3.0 * np.pi * np.diff(self.edges**3), dtype=float)
 
 
 def pair_counts(frames: Floats, box: float, *, width: float, number: int) -> npt.NDArray[np.int32]:

@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from functools import cached_property
+from typing import Protocol
 
 import numpy as np
 import numpy.typing as npt
@@ -13,18 +14,27 @@ from scipy.signal import savgol_coeffs
 from estimators.canonical import kinetic_temperature
 from estimators.errors import BadSeries
 from estimators.estimate import Chain, Estimate, exact, mean
-from estimators.pairs import pair_counts
+from estimators.force_sampling import Forced, force_sampling
+from estimators.pairs import Bins, pair_counts
 from sampler.fluid import Fluid, State
 from sampler.series import Series
 
-__all__ = ["Structure", "pair_structure"]
+__all__ = ["Evaluate", "Structure", "pair_structure"]
 
 Floats = npt.NDArray[np.float64]
 
+
+class Evaluate(Protocol):
+    """Forces (N, 3) of one configuration and more, as `sampler.forces.evaluate` gives them."""
+
+    def __call__(self, fluid: Fluid, positions: Floats, /, *, box: float) -> tuple[Floats, Floats]: ...
+
+
+CHUNK = 1000  # frames that are counted at a time
+PARTS = 8  # of a bin in which pairs are counted for energy and pressure: what binning leaves goes as 1/PARTS^2
 CONTACT_REACH = 0.1  # sigma, to either side of the cutoff
 MINIMUM_REACH = 0.2  # sigma, to either side of the first minimum
 CLEAR = 5.0  # standard errors by which a minimum must be curved upwards
-POINTS = 8  # Gauss-Legendre points in a bin
 
 
 @dataclass(frozen=True, eq=False)
@@ -42,6 +52,7 @@ class Structure:
     energy : U/N recomputed from g
     pressure : recomputed from g
     contact, energy and pressure are None where the pair functions of the fluid are not known
+    forced : g at r, whatever the width of the bins, from the forces on the particles; None if not asked for or unknown
     """
 
     r: Floats
@@ -53,15 +64,32 @@ class Structure:
     contact: Estimate | None
     energy: Estimate | None
     pressure: Estimate | None
+    forced: Forced | None = None
+
+    @cached_property
+    def gain(self) -> Floats:
+        """Variance of g over that of `forced.g`, (n,): frames that counting would need for each; nan where unknown."""
+        if self.forced is None:
+            return np.full(len(self.r), np.nan)
+        known = (self.standard_error > 0.0) & np.isfinite(self.standard_error) & (self.forced.standard_error > 0.0)
+        return np.where(known, self.standard_error / np.where(known, self.forced.standard_error, 1.0), np.nan) ** 2
+
+    @property
+    def median_gain(self) -> float | None:
+        """Over all r where pairs were seen; None where unknown."""
+        return float(np.nanmedian(self.gain)) if np.any(np.isfinite(self.gain)) else None
 
 
-def pair_structure(series: Sequence[Series], *, bin_width: float = 0.02) -> Structure | None:
+def pair_structure(
+    series: Sequence[Series], *, bin_width: float = 0.02, evaluate: Evaluate | None = None
+) -> Structure | None:
     """Pair structure from the frames of all repeats of one rung; None if there are no frames.
 
     bin_width : sigma; changed a little so that the cutoff, where there is one, is the edge of a bin
+    evaluate : gives the forces for `Structure.forced`
 
-    Inside a bin pairs are taken to lie as r^2 exp(-u/T) does when u and r u' are averaged over it, which leaves the
-    cross-checks of energy and pressure free of most of the error of binning.
+    For energy and pressure pairs are counted in bins an eighth as wide, in which they are taken to lie as
+    r^2 exp(-u/T) does: binning leaves 1e-4 of the pressure at most.
     Raises BadSeries if the series are not repeats of one state or a position is not finite.
     """
     series = [each for each in series if len(each.frames)]
@@ -69,12 +97,39 @@ def pair_structure(series: Sequence[Series], *, bin_width: float = 0.02) -> Stru
         return None
     _check(series, bin_width)
     first = series[0]
-    bins = _Bins.of(first.fluid, first.state, bin_width)
-    counts = {
-        each.chain: pair_counts(each.frames, first.state.box, width=bins.width, number=bins.number).astype(float)
-        for each in series
-    }
-    return _Pairs(series, bins, counts).structure()
+    bins = Bins.of(first.fluid, first.state, bin_width)
+    weights = _route_weights(first, bins.parted(PARTS))
+    counted = {each.chain: _counted(each, bins, weights) for each in series}
+    counts, sums = ({chain: both[k] for chain, both in counted.items()} for k in (0, 1))
+    structure = _Pairs(series, bins, counts, sums).structure()
+    return replace(structure, forced=_forced(series, bins, evaluate)) if evaluate else structure
+
+
+def _forced(series: Sequence[Series], bins: Bins, evaluate: Evaluate) -> Forced | None:
+    fluid, box = series[0].fluid, series[0].state.box
+    if not fluid.has_pairs or fluid.cutoff > 0.5 * box:
+        return None
+    return force_sampling(
+        series, lambda where: evaluate(fluid, where, box=box)[0], width=bins.width, number=bins.number
+    )
+
+
+def _route_weights(first: Series, parts: Bins) -> Floats:
+    """What a pair in each bin adds to the energy and to r u', (n, 2); (n, 0) where that is not known."""
+    fluid = first.fluid
+    functions = (fluid.pair_energy, fluid.pair_virial) if fluid.has_pairs else ()
+    columns = [parts.means(function, fluid.pair_energy, first.state.temperature) for function in functions]
+    return np.array(columns).reshape(len(columns), parts.number).T
+
+
+def _counted(each: Series, bins: Bins, weights: Floats) -> tuple[Floats, Floats]:
+    """Pairs in each bin of each frame, (m, n), and their sums of energy and r u', from parts of the bins."""
+    counts, sums = [], []
+    for frames in np.array_split(each.frames, -(-len(each.frames) // CHUNK)):
+        narrow = pair_counts(frames, each.state.box, width=bins.width / PARTS, number=bins.number * PARTS)
+        counts.append(narrow.reshape(len(frames), bins.number, PARTS).sum(axis=2, dtype=float))
+        sums.append(narrow @ weights)
+    return np.concatenate(counts), np.concatenate(sums)
 
 
 def _check(series: Sequence[Series], bin_width: float) -> None:
@@ -91,41 +146,17 @@ def _check(series: Sequence[Series], bin_width: float) -> None:
             raise BadSeries(f"a frame at {each.state}, repeat {each.repeat}, holds positions that are not finite")
 
 
-@dataclass(frozen=True)
-class _Bins:
-    """Equal bins from 0 to half the box, one edge at the cutoff; `inside` of them lie within the cutoff."""
-
-    width: float
-    number: int
-    inside: int
-
-    @staticmethod
-    def of(fluid: Fluid, state: State, bin_width: float) -> _Bins:
-        reach = fluid.cutoff if fluid.has_pairs else 0.5 * state.box
-        inside = round(reach / bin_width)
-        width = reach / inside
-        return _Bins(width, int(0.5 * state.box / width * (1.0 + 1e-12)), inside)
-
-    @cached_property
-    def edges(self) -> Floats:
-        return self.width * np.arange(self.number + 1, dtype=float)
-
-    @cached_property
-    def centres(self) -> Floats:
-        return self.edges[:-1] + 0.5 * self.width
-
-    @cached_property
-    def volumes(self) -> Floats:
-        return np.asarray(4.0 / 3.0 * np.pi * np.diff(self.edges**3), dtype=float)
-
-
 @dataclass(frozen=True, eq=False)
 class _Pairs:
-    """Counted pairs; everything derived is linear in the counts of a frame, so it has an influence over frames."""
+    """Counted pairs, and sums of u and r u' of those pairs.
+
+    Everything derived is linear in what a frame holds, so it has an influence over frames.
+    """
 
     series: Sequence[Series]
-    bins: _Bins
+    bins: Bins
     counts: dict[Chain, Floats]
+    sums: dict[Chain, Floats]
 
     @property
     def fluid(self) -> Fluid:
@@ -169,35 +200,20 @@ class _Pairs:
             pressure=self.pressure() if known else None,
         )
 
-    @cached_property
-    def _nodes(self) -> tuple[Floats, Floats]:
-        """Points of each bin, (n, POINTS), and their parts of its volume, rows of sum 1."""
-        points, parts = np.polynomial.legendre.leggauss(POINTS)
-        r = self.bins.centres[:, None] + 0.5 * self.bins.width * points
-        parts = parts * r**2
-        return r, parts / np.sum(parts, axis=1, keepdims=True)
-
-    def bin_means(self, function: Callable[[Floats], Floats]) -> Floats:
-        """Means of a pair function over each bin, weighted by r^2 exp(-u/T), (n,)."""
-        r, parts = self._nodes
-        energies = self.fluid.pair_energy(r)
-        parts = parts * np.exp((np.min(energies, axis=1, keepdims=True) - energies) / self.state.temperature)
-        return np.asarray(np.sum(parts * function(r), axis=1) / np.sum(parts, axis=1), dtype=float)
-
     def energy(self) -> Estimate:
         tail, _, _ = self.fluid.tail(self.state.density)
-        return self.linear(self.bin_means(self.fluid.pair_energy) / self.state.particles) + tail
+        return mean({chain: each[:, 0] for chain, each in self.sums.items()}) / self.state.particles + tail
 
     def pressure(self) -> Estimate:
         _, tail, _ = self.fluid.tail(self.state.density)
         first = self.series[0]
         temperature = exact(self.state.temperature) if first.bath else kinetic_temperature(self.series)
-        virial = self.linear(self.bin_means(self.fluid.pair_virial) / (-3.0 * self.state.volume))
+        virial = mean({chain: each[:, 1] for chain, each in self.sums.items()}) / (-3.0 * self.state.volume)
         return (temperature + tail) * self.state.density + virial
 
     def contact(self) -> Estimate:
         """g at the cutoff; the pair energy sampled there is u(r) - u(r_c), zero from the cutoff on."""
-        r, parts = self._nodes
+        r, parts = self.bins.nodes
         cutoff = self.fluid.cutoff
         edge = float(self.fluid.pair_energy(np.nextafter(cutoff, 0.0)))
         reach = max(round(CONTACT_REACH / self.bins.width), 2)

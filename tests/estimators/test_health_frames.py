@@ -10,7 +10,7 @@ from pathlib import Path
 import numpy as np
 import numpy.typing as npt
 import pytest
-from scipy import integrate, special
+from scipy import special
 
 from estimators.canonical import rung_properties
 from estimators.estimate import Chain, Estimate, mean
@@ -20,7 +20,7 @@ from estimators.health.heat_routes import heat_routes
 from estimators.health.one_phase import crystalline_order, number_variance, one_phase
 from estimators.health.quantum import quantum, quantum_shifts
 from estimators.health.reading import Reading, threshold
-from estimators.health.virial_routes import binning_shift, virial_routes
+from estimators.health.virial_routes import ALLOWED_BINNING, virial_routes
 from estimators.structure import Structure, pair_structure
 from sampler import store
 from sampler.fluid import Fluid, State
@@ -359,48 +359,20 @@ def test_difference_from_g_has_the_error_of_a_difference(liquid: Rung) -> None:
     assert (structure.pressure - virial).standard_error < 0.2 * virial.standard_error
 
 
-def test_shift_from_binning_is_what_narrower_bins_take_away(liquid: Rung) -> None:
-    """Bins of 0.02 against 0.005, whose own shift is 16 times smaller; y curves, which leaves 10 to 15 % at 0.02.
-
-    Errors are those of the difference of the two, which see the same pairs.
-    """
+def test_binning_leaves_less_than_is_allowed(liquid: Rung) -> None:
+    """Over the same frames, so that only binning is left, with its own error; eight times wider bins leave 0.015."""
     series, _ = liquid
-    fluid, state = series[0].fluid, series[0].state
-    wide, narrow = structure_of(series), structure_of(series, bin_width=0.005)
-    assert wide.pressure is not None
-    assert narrow.pressure is not None
-    off: Estimate = wide.pressure - narrow.pressure
-    shift = binning_shift(wide, fluid, state) - binning_shift(narrow, fluid, state)
-    assert shift < -0.01
-    assert off.standard_error < 0.3 * abs(shift)
-    assert abs(off.value - shift) < 4.0 * off.standard_error
-
-
-def test_binning_shift_of_a_known_g_is_exact() -> None:
-    """g = exp(-u/T - 4 r): shift by quadrature of the true distribution in each bin against the assumed one."""
-    fluid, state = Fluid(cutoff=2.5, truncation="shifted"), State(1.1, 0.6, 500)
-    width = 0.02
-    r = np.arange(0.8 + 0.5 * width, 2.5, width)
-
-    def integral(lower: float, power: float, tilt: float) -> float:
-        def integrand(x: float) -> float:
-            energy = float(fluid.pair_energy(np.array(x)))
-            virial = float(fluid.pair_virial(np.array(x)))
-            return float(x**2 * math.exp(-energy / state.temperature - tilt * x) * virial**power)
-
-        return float(integrate.quad(integrand, lower, lower + width, epsrel=1e-12)[0])
-
-    g, expected = np.zeros(len(r)), 0.0
-    for i, lower in enumerate(r - 0.5 * width):
-        volume = ((lower + width) ** 3 - lower**3) / 3.0
-        inside = integral(lower, 0, 4.0)
-        g[i] = inside / volume
-        plain = integral(lower, 1, 0.0) / integral(lower, 0, 0.0)
-        expected += 4.0 * math.pi * (plain * inside - integral(lower, 1, 4.0))
-    expected *= -0.5 * state.density**2 * (1.0 - 1.0 / state.particles) / 3.0
-    known = replace(structure_of([series_of(np.zeros((1, 500, 3)), state, fluid=fluid)]), r=r, g=g)
-    assert abs(expected) > 1e-5
-    assert binning_shift(known, fluid, state) == pytest.approx(expected, rel=0.01)
+    state = series[0].state
+    virial = mean({each.chain: each.column("virial")[each.frame_samples] for each in series}) / state.volume
+    fine, coarse = (structure_of(series, bin_width=width).pressure for width in (0.02, 0.16))
+    assert fine is not None
+    assert coarse is not None
+    own = virial + state.density * state.temperature
+    off: Estimate = fine - own
+    assert 0.0 < off.standard_error < 1e-3
+    assert abs(off.value) < ALLOWED_BINNING * own.value + 4.0 * off.standard_error
+    off = coarse - own
+    assert abs(off.value + 0.015) < 4.0 * off.standard_error < 0.015
 
 
 # --- heat-routes
