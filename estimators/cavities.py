@@ -12,6 +12,7 @@ import numpy as np
 import numpy.typing as npt
 
 from estimators.compiled import kernel
+from estimators.frames import total
 from sampler.fluid import Fluid, State
 
 __all__ = ["STRATA", "Cavities", "Tally"]
@@ -178,7 +179,7 @@ def _sort(squares, nearest, far, starts, order):  # type: ignore[no-untyped-def]
 
 @kernel
 def _exponent(xs, ys, zs, x, y, z, box, reach, weights, parts):  # type: ignore[no-untyped-def]
-    """-dU/T of a test particle, from nearest images inside the cutoff; loops free of branches, summed by halves."""
+    """-dU/T of a test particle, from nearest images inside the cutoff; loops free of branches."""
     half, a, b, c, d = 0.5 * box, weights[0], weights[1], weights[2], weights[3]
     for j in range(xs.size):
         square = _square(xs[j] - x, ys[j] - y, zs[j] - z, half)
@@ -188,13 +189,7 @@ def _exponent(xs, ys, zs, x, y, z, box, reach, weights, parts):  # type: ignore[
         for j in range(xs.size):
             square = _square(xs[j] - x, ys[j] - y, zs[j] - z, half)
             parts[j] += d * np.sqrt(square) if square < reach else 0.0
-    size = xs.size
-    while size > 1:
-        rest = size // 2
-        size -= rest
-        for j in range(rest):
-            parts[j] += parts[size + j]
-    return parts[0]
+    return total(parts)
 
 
 @kernel
