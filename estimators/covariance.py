@@ -64,7 +64,8 @@ def covariance_matrix(estimates: Sequence[Estimate]) -> Floats:
     """Covariance of the errors of several estimates, (n, n), positive semidefinite.
 
     Diagonal: squared standard errors. Correlations: from block sums over blocks twice the longest window (but at
-    least 16 blocks a chain), as the Gamma method alone need not give a positive matrix.
+    least 16 blocks a chain), as the Gamma method alone need not give a positive matrix. What no sample carries is
+    independent of everything else.
     """
     errors = np.array([estimate.standard_error for estimate in estimates])
     chains = sorted({chain for estimate in estimates for chain in estimate.influence})
@@ -84,5 +85,12 @@ def covariance_matrix(estimates: Sequence[Estimate]) -> Floats:
     norms = np.sqrt(np.sum(sums**2, axis=1))
     unit = sums / np.where(norms > 0.0, norms, 1.0)[:, None]
     correlations = unit @ unit.T
+    carried = np.sqrt([_carried(estimate) for estimate in estimates])
+    correlations *= np.outer(carried, carried)
     np.fill_diagonal(correlations, 1.0)
     return np.asarray(errors[:, None] * correlations * errors, dtype=float)
+
+
+def _carried(estimate: Estimate) -> float:
+    """Share of the variance that samples carry."""
+    return 1.0 - estimate.unsampled / estimate.variance if estimate.unsampled else 1.0

@@ -35,6 +35,8 @@ class Estimate:
     influence : chain -> (n_chain,), scaled so that estimate - truth is to first order the sum of all entries
     method : "average", "fluctuation", "derived", "reweighted" or "surface"
     underlying : state -> effective samples of the observables whose fluctuation it is, where they are the fewer
+    unsampled : variance that no sample carries, such as that of what lies between samples; taken to be independent of
+        that of every other estimate
 
     Error bars come from the autocorrelation of the influences: repeats of one state are pooled, states are independent.
     Estimates add, multiply and so on with one another and with numbers; samples they share stay correlated.
@@ -44,6 +46,7 @@ class Estimate:
     influence: Mapping[Chain, Floats] = field(repr=False)
     method: str = "average"
     underlying: Mapping[State, float] = field(default_factory=dict, repr=False)
+    unsampled: float = 0.0
     __array_ufunc__ = None  # numpy numbers leave the arithmetic to us
 
     def __post_init__(self) -> None:
@@ -62,7 +65,7 @@ class Estimate:
     @property
     def variance(self) -> float:
         """Variance of the value, to first order."""
-        return sum(each.variance for each in self.scatters.values())
+        return self.unsampled + sum(each.variance for each in self.scatters.values())
 
     @cached_property
     def freedom(self) -> float:
@@ -70,7 +73,8 @@ class Estimate:
         if not 0.0 < self.variance < math.inf:
             return 0.0 if self.variance else math.inf
         shares = [(each.variance / self.variance, each.relative_error) for each in self.scatters.values()]
-        return 2.0 / math.fsum((share * error) ** 2 for share, error in shares)
+        noise = math.fsum((share * error) ** 2 for share, error in shares)
+        return 2.0 / noise if noise else math.inf
 
     @property
     def skewness(self) -> float:
@@ -106,8 +110,9 @@ class Estimate:
             return math.inf
         if math.isinf(self.variance):
             return 0.0
-        shares = [(each.variance / self.variance, each.effective_samples) for each in self.scatters.values()]
-        return 1.0 / sum(share**2 / samples for share, samples in shares)
+        sampled = self.variance - self.unsampled
+        shares = [(each.variance / sampled, each.effective_samples) for each in self.scatters.values() if sampled]
+        return 1.0 / sum(share**2 / samples for share, samples in shares) if shares else math.inf
 
     @property
     def trust(self) -> str:
@@ -135,6 +140,8 @@ class Estimate:
         return self + other
 
     def __sub__(self, other: Estimate | float) -> Estimate:
+        if isinstance(other, Estimate):
+            return _linear(self.value - other.value, [(1.0, self), (-1.0, other)], _common_method(self, other))
         return self + -other
 
     def __rsub__(self, other: float) -> Estimate:
@@ -187,11 +194,14 @@ def centred(observables: Mapping[Chain, Floats]) -> tuple[float, dict[Chain, Flo
     return value, {chain: np.asarray(values, dtype=float) - value for chain, values in observables.items()}
 
 
-def combine(function: Callable[..., Any], *estimates: Estimate, method: str = "derived") -> Estimate:
+def combine(
+    function: Callable[..., Any], *estimates: Estimate, method: str = "derived", covariance: Floats | None = None
+) -> Estimate:
     """Smooth function of estimates, with all correlations kept, free of bias to first order.
 
     function : of as many numbers; must take complex ones and be analytic (the gradient is a complex step: numpy ufuncs
     and arithmetic do, abs() and comparisons do not)
+    covariance : (n, n), of the errors of the estimates, where it is known already
     A curved function of noisy numbers is off by half the sum of its second derivatives times their covariances, which
     is taken off.
     """
@@ -206,8 +216,8 @@ def combine(function: Callable[..., Any], *estimates: Estimate, method: str = "d
         step[index] = CURVATURE_STEP * width
         slopes = (_gradient(function, values + step) - _gradient(function, values - step)) / (2.0 * step[index])
         bias += 0.5 * sum(
-            slope * _covariance_of_errors(estimate, other)
-            for slope, other in zip(slopes, estimates, strict=True)
+            slope * (_covariance_of_errors(estimate, other) if covariance is None else covariance[index, column])
+            for column, (slope, other) in enumerate(zip(slopes, estimates, strict=True))
             if slope
         )
     value = float(np.real(function(*values))) - bias
@@ -236,13 +246,17 @@ def _linear(value: float, parts: Sequence[tuple[float, Estimate]], method: str) 
     """The estimate whose influence is the weighted sum of those of its parts."""
     influence: dict[Chain, Floats] = {}
     underlying: dict[State, float] = {}
+    weights: dict[int, float] = {}
     for weight, estimate in parts:
+        weights[id(estimate)] = weights.get(id(estimate), 0.0) + weight
         for state, samples in estimate.underlying.items():
             underlying[state] = min(samples, underlying.get(state, math.inf))
         for chain, values in estimate.influence.items():
             share = weight * values
             influence[chain] = _sum_on_coarser(influence[chain], share) if chain in influence else share
-    return Estimate(float(value), influence, method, underlying)
+    unsampled = {id(estimate): estimate.unsampled for _, estimate in parts}
+    variance = math.fsum(weights[each] ** 2 * own for each, own in unsampled.items() if own)
+    return Estimate(float(value), influence, method, underlying, variance)
 
 
 def _sum_on_coarser(first: Floats, second: Floats) -> Floats:

@@ -29,6 +29,7 @@ COMFORTABLE_SAMPLES = 67.0  # tells 50 from 100 with least mistakes
 BARE_SAMPLES = 40.0  # by the Gamma method's own count, two and a half times its noise below 100
 SHORTEST_SERIES = 50.0  # autocorrelation times
 WEIGHTY = 0.1  # share of the variance from which a state's own length matters
+MOST_UNSAMPLED = 0.5  # share of the variance
 BLOCK_TOLERANCE = 3.0  # combined errors between the two error bars
 MOST_RANKED = 512  # entries of a repeat that are ranked to compare it with others; longer series enter as block sums
 FEWEST_RANKED = 16
@@ -53,6 +54,8 @@ def judgement(estimate: Estimate) -> tuple[str, str]:
         return "caution", "the repeats disagree beyond their error bars"
     if _blocks_disagree(estimate):
         return "caution", "error bars from autocorrelation and from blocks disagree"
+    if estimate.unsampled > MOST_UNSAMPLED * estimate.variance:
+        return "caution", "the error bar rests on what is taken to lie between the samples more than on the samples"
     return "ok", ""
 
 
@@ -75,7 +78,7 @@ def _blocks_disagree(estimate: Estimate) -> bool:
     if estimate.variance == 0.0:
         return False
     blocks = [block_scatter(repeats) for repeats in estimate.repeats.values()]
-    error, block_error = math.sqrt(estimate.variance), math.sqrt(sum(variance for variance, _ in blocks))
+    error, block_error = math.sqrt(estimate.variance), math.sqrt(estimate.unsampled + sum(v for v, _ in blocks))
     block_spread = 0.5 * math.hypot(*(variance * relative for variance, relative in blocks)) / max(block_error, 1e-300)
     spread = error / math.sqrt(2.0 * estimate.freedom)
     return not abs(block_error - error) <= BLOCK_TOLERANCE * math.hypot(block_spread, spread)
