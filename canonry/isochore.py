@@ -2,13 +2,16 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
 from itertools import pairwise
 
 import numpy as np
 
-from canonry.findings import TRUST, Finding, Overlap
+from canonry.findings import Finding, Overlap
+from estimators.changes import Change, changes
+from estimators.derived import derived, unclear
 from estimators.estimate import Estimate
 from estimators.reweight import Pooled, Reweighted, pool
 from sampler.fluid import State
@@ -30,12 +33,15 @@ class Isochore:
 
     pooled : None where there is nothing to pool: a single rung, no bath, no energy
     temperatures : measured, where no bath acts
+    series : those pooled, if any; spoken : writes a temperature (epsilon/k_B) for the reader
     """
 
     own: Mapping[State, Properties]
     pooled: Pooled | None
     temperatures: Mapping[State, Estimate]
     ideal_heat_capacity: float | None
+    series: Sequence[Series] = ()
+    spoken: Callable[[float], str] = str
 
     def overlaps(self) -> Iterator[Overlap]:
         """Of neighbouring rungs."""
@@ -46,12 +52,35 @@ class Isochore:
                 yield Overlap(low, high, float(np.sqrt(shared)))
 
     def properties(self) -> Iterator[Finding]:
-        """Of every rung, its own values and the reweighted ones."""
-        for (state, properties), pooled in zip(self.own.items(), self._at_rungs(), strict=True):
-            others = {} if pooled is None else self._completed(pooled.properties)
-            for name, own in self._completed(properties).items():
+        """Of every rung, its own values and the reweighted ones, and what has changed on the way to it."""
+        at_rungs = self._at_rungs()
+        energies = {
+            each.temperature: each.properties["residual_energy"]
+            for each in at_rungs
+            if each is not None and "residual_energy" in each.properties
+        }
+        made = {} if self.pooled is None else changes(self.pooled, self.series, energies)
+        for (state, properties), pooled in zip(self.own.items(), at_rungs, strict=True):
+            others = {} if pooled is None else self._completed(state, pooled.properties)
+            for name, own in self._completed(state, properties).items():
                 for finding in _both(state, name, own, others.get(name), pooled):
                     yield replace(finding, temperature=self.temperatures.get(state))
+            if state.temperature in made:
+                yield from self._changed(state, made[state.temperature])
+
+    def _changed(self, state: State, change: Change) -> Iterator[Finding]:
+        """With caution where it does not start at the coldest rung of all."""
+        coldest = next(iter(self.own)).temperature
+        start = (
+            ""
+            if change.start == coldest
+            else f"counted from the rung at {self.spoken(change.start)}: colder ones share too few samples"
+        )
+        for name in ("helmholtz", "entropy"):
+            value = getattr(change, name)
+            yield _reweighted(state, f"residual_{name}_change", value, value.effective_samples, headline=True).doubted(
+                start
+            )
 
     def slopes(self) -> Iterator[tuple[State, Estimate, Estimate]]:
         """Of every rung with both, its own residual heat capacity and the slope of the reweighted energy."""
@@ -70,11 +99,11 @@ class Isochore:
         if self.pooled is None:
             return
         first, properties = next(iter(self.own.items()))
-        names = [*self._completed(properties)]
+        names = [*self._completed(first, properties)]
         temperatures = np.linspace(self.pooled.temperatures[0], self.pooled.temperatures[-1], _GRID)
         for at in self.pooled.curve(temperatures.tolist()):
             state = replace(first, temperature=at.temperature)
-            for name, value in self._completed(at.properties).items():
+            for name, value in self._completed(state, at.properties).items():
                 yield _reweighted(state, name, value, at.effective_samples, headline=True)
             if at.refused:
                 for name in names:
@@ -92,11 +121,11 @@ class Isochore:
             for each, alone in zip(found, apart, strict=True)
         ]
 
-    def _completed(self, properties: Properties) -> dict[str, Estimate]:
-        """With the heat capacity, where the ideal part is known."""
-        if self.ideal_heat_capacity is None or "residual_heat_capacity" not in properties:
-            return dict(properties)
-        return {**properties, "heat_capacity": properties["residual_heat_capacity"] + self.ideal_heat_capacity}
+    def _completed(self, state: State, properties: Properties) -> dict[str, Estimate | str]:
+        """With what follows from them, or the reason why it cannot be told."""
+        ideal, temperature = self.ideal_heat_capacity, self.temperatures.get(state, state.temperature)
+        found = derived(properties, temperature=temperature, density=state.density, ideal_heat_capacity=ideal)
+        return {**properties, **found, **unclear(properties, ideal_heat_capacity=ideal)}
 
 
 def assemble(
@@ -116,31 +145,34 @@ def assemble(
     """
     weighed = len(own) > 1 and all(each.bath and each.has("sampled_energy") for each in series)
     pooled = pool(series, spoken=spoken) if weighed else None
-    return Isochore(own, pooled, temperatures, ideal_heat_capacity)
+    return Isochore(own, pooled, temperatures, ideal_heat_capacity, series, spoken)
 
 
 def _both(
-    state: State, name: str, own: Estimate, other: Estimate | None, pooled: Reweighted | None
+    state: State, name: str, own: Estimate | str, other: Estimate | str | None, pooled: Reweighted | None
 ) -> Iterator[Finding]:
     """The rung's own value and the reweighted one; exactly one of them is the headline.
 
     That is the reweighted value where there is one and both agree within three combined standard errors, else the
     rung's own, with caution and the reason. Where there is nothing to reweight (a rung alone at its density, no bath, a
-    bulk modulus that needs g at contact) the rung's own stands as it is.
+    bulk modulus that needs g at contact) the rung's own stands as it is. Either may be a reason why there is no value.
     """
     doubt = "" if pooled is None else pooled.refused
-    if other is not None:
+    if isinstance(own, Estimate) and isinstance(other, Estimate):
         allowed = _AGREEMENT * float(np.hypot(other.standard_error, own.standard_error))
         if not abs(other.value - own.value) <= allowed:
             doubt = "the value from all rungs together lies more than three combined standard errors away"
-    trust, reason = own.trust, own.reason
-    if doubt:
-        trust, reason = max(trust, "caution", key=TRUST.index), "; ".join(filter(None, (reason, doubt)))
-    chosen = other is not None and not doubt
-    yield Finding(state, name, own.method, own, own.effective_samples, trust, reason, not chosen)
+    chosen = isinstance(other, Estimate) and not doubt
+    if isinstance(own, Estimate):
+        found = Finding(state, name, own.method, own, own.effective_samples, own.trust, own.reason, not chosen)
+        yield found.doubted(doubt)
+    else:
+        yield Finding(state, name, "derived", None, math.nan, "no", own, not chosen)
     if other is not None and pooled is not None:
         yield _reweighted(state, name, other, pooled.effective_samples, headline=chosen)
 
 
-def _reweighted(state: State, name: str, value: Estimate, samples: float, *, headline: bool) -> Finding:
+def _reweighted(state: State, name: str, value: Estimate | str, samples: float, *, headline: bool) -> Finding:
+    if isinstance(value, str):
+        return Finding(state, name, "reweighted", None, samples, "no", value, headline)
     return Finding(state, name, "reweighted", value, samples, value.trust, value.reason, headline)

@@ -25,6 +25,12 @@ COMPARED = (
     "compressibility_factor",
     "thermal_pressure",
     "bulk_modulus",
+    "isobaric_heat_capacity",
+    "thermal_expansion",
+    "sound_speed",
+    "joule_thomson",
+    "grueneisen",
+    "enthalpy",
 )
 _SMALLEST_CUTOFF = 1.0  # sigma
 _LIQUID = 0.5  # sigma^-3: at and above this density the defaults are those of a liquid

@@ -9,8 +9,9 @@ inside the tolerance, `disagrees` where it lies outside altogether, else `undeci
 
 All together, over the values without tolerance that could be decided: `disagrees` at a level of 1 %, half of it for the
 sum of squares under the covariance of the estimates and of the reference (chi-square), half for the largest |z|
-(Bonferroni). A reference's uncertainty is one and the same error at all states of a property. A value with a tolerance
-speaks for itself: one that disagrees, or leaves open what was asked, makes the whole so.
+(Bonferroni). Values that follow from others at the same state are no evidence beyond those, and are left out. A
+reference's uncertainty is one and the same error at all states of a property. A value with a tolerance speaks for
+itself: one that disagrees, or leaves open what was asked, makes the whole so.
 """
 
 from __future__ import annotations
@@ -29,6 +30,7 @@ from canonry.errors import UserError
 from canonry.findings import Finding
 from canonry.study import COMPARED, Study, Tolerance
 from estimators.covariance import covariance_matrix
+from estimators.derived import PARTS
 from estimators.estimate import Estimate
 from sampler.fluid import Fluid
 
@@ -36,7 +38,7 @@ if TYPE_CHECKING:
     from reference import Reference
     from reference.equation_of_state import ReferenceValue
 
-__all__ = ["OUTCOMES", "SAME", "Comparison", "Verdict", "against", "compare"]
+__all__ = ["FOLLOWS", "OUTCOMES", "Comparison", "Verdict", "against", "compare"]
 
 Floats = npt.NDArray[np.float64]
 
@@ -47,8 +49,12 @@ _STEP = 1e-4  # of the temperature, for a slope
 _SMALLEST_EIGENVALUE = 0.02
 """Of the correlation matrix; smaller ones are noise of its finite number of blocks, or rest on the reference's error
 being the same at all states to the last digit."""
-SAME = {"residual_heat_capacity": "heat_capacity", "compressibility_factor": "pressure"}
-"""Properties that say the same as another one, but for constants."""
+FOLLOWS: Mapping[str, tuple[str, ...]] = {
+    "residual_heat_capacity": ("heat_capacity",),
+    "compressibility_factor": ("pressure",),
+    **PARTS,
+}
+"""Properties that say nothing but what others do at the same state: these."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -137,10 +143,10 @@ class Comparison:
     @property
     def outcome(self) -> str:
         """Of all values together, as the module says."""
-        plain = [verdict for verdict in self.verdicts if verdict.tolerance is None and verdict.outcome != "undecided"]
+        plain = [v for v in _independent(self.verdicts) if v.tolerance is None and v.outcome != "undecided"]
         outcomes = [verdict.outcome for verdict in self.verdicts if verdict.tolerance is not None]
         if plain:
-            outcomes.append("disagrees" if _improbable(_independent(plain)) else "agrees")
+            outcomes.append("disagrees" if _improbable(plain) else "agrees")
         return max(outcomes, key=OUTCOMES.index, default="undecided")
 
 
@@ -214,9 +220,13 @@ def _slope(reference: Reference, finding: Finding, ideal_heat_capacity: float | 
 
 
 def _independent(verdicts: Sequence[Verdict]) -> list[Verdict]:
-    """Without values that say the same as another one at the same state."""
+    """Without values that say what others do at the same state."""
     there = {(verdict.finding.state, verdict.finding.property) for verdict in verdicts}
-    return [v for v in verdicts if (v.finding.state, SAME.get(v.finding.property)) not in there]
+
+    def said(verdict: Verdict) -> bool:
+        return any((verdict.finding.state, each) in there for each in FOLLOWS.get(verdict.finding.property, ()))
+
+    return [verdict for verdict in verdicts if not said(verdict)]
 
 
 def _improbable(verdicts: Sequence[Verdict]) -> bool:

@@ -10,7 +10,7 @@ import numpy as np
 import numpy.typing as npt
 
 from canonry.results import Results
-from canonry.verdict import SAME
+from canonry.verdict import FOLLOWS
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -34,11 +34,12 @@ def headline(results: Results) -> pd.DataFrame:
 
 
 def independent(rows: pd.DataFrame, *judged: str) -> pd.DataFrame:
-    """Without rows that say the same as another property at the same state, and bear the same entries in `judged`."""
-    columns = ["temperature", "density", "property", *judged]
-    there = set(rows[columns].itertuples(index=False, name=None))
-    others = rows[columns].assign(property=rows["property"].map(SAME))
-    return rows[np.array([row not in there for row in others.itertuples(index=False, name=None)], dtype=bool)]
+    """Without rows that say what others do at the same state, one of which bears the same entries in `judged`."""
+    columns = ["temperature", "density", *judged, "property"]
+    keys = list(rows[columns].itertuples(index=False, name=None))
+    there = set(keys)
+    said = [any((*key, name) in there for name in FOLLOWS.get(own, ())) for *key, own in keys]
+    return rows[~np.array(said, dtype=bool)]
 
 
 def trusted(results: Results) -> pd.DataFrame:

@@ -10,13 +10,14 @@ from scipy.signal import lfilter
 from canonry.border import Border
 from canonry.errors import UserError
 from canonry.findings import Finding
-from canonry.study import Study, Tolerance, load
+from canonry.study import COMPARED, Study, Tolerance, load
 from canonry.tables import verdict_table
 from canonry.units import Scale
-from canonry.verdict import Verdict, against, compare
+from canonry.verdict import FOLLOWS, Verdict, against, compare
 from estimators.estimate import Estimate, mean
 from reference import find
 from reference.equation_of_state import ReferenceValue
+from reference.properties import PROPERTIES as PROPERTIES_KNOWN
 from sampler.fluid import State
 
 STUDY = """
@@ -153,7 +154,7 @@ def test_only_headlines_are_compared(tmp_path: Path) -> None:
     found = [
         finding(estimate(0.0, 0.1), headline=False),
         finding(estimate(0.0, 0.1)),
-        finding(estimate(9, 0.1), "enthalpy"),
+        finding(estimate(9, 0.1), "residual_entropy_change"),
     ]
     assert [each.finding for each in compare(found, Known(), asked(tmp_path)).verdicts] == [found[1]]
 
@@ -255,6 +256,35 @@ def test_values_that_say_the_same_count_once(tmp_path: Path) -> None:
     assert compare(found, Known(uncertainty=1.0), asked(tmp_path)).outcome == "agrees"
     apart = [finding(estimate(2.7, 0.01), name) for name in ("pressure", "residual_energy")]
     assert compare(apart, Known(uncertainty=1.0), asked(tmp_path)).outcome == "disagrees"
+
+
+@pytest.mark.parametrize("name", sorted(FOLLOWS))
+def test_what_follows_from_other_properties_has_rows_and_is_no_evidence_of_its_own(tmp_path: Path, name: str) -> None:
+    """Off by 9 of its errors, while what it is made of agrees: its row says so, and all together do not."""
+    parts = [finding(estimate(0.0, 0.1, seed=2 + k), each) for k, each in enumerate(FOLLOWS[name])]
+    off = finding(estimate(0.9, 0.1), name)
+    comparison = compare([*parts, off], Known(), asked(tmp_path))
+    assert [verdict.outcome for verdict in comparison.verdicts] == [*("agrees" for _ in parts), "disagrees"]
+    assert comparison.outcome == "agrees"
+    assert compare([off], Known(), asked(tmp_path)).outcome == "disagrees"
+    own = {name: Tolerance(0.3, relative=False)}
+    assert compare([*parts, off], Known(), asked(tmp_path), tolerance=own).outcome == "disagrees"
+
+
+def test_a_tolerance_holds_for_what_says_the_same(tmp_path: Path) -> None:
+    """A pressure off by 5 errors and within its tolerance: neither Z nor the enthalpy make the whole disagree."""
+    names = ("pressure", "compressibility_factor", "enthalpy")
+    found = [finding(estimate(0.5, 0.1), each) for each in names]
+    tolerance = {"pressure": Tolerance(1.0, relative=False)}
+    assert compare(found, Known(), asked(tmp_path), tolerance=tolerance).outcome == "agrees"
+    assert compare(found, Known(), asked(tmp_path)).outcome == "disagrees"
+
+
+def test_every_property_is_compared_or_cannot_be() -> None:
+    """The reference knows what is compared; what is left takes two states, or particles put in."""
+    assert set(PROPERTIES_KNOWN) == set(COMPARED)
+    assert set(FOLLOWS) < set(COMPARED)
+    assert not {part for parts in FOLLOWS.values() for part in parts} - {*PROPERTIES}
 
 
 @pytest.mark.parametrize(

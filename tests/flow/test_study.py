@@ -151,6 +151,12 @@ ABSOLUTE = {
     "compressibility_factor": "0.03",
     "thermal_pressure": '"0.0123 MPa/K"',
     "bulk_modulus": '"700 bar"',
+    "isobaric_heat_capacity": '"0.4 J/(mol K)"',
+    "thermal_expansion": '"0.0001 1/K"',
+    "sound_speed": '"7 m/s"',
+    "joule_thomson": '"0.02 K/MPa"',
+    "grueneisen": "0.05",
+    "enthalpy": '"0.1 kJ/mol"',
 }
 VARIANTS = [
     *(
@@ -211,7 +217,11 @@ REFUSED = [
     # keys of later versions
     ("[state]", "[until]\npressure = 0.01\n[state]", r"until = .*not available in this version"),
     ("[1.0]", "{ from = 1, to = 2, overlap = 0.2 }", r"state\.temperatures\.overlap = 0\.2: not available"),
-    ("[state]", "[compare.tolerance]\nsound_speed = 0.1\n[state]", r"tolerance\.sound_speed = 0\.1: not available"),
+    (
+        "[state]",
+        "[compare.tolerance]\nresidual_entropy_change = 0.1\n[state]",
+        r"tolerance\.residual_entropy_change = 0\.1: not available",
+    ),
     # missing values
     ("density = 0.8", "", r"state\.density: missing; what is needed is a number from 1e-06 to 2 \(sigma\^-3\)"),
     ("temperatures = [1.0]", "", r"state\.temperatures: missing; what is needed is a number"),
@@ -320,7 +330,7 @@ KEYS = {
     ),
     "compare": ("against", "tolerance"),
     "state.temperatures": ("from", "to", "rungs", "overlap"),
-    "compare.tolerance": (*COMPARED, "enthalpy"),
+    "compare.tolerance": (*COMPARED, "residual_chemical_potential"),
 }
 NUMBERS = st.integers() | st.floats() | st.sampled_from([0, 1, 2, 3, 0.8, 1.0, 1e-300, 1e308, 10**400, -0.0])
 UNITS = st.sampled_from(
