@@ -28,6 +28,7 @@ from estimators.estimate import Estimate, mean
 from estimators.settle import settled_start
 from estimators.structure import Structure, pair_structure
 from sampler.fluid import State
+from sampler.forces import evaluate
 from sampler.protocol import Protocol
 from sampler.series import Series
 
@@ -155,7 +156,7 @@ def _rung(recorded: list[Series], scale: Scale | None) -> _Rung | None:
     if not recorded:
         return None
     cut = [settled(each) for each in recorded]
-    structure = pair_structure(cut)
+    structure = pair_structure(cut, evaluate=evaluate)
     series = [_light(each) for each in cut]
     temperature = None if series[0].bath else kinetic_temperature(series)
     state = series[0].state

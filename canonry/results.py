@@ -20,7 +20,8 @@ COLUMNS: Mapping[str, tuple[str, ...]] = {
     for name, columns in {
         "properties": _ESTIMATES,
         "curve": _ESTIMATES,
-        "structure": "temperature,density,species_a,species_b,r,r_unit,g,standard_error,coordination",
+        "structure": "temperature,density,species_a,species_b,r,r_unit,g,standard_error,coordination,"
+        "g_forced,forced_error",
         "verdict": "temperature,density,property,value,standard_error,reference,reference_value,reference_uncertainty,"
         "z,outcome,tolerance,reason",
         "summary": "temperature,density",

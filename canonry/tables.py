@@ -19,6 +19,7 @@ from canonry.results import COLUMNS, Results
 from canonry.study import COMPARED, Study
 from canonry.units import PROPERTIES
 from canonry.verdict import Comparison, Verdict
+from estimators.force_sampling import Forced
 from sampler.fluid import State
 
 if TYPE_CHECKING:
@@ -228,12 +229,20 @@ def _structure(findings: Findings, border: Border) -> pd.DataFrame:
                 "g": structure.g,
                 "standard_error": np.where(np.isfinite(structure.standard_error), structure.standard_error, np.nan),
                 "coordination": structure.coordination,
+                **_forced(structure.forced),
             },
             columns=columns,
         )
         for state, structure in findings.structures.items()
     ]
     return pd.concat(parts, ignore_index=True) if parts else pd.DataFrame(columns=columns)
+
+
+def _forced(forced: Forced | None) -> dict[str, Any]:
+    if forced is None:
+        return {"g_forced": math.nan, "forced_error": math.nan}
+    known = np.isfinite(forced.standard_error)
+    return {"g_forced": forced.g, "forced_error": np.where(known, forced.standard_error, np.nan)}
 
 
 def _curves(name: str, curves: Sequence[Curve], columns: Mapping[str, Any]) -> pd.DataFrame:

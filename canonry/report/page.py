@@ -37,7 +37,7 @@ _HEALTH = (
 _BUDGET = (
     "Each source as one standard uncertainty; the expanded one holds those that are known, in squares, and is about "
     "95 %. The shift of a finite box is what a closed box of so many particles adds, by the reference nearest to the "
-    "fluid; that of periodic images is not known. Other properties are in budget.csv."
+    "fluid, or what a second size shows; else that of periodic images is not known. Other properties are in budget.csv."
 )
 _CURVES = (
     "Points are the rungs' own values, which the curve does not pass through by construction; where no curve is drawn, "
@@ -137,7 +137,10 @@ def _sampled(where: str, results: Results, isochore: bool) -> Iterator[str]:
     yield _plots(figures)
     if len(results.structure):
         yield "<h3>Structure: pair distribution g(r)</h3>"
-        yield '<p class="fine">Each rung with its 95 % band; dashed: the coldest rung of its density.</p>'
+        caption = (
+            f"Each rung with its 95 % band; dashed: the coldest rung of its density. {plots.gain(results.structure)}"
+        )
+        yield f'<p class="fine">{escape(caption.strip())}</p>'
         yield _plots(plots.structure(results, where), "small plots", captions=False)
 
 

@@ -15,9 +15,11 @@ from canonry.results import Results
 from canonry.units import unit_label
 
 if TYPE_CHECKING:
+    import pandas as pd
+
     from canonry.figures import Mark
 
-__all__ = ["curves", "deviations", "histograms", "ledger", "structure"]
+__all__ = ["curves", "deviations", "gain", "histograms", "ledger", "structure"]
 
 _DASHES = ("7 4", "2 3", "9 3 2 3")
 _SHAPES = {"ok": "disc", "caution": "ring", "no": "cross"}
@@ -93,7 +95,7 @@ def structure(results: Results, where: str) -> Iterator[Figure]:
         at = _state(results, temperature, density)
         yield Figure(
             title=f"Pair distribution{pair} at {at}, {where}",
-            description="g(r) with its 95 % band; dashed: the coldest rung.",
+            description=f"g(r) with its 95 % band; dashed: the coldest rung. {gain(rows)}".strip(),
             x=Axis("r", unit_text(str(rows["r_unit"].iloc[0]))),
             y=Axis(f"g(r){pair}, {at}", reach=(0.0, highest)),
             marks=[
@@ -105,6 +107,19 @@ def structure(results: Results, where: str) -> Iterator[Figure]:
             height=168,
             ticks=4,
         )
+
+
+def gain(rows: pd.DataFrame) -> str:
+    """A sentence on what g(r) from forces is worth beside counted pairs, median over r; empty where it is not known."""
+    counted, forced = floats(rows, "standard_error"), floats(rows, "forced_error")
+    known = (counted > 0.0) & (forced > 0.0)
+    if not np.any(known):
+        return ""
+    times = float(np.median((counted[known] / forced[known]) ** 2))
+    return (
+        f"The variance of counted pairs is {times:.3g} times that of g(r) from the forces on the particles, median "
+        "over all r (g_forced in structure.csv)."
+    )
 
 
 def ledger(results: Results, where: str, bath: bool) -> Figure:

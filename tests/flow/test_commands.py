@@ -105,7 +105,7 @@ def test_structure_has_its_columns_with_units(sampled: tuple[Path, Result]) -> N
     first = rows(sampled[0], "structure")[0]
     assert list(first) == [
         *("temperature", "temperature_unit", "density", "density_unit", "species_a", "species_b"),
-        *("r", "r_unit", "g", "standard_error", "coordination"),
+        *("r", "r_unit", "g", "standard_error", "coordination", "g_forced", "forced_error"),
     ]
 
 

@@ -160,6 +160,8 @@ def invented(densities=(0.8,), rungs=6, units="reduced", samples=300, scheme="ba
                     "g": shape + 0.2 * (1.2 - t) * shape * (shape > 1.5),
                     "standard_error": 0.01,
                     "coordination": 4.0 * np.pi / 3.0 * rho * r**3,
+                    "g_forced": shape,
+                    "forced_error": 0.002,
                 }
             )
             for t, rho in states
@@ -262,6 +264,16 @@ def test_every_figure_speaks_and_has_labelled_axes():
         assert len(labels) == 2
         assert len([text for text in figure.iter("text") if text.get("class") == "tick"]) >= 4
         assert any(re.search(r", [^T]", label) for label in labels)
+
+
+def test_gain_of_g_from_forces_is_told_where_it_is_known():
+    """Errors of 0.01 counted and 0.002 from forces, once beside ones that say nothing."""
+    results = invented()
+    assert html(results).count("The variance of counted pairs is 25 times") == 1 + 6
+    results.structure.loc[results.structure["r"] < 1.5, "forced_error"] = 0.0
+    assert html(results).count("is 25 times") == 1 + 6
+    results.structure["forced_error"] = np.nan
+    assert "counted pairs" not in html(results)
 
 
 @pytest.mark.parametrize(
