@@ -113,7 +113,7 @@ CHECKS: Mapping[str, Kind] = {
         "no",
     ),
     "box": Kind(
-        "the box is wide enough for cutoff and structure",
+        "the box is wide enough for cutoff and structure, and values are those of any other size sampled",
         "the box is so small that values depend on its size",
         "caution",
     ),
@@ -124,8 +124,8 @@ CHECKS: Mapping[str, Kind] = {
         ("residual_energy", *_MECHANICAL),
     ),
     "heat-routes": Kind(
-        "heat capacity is the same from fluctuations and from the slope of the energy",
-        "the fluctuations of the energy contradict its slope over temperature",
+        "heat capacity is the same by every route that was sampled",
+        "routes to the heat capacity contradict one another",
         "caution",
         _HEAT,
     ),
