@@ -1,6 +1,6 @@
 """g(r) of stored frames from the forces on their particles, at exact distances: no bin has a width in it.
 
-The gradient of a pair density is the mean force of its pairs over T: with n = N (N - 1) / (4 pi V), averaged over
+The gradient of a pair density is the mean force of its pairs over T: with n = 4 pi N (N - 1) / V, averaged over
 directions, n r^2 g'(r) = sum over ordered pairs of < (F_j - F_i).r_ij / (2 T r_ij) delta(r - r_ij) >, exactly, in a
 periodic cube up to half its edge and for any number of particles. Summed outwards from the core, where g = 0,
     n g(r) = < sum f H(r - s) / s^2 >,  f = (F_j - F_i).r_ij / (2 T s),  s = r_ij
@@ -142,14 +142,13 @@ def _combined(estimators: Mapping[Chain, Floats]) -> tuple[float, float]:
 def _add_pulls(where, force, box, per_width, sums):  # type: ignore[no-untyped-def]
     """Adds 1, (F_j - F_i).r_ij / s^3 and (F_j - F_i).r_ij of every pair to its bin, (bins, 3), if too far to the last.
 
-    Positions on a grid of 2^32 points along each edge: their differences wrap around as integers do.
+    Positions on a grid of 2^32 points along each edge: they and their differences wrap around as integers do.
     """
     n = where.shape[0]
     grid, pull = np.empty((3, n), np.int32), np.empty((3, n))
     for i in range(n):
         for k in range(3):
-            inside = where[i, k] - box * np.floor(where[i, k] / box)
-            grid[k, i] = np.int32(np.int64(inside * (2.0**32 / box)))
+            grid[k, i] = np.int32(np.int64(where[i, k] * (2.0**32 / box)))
             pull[k, i] = force[i, k]
     x, y, z = grid[0], grid[1], grid[2]
     fx, fy, fz = pull[0], pull[1], pull[2]
