@@ -3,23 +3,25 @@
 Run: python benchmarks/transfer.py [--pairs 500] [--workers 2]
 Pairs of a short ladder (108 particles, density 0.8, T 1.0 and 1.1, 20 000 steps each) and a run at the target itself.
 Printed is how often both agree within 1.96 combined standard errors: at the targets asked for, and, for densities
-farther and farther away, by effective samples, which is what the threshold of 50 rests on. Takes 15 minutes.
+farther and farther away, by the share of the samples that survives, which is what LEAST_SHARE rests on. Takes 15
+minutes.
 """
 
 from __future__ import annotations
 
 import argparse
-from collections import defaultdict
 from concurrent.futures import ProcessPoolExecutor
 from itertools import pairwise
 from pathlib import Path
 
 import numpy as np
+import pytest
 
 from canonry.estimation import settled
 from canonry.targets import Target
+from estimators import group
 from estimators.canonical import rung_properties
-from estimators.field import field
+from estimators.field import Field, field
 from estimators.reweight import Reweighted
 from sampler.fluid import Fluid, State
 from sampler.protocol import Protocol
@@ -37,8 +39,12 @@ ASKED = {
     "sigma +0.3 %": Target(1.05, DENSITY, sigma=1.003),
     "rho +0.5 %, T -3 %": Target(0.97, 1.005 * DENSITY),
 }
-FARTHER = (1.015, 1.02, 1.025, 1.03, 1.035)
-BINS = (0.0, 10.0, 20.0, 35.0, 50.0, 75.0, 120.0, 250.0, 1e9)
+FARTHER = (1.01, 1.014, 1.018, 1.022, 1.026, 0.99, 0.986, 0.98, 0.975, 0.97)
+BINS = (0.0, 0.03, 0.06, 0.1, 0.15, 0.2, 0.3, 0.45, 0.65, 1.0)
+
+
+Found = tuple[str, float, float, dict[str, float]]
+"""Target, effective samples, share that survives, and deviations in combined standard errors by property."""
 
 
 def sampled(state: State, seed: int, steps: int = 20_000) -> Series:
@@ -53,29 +59,31 @@ def sampled(state: State, seed: int, steps: int = 20_000) -> Series:
     return settled(assemble(chain, segments))
 
 
-def pair(seed: int) -> list[tuple[str, float, dict[str, float]]]:
-    """Target, effective samples and deviations in combined standard errors by property; of states with support."""
+def pair(seed: int) -> list[Found]:
+    """At every target, and at one farther away."""
     ladder = field([sampled(State(temperature, DENSITY, N), seed) for temperature in TEMPERATURES])
     wanted = {name: target.corresponding(N) for name, target in ASKED.items()}
     wanted |= {"farther": State(1.05, FARTHER[seed % len(FARTHER)] * DENSITY, N)}
-    found = []
+    found: list[Found] = []
     for name, state in wanted.items():
         direct = rung_properties([sampled(state, 10_000 + seed)])
-        there = _unrefused(ladder, state)
+        there, share = _unrefused(ladder, state)
         deviations = {}
         for each in NAMES:
             difference = there.properties[each] - direct[each]
             deviations[each] = difference.value / difference.standard_error
-        found.append((name, there.effective_samples, deviations))
+        found.append((name, there.effective_samples, share, deviations))
     return found
 
 
-def _unrefused(ladder, state: State) -> Reweighted:  # type: ignore[no-untyped-def]
-    """What the samples say also where they are too few."""
-    import estimators.field
-
-    estimators.field.FEWEST_SAMPLES = 0.0
-    return ladder.at(state.temperature, state.density)
+def _unrefused(ladder: Field, state: State) -> tuple[Reweighted, float]:
+    """What the samples say also where they are too few, and the share of the best rung's that survives."""
+    (solved,) = ladder.groups
+    shares = solved.seen(state.density, ladder.look).shares(state.temperature)
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setattr(group, "LEAST_SHARE", 0.0)
+        patch.setattr("estimators.field.FEWEST_SAMPLES", 0.0)
+        return ladder.at(state.temperature, state.density), max(shares)
 
 
 def coverage(deviations: list[float]) -> str:
@@ -90,22 +98,22 @@ def main() -> None:
     parser.add_argument("--pairs", type=int, default=500)
     parser.add_argument("--workers", type=int, default=2)
     options = parser.parse_args()
-    by_target: dict[str, list[tuple[float, dict[str, float]]]] = defaultdict(list)
     with ProcessPoolExecutor(options.workers) as pool:
-        for found in pool.map(pair, range(options.pairs)):
-            for name, samples, deviations in found:
-                by_target[name].append((samples, deviations))
-    print(f"{'pairs that agree within 1.96 combined errors, %':>42}  samples  {'  '.join(NAMES)}")
+        found = [each for several in pool.map(pair, range(options.pairs)) for each in several]
+    print(f"{'pairs that agree within 1.96 combined errors, %':>47}  samples  share  {'  '.join(NAMES)}")
     for name in ASKED:
-        rows = by_target[name]
-        shares = "  ".join(coverage([each[key] for _, each in rows]).rjust(len(key)) for key in NAMES)
-        print(f"{name:>42}  {np.median([samples for samples, _ in rows]):7.0f}  {shares}")
-    every = [row for rows in by_target.values() for row in rows]
+        show(name, [each for each in found if each[0] == name])
     for low, high in pairwise(BINS):
-        rows = [row for row in every if low <= row[0] < high]
+        rows = [each for each in found if low <= each[2] < high]
         if len(rows) >= 20:
-            shares = "  ".join(coverage([each[key] for _, each in rows]).rjust(len(key)) for key in NAMES)
-            print(f"{f'effective samples {low:g} to {high:g}':>42}  {len(rows):7d}  {shares}")
+            show(f"{len(rows)} of which {low:.0%} to {high:.0%} survive", rows)
+
+
+def show(title: str, rows: list[Found]) -> None:
+    """One line: medians of samples and share, coverage by property."""
+    shares = "  ".join(coverage([each[3][key] for each in rows]).rjust(len(key)) for key in NAMES)
+    samples, share = (np.median([each[k] for each in rows]) for k in (1, 2))
+    print(f"{title:>47}  {samples:7.0f}  {share:5.2f}  {shares}")
 
 
 if __name__ == "__main__":

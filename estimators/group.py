@@ -27,6 +27,7 @@ __all__ = ["Group", "Rung"]
 Floats = npt.NDArray[np.float64]
 
 METHOD = "reweighted"
+LEAST_SHARE = 0.2  # of a rung's samples; where less survives, half of the target is where the rung has no samples
 THINNED = 4096  # samples of a rung that are enough for links
 
 
@@ -72,8 +73,13 @@ class Rung:
         mean = self.mean_energy / self.temperature
         return sum(float(np.sum((self.slopes @ each - mean) ** 2)) for each in self.features) / self.samples
 
+    @property
+    def independent(self) -> float:
+        """Independent samples."""
+        return self.samples / self.inefficiency
+
     def surviving(self, temperature: float) -> float:
-        """Independent samples of the rung that survive reweighting to a temperature, at constant heat capacity C.
+        """Share of the samples that survives reweighting to a temperature, at constant heat capacity C.
 
         The partition function then goes as T^C, so that <w>^2/<w^2> = ((1 + d)^2/(1 + 2d))^-C with d = T_rung/T - 1;
         nothing survives to twice the rung's temperature.
@@ -81,8 +87,7 @@ class Rung:
         d = self.temperature / temperature - 1.0
         if 1.0 + 2.0 * d <= 0.0:
             return 0.0
-        survival = math.exp(-self.heat_capacity * (2.0 * math.log1p(d) - math.log1p(2.0 * d)))
-        return self.samples / self.inefficiency * survival
+        return math.exp(-self.heat_capacity * (2.0 * math.log1p(d) - math.log1p(2.0 * d)))
 
 
 @dataclass(frozen=True)
@@ -132,27 +137,27 @@ class Group:
     def effective_samples(self, temperature: float, kish: float) -> float:
         """Independent samples behind weights that are worth `kish`.
 
-        Beyond the outermost rungs, and at another density, at most what should survive of every rung: there the weights
-        themselves tell too much, as the heaviest are those of samples that nobody drew.
+        Beyond the outermost rungs, and at another density, at most what should survive of the rungs: there the weights
+        themselves tell too much, as the heaviest are those of samples that nobody drew. Rungs of which less than
+        LEAST_SHARE survives do not count.
         """
-        if self.elsewhere:
-            return min(kish, self._carried(temperature))
-        if self.rungs[0].temperature <= temperature <= self.rungs[-1].temperature:
+        if not self.elsewhere and self.rungs[0].temperature <= temperature <= self.rungs[-1].temperature:
             return kish
-        return min(kish, sum(rung.surviving(temperature) for rung in self.rungs))
+        shares = zip(self.rungs, self.shares(temperature), strict=True)
+        return min(kish, sum(share * rung.independent for rung, share in shares if share >= LEAST_SHARE))
 
-    def _carried(self, temperature: float) -> float:
-        """Independent samples that survive the change of the reduced potential if that is normal at every rung.
+    def shares(self, temperature: float) -> list[float]:
+        """Of each rung, what survives of its samples.
 
-        <w>^2/<w^2> is then exp(-s^2), with s its standard deviation.
+        At another density as if the change of the reduced potential were normal: <w>^2/<w^2> is then exp(-s^2), with s
+        its standard deviation.
         """
+        if not self.elsewhere:
+            return [rung.surviving(temperature) for rung in self.rungs]
         changes: dict[int, list[Floats]] = defaultdict(list)
         for run in self.runs:
             changes[run.rung].append(run.energies / temperature - self.rungs[run.rung].slopes @ run.features)
-        return sum(
-            self.rungs[rung].samples / self.rungs[rung].inefficiency * math.exp(-float(np.var(np.concatenate(each))))
-            for rung, each in changes.items()
-        )
+        return [math.exp(-float(np.var(np.concatenate(each)))) for _, each in sorted(changes.items())]
 
     def free_energies(self, constants: Floats) -> list[Estimate]:
         """F/T less that of the group's first rung.
