@@ -260,12 +260,13 @@ def test_the_bias_of_a_variance_is_removed() -> None:
 
 
 def test_temperatures_that_samples_do_not_support_are_refused() -> None:
-    """Of 4000 samples at T 1, 4000 ((1 + d)^2/(1 + 2 d))^-12, d = 1/T - 1, survive: 87 at T 1.5, 19 at T 1.6.
+    """Of samples at T 1 the share ((1 + d)^2/(1 + 2 d))^-12, d = 1/T - 1, survives: 32 % at T 1.3, 0.5 % at T 1.6.
 
-    The weights alone claim 226 at T 1.6, where the heat capacity is then too small by more than its standard error.
+    The weights alone claim 226 of 4000 at T 1.6, where the heat capacity is too small by more than its standard error.
     """
     pooled = pool([harmonic(np.random.default_rng(24), 1.0, 4000)])
-    near, far = pooled.at(1.4), pooled.at(1.6)
+    near, far = pooled.at(1.3), pooled.at(1.6)
+    assert near.effective_samples == pytest.approx(1300.0, rel=0.1)
     assert near.refused == ""
     assert set(near.properties) == set(EXACT)
     assert far.effective_samples < 50.0
