@@ -143,7 +143,7 @@ def _verdict(verdict: Verdict, reference: str, border: Border) -> dict[str, Any]
 
 
 def _summary(findings: Findings, border: Border) -> pd.DataFrame:
-    """One row a state: every headline value with its error and unit, and the least trust among them."""
+    """One row a state: every headline value with its error and unit, and the least trust in any that is there."""
     import pandas as pd
 
     rows: dict[State, dict[str, Any]] = {}
@@ -154,7 +154,8 @@ def _summary(findings: Findings, border: Border) -> pd.DataFrame:
             row |= {key: cells[key] for key in ("temperature", "temperature_unit", "density", "density_unit")}
             row |= _set_temperature(finding, border)
             row |= {"particles": finding.state.particles, "trust": "ok"}
-        row["trust"] = max(row["trust"], finding.trust, key=TRUST.index)
+        if finding.estimate is not None:
+            row["trust"] = max(row["trust"], finding.trust, key=TRUST.index)
         name = finding.property
         row |= {name: cells["value"], f"{name}_error": cells["standard_error"], f"{name}_unit": cells["unit"]}
     return pd.DataFrame(list(rows.values()))

@@ -121,6 +121,10 @@ def _set(number: int, where: str, results: Results) -> Iterator[str]:
         yield f'<p class="fine">{escape(_CURVES if methods.Setup.of(results).bath else _NO_CURVES)}</p>'
     yield from _tabled("Further properties", tables.derived(results, with_density=several))
     yield from _tabled("Comparison, value by value", "".join(tables.comparison(results)), f"{side} comparison")
+    further = tables.comparison(results, further=True)
+    if further:
+        yield "<details><summary>Comparison of further properties</summary>"
+        yield f'<div class="{side} comparison">{"".join(further)}</div></details>'
     budget = tables.budget(results, [words.heat_capacity_name(results), "pressure"])
     if budget:
         yield f"<details><summary>Uncertainty budget</summary>{budget}"

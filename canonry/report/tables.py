@@ -56,9 +56,13 @@ def derived(results: Results, *, with_density: bool = False) -> str:
     return _states(results, names, with_density) if names else ""
 
 
-def comparison(results: Results) -> list[str]:
-    """One table a reference and property: each value beside its reference, with a strip that shows the deviation."""
+def comparison(results: Results, *, further: bool = False) -> list[str]:
+    """One table a reference and property: each value beside its reference, with a strip that shows the deviation.
+
+    further : the properties that `derived` shows, rather than the main ones
+    """
     rows = trusted(results)
+    rows = rows[rows["property"].isin(_FIRST) != further]
     several = rows["density"].nunique() > 1
     found = []
     for (reference, name), own in grouped(rows, "reference", "property", sort=False):

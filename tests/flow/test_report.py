@@ -616,6 +616,19 @@ def test_residual_heat_capacity_is_not_tabled_beside_the_full_one():
     assert "Further properties" not in Page(html(replace(results, properties=rows))).text
 
 
+def test_comparisons_of_further_properties_are_folded_away():
+    results = invented()
+    further = results.verdict[results.verdict["property"] == "heat_capacity"].assign(property="sound_speed")
+    both = replace(results, verdict=pd.concat([results.verdict, further], ignore_index=True))
+    before, folded = html(both).split("Comparison of further properties", 1)
+    folded = folded.split("</details>", 1)[0]
+    assert folded.count("<caption>Speed of sound") == 1
+    assert "<caption>Speed of sound" not in before
+    assert "<caption>Heat capacity" in before
+    assert "<caption>Heat capacity" not in folded
+    assert "Comparison of further properties" not in html(results)
+
+
 def test_compared_values_with_caution_are_marked_and_explained():
     told = "Values marked † count like any other, though with caution"
     results = doubted(invented(), ("pressure", 0.9, "caution", "only about 60 effective samples"))

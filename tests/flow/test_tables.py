@@ -305,6 +305,49 @@ def test_headline_is_the_rungs_own_where_reweighting_is_refused() -> None:
     assert (own.headline, own.trust, own.reason) == (True, "caution", "31 effective samples")
 
 
+def told(own: Estimate, other: Estimate) -> dict[str, list[Finding]]:
+    """Of the first of two rungs by property, from a bulk modulus of each kind."""
+    values = {"thermal_pressure": known(50.0), "bulk_modulus": own}
+    answer = Reweighted(1.0, 800.0, values | {"bulk_modulus": other})
+    isochore = Isochore({STATES[0]: values, STATES[1]: values}, Pooled(answer), {}, 1.5)
+    every = [each for each in isochore.properties() if each.state == STATES[0]]
+    return {name: [each for each in every if each.property == name] for name in ("bulk_modulus", "thermal_expansion")}
+
+
+def test_a_quotient_by_what_may_be_zero_is_no_headline_where_another_one_is_clear() -> None:
+    """Standard errors are 1 and 4 of them are needed: 3.5 +- 1 is not clearly above zero, 5.5 +- 1 is."""
+    low, high = known(3.5), known(5.5)
+    own, other = told(low, high)["thermal_expansion"]
+    assert (own.estimate, own.headline, own.trust) == (None, False, "no")
+    assert own.reason == "the bulk modulus that it is divided by is not clearly above zero"
+    assert (other.headline, other.method, other.trust) == (True, "reweighted", "ok")
+    own, other = told(high, low)["thermal_expansion"]
+    assert (own.headline, own.method, own.trust, other.estimate, other.headline) == (True, "derived", "ok", None, False)
+    own, other = told(low, low)["thermal_expansion"]
+    assert (own.headline, other.headline, own.trust, own.estimate) == (True, False, "no", None)
+    assert [each.headline for each in told(low, low)["bulk_modulus"]] == [False, True]
+
+
+def test_changes_are_told_of_every_rung_but_the_coldest(liquid: Results) -> None:
+    """From the equation: energies over 1/T; entropy is the rest. Standard errors bounded."""
+    from reference import find
+
+    equation = find("thol-2016")
+    a, u = ({at: float(equation.derivatives(at, 0.7)[m, 0]) for at in (1.3, 1.6, 2.0)} for m in (0, 1))
+    table = liquid.properties.set_index(["property", "temperature"])
+    for at in (1.6, 2.0):
+        expected = {
+            "residual_helmholtz_change": (a[at] - a[1.3], 0.004),
+            "residual_entropy_change": (u[at] - a[at] - u[1.3] + a[1.3], 0.03),
+        }
+        for name, (value, largest) in expected.items():
+            row = table.loc[(name, at)]
+            assert (row["method"], row["headline"], row["trust"], row["unit"]) == ("reweighted", True, "ok", "k_B")
+            assert 0.0 < row["standard_error"] <= largest
+            assert abs(row["value"] - value) <= 4.5 * row["standard_error"] + 0.01 * abs(value)
+        assert (name, 1.3) not in table.index
+
+
 def test_caution_does_not_hide_that_nothing_is_to_be_trusted() -> None:
     (own,) = pressures(known(10.0, samples=20), Reweighted(1.0, 31.0, {}, "31 effective samples"))
     assert own.trust == "no"
