@@ -18,6 +18,7 @@ import numpy as np
 from canonry.findings import Finding, Findings
 from canonry.risks import guide
 from canonry.study import Study
+from canonry.units import PROPERTIES
 from estimators.estimate import Estimate
 from estimators.health.excess import too_short
 from estimators.structure import Structure
@@ -132,11 +133,10 @@ def tail(fluid: Fluid, state: State, structure: Structure | None) -> Mapping[str
     The tail's integrals with g - 1 as measured, from the cutoff to half the box; nothing is known of them where that is
     less than a shell, nor of how they depend on temperature, and so of heat capacity and thermal pressure.
     """
-    names = ("residual_energy", "residual_heat_capacity", "pressure", "compressibility_factor", "thermal_pressure")
     if not fluid.has_pairs:
         return {}
     if fluid.truncation != "corrected":
-        return dict.fromkeys((*names, "bulk_modulus"), 0.0)
+        return dict.fromkeys(PROPERTIES, 0.0)
     if structure is None or structure.r[-1] - fluid.cutoff < _SHELL:
         return {}
     beyond = structure.r > fluid.cutoff
