@@ -11,7 +11,7 @@ import numpy.typing as npt
 import pytest
 
 from estimators.errors import BadSeries
-from estimators.scattering import Scattering, scattering
+from estimators.scattering import Scattering, _fit, scattering
 from estimators.structure import pair_structure
 from reference.catalogue import find
 from sampler.fluid import ELSEWHERE, Fluid, State
@@ -104,6 +104,22 @@ def test_the_limit_of_pairs_is_found_where_no_wave_is_long_enough_to_see_it() ->
     assert np.sum(np.abs(values - 2.0) < 1.96 * errors) >= 50
     assert math.sqrt(np.mean(errors**2)) < 2.0 * scatter
     assert scatter < 0.15
+
+
+@pytest.mark.parametrize("order", [1, 2, 3])
+def test_the_slopes_of_a_fit_are_its_derivatives(order: int) -> None:
+    """Where the fit is exact; by central differences, good to their square, 1e-8."""
+    square, counts = np.arange(1.0, 8.0), np.array([3.0, 6.0, 4.0, 3.0, 12.0, 12.0, 6.0])
+    s = 1.0 / (0.4 + 0.3 * square)
+    fit = _fit(square, s, counts, order)
+    assert fit is not None
+    assert fit[0] == pytest.approx(2.5, rel=1e-9)
+    for index, slope in enumerate(fit[1]):
+        change = 1e-4 * s[index] * np.eye(len(s))[index]
+        high, low = _fit(square, s + change, counts, order), _fit(square, s - change, counts, order)
+        assert high is not None
+        assert low is not None
+        assert (high[0] - low[0]) / (2.0 * change[index]) == pytest.approx(slope, rel=1e-4, abs=1e-4)
 
 
 def sampled(state: State, cutoff: float, effort: float, frame_every: int) -> Series:
