@@ -7,6 +7,11 @@ changes faster. Its covariance is a product of one of x and one of y, each a sum
 octaves of length: a single one would be too sure that what is smooth on its length is smooth on all. Derivatives of
 exp(-d^2/2) are Hermite polynomials, so all covariances are in closed form (C. E. Rasmussen, C. K. I. Williams,
 Gaussian Processes for Machine Learning, MIT Press (2006), sections 2.7 and 9.4; from memory).
+
+The octaves' shares, y and the prior of the lengths were chosen among six and six forms by how they interpolate noisy
+data made from one Lennard-Jones equation of state, so agreement with that equation is no independent test of them.
+Near a critical point (T 1.4, density 0.2 to 0.3) heat capacities in between were off by four to five error bars in
+all.
 """
 
 from __future__ import annotations
