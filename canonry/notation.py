@@ -22,6 +22,8 @@ _PROPERTIES = {
     "grueneisen": ("Γ", "Grüneisen parameter"),
     "enthalpy": ("h", "enthalpy"),
     "residual_chemical_potential": ("μ_res", "residual chemical potential"),
+    "residual_helmholtz_energy": ("a_res", "residual Helmholtz energy"),
+    "residual_entropy": ("s_res", "residual entropy"),
     "residual_helmholtz_change": ("Δ(a_res/T)", "change of residual Helmholtz energy over temperature"),
     "residual_entropy_change": ("Δs_res", "change of residual entropy"),
 }

@@ -51,6 +51,8 @@ PROPERTIES = {
     "grueneisen": _NUMBER,
     "enthalpy": _MOLAR_ENERGY,
     "residual_chemical_potential": _MOLAR_ENERGY,
+    "residual_helmholtz_energy": _MOLAR_ENERGY,
+    "residual_entropy": _HEAT_CAPACITY,
     "residual_helmholtz_change": _HEAT_CAPACITY,
     "residual_entropy_change": _HEAT_CAPACITY,
 }

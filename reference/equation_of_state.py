@@ -13,11 +13,14 @@ import numpy.typing as npt
 import reference.coexistence as equilibrium
 from reference.errors import AboveCritical, OutOfRange, UnknownProperty
 from reference.helmholtz import Array, Equation
-from reference.properties import DIRECT, PROPERTIES, Bulk, propagate
+from reference.properties import ABSOLUTE, DIRECT, PROPERTIES, Bulk, propagate
 from reference.source import Accuracy, DescribedFluid, Source
 from reference.virial import equation_second_virial
 
 __all__ = ["Reference", "ReferenceValue"]
+
+
+_POINTS = 32  # of a quadrature over densities
 
 
 @dataclass(frozen=True)
@@ -97,6 +100,8 @@ class Reference:
         uncertainties = {
             name: 0.5 * self.accuracy[name].half_width(residuals[name], density=density) for name in DIRECT
         }
+        if property_name in ABSOLUTE:
+            uncertainties["residual_helmholtz_energy"] = self._along_isotherm(temperature, density)
         return ReferenceValue(
             value=float(complex(getattr(bulk, property_name)).real),
             uncertainty=propagate(property_name, bulk, uncertainties),
@@ -142,9 +147,25 @@ class Reference:
         """Whether a sampled fluid of this potential, cut that way, is the one the equation describes."""
         return self.fluid.same_model(truncation, cutoff)
 
+    def _along_isotherm(self, temperature: float, density: float) -> float:
+        """Uncertainty of the residual Helmholtz energy: that of the pressure's integral from the ideal gas.
+
+        a_res is the integral of (P - rho T)/rho^2; pressures are taken to be off to the same side all along.
+        """
+        points, weights = np.polynomial.legendre.leggauss(_POINTS)
+        densities = 0.5 * density * (points + 1.0)
+        pressures = densities * temperature * np.asarray(self.derivatives(temperature, densities)[0, 1], dtype=float)
+        widths = [
+            self.accuracy["pressure"].half_width(float(pressure), density=float(rho))
+            for pressure, rho in zip(pressures, densities, strict=True)
+        ]
+        return float(0.25 * density * np.sum(weights * np.array(widths) / densities**2))
+
     def _accuracy_note(self, property_name: str) -> str:
         if property_name in self.accuracy:
             return self.accuracy[property_name].origin
+        if property_name in ABSOLUTE:
+            return "propagated from the accuracy of the pressure along the isotherm, taken as off to one side all along"
         return "propagated from the accuracies of " + ", ".join(DIRECT) + ", taken as independent"
 
     def _unstable(self, temperature: float, density: float) -> bool:

@@ -7,7 +7,7 @@ from typing import Any
 
 from reference.helmholtz import Array
 
-__all__ = ["DERIVED", "DIRECT", "PROPERTIES", "Bulk", "propagate"]
+__all__ = ["ABSOLUTE", "DERIVED", "DIRECT", "PROPERTIES", "Bulk", "propagate"]
 
 DIRECT = ("residual_energy", "residual_heat_capacity", "pressure", "thermal_pressure", "bulk_modulus")
 DERIVED = (
@@ -20,7 +20,9 @@ DERIVED = (
     "grueneisen",
     "enthalpy",
 )
-PROPERTIES = DIRECT + DERIVED
+ABSOLUTE = ("residual_helmholtz_energy", "residual_entropy", "residual_chemical_potential")
+"""Those that derivatives alone do not tell: counted from the ideal gas of the same temperature and density."""
+PROPERTIES = DIRECT + DERIVED + ABSOLUTE
 _STEP = 1e-30
 
 
@@ -39,6 +41,7 @@ class Bulk:
     pressure: complex
     thermal_pressure: complex
     bulk_modulus: complex
+    residual_helmholtz_energy: complex
 
     @classmethod
     def of(cls, a: Array, *, temperature: float, density: float, ideal_heat_capacity: float) -> Bulk:
@@ -52,6 +55,7 @@ class Bulk:
             pressure=density * temperature * (1.0 + float(a[0, 1])),
             thermal_pressure=density * (1.0 + float(a[0, 1] - a[1, 1])),
             bulk_modulus=density * temperature * (1.0 + float(2.0 * a[0, 1] + a[0, 2])),
+            residual_helmholtz_energy=temperature * float(a[0, 0]),
         )
 
     @property
@@ -97,6 +101,16 @@ class Bulk:
         return ideal + self.residual_energy + self.pressure / self.density
 
     @property
+    def residual_entropy(self) -> complex:
+        """Per particle, k_B."""
+        return (self.residual_energy - self.residual_helmholtz_energy) / self.temperature
+
+    @property
+    def residual_chemical_potential(self) -> complex:
+        """Per particle, epsilon."""
+        return self.residual_helmholtz_energy + self.pressure / self.density - self.temperature
+
+    @property
     def residuals(self) -> dict[str, float]:
         """The five direct properties without their ideal-gas parts."""
         ideal = {
@@ -108,10 +122,10 @@ class Bulk:
 
 
 def propagate(name: str, bulk: Bulk, uncertainties: dict[str, float]) -> float:
-    """Uncertainty of a property from those of the direct ones, taken as independent of each other."""
+    """Uncertainty of a property from those of what it is made of, taken as independent of each other."""
     variance = 0.0
-    for direct in DIRECT:
-        stepped: dict[str, Any] = {direct: complex(getattr(bulk, direct), _STEP)}
+    for part, uncertainty in uncertainties.items():
+        stepped: dict[str, Any] = {part: complex(getattr(bulk, part), _STEP)}
         slope = complex(getattr(replace(bulk, **stepped), name)).imag / _STEP
-        variance += (slope * uncertainties[direct]) ** 2
+        variance += (slope * uncertainty) ** 2
     return float(variance**0.5)

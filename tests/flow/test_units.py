@@ -27,6 +27,8 @@ ARGON = Scale(epsilon=119.8 * Boltzmann, sigma=3.405e-10, mass=39.948 * atomic_m
         ("residual_heat_capacity", 8.314463),
         ("heat_capacity", 8.314463),
         ("isobaric_heat_capacity", 8.314463),
+        ("residual_helmholtz_energy", 0.996072),
+        ("residual_entropy", 8.314463),
         ("residual_helmholtz_change", 8.314463),
         ("residual_entropy_change", 8.314463),
         ("pressure", 41.8975),

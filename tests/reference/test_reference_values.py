@@ -55,6 +55,21 @@ def slopes(reference: Reference, name: str, temperature: float, density: float) 
     return along_temperature, along_density
 
 
+def absolute(reference: Reference, temperature: float, density: float) -> dict[str, float]:
+    """By integration of P along the isotherm, and of its slope dP/dT for the entropy, from the ideal gas."""
+    points, weights = np.polynomial.legendre.leggauss(64)
+    densities, weights = 0.5 * density * (points + 1.0), 0.5 * density * weights
+    pressures = np.array([complex_property(reference, "pressure", temperature, rho).real for rho in densities])
+    rates = np.array([slopes(reference, "pressure", temperature, rho)[0] for rho in densities])
+    helmholtz = float(weights @ (pressures / densities**2 - temperature / densities))
+    z = complex_property(reference, "pressure", temperature, density).real / (density * temperature)
+    return {
+        "residual_helmholtz_energy": helmholtz,
+        "residual_entropy": -float(weights @ (rates / densities**2 - 1.0 / densities)),
+        "residual_chemical_potential": helmholtz + temperature * (z - 1.0),
+    }
+
+
 @ALL_STATES
 @ALL_NAMES
 def test_properties_obey_thermodynamics(name: str, temperature: float, density: float) -> None:
@@ -81,6 +96,7 @@ def test_properties_obey_thermodynamics(name: str, temperature: float, density: 
         "joule_thomson": joule_thomson,
         "grueneisen": p_t / (density * e_t),
         "enthalpy": complex_property(reference, "enthalpy", temperature, density).real,
+        **absolute(reference, temperature, density),
     }
     assert set(expected) == set(PROPERTIES)
     for key, value in expected.items():
@@ -113,6 +129,19 @@ def test_dilute_gas_is_ideal() -> None:
         result = find("thol-2016").value(key, temperature=3.0, density=1e-4)
         assert result.value == pytest.approx(value, rel=1e-3)
         assert 0.0 < result.uncertainty < 1e-4
+
+
+def test_absolute_properties_are_as_uncertain_as_the_pressure_along_the_isotherm() -> None:
+    """Half the width of P, which goes as rho^2 up to density 0.1, over rho^2 and integrated: in proportion to rho."""
+    reference = find("thol-2016")
+    low = reference.value("residual_helmholtz_energy", temperature=2.0, density=0.05).uncertainty
+    high = reference.value("residual_helmholtz_energy", temperature=2.0, density=0.10).uncertainty
+    accuracy = reference.accuracy["pressure"]
+    assert high == pytest.approx(0.5 * accuracy.absolute / 0.1, rel=0.3)
+    assert high / low == pytest.approx(2.0, rel=0.2)
+    energy = reference.accuracy["residual_energy"].half_width(-1.0, density=0.1)
+    entropy = reference.value("residual_entropy", temperature=2.0, density=0.1).uncertainty
+    assert 0.5 * high < entropy < 0.5 * (high + energy)
 
 
 def test_bulk_modulus_of_the_shifted_fluid() -> None:
