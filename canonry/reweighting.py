@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections import defaultdict
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
 from functools import cached_property
@@ -20,12 +21,15 @@ from canonry.provenance import duration, rate
 from canonry.risks import doubt, guide
 from canonry.sampling import recorded
 from canonry.study import Study
+from canonry.surface import of_states
 from canonry.tables import estimates_table
 from canonry.targets import Asked, Target, targets
 from canonry.units import Kind
+from estimators.canonical import rung_properties
 from estimators.derived import derived
+from estimators.estimate import Estimate
 from estimators.field import Field, field
-from estimators.reweight import Reweighted
+from estimators.surface.helmholtz import Surface
 from estimators.trust import FEWEST_SAMPLES
 from sampler.errors import BadRequest
 from sampler.fluid import State
@@ -40,20 +44,23 @@ Floats = npt.NDArray[np.float64]
 
 _THINNED = 20_000  # samples of a rung that are enough to see where support ends
 _HALVINGS = 10  # of the way to a state without support
-_NAMES = ("residual_energy", "residual_heat_capacity", "pressure", "compressibility_factor", "thermal_pressure")
+_REFUSED = ("residual_energy", "residual_heat_capacity", "pressure", "compressibility_factor", "thermal_pressure")
 
 
 @dataclass(frozen=True)
 class Answer:
-    """What samples say at a target.
+    """What samples say at a target, at the corresponding state of the study's own fluid and in its reduced units.
 
-    found : at the corresponding state of the study's own fluid, in its reduced units
+    method : "reweighted", or "surface" where too few samples support the state and it lies between isochores
+    properties : none where refused
     refused : in words for the reader, empty where there are properties
     """
 
     target: Target
-    found: Reweighted
-    refused: str
+    method: str
+    properties: Mapping[str, Estimate]
+    effective_samples: float = 0.0
+    refused: str = ""
 
 
 def reweight(
@@ -61,6 +68,7 @@ def reweight(
     *,
     temperatures: Sequence[Asked] = (),
     densities: Sequence[Asked] = (),
+    pressure: Asked | None = None,
     epsilon: Asked | None = None,
     sigma: Asked | None = None,
     units: Kind | None = None,
@@ -69,21 +77,23 @@ def reweight(
     """Properties at every temperature and density asked for, by default those of the study; writes nothing.
 
     temperatures, densities : numbers in reduced units, or texts with a unit
+    pressure : in place of densities, which are then found, and their error is part of all error bars
     epsilon, sigma : of another fluid: multiples of the study's, or texts with a unit; its cutoff is as many sigma
-    Returns rows as in curve.csv, with epsilon and sigma (over the study's) before them; where samples do not support a
-    state, value is empty and reason says how far they reach, and what sampling the state would cost.
+    Returns rows as in curve.csv, with epsilon and sigma (over the study's) before them. Where samples do not support a
+    state, the surface through all isochores answers between them (method); elsewhere value is empty, and reason says
+    how far the samples reach and what sampling the state would cost.
     Raises UserError for what cannot be asked, BadSeries or NotSolved where samples cannot be used.
     """
+    import pandas as pd
+
     directory = Path(directory)
     study = stored(directory)
     border = Border.of(study, units)
-    wanted = targets(study, temperatures=temperatures, densities=densities, epsilon=epsilon, sigma=sigma)
-    found = list(answers(study, directory, wanted, border, watch=watch))
-    table = estimates_table((finding for answer in found for finding in _findings(study, answer)), border)
-    changes = [(a.target.epsilon, a.target.sigma) for a in found for _ in _findings(study, a)]
-    table.insert(0, "epsilon", [change for change, _ in changes])
-    table.insert(1, "sigma", [change for _, change in changes])
-    return table
+    wanted = targets(
+        study, temperatures=temperatures, densities=densities, pressure=pressure, epsilon=epsilon, sigma=sigma
+    )
+    tables = [_table(study, answer, border) for answer in answers(study, directory, wanted, border, watch=watch)]
+    return pd.concat(tables, ignore_index=True)
 
 
 def answers(
@@ -102,17 +112,22 @@ def answers(
     series = [settled(each) for state in study.states for each in recorded(study, directory, state)]
     if not series:
         raise UserError(f"{directory}: there are no samples yet; what is needed is `canonry run` or `canonry sample`")
-    sources = _Sources(series)
+    sources = _Sources(study, series, border)
     for target in wanted:
         tell(f"reweighting to {border.text('temperature', target.temperature)}")
-        yield _answer(study, directory, sources, target, border)
+        if target.pressure is None:
+            yield _answer(directory, sources, target)
+        else:
+            yield _at_pressure(sources, target)
 
 
 @dataclass(frozen=True)
 class _Sources:
-    """Settled samples, and the fields that are made of them where they are needed."""
+    """Settled samples, and the fields and the surface that are made of them where they are needed."""
 
+    study: Study
     series: Sequence[Series]
+    border: Border
 
     @cached_property
     def densities(self) -> frozenset[float]:
@@ -144,7 +159,22 @@ class _Sources:
     @cached_property
     def sparse(self) -> _Sources:
         """The same with as many samples as tell where support ends."""
-        return _Sources([each.every(-(-len(each) // _THINNED)) for each in self.series]) if self.scales else self
+        if not self.scales:
+            return self
+        return replace(self, series=[each.every(-(-len(each) // _THINNED)) for each in self.series])
+
+    @cached_property
+    def surface(self) -> Surface | None:
+        """Through what each rung says alone."""
+        by_state: dict[State, list[Series]] = defaultdict(list)
+        for each in self.series:
+            by_state[each.state].append(each)
+        return of_states(
+            {state: rung_properties(own) for state, own in by_state.items()},
+            self.study.fluid,
+            ideal_heat_capacity=self.study.ideal_heat_capacity,
+            spoken=self.border.state,
+        )
 
     @cached_property
     def changes(self) -> Mapping[State, Floats]:
@@ -164,28 +194,57 @@ def _evaluated(series: Series, density: float) -> Series:
     return series.moved(density, totals_at(series.fluid, series.frames, state=series.state, density=density))
 
 
-def _answer(study: Study, directory: Path, sources: _Sources, target: Target, border: Border) -> Answer:
+def _answer(directory: Path, sources: _Sources, target: Target) -> Answer:
+    study = sources.study
     state = target.corresponding(study.states[0].particles)
     try:
         found = sources.at(state.density).at(state.temperature, state.density)
     except BadRequest as problem:
-        return Answer(target, Reweighted(state.temperature, 0.0, {}, "refused"), f"{problem}")
+        return _between(sources, target, state) or Answer(target, "reweighted", {}, refused=str(problem))
     if not found.refused:
-        return Answer(target, found, "")
+        more = derived(
+            found.properties,
+            temperature=state.temperature,
+            density=state.density,
+            ideal_heat_capacity=study.ideal_heat_capacity,
+        )
+        return Answer(target, "reweighted", {**found.properties, **more}, found.effective_samples)
+    between = _between(sources, target, state)
+    if between is not None:
+        return between
     reached = _reached(sources, state)
     price = state.particles * (study.sampling.settling + study.sampling.steps) * study.sampling.repeats
     speed = rate(directory)
     time = f", about {duration(max(price / speed, 1.0))} here" if speed else ""
     words = [
         f"{found.effective_samples:.2g} effective samples support this state, {FEWEST_SAMPLES:.0f} are needed",
-        *([f"the nearest supported state is {_told(reached, target, border)}"] if reached else []),
+        *([f"the nearest supported state is {_told(reached, target, sources.border)}"] if reached else []),
         *(
-            [f"sampling it as the study samples its rungs costs {price:.2g} particle-steps{time}"]
-            if not study.adopted
-            else []
+            []
+            if study.adopted
+            else [f"sampling it as the study samples its rungs costs {price:.2g} particle-steps{time}"]
         ),
     ]
-    return Answer(target, found, "; ".join(words))
+    return Answer(target, "reweighted", {}, found.effective_samples, "; ".join(words))
+
+
+def _between(sources: _Sources, target: Target, state: State) -> Answer | None:
+    """What the surface says; None where it says nothing."""
+    found = sources.surface and sources.surface.at(state.temperature, state.density)
+    return Answer(target, "surface", found.properties) if found and found.properties else None
+
+
+def _at_pressure(sources: _Sources, target: Target) -> Answer:
+    if sources.surface is None:
+        raise UserError(
+            "--pressure: the density at a pressure comes from a surface through several isochores; what is needed is a "
+            "study of two densities or more and two temperatures or more, of a fluid whose pair potential is known"
+        )
+    own = (target.pressure or 0.0) / target.factor("pressure")
+    (found,) = sources.surface.isobar(own, [target.temperature / target.epsilon])
+    if not found.properties:
+        return Answer(target, "surface", {}, refused=found.refused)
+    return Answer(target.at_density(found.density), "surface", found.properties)
 
 
 def _told(state: State, target: Target, border: Border) -> str:
@@ -217,25 +276,28 @@ def _reached(sources: _Sources, wanted: State) -> State | None:
     return None if there.refused else reached
 
 
+def _table(study: Study, answer: Answer, border: Border) -> pd.DataFrame:
+    """Rows of an answer, in the units of the border."""
+    target = answer.target
+    table = estimates_table(_findings(study, answer), border)
+    if target.density is None:
+        table["density"] = np.nan
+    table.insert(0, "epsilon", target.epsilon)
+    table.insert(1, "sigma", target.sigma)
+    return table
+
+
 def _findings(study: Study, answer: Answer) -> Iterator[Finding]:
     """In the study's reduced units."""
-    target, found = answer.target, answer.found
-    own = target.corresponding(study.states[0].particles)
-    state = State(target.temperature, target.density, own.particles)
-    if answer.refused:
-        for name in _NAMES:
-            yield Finding(state, name, "reweighted", None, found.effective_samples, "no", answer.refused, headline=True)
-        return
-    more = derived(
-        found.properties,
-        temperature=own.temperature,
-        density=own.density,
-        ideal_heat_capacity=study.ideal_heat_capacity,
-    )
-    uncertain = doubt(own, guide(study.fluid)) if study.fluid.has_pairs else ""
-    for name, estimate in {**found.properties, **more}.items():
+    target, particles = answer.target, study.states[0].particles
+    state = State(target.temperature, target.density or 1.0, particles)
+    for name in _REFUSED if answer.refused else ():
+        yield Finding(state, name, answer.method, None, answer.effective_samples, "no", answer.refused, True)
+    doubtful = ""
+    if study.fluid.has_pairs and not answer.refused:
+        doubtful = doubt(target.corresponding(particles), guide(study.fluid))
+    for name, estimate in answer.properties.items():
         value = estimate * target.factor(name)
-        finding = Finding(
-            state, name, "reweighted", value, found.effective_samples, value.trust, value.reason, headline=True
-        )
-        yield finding.doubted(uncertain)
+        samples = answer.effective_samples or value.effective_samples
+        finding = Finding(state, name, answer.method, value, samples, value.trust, value.reason, True)
+        yield finding.doubted(doubtful)

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TypeVar
 
 from canonry.errors import UserError
@@ -27,16 +27,28 @@ class Target:
 
     By the law of corresponding states it is the study's own fluid at another temperature and density, with the cutoff
     the same number of sigma.
+
+    density : None where a pressure is given instead, and the density is to be found
     """
 
     temperature: float
-    density: float
+    density: float | None
     epsilon: float = 1.0
     sigma: float = 1.0
+    pressure: float | None = None
 
-    def corresponding(self, particles: int) -> State:
-        """The state of the study's own fluid."""
-        return State(self.temperature / self.epsilon, self.density * self.sigma**3, particles)
+    def corresponding(self, particles: int, density: float | None = None) -> State:
+        """The state of the study's own fluid.
+
+        density : of the study's own fluid, where the target has none
+        """
+        if density is None:
+            density = (self.density or 0.0) * self.sigma**3
+        return State(self.temperature / self.epsilon, density, particles)
+
+    def at_density(self, corresponding: float) -> Target:
+        """The same at the density that corresponds to one of the study's own fluid."""
+        return replace(self, density=corresponding / self.sigma**3)
 
     def factor(self, quantity: str) -> float:
         """What a value of the study's own fluid at the corresponding state is multiplied by."""
@@ -49,10 +61,11 @@ def targets(
     *,
     temperatures: Sequence[Asked] = (),
     densities: Sequence[Asked] = (),
+    pressure: Asked | None = None,
     epsilon: Asked | None = None,
     sigma: Asked | None = None,
 ) -> list[Target]:
-    """Every temperature asked for at every density; by default those of the study.
+    """Every temperature asked for at every density, or at the pressure; by default those of the study.
 
     A number is a reduced value (of epsilon and sigma: a multiple of the study's), a text may carry a unit.
     Raises UserError, which names the option, the value found and what is accepted.
@@ -70,6 +83,11 @@ def targets(
         name: 1.0 if value is None else _read(f"--{name}", value, _change(name, study))
         for name, value in (("epsilon", epsilon), ("sigma", sigma))
     }
+    if pressure is not None:
+        if densities:
+            raise UserError(f"--pressure {pressure}: densities are asked for too; what is accepted is either")
+        bar = _read("--pressure", pressure, quantity("pressure", -100.0, 1e4, scale))
+        return [Target(each, None, **changes, pressure=bar) for each in found["temperature"] or own["temperature"]]
     return [
         Target(temperature, density, **changes)
         for density in found["density"] or own["density"]

@@ -1,0 +1,76 @@
+"""The Helmholtz surface through all rungs of a study: values between its isochores."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from dataclasses import replace
+
+import numpy as np
+
+from canonry.findings import Finding
+from estimators.estimate import Estimate
+from estimators.surface.answer import Answer
+from estimators.surface.helmholtz import Surface, surface
+from sampler.fluid import Fluid, State
+
+__all__ = ["findings_of", "grid", "of_states"]
+
+_TEMPERATURES, _DENSITIES = 9, 13  # of the grid on which a surface is written down
+_FAR = 1e6  # sigma; where a potential that is corrected for its long range may be taken to end
+
+Properties = Mapping[str, Estimate]
+
+
+def of_states(
+    own: Mapping[State, Properties],
+    fluid: Fluid,
+    *,
+    ideal_heat_capacity: float | None,
+    spoken: Callable[[State], str],
+) -> Surface | None:
+    """The surface through what each rung says alone; None where rungs span no area or B2 is not known.
+
+    Raises BadSeries or NotSolved where no surface is found.
+    """
+    if not fluid.has_pairs or len({state.density for state in own}) < 2:
+        return None
+    particles = next(iter(own)).particles
+    return surface(
+        {(state.temperature, state.density): properties for state, properties in own.items()},
+        second_virial=lambda temperature: (1.0 - 1.0 / particles) * _second_virial(fluid, temperature),
+        ideal_heat_capacity=ideal_heat_capacity,
+        spoken=lambda temperature, density: spoken(State(temperature, density, particles)),
+    )
+
+
+def _second_virial(fluid: Fluid, temperature: float) -> float:
+    from reference.virial import pair_second_virial
+
+    whole = replace(fluid, cutoff=_FAR, truncation="plain") if fluid.truncation == "corrected" else fluid
+    cutoff = float("inf") if whole is not fluid else fluid.cutoff
+    return pair_second_virial(lambda r: float(whole.pair_energy(np.array(r))), temperature=temperature, cutoff=cutoff)
+
+
+def grid(states: Sequence[State]) -> list[tuple[float, float]]:
+    """Temperatures and densities over the range of states, even in 1/T and density, the states' own among them."""
+    temperatures = np.array([state.temperature for state in states])
+    densities = np.array([state.density for state in states])
+    along = 1.0 / np.linspace(1.0 / temperatures.max(), 1.0 / temperatures.min(), _TEMPERATURES)
+    across = np.linspace(densities.min(), densities.max(), _DENSITIES)
+    return [(float(temperature), float(density)) for density in across for temperature in along[::-1]]
+
+
+def findings_of(answer: Answer, particles: int) -> Iterator[Finding]:
+    """What a surface says at a state; nothing where it refuses."""
+    state = State(answer.temperature, answer.density, particles)
+    for name, estimate in answer.properties.items():
+        yield Finding(
+            state,
+            name,
+            "surface",
+            estimate,
+            estimate.effective_samples,
+            estimate.trust,
+            estimate.reason,
+            headline=True,
+        )
