@@ -73,7 +73,7 @@ def gamma_like(normals: Floats, shape: float) -> Floats:
 
 
 def samples_of(rng: np.random.Generator, state: State, samples: int) -> Floats:
-    """What a kernel records, (samples, 14): the energy E has the density E^(C - 1) exp(-E/T) above its ground."""
+    """What a kernel records, (samples, 15): the energy E has the density E^(C - 1) exp(-E/T) above its ground."""
     particles, temperature = state.particles, state.temperature
     normals = sum(correlated(rng, samples, each) for each in MEMORIES) / math.sqrt(len(MEMORIES))
     energy = temperature * gamma_like(np.asarray(normals), HEAT_CAPACITY * particles)
@@ -84,9 +84,9 @@ def samples_of(rng: np.random.Generator, state: State, samples: int) -> Floats:
     sixth = twelfth - 0.25 * energy
     ledger = 1e-3 * np.cumsum(rng.standard_normal(samples)) - kinetic - energy
     pairs = np.full(samples, 26.0 * particles)
-    third, momentum = kinetic[:, None] / 3.0, rng.standard_normal((samples, 3))
+    third, momentum, none = kinetic[:, None] / 3.0, rng.standard_normal((samples, 3)), np.zeros((samples, 2))
     return np.column_stack(
-        [twelfth, sixth, pairs, 2.0 * pairs, kinetic, kinetic, ledger, third, third, third, momentum, np.zeros(samples)]
+        [twelfth, sixth, pairs, 2.0 * pairs, kinetic, kinetic, ledger, third, third, third, momentum, none]
     )
 
 

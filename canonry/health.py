@@ -17,6 +17,7 @@ from canonry.findings import Check
 from canonry.isochore import Isochore
 from canonry.risks import stability
 from canonry.units import PROPERTIES, Scale
+from estimators.derived import PARTS
 from estimators.estimate import Chain, Estimate
 from estimators.health.box import box
 from estimators.health.enough import enough
@@ -45,9 +46,15 @@ _STUDY_LEVEL = 0.05  # of all statistical readings of a study together
 _SAMPLES = 100_000  # of a rung that most checks look at, at most
 _FRAMES = 120  # of a rung that are evaluated again, at most: of 300 that is 2 % of the time that sampling them took
 
+
+def _made_of(*names: str) -> tuple[str, ...]:
+    """These properties, and those that are made of any of them."""
+    return (*names, *(name for name, parts in PARTS.items() if name not in names and {*parts} & {*names}))
+
+
 _EVERY = tuple(PROPERTIES)
-_HEAT = ("residual_heat_capacity", "heat_capacity", "isobaric_heat_capacity", "sound_speed", "grueneisen")
-_MECHANICAL = ("pressure", "compressibility_factor", "thermal_pressure", "bulk_modulus", "enthalpy")
+_HEAT = _made_of("residual_heat_capacity", "heat_capacity")
+_MECHANICAL = _made_of("residual_energy", "pressure", "compressibility_factor", "thermal_pressure", "bulk_modulus")
 
 
 @dataclass(frozen=True)
@@ -121,7 +128,7 @@ CHECKS: Mapping[str, Kind] = {
         "pressure is the same from virial, g(r) and a change of volume",
         "energies, virials and positions on record contradict one another",
         "caution",
-        ("residual_energy", *_MECHANICAL),
+        _MECHANICAL,
     ),
     "heat-routes": Kind(
         "heat capacity is the same by every route that was sampled",
@@ -133,7 +140,7 @@ CHECKS: Mapping[str, Kind] = {
         "quantum effects are smaller than the error bars",
         "quantum effects left out are larger than the error bar",
         "caution",
-        ("residual_energy", "pressure", "compressibility_factor", "enthalpy"),
+        _made_of("residual_energy", "pressure", "compressibility_factor"),
     ),
 }
 """By the name of the check. "no" only where a failure leaves nothing that the values could be values of."""
