@@ -18,7 +18,7 @@ from estimators.covariance import covariance_matrix
 from estimators.estimate import Estimate, State, combine, exact
 from estimators.gamma import coarsened
 
-__all__ = ["PARTS", "derived", "helmholtz_derivatives", "in_blocks", "unclear"]
+__all__ = ["PARTS", "RULES", "Rule", "derived", "enthalpy", "helmholtz_derivatives", "in_blocks", "unclear"]
 
 BLOCKS = 2**12  # of a state: an error bar's own error, about 1/sqrt(2 BLOCKS), is no concern then
 FEWEST_BLOCKS = 128  # of a chain, however many there are
@@ -26,8 +26,12 @@ CLEAR = 4.0  # standard errors from zero: the error bar of 1/x is good to a few 
 
 
 @dataclass(frozen=True)
-class _Rule:
-    """formula : of temperature, density and the parts, in this order; divisors : parts that must be above zero"""
+class Rule:
+    """How a property follows from others.
+
+    formula : of temperature, density and the parts, in this order
+    divisors : parts that must be above zero
+    """
 
     formula: Callable[..., Any]
     parts: tuple[str, ...]
@@ -39,38 +43,38 @@ def _isobaric(t: Any, rho: Any, c_v: Any, gamma: Any, modulus: Any) -> Any:
 
 
 _THERMAL = ("heat_capacity", "thermal_pressure", "bulk_modulus")
-_RULES: Mapping[str, _Rule] = {
-    "isobaric_heat_capacity": _Rule(_isobaric, _THERMAL, ("bulk_modulus",)),
-    "thermal_expansion": _Rule(
+RULES: Mapping[str, Rule] = {
+    "isobaric_heat_capacity": Rule(_isobaric, _THERMAL, ("bulk_modulus",)),
+    "thermal_expansion": Rule(
         lambda t, rho, gamma, modulus: gamma / modulus, ("thermal_pressure", "bulk_modulus"), ("bulk_modulus",)
     ),
-    "sound_speed": _Rule(
+    "sound_speed": Rule(
         lambda t, rho, c_v, gamma, modulus: (_isobaric(t, rho, c_v, gamma, modulus) / c_v * modulus / rho) ** 0.5,
         _THERMAL,
         ("heat_capacity", "bulk_modulus"),
     ),
-    "joule_thomson": _Rule(
+    "joule_thomson": Rule(
         lambda t, rho, c_v, gamma, modulus: (
             (t * gamma / modulus - 1.0) / (rho * _isobaric(t, rho, c_v, gamma, modulus))
         ),
         _THERMAL,
         ("heat_capacity", "bulk_modulus"),
     ),
-    "grueneisen": _Rule(
+    "grueneisen": Rule(
         lambda t, rho, c_v, gamma: gamma / (rho * c_v), ("heat_capacity", "thermal_pressure"), ("heat_capacity",)
     ),
 }
-_DERIVATIVES: Mapping[str, _Rule] = {
-    "A10": _Rule(lambda t, rho, energy: energy / t, ("residual_energy",)),
-    "A01": _Rule(lambda t, rho, pressure: pressure / (rho * t) - 1.0, ("pressure",)),
-    "A20": _Rule(lambda t, rho, c_v: -c_v, ("residual_heat_capacity",)),
-    "A11": _Rule(lambda t, rho, pressure, gamma: pressure / (rho * t) - gamma / rho, ("pressure", "thermal_pressure")),
-    "A02": _Rule(
+_DERIVATIVES: Mapping[str, Rule] = {
+    "A10": Rule(lambda t, rho, energy: energy / t, ("residual_energy",)),
+    "A01": Rule(lambda t, rho, pressure: pressure / (rho * t) - 1.0, ("pressure",)),
+    "A20": Rule(lambda t, rho, c_v: -c_v, ("residual_heat_capacity",)),
+    "A11": Rule(lambda t, rho, pressure, gamma: pressure / (rho * t) - gamma / rho, ("pressure", "thermal_pressure")),
+    "A02": Rule(
         lambda t, rho, pressure, modulus: (modulus - 2.0 * pressure) / (rho * t) + 1.0, ("pressure", "bulk_modulus")
     ),
 }
 PARTS: Mapping[str, tuple[str, ...]] = {
-    **{name: rule.parts for name, rule in _RULES.items()},
+    **{name: rule.parts for name, rule in RULES.items()},
     "enthalpy": ("residual_energy", "pressure"),
 }
 """What each derived property is made of, beside temperature, density and the ideal heat capacity."""
@@ -96,13 +100,16 @@ def derived(
     """
     known = _with_heat_capacity(properties, ideal_heat_capacity)
     doubtful = unclear(known, ideal_heat_capacity=ideal_heat_capacity)
-    clear = {name: rule for name, rule in _RULES.items() if known.keys() >= set(rule.parts) and name not in doubtful}
-    if ideal_heat_capacity is not None and {"residual_energy", "pressure"} <= known.keys():
-        clear["enthalpy"] = _Rule(
-            lambda t, rho, energy, pressure: ideal_heat_capacity * t + energy + pressure / rho, PARTS["enthalpy"]
-        )
+    clear = {name: rule for name, rule in RULES.items() if known.keys() >= set(rule.parts) and name not in doubtful}
+    if ideal_heat_capacity is not None and known.keys() >= {*PARTS["enthalpy"]}:
+        clear["enthalpy"] = enthalpy(ideal_heat_capacity)
     total = {name: each for name, each in known.items() if name not in properties}
     return total | _applied(clear, known, temperature, density)
+
+
+def enthalpy(ideal_heat_capacity: float) -> Rule:
+    """With c_v of the ideal gas, k_B per particle."""
+    return Rule(lambda t, rho, energy, pressure: ideal_heat_capacity * t + energy + pressure / rho, PARTS["enthalpy"])
 
 
 def unclear(properties: Mapping[str, Estimate], *, ideal_heat_capacity: float | None) -> dict[str, str]:
@@ -116,7 +123,7 @@ def unclear(properties: Mapping[str, Estimate], *, ideal_heat_capacity: float | 
     return {
         name: f"the {divisor.replace('_', ' ')} that it is divided by is not clearly above zero"
         for divisor in near
-        for name, rule in _RULES.items()
+        for name, rule in RULES.items()
         if divisor in rule.divisors and known.keys() >= set(rule.parts)
     }
 
@@ -149,7 +156,7 @@ def _is_clear(divisor: Estimate) -> bool:
 
 
 def _applied(
-    rules: Mapping[str, _Rule], properties: Mapping[str, Estimate], temperature: float | Estimate, density: float
+    rules: Mapping[str, Rule], properties: Mapping[str, Estimate], temperature: float | Estimate, density: float
 ) -> dict[str, Estimate]:
     """The covariance of all parts is found once, from their influences over blocks."""
     needed = list(dict.fromkeys(part for rule in rules.values() for part in rule.parts))

@@ -9,6 +9,8 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
+from estimators.derived import RULES, Rule, enthalpy
+
 __all__ = ["ABSOLUTE", "DIRECT", "Formula", "Linear", "derived_properties", "linear"]
 
 Floats = npt.NDArray[np.float64]
@@ -62,29 +64,18 @@ def derived_properties(
 
     ideal_heat_capacity : c_v of the ideal gas, k_B; without it only what needs none
     """
-    t, rho = temperature, density
-    c_v_residual, pressure, gamma, modulus, energy = (
-        linear(name, temperature=t, density=rho)
-        for name in ("residual_heat_capacity", "pressure", "thermal_pressure", "bulk_modulus", "residual_energy")
-    )
-    expansion: tuple[Formula, tuple[str, ...]] = (lambda a: gamma(a) / modulus(a), ("bulk_modulus",))
-    if ideal_heat_capacity is None:
-        return {"thermal_expansion": expansion}
-    ideal = ideal_heat_capacity
+    parts: dict[str, Formula] = {name: linear(name, temperature=temperature, density=density) for name in DIRECT}
+    rules = dict(RULES)
+    found: dict[str, tuple[Formula, tuple[str, ...]]] = {}
+    if ideal_heat_capacity is not None:
+        residual, rules["enthalpy"] = parts["residual_heat_capacity"], enthalpy(ideal_heat_capacity)
+        parts["heat_capacity"] = lambda a: ideal_heat_capacity + residual(a)
+        found["heat_capacity"] = (parts["heat_capacity"], ())
 
-    def c_v(a: Any) -> Any:
-        return ideal + c_v_residual(a)
+    def follows(rule: Rule) -> Formula:
+        own = [parts[name] for name in rule.parts]
+        return lambda a: rule.formula(temperature, density, *(part(a) for part in own))
 
-    def c_p(a: Any) -> Any:
-        return c_v(a) + t * gamma(a) ** 2 / (rho * modulus(a))
-
-    both = ("heat_capacity", "bulk_modulus")
-    return {
-        "heat_capacity": (c_v, ()),
-        "isobaric_heat_capacity": (c_p, ("bulk_modulus",)),
-        "thermal_expansion": expansion,
-        "sound_speed": (lambda a: (c_p(a) / c_v(a) * modulus(a) / rho) ** 0.5, both),
-        "joule_thomson": (lambda a: (t * gamma(a) / modulus(a) - 1.0) / (rho * c_p(a)), both),
-        "grueneisen": (lambda a: gamma(a) / (rho * c_v(a)), ("heat_capacity",)),
-        "enthalpy": (lambda a: ideal * t + energy(a) + pressure(a) / rho, ()),
+    return found | {
+        name: (follows(rule), rule.divisors) for name, rule in rules.items() if parts.keys() >= set(rule.parts)
     }
