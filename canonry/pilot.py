@@ -20,9 +20,9 @@ if TYPE_CHECKING:
     from sampler.series import Series
     from sampler.store import Chain, Segment
 
-__all__ = ["Pilot", "pilot"]
+__all__ = ["WIDEST", "Pilot", "pilot"]
 
-_WIDEST = 100  # steps from record to record, at most: short runs need samples
+WIDEST = 100  # steps from record to record, at most: short runs need samples
 
 
 @dataclass(frozen=True, eq=False)
@@ -71,7 +71,7 @@ def pilot(
 
 def _short(protocol: Protocol, particles: int, particle_steps: int) -> Protocol:
     """The protocol cut down to two segments of equal length, one to settle and one to sample."""
-    record_every = min(protocol.record_every, _WIDEST)
+    record_every = min(protocol.record_every, WIDEST)
     steps = record_every * max(1, round(particle_steps / (particles * record_every)))
     return replace(protocol, record_every=record_every, frame_every=steps, equilibration=steps, steps=steps, repeats=1)
 

@@ -1,11 +1,11 @@
-"""What a study will cost and where it may go wrong, before anything is sampled."""
+"""What a study will cost, how precise it will be and where it may go wrong, before anything is sampled."""
 
 from __future__ import annotations
 
 import os
 from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
-from itertools import pairwise
+from itertools import chain, pairwise
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -13,23 +13,21 @@ import numpy as np
 import numpy.typing as npt
 
 from canonry.border import Border
-from canonry.pilot import Pilot, pilot
+from canonry.ladder import TRIAL
+from canonry.outlook import pooled_variances, predicted_overlap, shape
 from canonry.proposal import Proposal, proposals
-from canonry.risks import guide, risks
+from canonry.risks import risks
 from canonry.study import Study
+from canonry.trend import ORDERS, Trend, trends
 
 if TYPE_CHECKING:
-    from reference import Reference
     from sampler.fluid import State
 
-__all__ = ["Plan", "Rung", "plan", "predicted_overlap"]
+__all__ = ["Plan", "Rung", "plan"]
 
 Floats = npt.NDArray[np.float64]
 
-_TRIAL = 2_000_000  # particle-steps: a fifth of a second, and as much to settle
-_MOST_DENSITIES = 3  # tried
-_SPREAD = 8.0  # standard deviations
-_FINE = 24  # points a standard deviation
+_TRIAL = TRIAL
 _LEAST_OVERLAP = 0.03  # below it too few samples connect two rungs for reweighting between them
 
 
@@ -39,21 +37,23 @@ class Rung:
 
     steps : of each repeat, equilibration included
     particle_steps : of all repeats
-    overlap : predicted, with the next warmer rung at this density; None for the warmest or where no reference speaks
+    overlap : predicted, with the next warmer rung at this density; None for the warmest
+    standard_errors : predicted of the headline values, heat capacity (residual where the ideal part is not known) and
+        pressure, reduced; not a number where a pilot is too short to tell
     """
 
     state: State
     steps: int
     particle_steps: int
     overlap: float | None
+    standard_errors: Mapping[str, float]
 
 
 @dataclass(frozen=True)
 class Plan:
-    """What a study will take.
+    """What a study will take and what comes of it.
 
     seconds : wall time of the sampling on this machine with this many workers
-    guide : name of the reference behind the predicted overlaps and warnings
     bias : of the residual energy, as stated; None where no time step was asked for
     """
 
@@ -61,7 +61,6 @@ class Plan:
     repeats: int
     workers: int
     seconds: float
-    guide: str
     warnings: tuple[str, ...]
     bias: float | None = None
     proposals: tuple[Proposal, ...] = ()
@@ -87,62 +86,62 @@ def plan(
     directory : of the study, where its shifts may have been measured already
     Raises BadRequest or DivergedRun where a short run shows that the study cannot be sampled as asked.
     """
-    workers = min(workers or os.cpu_count() or 1, len(study.states) * study.sampling.repeats)
-    spoken = guide(study.fluid)
-    overlaps = {state: shared for states in study.isochores.values() for state, shared in _overlaps(states, spoken)}
-    steps = study.sampling.settling + study.sampling.steps
-    rungs = tuple(
-        Rung(state, steps, steps * state.particles * study.sampling.repeats, overlaps[state]) for state in study.states
-    )
+    threads, workers = workers, min(workers or os.cpu_count() or 1, len(study.states) * study.sampling.repeats)
+    found = trends(study, particle_steps=_trial(study), workers=threads)
+    rungs = tuple(chain.from_iterable(_rungs(study, own, found[rho]) for rho, own in study.isochores.items()))
     border = border or Border.of(study)
-    pilots = _pilots(study, workers)
     return Plan(
         rungs,
         study.sampling.repeats,
         workers,
-        seconds=_seconds(study, {state: each.seconds_per_step * steps for state, each in pilots.items()}, workers),
-        guide=spoken.name,
+        seconds=_seconds(study, found, workers),
         warnings=(*risks(study, border), *_gaps(rungs, border)),
         bias=bias,
         proposals=() if bias is None else proposals(study, bias=bias, workers=workers, directory=directory),
     )
 
 
-def predicted_overlap(
-    energies: Floats, heat_capacities: Floats, *, temperatures: Floats, particles: int
-) -> list[float]:
-    """Overlap of neighbouring rungs with equally many samples, (K - 1,), each between 0 and 1/2.
+def _trial(study: Study) -> int:
+    """Particle-steps of a pilot: no more than a rung is to have, but what a ladder was chosen by."""
+    if study.ladder is not None:
+        return _TRIAL
+    return min(_TRIAL, study.sampling.steps * study.sampling.repeats * study.states[0].particles)
 
-    energies, heat_capacities, temperatures : (K,), residual, per particle
-    The energies of a rung are taken as Gaussian with variance N T^2 c_v,res. With p_i the densities and D their sum,
-    the overlap of i and j is the integral of p_i p_j / D.
+
+def _rungs(study: Study, states: Sequence[State], trend: Trend) -> Iterator[Rung]:
+    """Those of one density."""
+    sampling, particles = study.sampling, states[0].particles
+    temperatures = np.array([state.temperature for state in states])
+    energies, heat_capacities = trend.energy(temperatures), trend.heat_capacity(temperatures)
+    overlaps = predicted_overlap(energies, heat_capacities, temperatures=temperatures, particles=particles)
+    time = sampling.steps * sampling.time_step * sampling.repeats
+    errors = _errors(trend, temperatures, particles, time=time, pooled=sampling.bath)
+    total = study.ideal_heat_capacity is not None
+    names = ("heat_capacity" if total else "residual_heat_capacity", "pressure")
+    steps = sampling.settling + sampling.steps
+    for number, state in enumerate(states):
+        own = {name: float(each[number]) for name, each in zip(names, errors, strict=True)}
+        overlap = overlaps[number] if number < len(overlaps) else None
+        yield Rung(state, steps, steps * particles * sampling.repeats, overlap, own)
+
+
+def _errors(trend: Trend, temperatures: Floats, particles: int, *, time: float, pooled: bool) -> tuple[Floats, Floats]:
+    """Standard errors of heat capacity and pressure from so long a time at each rung.
+
+    pooled : from all rungs together; else from each alone
+    Energies are taken as Gaussian. One part of the pressure follows the energy, the rest does not depend on it.
     """
-    centres = particles * energies
-    widths = np.sqrt(particles * np.maximum(heat_capacities, 1e-12)) * temperatures
-    low, high = np.min(centres - _SPREAD * widths), np.max(centres + _SPREAD * widths)
-    grid = np.linspace(low, high, int((high - low) / np.min(widths) * _FINE) + 2)
-    densities = np.exp(-0.5 * ((grid - centres[:, None]) / widths[:, None]) ** 2) / widths[:, None]
-    total = np.maximum(np.sum(densities, axis=0), 1e-300)
-    shared = np.sum(densities[:-1] * densities[1:] / total, axis=1)
-    return list(map(float, shared * (grid[1] - grid[0]) / np.sqrt(2.0 * np.pi)))
-
-
-def _overlaps(states: Sequence[State], reference: Reference) -> Iterator[tuple[State, float | None]]:
-    """Each state of one density with its overlap with the next, where the reference covers both."""
-    known = [state for state in states if not reference.covers(state.temperature, state.density)]
-    found: dict[State, float] = {}
-    if len(known) > 1:
-        values = [
-            [reference.value(name, temperature=s.temperature, density=s.density).value for s in known]
-            for name in ("residual_energy", "residual_heat_capacity")
-        ]
-        temperatures = np.array([state.temperature for state in known])
-        shared = predicted_overlap(
-            np.array(values[0]), np.array(values[1]), temperatures=temperatures, particles=known[0].particles
-        )
-        found = dict(zip(known, shared, strict=False))
-    for state, warmer in zip(states, [*states[1:], None], strict=True):
-        yield state, found.get(state) if warmer in known else None
+    heat_capacities = trend.heat_capacity(temperatures)
+    of_energy = np.array([trend.waiting(name, temperatures) for name in ORDERS]) / time
+    of_pressure = trend.waiting("pressure", temperatures) / time
+    spread, share = trend.spread(temperatures)
+    spread = spread / particles
+    if not pooled:
+        return heat_capacities * np.sqrt(2.0 * of_energy[1]), np.sqrt(spread * of_pressure)
+    energies = shape(trend.energy(temperatures), heat_capacities, temperatures=temperatures, particles=particles)
+    capacity, _, _ = pooled_variances(energies, energies, times=of_energy)
+    _, following, beside = pooled_variances(energies, energies, times=of_pressure[None])
+    return heat_capacities * np.sqrt(capacity), np.sqrt(spread * (share * following + (1.0 - share) * beside))
 
 
 def _gaps(rungs: Sequence[Rung], border: Border) -> Iterator[str]:
@@ -154,21 +153,9 @@ def _gaps(rungs: Sequence[Rung], border: Border) -> Iterator[str]:
             )
 
 
-def _pilots(study: Study, workers: int) -> Mapping[State, Pilot]:
-    """At the coldest and the warmest state of a few densities."""
-    densities = sorted(study.isochores)
-    chosen = np.linspace(0, len(densities) - 1, min(len(densities), _MOST_DENSITIES))
-    isochores = [study.isochores[densities[round(k)]] for k in chosen]
-    ends = [state for states in isochores for state in (states[0], states[-1])]
-    return pilot(study, ends, particle_steps=_TRIAL, workers=workers)
-
-
-def _seconds(study: Study, taken: Mapping[State, float], workers: int) -> float:
-    """Wall time: repeats shared among the workers, none shorter than the longest of them.
-
-    taken : seconds a repeat takes, at some of the states
-    """
-    tried = sorted({state.density for state in taken})
-    costs = [np.mean([seconds for state, seconds in taken.items() if state.density == each]) for each in tried]
-    each = [float(np.interp(state.density, tried, costs)) for state in study.states]
-    return max(max(each), sum(each) * study.sampling.repeats / workers)
+def _seconds(study: Study, found: Mapping[float, Trend], workers: int) -> float:
+    """Wall time: repeats shared among the workers, none shorter than the longest of them."""
+    sampling = study.sampling
+    steps = sampling.settling + sampling.steps
+    each = [steps * found[state.density].seconds_per_step(state.particles) for state in study.states]
+    return max(max(each), sum(each) * sampling.repeats / workers)

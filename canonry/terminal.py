@@ -46,11 +46,18 @@ def plan_text(study: Study, plan: Plan, border: Border) -> str:
     kinds: list[Kind] = ["reduced"] if study.scale is None else ["reduced", "SI"]
     borders = [Border(kind, study.scale) for kind in kinds]
     columns = [(name, each) for name in ("temperature", "density") for each in borders]
-    heads = [[name if each is borders[0] else "" for name, each in columns] + ["particle-steps", "overlap"]]
-    heads.append([unit_text(each.label(name)) for name, each in columns] + ["", "with next"])
+    errors = [*plan.rungs[0].standard_errors]
+    words = {"temperature": "T", "density": "density"}
+    heads = [
+        [words[name] if each is borders[0] else "" for name, each in columns] + ["particle-", "overlap"],
+        [unit_text(each.label(name)) for name, each in columns] + ["steps", "with next"],
+    ]
+    heads[0] += [f"± {symbol_of(name)}" for name in errors]
+    heads[1] += [unit_text(border.label(name)) for name in errors]
     body = [
         [plain(each.coordinate(name, getattr(rung.state, name))) for name, each in columns]
         + [f"{rung.particle_steps:.3g}", "-" if rung.overlap is None else f"{rung.overlap:.2f}"]
+        + [_two_digits(border.value(name, rung.standard_errors[name])) for name in errors]
         for rung in plan.rungs
     ]
     sampling, fluid = study.sampling, study.fluid
@@ -70,10 +77,14 @@ def plan_text(study: Study, plan: Plan, border: Border) -> str:
         "",
         f"Cost: {plan.particle_steps:.3g} particle-steps, about {duration(max(plan.seconds, 1.0))} of sampling with "
         f"{plan.workers} worker{'' if plan.workers == 1 else 's'} on this machine.",
-        f"Overlaps are predicted from the heat capacity of {plan.guide}.",
     ]
-    told = [*_step_texts(study, plan, border), *(f"Warning: {warning}" for warning in plan.warnings)]
+    foretold = "Overlaps and standard errors (±, of all rungs of a density together) are predicted from short runs."
+    told = [foretold, *_step_texts(study, plan, border), *(f"Warning: {warning}" for warning in plan.warnings)]
     return "\n".join([*lines, *map(wrapped, told)])
+
+
+def _two_digits(error: float) -> str:
+    return f"{error:#.2g}".removesuffix(".") if math.isfinite(error) else "-"
 
 
 def _step_texts(study: Study, plan: Plan, border: Border) -> Iterator[str]:

@@ -11,12 +11,14 @@ from scipy import integrate
 
 import canonry.plan
 import canonry.proposal
+import canonry.trend
 from canonry.border import Border
 from canonry.cli import main
 from canonry.errors import UserError
 from canonry.job import estimate, run
+from canonry.outlook import predicted_overlap
 from canonry.pilot import Pilot, pilot
-from canonry.plan import plan, predicted_overlap
+from canonry.plan import plan
 from canonry.proposal import bias_of
 from canonry.study import Study, load
 from reference import find
@@ -89,7 +91,10 @@ def test_two_rungs_alike_share_half() -> None:
 
 
 @pytest.mark.parametrize("temperatures", ["[1.2, 1.4, 1.7]", "[1.1, 1.5]"])
-def test_predicted_overlap_is_within_a_tenth_of_the_sampled_one(temperatures: str) -> None:
+def test_predicted_overlap_is_within_a_tenth_of_the_sampled_one(
+    monkeypatch: pytest.MonkeyPatch, temperatures: str
+) -> None:
+    monkeypatch.setattr(canonry.plan, "_TRIAL", 1_000_000)
     asked = study(states=f"density = 0.7\ntemperatures = {temperatures}", particles=108, cutoff=2.5)
     predicted = [rung.overlap for rung in plan(asked).rungs]
     run("study.toml", into="sampled")
@@ -112,11 +117,17 @@ def test_steps_are_those_of_the_study() -> None:
 def test_cost_is_shared_among_workers(
     monkeypatch: pytest.MonkeyPatch, workers: int, repeats: int, expected: float
 ) -> None:
-    def costs(study: Study, states: list[State], *, particle_steps: int, workers: int) -> dict[State, Pilot]:
-        return {state: replace(made, seconds_per_step=10.0 * state.density / 21_000) for state in states}
+    def costs(study: Study, states: list[State], *, particle_steps: int, workers: int | None) -> dict[State, Pilot]:
+        """A step takes time in proportion to the density, and grows with the 1.03rd power of the particles."""
+        return {
+            state: Pilot(
+                replace(made.series, state=state), 10.0 * state.density / 21_000 * (state.particles / 864) ** 1.03
+            )
+            for state in states
+        }
 
-    (made,) = pilot(study(), study().states[:1], particle_steps=2560, workers=1).values()
-    monkeypatch.setattr(canonry.plan, "pilot", costs)
+    (made,) = pilot(study(), study().states[:1], particle_steps=100_000, workers=1).values()
+    monkeypatch.setattr(canonry.trend, "pilot", costs)
     asked = study(states="points = [[1.5, 0.1], [1.5, 0.2], [1.5, 0.3]]", particles=864, repeats=repeats)
     assert plan(asked, workers=workers).seconds == pytest.approx(expected, rel=1e-9)
 
@@ -179,9 +190,10 @@ def test_rungs_too_far_apart_are_told() -> None:
     assert "hardly overlap" in warning
 
 
-def test_no_overlap_is_predicted_where_no_reference_speaks() -> None:
-    planned = plan(study(states="density = 0.7\ntemperatures = [8.5, 9.5, 10.5]"))
-    assert [rung.overlap for rung in planned.rungs] == [None, None, None]
+def test_an_overlap_is_predicted_where_no_reference_speaks() -> None:
+    planned = plan(study(states="points = [[8.5, 0.7], [9.0, 0.7], [9.0, 0.75]]"))
+    assert planned.rungs[0].overlap == pytest.approx(0.3, abs=0.2)
+    assert [rung.overlap for rung in planned.rungs[1:]] == [None, None]
 
 
 def test_warnings_come_in_the_units_of_the_study() -> None:
