@@ -2,12 +2,16 @@
 
 from __future__ import annotations
 
+from collections import defaultdict
 from collections.abc import Iterator, Sequence
 
+from canonry.attainment import words
 from canonry.border import Border
 from canonry.findings import Findings
 from canonry.risks import risks
 from canonry.study import Study
+from canonry.until import decide
+from estimators.estimate import Estimate
 from sampler.fluid import State
 
 __all__ = ["caveats"]
@@ -20,6 +24,7 @@ def caveats(study: Study, findings: Findings, border: Border) -> list[str]:
     return [
         *(study.adopted.notes if study.adopted else ()),
         *_unfinished(findings, border),
+        *_precision(study, findings, border),
         *risks(study, border),
         *_measured_temperatures(findings),
         *_acceptance(findings),
@@ -29,6 +34,18 @@ def caveats(study: Study, findings: Findings, border: Border) -> list[str]:
 def _unfinished(findings: Findings, border: Border) -> Iterator[str]:
     if findings.unfinished:
         yield f"Not all samples asked for are there yet: {_listed(findings.unfinished, border)}."
+
+
+def _precision(study: Study, findings: Findings, border: Border) -> Iterator[str]:
+    """Whether what [until] asks for is met."""
+    if study.until is None:
+        return
+    values: dict[State, dict[str, Estimate | None]] = defaultdict(dict)
+    for finding in findings.headlines:
+        values[finding.state][finding.property] = finding.estimate
+    shortest = sorted(findings.cuts, key=lambda cut: -cut.samples)
+    steps = {cut.state: cut.samples * study.sampling.record_every for cut in shortest}
+    yield words(study.until, decide(study, values, steps), border)
 
 
 def _measured_temperatures(findings: Findings) -> Iterator[str]:

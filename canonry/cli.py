@@ -113,7 +113,6 @@ def _check(study: Path, bias: str | None, workers: int | None, as_json: bool) ->
     found, directory = locate(study)
     must_sample(found, directory)
     allowed = None if bias is None else bias_of(bias, found)
-    found = _resolved(found, directory, workers)
     _tell_if_compiling()
     planned = plan(found, workers=workers, bias=allowed, directory=directory)
     lacking = left(found, directory) if continues(found, directory) else planned.particle_steps
@@ -142,7 +141,6 @@ def _run(study: Path, into: Path | None, workers: int | None, units: Any, **want
 
     found, directory = locate(study, into)
     must_sample(found, directory)
-    found = _resolved(found, directory, workers)
     border = Border.of(found, units)
     beside = asked(found, directory, **wanted)
     if is_finished(found, directory, units, beside=beside):
@@ -155,6 +153,7 @@ def _run(study: Path, into: Path | None, workers: int | None, units: Any, **want
             results = report(directory, units=units, watch=watch)
         _tell_caveats(results)
     _close(directory, "Tables and report.html")
+    _tell_precision(found, directory, border)
 
 
 @main.command("sample")
@@ -164,12 +163,12 @@ def _run(study: Path, into: Path | None, workers: int | None, units: Any, **want
 def _sample(study: Path, into: Path | None, workers: int | None) -> None:
     """Sample what a study lacks, without estimating anything."""
     from canonry.border import Border
-    from canonry.directory import locate, must_sample
+    from canonry.directory import locate
 
     found, directory = locate(study, into)
-    must_sample(found, directory)
-    found = _resolved(found, directory, workers)
-    _fill(found, directory, workers, Border.of(found))
+    border = Border.of(found)
+    _fill(found, directory, workers, border)
+    _tell_precision(found, directory, border)
     click.echo(f"{directory} holds all samples. Next: canonry run {directory}")
 
 
@@ -292,35 +291,32 @@ def _reference(name: str | None, temperatures: tuple[float, ...], densities: tup
         click.echo(json.dumps(rows, indent=1) if as_json else values_text(rows))
 
 
-def _resolved(study: Study, directory: Path, workers: int | None) -> Study:
-    """With the rungs of its ladder, chosen by a pilot where none are yet."""
-    from canonry.ladder import resolved
-
-    if study.ladder is not None and not study.ladder.is_chosen:
-        _tell_if_compiling()
-    return resolved(study, directory, workers=workers)
-
-
 def _fill(study: Study, directory: Path, workers: int | None, border: Border) -> None:
+    from canonry.attainment import announced
     from canonry.directory import claim
     from canonry.plan import plan
     from canonry.progress import display
-    from canonry.sampling import outstanding, sample
-    from canonry.terminal import left_text, plan_text
+    from canonry.sampling import sample
+    from canonry.terminal import left_text, plan_text, wrapped
+    from canonry.until import rounds
 
     claim(study, directory)
-    todo = outstanding(study, directory)
-    for path in todo.aside:
-        click.echo(f"A damaged segment is put aside as {path} and sampled again.", err=True)
-    if not todo.particle_steps:
-        return
-    _tell_if_compiling()
-    planned = plan(study, workers=workers)
-    click.echo(f"{plan_text(study, planned, border)}\n", err=True)
-    if todo.particle_steps < planned.particle_steps:
-        click.echo(left_text(directory, todo.particle_steps, planned), err=True)
-    with display(study, todo, border) as watch:
-        sample(study, directory, workers=workers, watch=watch, todo=todo)
+    for each in rounds(study, directory):
+        todo = each.todo
+        for path in todo.aside:
+            click.echo(f"A damaged segment is put aside as {path} and sampled again.", err=True)
+        if not todo.particle_steps:
+            continue
+        _tell_if_compiling()
+        if each.number == 0:
+            planned = plan(study, workers=workers)
+            click.echo(f"{plan_text(study, planned, border)}\n", err=True)
+            if todo.particle_steps < planned.particle_steps:
+                click.echo(left_text(directory, todo.particle_steps, planned), err=True)
+        else:
+            click.echo(wrapped(announced(each.number, each.shares, todo.particle_steps, border)), err=True)
+        with display(study, todo, border, round_number=each.number) as watch:
+            sample(study, directory, workers=workers, watch=watch, todo=todo)
 
 
 def _tell_if_compiling() -> None:
@@ -347,6 +343,16 @@ def _tell_caveats(results: Results) -> None:
 
     for caveat in results.caveats:
         click.echo(wrapped(f"Caveat: {caveat}"), err=True)
+
+
+def _tell_precision(study: Study, directory: Path, border: Border) -> None:
+    """Whether what [until] asks for is met, where it asks for anything."""
+    if study.until is None:
+        return
+    from canonry.attainment import outcome
+    from canonry.terminal import wrapped
+
+    click.echo(wrapped(outcome(study, directory, border)))
 
 
 def _close(directory: Path, written: str) -> None:

@@ -11,7 +11,7 @@ from canonry.errors import UserError
 from canonry.study import Study
 from canonry.study import load as load_file
 
-__all__ = ["STUDY", "claim", "continues", "held", "load", "locate", "must_sample", "stored", "write"]
+__all__ = ["STUDY", "claim", "continues", "load", "locate", "must_sample", "stored", "write"]
 
 STUDY = "study.toml"
 
@@ -94,12 +94,6 @@ def continues(study: Study, directory: Path) -> bool:
     return earlier is not None and _identity(earlier) == _identity(study)
 
 
-def held(study: Study, directory: Path) -> Study | None:
-    """The study that a directory holds, sampled or not, if it differs in nothing but what may change; else None."""
-    earlier = stored(directory) if (directory / STUDY).is_file() else None
-    return earlier if earlier is not None and _identity(earlier) == _identity(study) else None
-
-
 def _sampled(directory: Path) -> Study | None:
     """The study that the samples of a directory belong to; None where there are none."""
     there = (directory / STUDY).is_file() and any(directory.glob("rungs/*/*/segment-*.h5"))
@@ -128,7 +122,7 @@ def _check_owner(study: Study, directory: Path) -> None:
             raise UserError(
                 f"{directory}: it belongs to another study, {key} is {found[key]} there and {value} in this one; what "
                 f"is accepted is the same {key}, or another directory with --into. Steps, temperatures, densities, "
-                "points, repeats, [compare] and title may change"
+                "points, repeats, [until], [compare] and title may change"
             )
 
 

@@ -11,6 +11,7 @@ from typing import Any
 import numpy as np
 
 from canonry.adopted import doubts
+from canonry.allotment import protocols
 from canonry.beside import Rung, exactly, found, other_sizes
 from canonry.border import Border
 from canonry.errors import UserError
@@ -32,7 +33,7 @@ from sampler.forces import evaluate
 from sampler.protocol import Protocol
 from sampler.series import Series
 
-__all__ = ["findings", "settled"]
+__all__ = ["findings", "settled", "without_frames"]
 
 _BINS = 60  # of a histogram
 _CONSERVED = ("kinetic", "sampled_energy", "ledger")
@@ -80,12 +81,13 @@ def findings(study: Study, directory: Path, border: Border, *, watch: Callable[[
     tell = watch or (lambda words: None)
     rungs: list[_Rung] = []
     unfinished = []
+    asked = protocols(study, directory)
     for number, state in enumerate(study.states, start=1):
         tell(f"estimating rung {number} of {len(study.states)}{_compiling(study.sampling)}")
         rung = _rung(recorded(study, directory, state), study.scale)
         if rung is not None:
             rungs.append(rung)
-        if rung is None or not (study.adopted or rung.is_finished(study.sampling)):
+        if rung is None or not (study.adopted or rung.is_finished(asked[state])):
             unfinished.append(state)
     if not rungs:
         raise UserError(f"{directory}: there are no samples yet; what is needed is `canonry run` or `canonry sample`")
@@ -157,7 +159,7 @@ def _rung(recorded: list[Series], scale: Scale | None) -> _Rung | None:
         return None
     cut = [settled(each) for each in recorded]
     structure = pair_structure(cut, evaluate=evaluate)
-    series = [_light(each) for each in cut]
+    series = [without_frames(each) for each in cut]
     temperature = None if series[0].bath else kinetic_temperature(series)
     state = series[0].state
     state = state if temperature is None else replace(state, temperature=temperature.value)
@@ -201,8 +203,8 @@ def settled(series: Series) -> Series:
     return series.after(max(map(settled_start, told), default=0))
 
 
-def _light(series: Series) -> Series:
-    """Without frames, and with columns of its own, which do not keep in memory all that was recorded with them."""
+def without_frames(series: Series) -> Series:
+    """A series with columns of its own, which do not keep in memory all that was recorded with them."""
     own: dict[str, Any] = dict.fromkeys(
         ("kinetic_parts", "momentum", "force_square", "laplacian", "rejected", "bath_temperature")
     )

@@ -11,9 +11,8 @@ from typing import TYPE_CHECKING
 from canonry.beside import Beside, asked
 from canonry.border import Border
 from canonry.directory import locate, stored, write
-from canonry.ladder import resolved
 from canonry.results import COLUMNS
-from canonry.sampling import is_complete, sample
+from canonry.sampling import is_complete
 from canonry.study import Study
 from canonry.units import Kind
 
@@ -53,13 +52,14 @@ def run(
     constant_energy : sample them without a bath too, for the heat capacity by another route
     Raises UserError, or an error of sampler, estimators or reference, each of them also a built-in kind.
     """
+    from canonry.until import complete
+
     found, directory = locate(Path(study), None if into is None else Path(into))
     Border.of(found, units)
-    found = resolved(found, directory, workers=workers)
     beside = asked(found, directory, step_bias=step_bias, second_size=second_size, constant_energy=constant_energy)
-    sample(found, directory, workers=workers)
+    complete(found, directory, workers=workers)
     for each in beside:
-        sample(each.study, each.place, workers=workers)
+        complete(each.study, each.place, workers=workers)
     return report(directory, units=units)
 
 

@@ -34,10 +34,15 @@ Watch = Callable[["Progress"], None]
 
 
 @contextmanager
-def display(study: Study, todo: Outstanding, border: Border, stream: TextIO | None = None) -> Iterator[Watch]:
-    """A watcher for the sampling: a live table on a terminal, else a line now and then; by default on stderr."""
+def display(
+    study: Study, todo: Outstanding, border: Border, stream: TextIO | None = None, *, round_number: int = 0
+) -> Iterator[Watch]:
+    """A watcher for the sampling: a live table on a terminal, else a line now and then; by default on stderr.
+
+    round_number : under [until], of the rounds beyond what the study asks of all rungs
+    """
     stream = stream or sys.stderr
-    tally = _Tally(study, todo, border)
+    tally = _Tally(study, todo, border, round_number)
     if stream.isatty():
         from rich.console import Console
         from rich.live import Live
@@ -60,8 +65,9 @@ def display(study: Study, todo: Outstanding, border: Border, stream: TextIO | No
 class _Tally:
     """How far each rung is, and what its samples say so far."""
 
-    def __init__(self, study: Study, todo: Outstanding, border: Border) -> None:
+    def __init__(self, study: Study, todo: Outstanding, border: Border, round_number: int = 0) -> None:
         self._study, self._border = study, border
+        self._what = f"sampling round {round_number}" if round_number else "sampling"
         self._chains: dict[State, list[Chain]] = defaultdict(list)
         self._whole: dict[State, int] = defaultdict(int)
         self._lacking: dict[State, int] = defaultdict(int)
@@ -124,7 +130,7 @@ class _Tally:
     def line(self) -> str:
         """One line on the whole."""
         whole = sum(self._whole.values())
-        return f"sampling {100 * (whole - self.left) / whole:.0f} %: {self._remaining()}"
+        return f"{self._what} {100 * (whole - self.left) / whole:.0f} %: {self._remaining()}"
 
     def table(self) -> Table:
         """One row a rung."""

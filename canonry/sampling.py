@@ -9,6 +9,7 @@ from datetime import UTC, datetime
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+from canonry.allotment import is_settled, protocols
 from canonry.directory import STUDY, claim
 from canonry.study import Study
 
@@ -39,11 +40,14 @@ class Outstanding:
 
 
 def outstanding(study: Study, directory: Path) -> Outstanding:
-    """What is missing of a study; damaged segments are put aside. Raises ForeignDirectory."""
-    from sampler.ladder import chains, unfinished
+    """What is missing of a study, and of the rounds decided under [until]; damaged segments are put aside.
+
+    Raises ForeignDirectory.
+    """
+    from sampler.ladder import unfinished
 
     work, aside = [], []
-    for chain in chains(directory, study.fluid, study.states, study.sampling):
+    for chain in _chains(study, directory, study.states):
         missing, damaged = unfinished(chain)
         work.append((chain, missing))
         aside += damaged
@@ -52,9 +56,7 @@ def outstanding(study: Study, directory: Path) -> Outstanding:
 
 def left(study: Study, directory: Path) -> int:
     """Particle-steps that a directory lacks; writes nothing, and reads the last segment of each repeat only."""
-    from sampler.ladder import chains
-
-    work = chains(directory, study.fluid, study.states, study.sampling)
+    work = _chains(study, directory, study.states)
     return Outstanding(tuple((chain, _lacking(chain)) for chain in work), ()).particle_steps
 
 
@@ -68,6 +70,7 @@ def sample(
 ) -> Outstanding:
     """Sample what a study directory lacks, and make it the study's if it is new; returns what was lacking.
 
+    One round under [until], see `canonry.until.rounds`.
     workers : threads, by default one for every core; the samples do not depend on it
     watch : called after every segment
     Raises UserError if the directory belongs to another study, DivergedRun, OSError; finished segments stay.
@@ -97,33 +100,37 @@ def sample(
 def recorded(study: Study, directory: Path, state: State) -> list[Series]:
     """The repeats of one rung as far as they are there, none longer than the study asks; empty ones left out."""
     from canonry.adopted import load as load_adopted
-    from sampler.ladder import chains, load
+    from sampler.ladder import load
 
     if study.adopted is not None:
         return load_adopted(study, directory, state)
-    series = [load(chain) for chain in chains(directory, study.fluid, [state], study.sampling)]
+    series = [load(chain) for chain in _chains(study, directory, [state])]
     return [each for each in series if len(each)]
 
 
 def is_complete(study: Study, directory: Path, results: Sequence[str]) -> bool:
-    """Whether a directory holds all of a study, and result files newer than that.
+    """Whether a directory holds all of a study, with no round of [until] to come, and result files newer than that.
 
     Looks at file times and at the last segment of each repeat; nothing is sampled or checked in full.
     """
-    from sampler.store import Chain
-
     toml = directory / STUDY
     made = [directory / name for name in results]
     if not all(file.exists() for file in [toml, *made]) or toml.read_text(encoding="utf-8") != study.to_toml():
         return False
     oldest = min(file.stat().st_mtime_ns for file in made)
-    for state in study.states:
-        for repeat in range(study.sampling.repeats):
-            chain = Chain(directory, study.fluid, state, study.sampling, repeat)
-            paths = [chain.path(index) for index in range(len(chain.segments))]
-            if _lacking(chain) or any(path.stat().st_mtime_ns > oldest for path in paths):
-                return False
-    return toml.stat().st_mtime_ns <= oldest
+    for chain in _chains(study, directory, study.states):
+        paths = [chain.path(index) for index in range(len(chain.segments))]
+        if _lacking(chain) or any(path.stat().st_mtime_ns > oldest for path in paths):
+            return False
+    return toml.stat().st_mtime_ns <= oldest and is_settled(study, directory)
+
+
+def _chains(study: Study, directory: Path, states: Sequence[State]) -> list[Chain]:
+    """Every repeat of some rungs, each as long as it is asked to be."""
+    from sampler.ladder import chains
+
+    asked = protocols(study, directory)
+    return [chain for state in states for chain in chains(directory, study.fluid, [state], asked[state])]
 
 
 def _lacking(chain: Chain) -> list[int]:

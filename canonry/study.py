@@ -9,14 +9,13 @@ from pathlib import Path
 from typing import get_args
 
 from canonry.keys import Reader, Table, choice, line, one_or_more, open_table, parameter, quantity, whole
-from canonry.quantities import NotAccepted, percent
-from canonry.temperatures import Ladder, temperature, temperatures
+from canonry.quantities import NotAccepted, percent, rounded
 from canonry.units import PROPERTIES, Kind, Scale
 from canonry.writing import study_text
 from sampler.fluid import ELSEWHERE, Fluid, State, Truncation
 from sampler.protocol import Precision, Protocol, Scheme
 
-__all__ = ["COMPARED", "Adopted", "Compare", "Study", "Tolerance", "load", "study_of"]
+__all__ = ["COMPARED", "Adopted", "Compare", "Study", "Tolerance", "Until", "load", "study_of"]
 
 COMPARED = (
     "residual_energy",
@@ -33,6 +32,8 @@ COMPARED = (
     "grueneisen",
     "enthalpy",
 )
+_WITH_IDEAL = ("heat_capacity", "isobaric_heat_capacity", "sound_speed", "joule_thomson", "grueneisen", "enthalpy")
+_LONGEST = 20  # times `steps`, under [until] where the file does not say
 _SMALLEST_CUTOFF = 1.0  # sigma
 _LIQUID = 0.5  # sigma^-3: at and above this density the defaults are those of a liquid
 _CUTOFFS = (5.0, 3.0)  # sigma, defaults of a gas and of a liquid
@@ -41,10 +42,15 @@ _FRICTIONS = (1.0, 2.0)
 
 @dataclass(frozen=True)
 class Tolerance:
-    """A difference that does not matter: a fraction of the reference value, or a reduced value."""
+    """A difference or an error that does not matter: a fraction of the value it is held against, or a reduced value."""
 
     value: float
     relative: bool
+
+    @property
+    def text(self) -> str:
+        """As a study file in reduced units has it: '1 %' or '0.01'."""
+        return f"{self.value * 100:.12g} %" if self.relative else repr(self.value)
 
 
 @dataclass(frozen=True)
@@ -53,6 +59,17 @@ class Compare:
 
     against: tuple[str, ...] = ()
     tolerance: Mapping[str, Tolerance] = field(default_factory=dict)
+
+
+@dataclass(frozen=True)
+class Until:
+    """Sampling goes on until the standard errors of the headline values of every rung are within these limits.
+
+    steps_at_most : of each repeat, after equilibration
+    """
+
+    limits: Mapping[str, Tolerance]
+    steps_at_most: int
 
 
 @dataclass(frozen=True)
@@ -71,8 +88,6 @@ class Study:
     scale : SI size of the reduced units, None in a study that has none
     ideal_heat_capacity : c_v of the ideal gas, k_B per particle; None when the file says it is unknown
     states : every rung, by density, then by temperature
-    ladder : what range the rungs are to cover and how they are to overlap, where that chooses them; see
-        `canonry.ladder.resolved`
     sampling : how samples are taken; of no meaning where they were adopted
     """
 
@@ -85,7 +100,7 @@ class Study:
     sampling: Protocol
     compare: Compare
     adopted: Adopted | None = None
-    ladder: Ladder | None = None
+    until: Until | None = None
 
     @property
     def epsilon(self) -> float | None:
@@ -123,37 +138,39 @@ def load(path: str | Path, *, earlier: Study | None = None) -> Study:
 
 def study_of(top: Table, *, earlier: Study | None = None) -> Study:
     """The study that the content of a file asks for; see `load`."""
-    top.only(("title", "fluid", "state", "sampling", "compare", "adopted"), later=("until",))
+    top.only(("title", "fluid", "state", "sampling", "compare", "adopted", "until"))
     adopted = _adopted(top)
     fluid = top.table("fluid").only(
         ("potential", "epsilon", "sigma", "mass", "cutoff", "truncation", "ideal_heat_capacity")
     )
     scale = _scale(fluid)
-    state = top.table("state")
-    states, ladder = _states(state, scale) if adopted is None else (_adopted_states(state, scale), None)
+    states = _states(top.table("state"), scale) if adopted is None else _adopted_states(top.table("state"), scale)
     cutoff = _default(_CUTOFFS, states, earlier.fluid.cutoff if earlier else None)
     sampled = _fluid(fluid, scale, cutoff, states, adopted=adopted is not None)
+    sampling = _sampling(
+        top.table("sampling"), scale, _default(_FRICTIONS, states, earlier.sampling.friction if earlier else None)
+    )
+    ideal_heat_capacity = _ideal_heat_capacity(fluid, scale)
     return Study(
         title=top.read("title", line, "".join(filter(str.isprintable, Path(top.file).stem))[:200].strip() or "study"),
-        units=_kind(state),
+        units=_kind(top.table("state")),
         fluid=sampled,
         scale=scale,
-        ideal_heat_capacity=_ideal_heat_capacity(fluid, scale),
+        ideal_heat_capacity=ideal_heat_capacity,
         states=states,
-        sampling=_sampling(
-            top.table("sampling"), scale, _default(_FRICTIONS, states, earlier.sampling.friction if earlier else None)
-        ),
+        sampling=sampling,
         compare=_compare(top.table("compare"), scale, sampled),
         adopted=adopted,
-        ladder=ladder,
+        until=_until(top, scale, sampling, total=ideal_heat_capacity is not None),
     )
 
 
 def _adopted(top: Table) -> Adopted | None:
     if "adopted" not in top:
         return None
-    if "sampling" in top:
-        raise top.refusal("sampling", "the samples of this study were adopted; what is accepted is no such table")
+    for name in ("sampling", "until"):
+        if name in top:
+            raise top.refusal(name, "the samples of this study were adopted; what is accepted is no such table")
     table = top.table("adopted").only(("source", "notes"))
     notes = () if table.content.get("notes", []) == [] else table.read("notes", one_or_more(_sentence))
     return Adopted(table.read("source", line), notes)
@@ -203,11 +220,9 @@ def _scale(table: Table) -> Scale | None:
     )
 
 
-def _states(table: Table, scale: Scale | None) -> tuple[tuple[State, ...], Ladder | None]:
-    """The states, and the ladder they are of where a pilot chooses its rungs."""
+def _states(table: Table, scale: Scale | None) -> tuple[State, ...]:
     table.only(("density", "temperatures", "points", "particles"))
     particles = table.read("particles", whole(2, 10_000_000), 500)
-    ladder = None
     if "points" in table:
         for name in ("density", "temperatures"):
             if name in table:
@@ -215,10 +230,12 @@ def _states(table: Table, scale: Scale | None) -> tuple[tuple[State, ...], Ladde
         points = table.read("points", one_or_more(_point(scale)))
     else:
         densities = table.read("density", one_or_more(_density(scale)))
-        rungs, ladder = temperatures(table, scale, densities=len(densities))
-        points = tuple((each, density) for density, own in zip(densities, rungs, strict=True) for each in own)
-    states = (State(*point, particles) for point in sorted(points, key=lambda point: (point[1], point[0])))
-    return tuple(states), ladder
+        points = tuple((temperature, density) for density in densities for temperature in _temperatures(table, scale))
+    return tuple(State(*point, particles) for point in sorted(points, key=lambda point: (point[1], point[0])))
+
+
+def _temperature(scale: Scale | None) -> Reader[float]:
+    return quantity("temperature", 0.01, 100.0, scale)
 
 
 def _density(scale: Scale | None) -> Reader[float]:
@@ -229,9 +246,23 @@ def _point(scale: Scale | None) -> Reader[tuple[float, float]]:
     def read(value: object) -> tuple[float, float]:
         if not (isinstance(value, list) and len(value) == 2):
             raise NotAccepted("what is needed is a pair [temperature, density]")
-        return temperature(scale)(value[0]), _density(scale)(value[1])
+        return _temperature(scale)(value[0]), _density(scale)(value[1])
 
     return read
+
+
+def _temperatures(table: Table, scale: Scale | None) -> tuple[float, ...]:
+    """A list as it stands, or from, to and rungs: evenly spaced in 1/T, so that neighbours overlap about equally."""
+    if not isinstance(table.content.get("temperatures"), dict):
+        return table.read("temperatures", one_or_more(_temperature(scale)))
+    ladder = table.table("temperatures").only(("from", "to", "rungs"), later=("overlap",))
+    first, last = (ladder.read(name, _temperature(scale)) for name in ("from", "to"))
+    rungs = ladder.read("rungs", whole(2, 1000))
+    shares = (k / (rungs - 1) for k in range(rungs))
+    temperatures = tuple(rounded(1.0 / ((1.0 - share) / first + share / last)) for share in shares)
+    if len(set(temperatures)) < rungs:
+        raise ladder.refusal("to", "too close to from; what is needed are different temperatures for all rungs")
+    return temperatures
 
 
 def _kind(table: Table) -> Kind:
@@ -316,6 +347,26 @@ def _compare(table: Table, scale: Scale | None, fluid: Fluid) -> Compare:
         against=_against(table, fluid),
         tolerance={name: tolerance.read(name, _tolerance(name, scale)) for name in tolerance.content},
     )
+
+
+def _until(top: Table, scale: Scale | None, sampling: Protocol, *, total: bool) -> Until | None:
+    """total : whether the ideal part of the heat capacity is known"""
+    if "until" not in top:
+        return None
+    table = top.table("until").only(
+        (*COMPARED, "steps_at_most"), later=[name for name in PROPERTIES if name not in COMPARED]
+    )
+    limits = {name: table.read(name, _tolerance(name, scale)) for name in COMPARED if name in table}
+    if not limits:
+        raise top.refusal("until", 'what is needed is a property and its largest error, such as heat_capacity = "1 %"')
+    for name in limits:
+        if name in _WITH_IDEAL and not total:
+            raise table.refusal(name, 'it needs fluid.ideal_heat_capacity, which is "unknown"')
+    steps, every = sampling.steps, sampling.record_every
+    most = table.read("steps_at_most", whole(steps, 10**14), _LONGEST * steps)
+    if most % every:
+        raise table.refusal("steps_at_most", f"what is needed is a multiple of record_every, which is {every}")
+    return Until(limits, most)
 
 
 def _against(table: Table, fluid: Fluid) -> tuple[str, ...]:

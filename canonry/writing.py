@@ -12,7 +12,6 @@ from canonry.units import UNITS
 
 if TYPE_CHECKING:
     from canonry.study import Study, Tolerance
-    from canonry.temperatures import Ladder
 
 __all__ = ["study_text"]
 
@@ -37,6 +36,7 @@ def study_text(study: Study) -> str:
             "\n[state]",
             *_states(study),
             *_origin(study),
+            *_until(study),
             "\n[compare]",
             f"against = [{', '.join(map(_quoted, study.compare.against))}]",
             f"tolerance = {{ {tolerances} }}" if tolerances else "tolerance = {}",
@@ -66,27 +66,17 @@ def _states(study: Study) -> list[str]:
     temperature, density = _writer(study, "temperature"), _writer(study, "density")
     ladders = {rho: [state.temperature for state in states] for rho, states in study.isochores.items()}
     first = next(iter(ladders.values()))
-    if study.ladder is not None or (study.adopted is None and all(ladder == first for ladder in ladders.values())):
+    if study.adopted is None and all(ladder == first for ladder in ladders.values()):
         densities = ", ".join(map(density, ladders))
-        listed = [f"[{', '.join(map(temperature, ladder))}]" for ladder in ladders.values()]
         lines = [
             f"density = {densities if len(ladders) == 1 else f'[{densities}]'}",
-            f"temperatures = {listed[0] if study.ladder is None else _ladder(study.ladder, temperature, listed)}",
+            f"temperatures = [{', '.join(map(temperature, first))}]",
         ]
     else:
         pairs = (f"[{temperature(state.temperature)}, {density(state.density)}]" for state in study.states)
         lines = [f"points = [{', '.join(pairs)}]"]
     counts = [state.particles for state in study.states]
     return [*lines, f"particles = {counts[0] if len({*counts}) == 1 else counts}"]
-
-
-def _ladder(ladder: Ladder, temperature: Callable[[float], str], listed: list[str]) -> str:
-    """What was asked for, and the temperatures chosen for each density."""
-    asked = f"from = {temperature(ladder.start)}, to = {temperature(ladder.end)}, overlap = {ladder.overlap!r}"
-    if not ladder.is_chosen:
-        return f"{{ {asked} }}"
-    chosen = listed[0] if len(listed) == 1 else f"[{', '.join(listed)}]"
-    return f"{{ {asked}, chosen = {chosen} }}"
 
 
 def _writer(study: Study, quantity: str) -> Callable[[float], str]:
@@ -113,5 +103,12 @@ def _sampling(study: Study) -> list[str]:
     return [f"{name} = {_quoted(value) if isinstance(value, str) else repr(value)}" for name, value in values]
 
 
+def _until(study: Study) -> list[str]:
+    if study.until is None:
+        return []
+    limits = (f"{name} = {_tolerance(study, name, limit)}" for name, limit in study.until.limits.items())
+    return ["\n[until]", *limits, f"steps_at_most = {study.until.steps_at_most}"]
+
+
 def _tolerance(study: Study, name: str, tolerance: Tolerance) -> str:
-    return f'"{tolerance.value * 100:.12g} %"' if tolerance.relative else _writer(study, name)(tolerance.value)
+    return _quoted(tolerance.text) if tolerance.relative else _writer(study, name)(tolerance.value)

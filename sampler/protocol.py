@@ -74,12 +74,16 @@ class Protocol:
         """What may not change while samples are added."""
         return {name: value for name, value in asdict(self).items() if name not in ("steps", "repeats")}
 
+    def segment_length(self, particles: int) -> int:
+        """Steps of every segment but the last of the settling and the last of all."""
+        return self.frame_every * max(1, round(_SEGMENT / (particles * self.frame_every)))
+
     def segments(self, particles: int) -> list[tuple[int, int]]:
         """First and last step of each segment of one repeat; settling and sampling do not share one.
 
         Segments have one length, which depends on nothing that may grow later; only the last may be shorter.
         """
-        length = self.frame_every * max(1, round(_SEGMENT / (particles * self.frame_every)))
+        length = self.segment_length(particles)
         bounds = []
         for begin, end in ((0, self.settling), (self.settling, self.settling + self.steps)):
             bounds += [(first, min(first + length, end)) for first in range(begin, end, length)]

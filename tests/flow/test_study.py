@@ -92,6 +92,19 @@ def test_a_density_below_half_is_a_gas(write: Writer) -> None:
     assert (study.fluid.cutoff, study.sampling.friction) == (5.0, 1.0)
 
 
+def test_until_is_a_share_of_the_value_or_an_error(write: Writer) -> None:
+    study = load(write(COOLANT + '[until]\npressure = "0.5 MPa"\nheat_capacity = "1 %"\nenthalpy = 0.01\n'))
+    assert study.until is not None
+    assert study.until.steps_at_most == 20 * 200_000
+    assert study.until.limits == {
+        "heat_capacity": Tolerance(0.01, relative=True),
+        "pressure": study.compare.tolerance["pressure"],
+        "enthalpy": Tolerance(0.01, relative=False),
+    }
+    assert load(write(study.to_toml())) == study
+    assert load(write(COOLANT)).until is None
+
+
 def test_units_are_those_of_the_states(write: Writer) -> None:
     reduced = COOLANT.replace('["1.36 g/cm3", "1300 kg/m3"]', "0.8").replace('["108 K", "120 K"]', "0.9")
     assert load(write(reduced)).units == "reduced"
@@ -167,12 +180,6 @@ VARIANTS = [
     COOLANT,
     COOLANT.replace("39.948 u", "39.948 g/mol").replace("119.8 K", "0.996 kJ/mol"),
     COOLANT.replace('["108 K", "120 K"]', '{ from = "108 K", to = "150 K", rungs = 7 }'),
-    COOLANT.replace('["108 K", "120 K"]', '{ from = "108 K", to = "150 K", overlap = 0.2 }'),
-    SHORTEST.replace("[1.0]", "{ from = 1.0, to = 1.2, overlap = 0.2, chosen = [0.98, 1.1, 1.23] }"),
-    COOLANT.replace(
-        '["108 K", "120 K"]',
-        '{ from = "108 K", to = 1.2, overlap = 0.2, chosen = [["106 K", "130 K", "150 K"], ["105 K", "145 K"]] }',
-    ),
     COOLANT.replace('["1.36 g/cm3", "1300 kg/m3"]', '"33.3 mol/L"'),
     COOLANT.replace('["1.36 g/cm3", "1300 kg/m3"]', "2.0").replace("3.405", "3.4").replace("39.948 u", "40 u"),
     SHORTEST.replace("[state]", 'truncation = "shifted"\ncutoff = 2.5\n[state]') + '[compare]\nagainst = "thol-2015"',
@@ -221,35 +228,12 @@ REFUSED = [
     ("[fluid]", '"a b" = 1\n[fluid]', r'"a b" = 1: unknown key'),
     ("[state]", "[sampling]\nsed = 2\n[state]", r"sampling\.sed = 2: unknown key; did you mean seed\?"),
     # keys of later versions
-    ("[state]", "[until]\npressure = 0.01\n[state]", r"until = .*not available in this version"),
-    # a ladder that a pilot is to choose
     (
-        "[1.0]",
-        "{ from = 1, to = 2, overlap = 0.6 }",
-        r"temperatures\.overlap = 0\.6: what is needed is a number from 0\.05",
+        "[state]",
+        "[until]\nresidual_entropy_change = 0.1\n[state]",
+        r"until\.residual_entropy_change = 0\.1: not available",
     ),
-    (
-        "[1.0]",
-        "{ from = 1, to = 2, overlap = 0.04 }",
-        r"temperatures\.overlap = 0\.04: what is needed is a number from",
-    ),
-    ("[1.0]", "{ from = 2, to = 2, overlap = 0.2 }", r"temperatures\.to = 2: what is needed is a higher temperature"),
-    ("[1.0]", "{ from = 1, to = 2, overlap = 0.2, rungs = 3 }", r"temperatures\.rungs = 3: overlap is given too"),
-    (
-        "[1.0]",
-        "{ from = 1, to = 2, rungs = 3, chosen = [1] }",
-        r"temperatures\.chosen = \[1\]: these go with an overlap",
-    ),
-    (
-        "[1.0]",
-        "{ from = 1, to = 2, overlap = 0.2, chosen = 1 }",
-        r"chosen = 1: what is needed is a list of temperatures",
-    ),
-    (
-        "0.8\ntemperatures = [1.0]",
-        "[0.8, 0.7]\ntemperatures = { from = 1, to = 2, overlap = 0.2, chosen = [1, 2] }",
-        r"chosen = \[1, 2\]: what is needed is 2 lists, one for each density",
-    ),
+    ("[1.0]", "{ from = 1, to = 2, overlap = 0.2 }", r"state\.temperatures\.overlap = 0\.2: not available"),
     (
         "[state]",
         "[compare.tolerance]\nresidual_entropy_change = 0.1\n[state]",
@@ -316,6 +300,30 @@ REFUSED = [
     ("0.8", "0.8\nparticles = 4", r"what is accepted is state\.particles of at least 173"),
     ("[state]", "[sampling]\nframe_every = 25\n[state]", r"frame_every = 25: what is needed is a multiple of"),
     ("[state]", "[sampling]\nsteps = 101\n[state]", r"steps = 101: .* multiple of record_every, which is 10"),
+    # until
+    ("[state]", "[until]\n[state]", r"until = \{  \}: what is needed is a property and its largest error, such as"),
+    ("[fluid]", "until = 3\n[fluid]", r"until = 3: what is needed is a table"),
+    ("[state]", "[until]\npresure = 0.1\n[state]", r"until\.presure = 0\.1: unknown key; did you mean pressure\?"),
+    ("[state]", "[until]\npressure = 0\n[state]", r"until\.pressure = 0: what is needed is a number from 1e-12"),
+    ("[state]", "[until]\npressure = nan\n[state]", r"until\.pressure = nan: what is needed is a number"),
+    ("[state]", '[until]\npressure = "0 %"\n[state]', r"until\.pressure = \"0 %\": what is needed is a share"),
+    ("[state]", '[until]\npressure = "1 MPa"\n[state]', r"until\.pressure = \"1 MPa\": a value with a unit needs"),
+    ("[state]", SI + '[until]\npressure = "1 K"\n[state]', r"until\.pressure = \"1 K\": 'K' is not a unit of pressure"),
+    (
+        "[state]",
+        'ideal_heat_capacity = "unknown"\n[until]\nsound_speed = "1 %"\n[state]',
+        r'until\.sound_speed = "1 %": it needs fluid\.ideal_heat_capacity, which is "unknown"',
+    ),
+    (
+        "[state]",
+        "[until]\npressure = 0.1\nsteps_at_most = 199990\n[state]",
+        r"until\.steps_at_most = 199990: what is needed is a whole number from 200000 to",
+    ),
+    (
+        "[state]",
+        "[until]\npressure = 0.1\nsteps_at_most = 300001\n[state]",
+        r"steps_at_most = 300001: what is needed is a multiple of record_every, which is 10",
+    ),
     # references
     ("[state]", '[compare]\nagainst = "thol-2061"\n[state]', r'against = "thol-2061": did you mean "thol-2016"\?'),
     ("[state]", '[compare]\nagainst = "thol-2015"\n[state]', r"another fluid than .* this one is thol-2016"),
@@ -362,7 +370,8 @@ KEYS = {
         *("equilibration", "steps", "record_every", "frame_every"),
     ),
     "compare": ("against", "tolerance"),
-    "state.temperatures": ("from", "to", "rungs", "overlap", "chosen"),
+    "until": (*COMPARED, "steps_at_most", "residual_entropy_change"),
+    "state.temperatures": ("from", "to", "rungs", "overlap"),
     "compare.tolerance": (*COMPARED, "residual_chemical_potential"),
 }
 NUMBERS = st.integers() | st.floats() | st.sampled_from([0, 1, 2, 3, 0.8, 1.0, 1e-300, 1e308, 10**400, -0.0])
@@ -429,6 +438,7 @@ BASES: list[dict[str, dict[str, object]]] = [
         "fluid": {"potential": "lennard-jones", "epsilon": "120 K", "sigma": "3.4 angstrom", "mass": "40 u"},
         "state": {"density": "1.3 g/cm3", "temperatures": ["120 K"]},
         "compare": {"against": "thol-2016", "tolerance": {"pressure": "2 MPa"}},
+        "until": {"heat_capacity": "1 %", "pressure": "1 MPa"},
     },
 ]
 PLACES = st.sampled_from([(table, key) for table, keys in KEYS.items() for key in keys])
