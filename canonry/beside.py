@@ -174,7 +174,7 @@ def other_sizes(beside: Iterable[Beside]) -> dict[State, Properties]:
 
 def _ends(study: Study) -> Study:
     ends = {state: None for states in study.isochores.values() for state in (states[0], states[-1])}
-    return replace(study, states=tuple(ends), until=None)
+    return replace(study, states=tuple(ends), ladder=None, until=None)
 
 
 def _exact(study: Study, directory: Path) -> Beside:

@@ -113,6 +113,7 @@ def _check(study: Path, bias: str | None, workers: int | None, as_json: bool) ->
     found, directory = locate(study)
     must_sample(found, directory)
     allowed = None if bias is None else bias_of(bias, found)
+    found = _resolved(found, directory, workers)
     _tell_if_compiling()
     planned = plan(found, workers=workers, bias=allowed, directory=directory)
     lacking = left(found, directory) if continues(found, directory) else planned.particle_steps
@@ -141,6 +142,7 @@ def _run(study: Path, into: Path | None, workers: int | None, units: Any, **want
 
     found, directory = locate(study, into)
     must_sample(found, directory)
+    found = _resolved(found, directory, workers)
     border = Border.of(found, units)
     beside = asked(found, directory, **wanted)
     if is_finished(found, directory, units, beside=beside):
@@ -163,9 +165,11 @@ def _run(study: Path, into: Path | None, workers: int | None, units: Any, **want
 def _sample(study: Path, into: Path | None, workers: int | None) -> None:
     """Sample what a study lacks, without estimating anything."""
     from canonry.border import Border
-    from canonry.directory import locate
+    from canonry.directory import locate, must_sample
 
     found, directory = locate(study, into)
+    must_sample(found, directory)
+    found = _resolved(found, directory, workers)
     border = Border.of(found)
     _fill(found, directory, workers, border)
     _tell_precision(found, directory, border)
@@ -195,6 +199,7 @@ def _estimate(study: Path, into: Path | None, units: Any) -> None:
 @_into
 @click.option("-T", "--temperature", "temperatures", multiple=True, help='Such as 1.05 or "120 K"; may be repeated.')
 @click.option("--density", "densities", multiple=True, help='Such as 0.803 or "1.36 g/cm3"; may be repeated.')
+@click.option("--pressure", help='In place of a density: such as 0.5 or "20 MPa"; needs several isochores.')
 @click.option("--epsilon", help="Of another fluid: times that of the study, or with a unit.")
 @click.option("--sigma", help="Of another fluid: times that of the study, or with a unit.")
 @_units
@@ -289,6 +294,15 @@ def _reference(name: str | None, temperatures: tuple[float, ...], densities: tup
     else:
         rows = values(name, temperatures=temperatures, densities=densities)
         click.echo(json.dumps(rows, indent=1) if as_json else values_text(rows))
+
+
+def _resolved(study: Study, directory: Path, workers: int | None) -> Study:
+    """With the rungs of its ladder, chosen by a pilot where none are yet."""
+    from canonry.ladder import resolved
+
+    if study.ladder is not None and not study.ladder.is_chosen:
+        _tell_if_compiling()
+    return resolved(study, directory, workers=workers)
 
 
 def _fill(study: Study, directory: Path, workers: int | None, border: Border) -> None:

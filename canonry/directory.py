@@ -11,7 +11,7 @@ from canonry.errors import UserError
 from canonry.study import Study
 from canonry.study import load as load_file
 
-__all__ = ["STUDY", "claim", "continues", "load", "locate", "must_sample", "stored", "write"]
+__all__ = ["STUDY", "claim", "continues", "held", "load", "locate", "must_sample", "stored", "write"]
 
 STUDY = "study.toml"
 
@@ -92,6 +92,12 @@ def continues(study: Study, directory: Path) -> bool:
     """Whether a directory holds samples that a study can go on from. Raises UserError if its own study is refused."""
     earlier = _sampled(directory)
     return earlier is not None and _identity(earlier) == _identity(study)
+
+
+def held(study: Study, directory: Path) -> Study | None:
+    """The study that a directory holds, sampled or not, if it differs in nothing but what may change; else None."""
+    earlier = stored(directory) if (directory / STUDY).is_file() else None
+    return earlier if earlier is not None and _identity(earlier) == _identity(study) else None
 
 
 def _sampled(directory: Path) -> Study | None:

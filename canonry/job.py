@@ -11,6 +11,7 @@ from typing import TYPE_CHECKING
 from canonry.beside import Beside, asked
 from canonry.border import Border
 from canonry.directory import locate, stored, write
+from canonry.ladder import resolved
 from canonry.results import COLUMNS
 from canonry.sampling import is_complete
 from canonry.study import Study
@@ -56,6 +57,7 @@ def run(
 
     found, directory = locate(Path(study), None if into is None else Path(into))
     Border.of(found, units)
+    found = resolved(found, directory, workers=workers)
     beside = asked(found, directory, step_bias=step_bias, second_size=second_size, constant_energy=constant_energy)
     complete(found, directory, workers=workers)
     for each in beside:

@@ -9,7 +9,8 @@ from pathlib import Path
 from typing import get_args
 
 from canonry.keys import Reader, Table, choice, line, one_or_more, open_table, parameter, quantity, whole
-from canonry.quantities import NotAccepted, percent, rounded
+from canonry.quantities import NotAccepted, percent
+from canonry.temperatures import Ladder, temperature, temperatures
 from canonry.units import PROPERTIES, Kind, Scale
 from canonry.writing import study_text
 from sampler.fluid import ELSEWHERE, Fluid, State, Truncation
@@ -88,6 +89,8 @@ class Study:
     scale : SI size of the reduced units, None in a study that has none
     ideal_heat_capacity : c_v of the ideal gas, k_B per particle; None when the file says it is unknown
     states : every rung, by density, then by temperature
+    ladder : what range the rungs are to cover and how they are to overlap, where that chooses them; see
+        `canonry.ladder.resolved`
     sampling : how samples are taken; of no meaning where they were adopted
     """
 
@@ -100,6 +103,7 @@ class Study:
     sampling: Protocol
     compare: Compare
     adopted: Adopted | None = None
+    ladder: Ladder | None = None
     until: Until | None = None
 
     @property
@@ -144,7 +148,8 @@ def study_of(top: Table, *, earlier: Study | None = None) -> Study:
         ("potential", "epsilon", "sigma", "mass", "cutoff", "truncation", "ideal_heat_capacity")
     )
     scale = _scale(fluid)
-    states = _states(top.table("state"), scale) if adopted is None else _adopted_states(top.table("state"), scale)
+    state = top.table("state")
+    states, ladder = _states(state, scale) if adopted is None else (_adopted_states(state, scale), None)
     cutoff = _default(_CUTOFFS, states, earlier.fluid.cutoff if earlier else None)
     sampled = _fluid(fluid, scale, cutoff, states, adopted=adopted is not None)
     sampling = _sampling(
@@ -153,7 +158,7 @@ def study_of(top: Table, *, earlier: Study | None = None) -> Study:
     ideal_heat_capacity = _ideal_heat_capacity(fluid, scale)
     return Study(
         title=top.read("title", line, "".join(filter(str.isprintable, Path(top.file).stem))[:200].strip() or "study"),
-        units=_kind(top.table("state")),
+        units=_kind(state),
         fluid=sampled,
         scale=scale,
         ideal_heat_capacity=ideal_heat_capacity,
@@ -161,6 +166,7 @@ def study_of(top: Table, *, earlier: Study | None = None) -> Study:
         sampling=sampling,
         compare=_compare(top.table("compare"), scale, sampled),
         adopted=adopted,
+        ladder=ladder,
         until=_until(top, scale, sampling, total=ideal_heat_capacity is not None),
     )
 
@@ -220,9 +226,11 @@ def _scale(table: Table) -> Scale | None:
     )
 
 
-def _states(table: Table, scale: Scale | None) -> tuple[State, ...]:
+def _states(table: Table, scale: Scale | None) -> tuple[tuple[State, ...], Ladder | None]:
+    """The states, and the ladder they are of where a pilot chooses its rungs."""
     table.only(("density", "temperatures", "points", "particles"))
     particles = table.read("particles", whole(2, 10_000_000), 500)
+    ladder = None
     if "points" in table:
         for name in ("density", "temperatures"):
             if name in table:
@@ -230,12 +238,10 @@ def _states(table: Table, scale: Scale | None) -> tuple[State, ...]:
         points = table.read("points", one_or_more(_point(scale)))
     else:
         densities = table.read("density", one_or_more(_density(scale)))
-        points = tuple((temperature, density) for density in densities for temperature in _temperatures(table, scale))
-    return tuple(State(*point, particles) for point in sorted(points, key=lambda point: (point[1], point[0])))
-
-
-def _temperature(scale: Scale | None) -> Reader[float]:
-    return quantity("temperature", 0.01, 100.0, scale)
+        rungs, ladder = temperatures(table, scale, densities=len(densities))
+        points = tuple((each, density) for density, own in zip(densities, rungs, strict=True) for each in own)
+    states = (State(*point, particles) for point in sorted(points, key=lambda point: (point[1], point[0])))
+    return tuple(states), ladder
 
 
 def _density(scale: Scale | None) -> Reader[float]:
@@ -246,23 +252,9 @@ def _point(scale: Scale | None) -> Reader[tuple[float, float]]:
     def read(value: object) -> tuple[float, float]:
         if not (isinstance(value, list) and len(value) == 2):
             raise NotAccepted("what is needed is a pair [temperature, density]")
-        return _temperature(scale)(value[0]), _density(scale)(value[1])
+        return temperature(scale)(value[0]), _density(scale)(value[1])
 
     return read
-
-
-def _temperatures(table: Table, scale: Scale | None) -> tuple[float, ...]:
-    """A list as it stands, or from, to and rungs: evenly spaced in 1/T, so that neighbours overlap about equally."""
-    if not isinstance(table.content.get("temperatures"), dict):
-        return table.read("temperatures", one_or_more(_temperature(scale)))
-    ladder = table.table("temperatures").only(("from", "to", "rungs"), later=("overlap",))
-    first, last = (ladder.read(name, _temperature(scale)) for name in ("from", "to"))
-    rungs = ladder.read("rungs", whole(2, 1000))
-    shares = (k / (rungs - 1) for k in range(rungs))
-    temperatures = tuple(rounded(1.0 / ((1.0 - share) / first + share / last)) for share in shares)
-    if len(set(temperatures)) < rungs:
-        raise ladder.refusal("to", "too close to from; what is needed are different temperatures for all rungs")
-    return temperatures
 
 
 def _kind(table: Table) -> Kind:

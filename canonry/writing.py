@@ -12,6 +12,7 @@ from canonry.units import UNITS
 
 if TYPE_CHECKING:
     from canonry.study import Study, Tolerance
+    from canonry.temperatures import Ladder
 
 __all__ = ["study_text"]
 
@@ -66,17 +67,27 @@ def _states(study: Study) -> list[str]:
     temperature, density = _writer(study, "temperature"), _writer(study, "density")
     ladders = {rho: [state.temperature for state in states] for rho, states in study.isochores.items()}
     first = next(iter(ladders.values()))
-    if study.adopted is None and all(ladder == first for ladder in ladders.values()):
+    if study.ladder is not None or (study.adopted is None and all(ladder == first for ladder in ladders.values())):
         densities = ", ".join(map(density, ladders))
+        listed = [f"[{', '.join(map(temperature, ladder))}]" for ladder in ladders.values()]
         lines = [
             f"density = {densities if len(ladders) == 1 else f'[{densities}]'}",
-            f"temperatures = [{', '.join(map(temperature, first))}]",
+            f"temperatures = {listed[0] if study.ladder is None else _ladder(study.ladder, temperature, listed)}",
         ]
     else:
         pairs = (f"[{temperature(state.temperature)}, {density(state.density)}]" for state in study.states)
         lines = [f"points = [{', '.join(pairs)}]"]
     counts = [state.particles for state in study.states]
     return [*lines, f"particles = {counts[0] if len({*counts}) == 1 else counts}"]
+
+
+def _ladder(ladder: Ladder, temperature: Callable[[float], str], listed: list[str]) -> str:
+    """What was asked for, and the temperatures chosen for each density."""
+    asked = f"from = {temperature(ladder.start)}, to = {temperature(ladder.end)}, overlap = {ladder.overlap!r}"
+    if not ladder.is_chosen:
+        return f"{{ {asked} }}"
+    chosen = listed[0] if len(listed) == 1 else f"[{', '.join(listed)}]"
+    return f"{{ {asked}, chosen = {chosen} }}"
 
 
 def _writer(study: Study, quantity: str) -> Callable[[float], str]:

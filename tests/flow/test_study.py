@@ -180,6 +180,12 @@ VARIANTS = [
     COOLANT,
     COOLANT.replace("39.948 u", "39.948 g/mol").replace("119.8 K", "0.996 kJ/mol"),
     COOLANT.replace('["108 K", "120 K"]', '{ from = "108 K", to = "150 K", rungs = 7 }'),
+    COOLANT.replace('["108 K", "120 K"]', '{ from = "108 K", to = "150 K", overlap = 0.2 }'),
+    SHORTEST.replace("[1.0]", "{ from = 1.0, to = 1.2, overlap = 0.2, chosen = [0.98, 1.1, 1.23] }"),
+    COOLANT.replace(
+        '["108 K", "120 K"]',
+        '{ from = "108 K", to = 1.2, overlap = 0.2, chosen = [["106 K", "130 K", "150 K"], ["105 K", "145 K"]] }',
+    ),
     COOLANT.replace('["1.36 g/cm3", "1300 kg/m3"]', '"33.3 mol/L"'),
     COOLANT.replace('["1.36 g/cm3", "1300 kg/m3"]', "2.0").replace("3.405", "3.4").replace("39.948 u", "40 u"),
     SHORTEST.replace("[state]", 'truncation = "shifted"\ncutoff = 2.5\n[state]') + '[compare]\nagainst = "thol-2015"',
@@ -233,7 +239,34 @@ REFUSED = [
         "[until]\nresidual_entropy_change = 0.1\n[state]",
         r"until\.residual_entropy_change = 0\.1: not available",
     ),
-    ("[1.0]", "{ from = 1, to = 2, overlap = 0.2 }", r"state\.temperatures\.overlap = 0\.2: not available"),
+    # a ladder that a pilot is to choose
+    (
+        "[1.0]",
+        "{ from = 1, to = 2, overlap = 0.6 }",
+        r"temperatures\.overlap = 0\.6: what is needed is a number from 0\.05",
+    ),
+    (
+        "[1.0]",
+        "{ from = 1, to = 2, overlap = 0.04 }",
+        r"temperatures\.overlap = 0\.04: what is needed is a number from",
+    ),
+    ("[1.0]", "{ from = 2, to = 2, overlap = 0.2 }", r"temperatures\.to = 2: what is needed is a higher temperature"),
+    ("[1.0]", "{ from = 1, to = 2, overlap = 0.2, rungs = 3 }", r"temperatures\.rungs = 3: overlap is given too"),
+    (
+        "[1.0]",
+        "{ from = 1, to = 2, rungs = 3, chosen = [1] }",
+        r"temperatures\.chosen = \[1\]: these go with an overlap",
+    ),
+    (
+        "[1.0]",
+        "{ from = 1, to = 2, overlap = 0.2, chosen = 1 }",
+        r"chosen = 1: what is needed is a list of temperatures",
+    ),
+    (
+        "0.8\ntemperatures = [1.0]",
+        "[0.8, 0.7]\ntemperatures = { from = 1, to = 2, overlap = 0.2, chosen = [1, 2] }",
+        r"chosen = \[1, 2\]: what is needed is 2 lists, one for each density",
+    ),
     (
         "[state]",
         "[compare.tolerance]\nresidual_entropy_change = 0.1\n[state]",
@@ -371,7 +404,7 @@ KEYS = {
     ),
     "compare": ("against", "tolerance"),
     "until": (*COMPARED, "steps_at_most", "residual_entropy_change"),
-    "state.temperatures": ("from", "to", "rungs", "overlap"),
+    "state.temperatures": ("from", "to", "rungs", "overlap", "chosen"),
     "compare.tolerance": (*COMPARED, "residual_chemical_potential"),
 }
 NUMBERS = st.integers() | st.floats() | st.sampled_from([0, 1, 2, 3, 0.8, 1.0, 1e-300, 1e308, 10**400, -0.0])
