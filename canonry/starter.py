@@ -78,6 +78,10 @@ steps = 200000               # per repeat, after equilibration; more can be aske
 record_every = 10            # steps
 frame_every = 500            # steps between stored positions
 
+# [until]                    # go on where a standard error is larger than this, up to steps_at_most
+# heat_capacity = "1 %"
+# pressure = 0.01
+
 [compare]
 against = ["thol-2016"]      # `canonry reference` lists what there is
 # tolerance = {{ heat_capacity = "2 %" }}   # a difference that does not matter

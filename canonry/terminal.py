@@ -72,6 +72,7 @@ def plan_text(study: Study, plan: Plan, border: Border) -> str:
         f"{study.states[0].particles} particles, cutoff {both('length', fluid.cutoff)}, {fluid.truncation}",
         f"{sampling.scheme}, time step {both('time', sampling.time_step)}, {bath}, {precision}",
         f"{sampling.settling} + {sampling.steps} steps, repeats: {plan.repeats}",
+        *_until_text(study, border),
         "",
         aligned([*heads, *body]),
         "",
@@ -85,6 +86,17 @@ def plan_text(study: Study, plan: Plan, border: Border) -> str:
 
 def _two_digits(error: float) -> str:
     return f"{error:#.2g}".removesuffix(".") if math.isfinite(error) else "-"
+
+
+def _until_text(study: Study, border: Border) -> list[str]:
+    """What [until] asks for."""
+    if study.until is None:
+        return []
+    limits = (
+        f"{symbol_of(name)} {limit.text if limit.relative else border.text(name, limit.value)}"
+        for name, limit in study.until.limits.items()
+    )
+    return [f"until errors are at most {', '.join(limits)}, or {study.until.steps_at_most} steps"]
 
 
 def _step_texts(study: Study, plan: Plan, border: Border) -> Iterator[str]:

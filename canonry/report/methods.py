@@ -7,9 +7,10 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
-from canonry.notation import unit_text
+from canonry.notation import name_of, unit_text
 from canonry.numbers import plain
 from canonry.results import Results
+from canonry.units import unit_label
 from reference import find
 from reference import names as references
 
@@ -73,6 +74,7 @@ class Setup:
     sampling: Mapping[str, Any]
     against: Sequence[str]
     tolerance: Mapping[str, float | str]
+    until: Mapping[str, float | str]
     ideal_heat_capacity: float | str
 
     @classmethod
@@ -91,6 +93,7 @@ class Setup:
             sampling=sampling,
             against=compare.get("against", []),
             tolerance=compare.get("tolerance", {}),
+            until=study.get("until", {}),
             ideal_heat_capacity=fluid["ideal_heat_capacity"],
         )
 
@@ -169,15 +172,38 @@ def _dynamics(results: Results, setup: Setup) -> list[str]:
     sampling = setup.sampling
     friction = f", friction {_quantity(sampling['friction'], '√(ε/m)/σ')}" if setup.bath else ""
     repeats = _counted(max(sampling["repeats"], results.equilibration["repeat"].nunique()), "independent repeat")
-    lengths = f"{sampling['equilibration']} steps of equilibration and {sampling['steps']} steps"
+    lengths = f"{sampling['equilibration']} steps of equilibration and {_steps(results, setup)} steps"
     states = len(results.properties[["temperature", "density"]].drop_duplicates())
     ensemble = "The canonical ensemble was sampled" if setup.bath else "Trajectories were run"
     return [
         f"{ensemble} at {_counted(states, 'state')} {_SCHEMES[setup.scheme]} "
         f"(time step {_quantity(sampling['time_step'], 'σ √(m/ε)')}{friction}; {repeats} a state of {lengths}, "
         f"recorded every {sampling['record_every']} steps).",
+        *_rounds(setup),
         *([_MIXED] if setup.scheme in ("baoab", "obabo") and sampling["precision"] == "mixed" else []),
         "The end of equilibration was found from the data.",
+    ]
+
+
+def _steps(results: Results, setup: Setup) -> str:
+    """Of a repeat: what the study says, or from the fewest to the most where that depends on the errors."""
+    if not setup.until:
+        return str(setup.sampling["steps"])
+    counts = results.equilibration["samples"] * setup.sampling["record_every"]
+    return " to ".join(map(str, sorted({int(counts.min()), int(counts.max())})))
+
+
+def _rounds(setup: Setup) -> list[str]:
+    if not setup.until:
+        return []
+    limits = [
+        f"{name_of(name)} {_quantity(limit, unit_text(unit_label(name, 'reduced')))}".strip()
+        for name, limit in setup.until.items()
+        if name != "steps_at_most"
+    ]
+    return [
+        f"After {setup.sampling['steps']} steps sampling went on in rounds at those states whose standard errors were "
+        f"above those asked for ({', '.join(limits)}), up to {setup.until['steps_at_most']} steps."
     ]
 
 

@@ -21,6 +21,7 @@ from canonry.cli import main
 from canonry.directory import locate
 from canonry.errors import UserError
 from canonry.estimation import findings
+from canonry.report.methods import paragraph
 from canonry.results import Results
 from canonry.sampling import left
 from canonry.study import Study, Tolerance, Until
@@ -105,11 +106,16 @@ def test_the_rung_whose_error_is_too_large_is_sampled_longer() -> None:
     assert "study is finished" in said.stdout
     assert "Every precision asked for is met." in said.stdout
     assert any(caveat.startswith("Every precision asked for is met") for caveat in results.caveats)
+    assert any("come out low by about a tenth of their error" in caveat for caveat in results.caveats)
+    methods = paragraph(results)
+    assert f"600 steps of equilibration and 6000 to {given[DENSE]} steps, recorded" in methods
+    assert f"errors were above those asked for (pressure {LIMIT} ε/σ³), up to 120000 steps." in methods
 
 
 def test_steps_run_out_and_that_is_said() -> None:
     path = write("study", 'pressure = 1e-5\nheat_capacity = "40 %"\nsteps_at_most = 9000')
     said = run(path)
+    assert "until errors are at most c_v 40 %, P 1e-05 ε/σ³, or 9000 steps" in said.stderr
     assert set(steps("study").values()) == {9000}
     told = " ".join(said.stdout.split())
     assert "Not every precision asked for is met within 9000 steps (steps_at_most): the error of P at T = 2" in told
@@ -328,6 +334,14 @@ def test_decisions_are_taken_on_the_values_of_the_tables(changes: dict[str, obje
         key: sorted(map(str, each)) for key, each in found.items()
     }
     assert outcome(study, directory, Border.of(study)) == "Every precision asked for is met."
+
+
+def test_adopted_samples_have_no_rounds() -> None:
+    path = write("study", f"pressure = {LIMIT}")
+    text = path.read_text().split("[sampling]")
+    path.write_text(f"{text[0]}[adopted]\nsource = 'x'\n[until]{text[1].split('[until]')[1]}")
+    with pytest.raises(UserError, match=r"until = .*: the samples of this study were adopted"):
+        locate(path)
 
 
 def test_samplings_beside_a_study_are_as_long_as_its_steps() -> None:
