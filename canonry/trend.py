@@ -34,7 +34,7 @@ _TOGETHER = 12  # pilots of full length; more are shorter
 _SHORTEST = 1_000_000  # particle-steps
 _SAMPLES = 32  # at least, so that there is anything to tell
 _FEW = 500  # particles
-_DEGREE = 4  # of the energy in 1/T, at most
+_DEGREE = 3  # of the energy in 1/T, at most
 _GROWTH = 1.03  # a step takes N to this power: benchmarks/sampler_speed.py, from 500 to 100 000 particles
 _FLOOR = 0.3  # of the lowest heat capacity of a pilot: where the fit may not go below
 
