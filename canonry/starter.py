@@ -62,6 +62,7 @@ ideal_heat_capacity = {ideal}    # c_v of the ideal gas, k_B per particle; "unkn
 density = {density}
 temperatures = [{temperatures}]
 # Instead of a list, evenly spaced in 1/T: temperatures = {{ from = {first}, to = {last}, rungs = 6 }}
+# As few as overlap so, chosen by short runs: temperatures = {{ from = {first}, to = {last}, overlap = 0.1 }}
 # Instead of both, single states: points = [[{first}, {density}]]
 particles = 500
 
