@@ -102,9 +102,14 @@ def test_the_rung_whose_error_is_too_large_is_sampled_longer() -> None:
     assert found[DENSE] > 0.5 * LIMIT
     samples = results.equilibration.set_index("density")["samples"]
     assert samples.to_dict() == {density: count // 5 for (_, density), count in given.items()}
+    assert not any(caveat.startswith("Not all samples") for caveat in results.caveats)
     said = run(path)
     assert "study is finished" in said.stdout
     assert "Every precision asked for is met." in said.stdout
+    made = Path("study", FILE).read_bytes()
+    Path("study", "summary.csv").unlink()
+    assert "study is finished" not in run(path).stdout
+    assert Path("study", FILE).read_bytes() == made
     assert any(caveat.startswith("Every precision asked for is met") for caveat in results.caveats)
     assert any("come out low by about a tenth of their error" in caveat for caveat in results.caveats)
     methods = paragraph(results)
