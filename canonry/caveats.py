@@ -2,8 +2,11 @@
 
 from __future__ import annotations
 
+import math
 from collections import defaultdict
 from collections.abc import Iterator, Sequence
+
+import numpy as np
 
 from canonry.attainment import words
 from canonry.border import Border
@@ -17,6 +20,7 @@ from sampler.fluid import State
 __all__ = ["caveats"]
 
 _FEW = 0.8  # accepted steps
+_ROUGH = 1.5  # combined standard errors, on the average, between rungs and a surface that does not know them
 
 
 def caveats(study: Study, findings: Findings, border: Border) -> list[str]:
@@ -28,6 +32,7 @@ def caveats(study: Study, findings: Findings, border: Border) -> list[str]:
         *risks(study, border),
         *_measured_temperatures(findings),
         *_acceptance(findings),
+        *_surface(findings),
     ]
 
 
@@ -55,6 +60,20 @@ def _precision(study: Study, findings: Findings, border: Border) -> Iterator[str
 def _measured_temperatures(findings: Findings) -> Iterator[str]:
     if any(finding.temperature is not None for finding in findings.properties):
         yield "No bath acts while samples are taken: temperatures are those of the mean kinetic energy, not those set."
+
+
+def _surface(findings: Findings) -> Iterator[str]:
+    """How rungs that are left out agree with the surface through the others."""
+    if findings.no_surface:
+        yield f"No surface is laid through the isochores: {findings.no_surface}."
+    if findings.held_out:
+        deviations = np.array([each.z for each in findings.held_out])
+        root, largest = math.sqrt(float(np.mean(deviations**2))), float(np.max(np.abs(deviations)))
+        advice = "" if root < _ROUGH else "; values between the isochores are in doubt, set isochores or rungs closer"
+        yield (
+            f"The surface between the isochores is held against each rung without using it: {len(deviations)} values "
+            f"deviate by {root:.2f} combined standard errors on the average, by {largest:.1f} at most{advice}."
+        )
 
 
 def _acceptance(findings: Findings) -> Iterator[str]:

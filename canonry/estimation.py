@@ -16,18 +16,24 @@ from canonry.beside import Rung, exactly, found, other_sizes
 from canonry.border import Border
 from canonry.errors import UserError
 from canonry.findings import Check, Curve, Cut, Finding, Findings
+from canonry.frames import findings_of, inserted, scattered
 from canonry.health import Samples, judged, known, of_isochore, of_rung, wavelength
 from canonry.isochore import Isochore, assemble
 from canonry.marking import marked
 from canonry.risks import doubt, guide
 from canonry.sampling import recorded
 from canonry.study import Study
+from canonry.surface import of_states, on_grid
 from canonry.units import Scale
 from estimators.canonical import kinetic_temperature, rung_properties
 from estimators.compiled import is_cached
+from estimators.errors import BadSeries, NotSolved
 from estimators.estimate import Estimate, mean
+from estimators.insertion import Insertion
+from estimators.scattering import Scattering
 from estimators.settle import settled_start
 from estimators.structure import Structure, pair_structure
+from estimators.surface.helmholtz import Surface
 from sampler.fluid import State
 from sampler.forces import evaluate
 from sampler.protocol import Protocol
@@ -36,7 +42,6 @@ from sampler.series import Series
 __all__ = ["findings", "settled", "without_frames"]
 
 _BINS = 60  # of a histogram
-_CONSERVED = ("kinetic", "sampled_energy", "ledger")
 _POINTS = 400  # of a ledger curve, at most
 _CONSERVED = ("kinetic", "sampled_energy", "ledger")
 
@@ -54,6 +59,8 @@ class _Rung:
     series: list[Series]
     own: dict[str, Estimate]
     structure: Structure | None
+    insertion: Insertion | None
+    scattering: Scattering | None
     cuts: list[Cut]
     ledgers: list[Curve]
     checks: list[Check]
@@ -65,6 +72,19 @@ class _Rung:
         energies = np.concatenate([each.column("energy") for each in self.series]) / self.state.particles
         density, edges = np.histogram(energies, bins=_BINS, density=True)
         return Curve(self.state, None, 0.5 * (edges[1:] + edges[:-1]), density)
+
+    def beyond(self) -> Iterator[Finding]:
+        """What its frames say beyond averages and fluctuations."""
+        for finding in findings_of(self.state, self.own, self.insertion, self.scattering):
+            yield replace(finding, temperature=self.temperature)
+
+    @property
+    def measured(self) -> dict[str, Estimate]:
+        """What it says alone and can be trusted, chemical potential included."""
+        found = {name: each for name, each in self.own.items() if each.trust != "no"}
+        if self.insertion is not None and self.insertion.trust == "ok":
+            found["residual_chemical_potential"] = self.insertion.chemical_potential
+        return found
 
     def is_finished(self, sampling: Protocol) -> bool:
         asked = sampling.steps // sampling.record_every
@@ -106,6 +126,8 @@ def findings(study: Study, directory: Path, border: Border, *, watch: Callable[[
             for rung in own
         )
     health = judged(checks)
+    tell("laying a surface through all rungs")
+    between, no_surface = _surface(study, rungs, border)
     noticed = {state: doubts(directory, state) for state in states} if study.adopted else {}
 
     def doubted(findings: Iterable[Iterable[Finding]]) -> Iterator[Finding]:
@@ -114,7 +136,7 @@ def findings(study: Study, directory: Path, border: Border, *, watch: Callable[[
             yield finding.doubted(doubt(finding.state, reference) if reference else "")
 
     return Findings(
-        properties=tuple(doubted(each.properties() for each in isochores)),
+        properties=tuple(doubted([*(each.properties() for each in isochores), *(rung.beyond() for rung in rungs)])),
         curve=tuple(doubted(each.curve() for each in isochores)),
         structures={rung.state: rung.structure for rung in rungs if rung.structure is not None},
         cuts=tuple(cut for rung in rungs for cut in rung.cuts),
@@ -125,7 +147,23 @@ def findings(study: Study, directory: Path, border: Border, *, watch: Callable[[
         exact=exactly(beside),
         sizes=other_sizes(beside),
         unfinished=tuple(unfinished),
+        scatterings={rung.state: rung.scattering for rung in rungs if rung.scattering is not None},
+        surface=() if between is None else tuple(doubted([on_grid(between, states)])),
+        held_out=() if between is None else tuple(between.held_out()),
+        no_surface=no_surface,
     )
+
+
+def _surface(study: Study, rungs: Sequence[_Rung], border: Border) -> tuple[Surface | None, str]:
+    """Through all rungs with a bath, or None, and why it was not found."""
+    if not all(each.bath for rung in rungs for each in rung.series):
+        return None, ""
+    try:
+        own = {rung.state: rung.measured for rung in rungs}
+        ideal = study.ideal_heat_capacity
+        return of_states(own, study.fluid, ideal_heat_capacity=ideal, spoken=border.state), ""
+    except (BadSeries, NotSolved) as problem:
+        return None, str(problem)
 
 
 def _compiling(sampling: Protocol) -> str:
@@ -178,6 +216,8 @@ def _rung(recorded: list[Series], scale: Scale | None) -> _Rung | None:
         series,
         own=own,
         structure=structure,
+        insertion=inserted(cut),
+        scattering=scattered(cut),
         cuts=cuts,
         ledgers=[_ledger(state, each) for each in recorded if each.has(*_CONSERVED)],
         checks=[Check(state, reading) for reading in of_rung(samples)],

@@ -3,14 +3,16 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 import numpy.typing as npt
 
 from estimators.estimate import Estimate
 from estimators.health.reading import Reading
+from estimators.scattering import Scattering
 from estimators.structure import Structure
+from estimators.surface.helmholtz import HeldOut
 from sampler.fluid import State
 
 __all__ = ["TRUST", "Check", "Curve", "Cut", "Finding", "Findings", "Overlap"]
@@ -102,6 +104,9 @@ class Findings:
     exact : estimates by property from sampling that is exact at any time step, where there is such
     sizes : the same from sampling with other numbers of particles, by states with those numbers
     unfinished : states that lack samples the study asks for
+    surface : on a grid of temperatures and densities between isochores; none where rungs span no area
+    held_out : what was measured at a rung beside what the surface says without that rung
+    no_surface : why there is none although there might be
     """
 
     properties: tuple[Finding, ...]
@@ -115,6 +120,10 @@ class Findings:
     exact: Mapping[State, Mapping[str, Estimate]]
     sizes: Mapping[State, Mapping[str, Estimate]]
     unfinished: tuple[State, ...]
+    scatterings: Mapping[State, Scattering] = field(default_factory=dict)
+    surface: tuple[Finding, ...] = ()
+    held_out: tuple[HeldOut, ...] = ()
+    no_surface: str = ""
 
     @property
     def headlines(self) -> tuple[Finding, ...]:

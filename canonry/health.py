@@ -14,6 +14,7 @@ from itertools import pairwise
 from typing import TYPE_CHECKING
 
 from canonry.findings import Check
+from canonry.frames import with_some_frames
 from canonry.isochore import Isochore
 from canonry.risks import stability
 from canonry.units import PROPERTIES, Scale
@@ -169,11 +170,7 @@ class Samples:
     @cached_property
     def seen(self) -> list[Series]:
         """The same with some hundred frames in all."""
-        stride = -(-sum(len(each.frames) for each in self.series) // _FRAMES) or 1
-        return [
-            replace(each, frames=each.frames[stride - 1 :: stride], frame_stride=stride * each.frame_stride)
-            for each in self.series
-        ]
+        return with_some_frames(self.series, _FRAMES)
 
     @cached_property
     def sums(self) -> dict[Chain, FrameSums] | None:

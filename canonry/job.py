@@ -24,7 +24,10 @@ if TYPE_CHECKING:
 
 __all__ = ["compare", "estimate", "is_finished", "report", "run"]
 
-_TABLES = ("properties", "curve", "structure", "health", "budget", "verdict", "summary")
+_TABLES = (
+    *("properties", "curve", "surface", "structure", "structure_factor"),
+    *("health", "budget", "verdict", "summary"),
+)
 _FILES = (*(f"{name}.csv" for name in _TABLES), "report.html")
 
 Place = str | Path

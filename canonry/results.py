@@ -20,6 +20,9 @@ COLUMNS: Mapping[str, tuple[str, ...]] = {
     for name, columns in {
         "properties": _ESTIMATES,
         "curve": _ESTIMATES,
+        "surface": _ESTIMATES,
+        "structure_factor": "temperature,temperature_unit,density,density_unit,k,k_unit,s,standard_error",
+        "held_out": "temperature,density,property,value,predicted,combined_error,z",
         "structure": "temperature,density,species_a,species_b,r,r_unit,g,standard_error,coordination,"
         "g_forced,forced_error",
         "verdict": "temperature,density,property,value,standard_error,reference,reference_value,reference_uncertainty,"
@@ -45,9 +48,11 @@ class Results:
     title : the study's title
     study_toml : the study as run, complete with defaults
     units : 'reduced' (energies in epsilon, times in sigma sqrt(m/epsilon)) or 'SI' (kJ/mol, ps)
-    properties, curve, structure, verdict, summary, health, budget : tables of the study directory; `headline` holds
-        booleans. A verdict row without temperature and property is the overall outcome of its reference; `tolerance` is
+    properties, curve, structure, structure_factor, verdict, summary, health, budget : tables of the study directory;
+        `headline` holds booleans. A verdict row without temperature and property is the overall outcome of its reference; `tolerance` is
         a difference in the unit of the property, empty where there is none; `reason` says why a row is undecided
+    surface : every property on a grid of temperatures and densities, from the surface through all rungs
+    held_out : what was measured at a rung beside what the surface says without that rung
     histograms : probability density of the energy per particle, bin centres in rising order, one curve a rung
     ledger : change of K + U_dyn + ledger per particle since the first sample (of K + U_dyn where no bath acts)
     overlap : shared phase space of neighbouring rungs of an isochore, between 0 and 1
@@ -69,6 +74,9 @@ class Results:
     properties: pd.DataFrame
     curve: pd.DataFrame
     structure: pd.DataFrame
+    structure_factor: pd.DataFrame
+    surface: pd.DataFrame
+    held_out: pd.DataFrame
     verdict: pd.DataFrame
     summary: pd.DataFrame
     histograms: pd.DataFrame

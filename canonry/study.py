@@ -32,6 +32,9 @@ COMPARED = (
     "joule_thomson",
     "grueneisen",
     "enthalpy",
+    "residual_chemical_potential",
+    "residual_helmholtz_energy",
+    "residual_entropy",
 )
 _WITH_IDEAL = ("heat_capacity", "isobaric_heat_capacity", "sound_speed", "joule_thomson", "grueneisen", "enthalpy")
 _LONGEST = 20  # times `steps`, under [until] where the file does not say

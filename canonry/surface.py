@@ -13,7 +13,7 @@ from estimators.surface.answer import Answer
 from estimators.surface.helmholtz import Surface, surface
 from sampler.fluid import Fluid, State
 
-__all__ = ["findings_of", "grid", "of_states"]
+__all__ = ["findings_of", "of_states", "on_grid"]
 
 _TEMPERATURES, _DENSITIES = 9, 13  # of the grid on which a surface is written down
 _FAR = 1e6  # sigma; where a potential that is corrected for its long range may be taken to end
@@ -51,26 +51,18 @@ def _second_virial(fluid: Fluid, temperature: float) -> float:
     return pair_second_virial(lambda r: float(whole.pair_energy(np.array(r))), temperature=temperature, cutoff=cutoff)
 
 
-def grid(states: Sequence[State]) -> list[tuple[float, float]]:
-    """Temperatures and densities over the range of states, even in 1/T and density, the states' own among them."""
+def on_grid(surface: Surface, states: Sequence[State]) -> Iterator[Finding]:
+    """At temperatures and densities over the range of states, even in 1/T and in density, where there are answers."""
     temperatures = np.array([state.temperature for state in states])
     densities = np.array([state.density for state in states])
-    along = 1.0 / np.linspace(1.0 / temperatures.max(), 1.0 / temperatures.min(), _TEMPERATURES)
-    across = np.linspace(densities.min(), densities.max(), _DENSITIES)
-    return [(float(temperature), float(density)) for density in across for temperature in along[::-1]]
+    along = 1.0 / np.linspace(1.0 / temperatures.min(), 1.0 / temperatures.max(), _TEMPERATURES)
+    for density in np.linspace(densities.min(), densities.max(), _DENSITIES):
+        for temperature in along:
+            yield from findings_of(surface.at(float(temperature), float(density)), states[0].particles)
 
 
 def findings_of(answer: Answer, particles: int) -> Iterator[Finding]:
     """What a surface says at a state; nothing where it refuses."""
-    state = State(answer.temperature, answer.density, particles)
-    for name, estimate in answer.properties.items():
-        yield Finding(
-            state,
-            name,
-            "surface",
-            estimate,
-            estimate.effective_samples,
-            estimate.trust,
-            estimate.reason,
-            headline=True,
-        )
+    for name, value in answer.properties.items():
+        state = State(answer.temperature, answer.density, particles)
+        yield Finding(state, name, "surface", value, value.effective_samples, value.trust, value.reason, headline=True)

@@ -20,6 +20,7 @@ from canonry.study import COMPARED, Study
 from canonry.units import PROPERTIES
 from canonry.verdict import Comparison, Verdict
 from estimators.force_sampling import Forced
+from estimators.surface.helmholtz import HeldOut
 from sampler.fluid import State
 
 if TYPE_CHECKING:
@@ -29,7 +30,10 @@ if TYPE_CHECKING:
 
 __all__ = ["TABLES", "assemble", "estimates_table", "save", "verdict_table"]
 
-TABLES = ("properties", "curve", "structure", "health", "budget", "verdict", "summary")
+TABLES = (
+    *("properties", "curve", "surface", "structure", "structure_factor"),
+    *("health", "budget", "verdict", "summary"),
+)
 _DIGITS = "%.10g"
 _SPECIES = "1"  # the only one of a pure fluid
 
@@ -50,7 +54,10 @@ def assemble(
         units=border.kind,
         properties=estimates_table(findings.properties, border),
         curve=estimates_table(findings.curve, border),
+        surface=estimates_table(findings.surface, border),
+        held_out=_table("held_out", (_held_out(each, border) for each in findings.held_out)),
         structure=_structure(findings, border),
+        structure_factor=_structure_factor(findings, border),
         verdict=verdict_table(comparisons, border),
         summary=_summary(findings, border),
         histograms=_histograms(findings, border),
@@ -210,6 +217,38 @@ def _budget(budget: Budget, border: Border) -> dict[str, Any]:
         "expanded": COVERAGE * border.value(name, budget.combined),
         "coverage_factor": COVERAGE,
     }
+
+
+def _held_out(each: HeldOut, border: Border) -> dict[str, Any]:
+    reduced = {"value": each.value, "predicted": each.predicted, "combined_error": each.combined_error}
+    return {
+        "temperature": border.coordinate("temperature", each.temperature),
+        "density": border.coordinate("density", each.density),
+        "property": each.name,
+        **{name: border.value(each.name, value) for name, value in reduced.items()},
+        "z": each.z,
+    }
+
+
+def _structure_factor(findings: Findings, border: Border) -> pd.DataFrame:
+    import pandas as pd
+
+    parts = [
+        pd.DataFrame(
+            {
+                **_state(state, border),
+                "temperature_unit": border.label("temperature"),
+                "density_unit": border.label("density"),
+                "k": scattering.k / border.value("length", 1.0),
+                "k_unit": f"1/{border.label('length')}",
+                "s": scattering.s,
+                "standard_error": np.where(np.isfinite(scattering.standard_error), scattering.standard_error, np.nan),
+            },
+            columns=list(COLUMNS["structure_factor"]),
+        )
+        for state, scattering in findings.scatterings.items()
+    ]
+    return pd.concat(parts, ignore_index=True) if parts else _table("structure_factor", [])
 
 
 def _structure(findings: Findings, border: Border) -> pd.DataFrame:

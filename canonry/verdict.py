@@ -53,6 +53,8 @@ FOLLOWS: Mapping[str, tuple[str, ...]] = {
     "residual_heat_capacity": ("heat_capacity",),
     "compressibility_factor": ("pressure",),
     **PARTS,
+    "residual_helmholtz_energy": ("residual_chemical_potential", "pressure"),
+    "residual_entropy": ("residual_chemical_potential", "pressure"),
 }
 """Properties that say nothing but what others do at the same state: these."""
 

@@ -63,7 +63,13 @@ class Field:
                     continue
                 supported = samples >= FEWEST_SAMPLES
                 properties = seen.properties(temperature, found, index) if supported else {}
-                best[index] = Reweighted(temperature, samples, properties, "" if supported else _refusal(samples))
+                best[index] = Reweighted(
+                    temperature,
+                    samples,
+                    properties,
+                    "" if supported else _refusal(samples),
+                    seen.surviving(temperature),
+                )
         return best
 
 

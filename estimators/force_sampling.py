@@ -36,7 +36,7 @@ Forces = Callable[[Floats], Floats]
 HALF_WIDTHS = (0.05, 0.15, 0.45)  # sigma, of shells around r; another one is the ball of all distances
 FEWEST_PAIRS = 200  # seen in all, for an estimator to have a share
 FEWEST_FRAMES = 40  # ten for each coefficient of a combination
-MOST_PAIRS = 1e9  # of all frames together: two or three seconds
+MOST_PAIRS = 4e8  # of all frames together: about a second
 BLOCK = 512  # pairs of one particle that are looked at once
 
 

@@ -141,10 +141,17 @@ class Group:
         themselves tell too much, as the heaviest are those of samples that nobody drew. Rungs of which less than
         LEAST_SHARE survives do not count.
         """
-        if not self.elsewhere and self.rungs[0].temperature <= temperature <= self.rungs[-1].temperature:
+        if self._is_between(temperature):
             return kish
         shares = zip(self.rungs, self.shares(temperature), strict=True)
         return min(kish, sum(share * rung.independent for rung, share in shares if share >= LEAST_SHARE))
+
+    def surviving(self, temperature: float) -> float:
+        """Share of the samples of the best rung that still counts; 1 between rungs."""
+        return 1.0 if self._is_between(temperature) else max(self.shares(temperature))
+
+    def _is_between(self, temperature: float) -> bool:
+        return not self.elsewhere and self.rungs[0].temperature <= temperature <= self.rungs[-1].temperature
 
     def shares(self, temperature: float) -> list[float]:
         """Of each rung, what survives of its samples.

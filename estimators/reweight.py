@@ -45,12 +45,14 @@ class Reweighted:
         rung that sample n comes from; beyond the outermost rungs at most what survives at constant heat capacity
     properties : by name, empty if refused
     refused : the reason, empty if there are properties
+    surviving : share of the samples of the best rung that still counts; 1 between rungs
     """
 
     temperature: float
     effective_samples: float
     properties: dict[str, Estimate]
     refused: str = ""
+    surviving: float = 1.0
 
 
 @dataclass(frozen=True)

@@ -120,6 +120,10 @@ class Series:
         interval = self.frame_stride * self.interval
         return replace(self, interval=interval, frame_stride=1, frame_offset=0, **kept)
 
+    def with_every_frame(self, stride: int) -> Series:
+        """The same samples with each stride-th of their frames."""
+        return replace(self, frames=self.frames[stride - 1 :: stride], frame_stride=stride * self.frame_stride)
+
     def moved(self, density: float, totals: Totals) -> Series:
         """The same samples at another density, with the energies and virials that they have there and nothing else."""
         kept: dict[str, Any] = dict.fromkeys(_COLUMNS)

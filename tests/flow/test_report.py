@@ -166,6 +166,23 @@ def invented(densities=(0.8,), rungs=6, units="reduced", samples=300, scheme="ba
             )
             for t, rho in states
         ),
+        structure_factor=pd.concat(
+            pd.DataFrame(
+                {
+                    "temperature": t,
+                    "temperature_unit": unit_label("temperature", units),
+                    "density": rho,
+                    "density_unit": unit_label("density", units),
+                    "k": r,
+                    "k_unit": f"1/{unit_label('length', units)}",
+                    "s": 0.05 + 0.1 * t * r**2,
+                    "standard_error": 0.01,
+                }
+            )
+            for t, rho in states
+        ),
+        surface=pd.DataFrame({name: [] for name in COLUMNS["surface"]}),
+        held_out=pd.DataFrame({name: [] for name in COLUMNS["held_out"]}),
         verdict=pd.DataFrame(verdict),
         summary=pd.DataFrame({"temperature": ladder[0], "density": densities, "heat_capacity": 2.6, "pressure": 1.2}),
         histograms=pd.concat(

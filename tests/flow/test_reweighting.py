@@ -98,6 +98,14 @@ def test_a_state_without_support_is_refused_with_the_nearest_and_the_price(direc
     assert set(refused["method"]) == {"reweighted"}
 
 
+def test_where_few_samples_still_count_there_is_caution(directory: Path) -> None:
+    """Half of the samples still count at a change of 1.5 % or so, a fifth at 3 %."""
+    near, far = (canonry.reweight(directory, temperatures=[1.3], densities=[density]) for density in (0.752, 0.772))
+    assert not near["reason"].str.contains("still count here").any()
+    assert far["reason"].str.contains("of the samples of the nearest rung still count here").all()
+    assert set(far["trust"]) <= {"caution", "no"}
+
+
 def test_the_nearest_supported_state_is_supported_and_next_to_what_is_not(directory: Path) -> None:
     (reason,) = set(canonry.reweight(directory, temperatures=[1.4], densities=[0.65])["reason"])
     nearest = reason.partition("nearest supported state is T = ")[2].partition(";")[0]
