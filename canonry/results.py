@@ -49,8 +49,9 @@ class Results:
     study_toml : the study as run, complete with defaults
     units : 'reduced' (energies in epsilon, times in sigma sqrt(m/epsilon)) or 'SI' (kJ/mol, ps)
     properties, curve, structure, structure_factor, verdict, summary, health, budget : tables of the study directory;
-        `headline` holds booleans. A verdict row without temperature and property is the overall outcome of its reference; `tolerance` is
-        a difference in the unit of the property, empty where there is none; `reason` says why a row is undecided
+        `headline` holds booleans. A verdict row without temperature and property is the overall outcome of its
+        reference; `tolerance` is a difference in the unit of the property, empty where there is none; `reason` says why
+        a row is undecided
     surface : every property on a grid of temperatures and densities, from the surface through all rungs
     held_out : what was measured at a rung beside what the surface says without that rung
     histograms : probability density of the energy per particle, bin centres in rising order, one curve a rung
