@@ -279,6 +279,19 @@ def test_temperatures_that_samples_do_not_support_are_refused() -> None:
     assert "positive number" in pooled.at(math.nan).refused
 
 
+@pytest.mark.parametrize("seed", range(40, 50))
+def test_three_spacings_outside_is_refused_every_time_and_inside_never(seed: int) -> None:
+    """Rungs 1.4 deviations of the energy apart (ln 1.5 sqrt(12)), short ones and long ones."""
+    rng = np.random.default_rng(seed)
+    temperatures = 1.5 ** np.arange(4)
+    for samples in (400, 4000, 20_000):
+        pooled = pool([harmonic(rng, float(temperature), samples) for temperature in temperatures])
+        outside = pooled.curve([float(temperatures[0] / 1.5**3), float(temperatures[-1] * 1.5**3)])
+        assert all(each.refused and not each.properties for each in outside)
+        inside = pooled.curve(np.geomspace(temperatures[0], temperatures[-1], 41).tolist())
+        assert all(each.properties and not each.refused for each in inside)
+
+
 def test_rungs_that_do_not_overlap_are_solved_apart() -> None:
     rng = np.random.default_rng(25)
     cold = [harmonic(rng, temperature, 1000) for temperature in (1.0, 1.2)]
