@@ -42,11 +42,12 @@ class Finding:
     temperature: Estimate | None = None
 
     def doubted(self, reason: str, trust: str = "caution") -> Finding:
-        """The same with this trust at most, for one more reason; itself where the reason is empty."""
+        """The same with this trust at most, for one more reason, told once; itself where the reason is empty."""
         if not reason:
             return self
         least = max(self.trust, trust, key=TRUST.index)
-        return replace(self, trust=least, reason="; ".join(filter(None, (self.reason, reason))))
+        reasons = (self.reason, "" if reason in self.reason else reason)
+        return replace(self, trust=least, reason="; ".join(filter(None, reasons)))
 
 
 @dataclass(frozen=True)

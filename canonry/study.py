@@ -16,8 +16,9 @@ from canonry.writing import study_text
 from sampler.fluid import ELSEWHERE, Fluid, State, Truncation
 from sampler.protocol import Precision, Protocol, Scheme
 
-__all__ = ["COMPARED", "Adopted", "Compare", "Study", "Tolerance", "Until", "load", "study_of"]
+__all__ = ["COMPARED", "LIMITED", "Adopted", "Compare", "Study", "Tolerance", "Until", "load", "study_of"]
 
+_BY_INSERTION = ("residual_chemical_potential", "residual_helmholtz_energy", "residual_entropy")
 COMPARED = (
     "residual_energy",
     "residual_heat_capacity",
@@ -32,10 +33,10 @@ COMPARED = (
     "joule_thomson",
     "grueneisen",
     "enthalpy",
-    "residual_chemical_potential",
-    "residual_helmholtz_energy",
-    "residual_entropy",
+    *_BY_INSERTION,
 )
+LIMITED = tuple(name for name in COMPARED if name not in _BY_INSERTION)
+"""Of them, those whose error falls as sampling goes on; test particles are put into a fixed number of frames."""
 _WITH_IDEAL = ("heat_capacity", "isobaric_heat_capacity", "sound_speed", "joule_thomson", "grueneisen", "enthalpy")
 _LONGEST = 20  # times `steps`, under [until] where the file does not say
 _SMALLEST_CUTOFF = 1.0  # sigma
@@ -348,10 +349,9 @@ def _until(top: Table, scale: Scale | None, sampling: Protocol, *, total: bool) 
     """total : whether the ideal part of the heat capacity is known"""
     if "until" not in top:
         return None
-    table = top.table("until").only(
-        (*COMPARED, "steps_at_most"), later=[name for name in PROPERTIES if name not in COMPARED]
-    )
-    limits = {name: table.read(name, _tolerance(name, scale)) for name in COMPARED if name in table}
+    later = [name for name in PROPERTIES if name not in LIMITED]
+    table = top.table("until").only((*LIMITED, "steps_at_most"), later=later)
+    limits = {name: table.read(name, _tolerance(name, scale)) for name in LIMITED if name in table}
     if not limits:
         raise top.refusal("until", 'what is needed is a property and its largest error, such as heat_capacity = "1 %"')
     for name in limits:

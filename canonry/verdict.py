@@ -54,7 +54,7 @@ FOLLOWS: Mapping[str, tuple[str, ...]] = {
     "compressibility_factor": ("pressure",),
     **PARTS,
     "residual_helmholtz_energy": ("residual_chemical_potential", "pressure"),
-    "residual_entropy": ("residual_chemical_potential", "pressure"),
+    "residual_entropy": ("residual_chemical_potential", "pressure", "residual_energy"),
 }
 """Properties that say nothing but what others do at the same state: these."""
 

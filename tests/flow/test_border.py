@@ -9,6 +9,7 @@ from canonry.border import Border
 from canonry.job import run
 from canonry.results import Results
 from canonry.units import Scale
+from estimators.derived import PARTS
 
 ARGON = """
 [fluid]
@@ -46,8 +47,13 @@ def test_a_temperature_in_a_sentence_is_short_and_has_the_unit_of_the_border() -
 def test_refusals_advise_in_the_units_of_the_study(tmp_path: Path) -> None:
     """Two rungs far apart: what is refused between them and which rungs would help, in kelvin throughout."""
     results = sampled(tmp_path)
-    refused = results.curve[results.curve["value"].isna()].drop_duplicates("temperature")
+    without = results.curve[results.curve["value"].isna()]
+    refused = without[without["property"] == "residual_energy"]
     assert len(refused) > 20
+    # at the other temperatures only quotients by what may be zero
+    rest = without[~without["temperature"].isin(refused["temperature"])]
+    assert set(rest["property"]) <= {*PARTS}
+    assert rest["reason"].str.contains("not clearly above zero").all()
     page = (tmp_path / "study" / "report.html").read_text()
     assert "No reweighted value" in page
     assert not re.search("epsilon/k|ε/k", page)

@@ -50,6 +50,7 @@ PROPERTIES = {
     *("isobaric_heat_capacity", "thermal_expansion", "sound_speed", "joule_thomson", "grueneisen", "enthalpy"),
 }
 TOTALS = {"heat_capacity", "isobaric_heat_capacity", "sound_speed", "joule_thomson", "grueneisen", "enthalpy"}
+INSERTED = {"residual_chemical_potential", "residual_helmholtz_energy", "residual_entropy"}
 CHANGES = {"residual_helmholtz_change", "residual_entropy_change"}
 STATES = [State(1.0, 0.8, 500), State(1.2, 0.8, 500)]
 
@@ -79,14 +80,15 @@ def test_one_headline_for_each_property_and_state(liquid: Results, apart: Result
     for results, states in ((liquid, 3), (apart, 2)):
         headlines = results.properties[results.properties["headline"]]
         changes = headlines[headlines["property"].isin(CHANGES)]
-        assert len(headlines) - len(changes) == states * len(PROPERTIES)
-        assert set(headlines["property"]) - CHANGES == PROPERTIES
+        assert len(headlines) - len(changes) == states * len(PROPERTIES | INSERTED)
+        assert set(headlines["property"]) - CHANGES == PROPERTIES | INSERTED
+        assert set(headlines["property"][headlines["method"] == "insertion"]) == INSERTED
         assert len(changes) == (0 if results is apart else 4)
         assert once(headlines)
 
 
 def test_overlapping_rungs_are_reweighted(liquid: Results) -> None:
-    headlines = liquid.properties[liquid.properties["headline"]]
+    headlines = liquid.properties[liquid.properties["headline"] & ~liquid.properties["property"].isin(INSERTED)]
     assert (headlines["method"] == "reweighted").mean() > 0.8
     own = liquid.properties[liquid.properties["method"] != "reweighted"].set_index(["temperature", "property"])
     rows = headlines[(headlines["method"] == "reweighted") & ~headlines["property"].isin(CHANGES)]
@@ -100,8 +102,11 @@ def test_overlapping_rungs_are_reweighted(liquid: Results) -> None:
 def test_rungs_apart_keep_their_own_values_with_caution(apart: Results) -> None:
     headlines = apart.properties[apart.properties["headline"]]
     assert not (headlines["method"] == "reweighted").any()
-    assert set(headlines["trust"]) <= {"caution", "no"}
-    assert headlines["reason"].str.contains("shares too few samples").all()
+    inserted = headlines["method"] == "insertion"
+    assert set(headlines["property"][inserted]) == INSERTED
+    assert not headlines["reason"][inserted].str.contains("shares too few samples").any()
+    assert set(headlines["trust"][~inserted]) <= {"caution", "no"}
+    assert headlines["reason"][~inserted].str.contains("shares too few samples").all()
 
 
 def test_refused_points_of_a_curve_keep_their_row(apart: Results, liquid: Results) -> None:
@@ -137,7 +142,7 @@ def test_heat_capacity_is_the_residual_one_with_the_ideal_part(liquid: Results, 
     full, residual = table["heat_capacity"].dropna(), table["residual_heat_capacity"].dropna()
     assert (full - residual).to_numpy() == pytest.approx(1.5, abs=1e-12)
     without = sampled(tmp_path, ideal='"unknown"', states="points = [[1.6, 0.7]]")
-    assert set(without.properties["property"]) == PROPERTIES - TOTALS
+    assert set(without.properties["property"]) == (PROPERTIES | INSERTED) - TOTALS
     assert not TOTALS.intersection(without.summary)
 
 
@@ -230,7 +235,8 @@ def test_what_costs_a_moment_is_told(monkeypatch: pytest.MonkeyPatch, tmp_path: 
         monkeypatch.setattr(canonry.estimation, "is_cached", lambda cached=cached: cached)
         told: list[str] = []
         estimate(tmp_path / "study", watch=told.append)
-        assert told == [f"estimating rung {n} of 2{words}" for n in (1, 2)] + ["reweighting between the rungs"]
+        estimating = [f"estimating rung {n} of 2{words}" for n in (1, 2)]
+        assert told == [*estimating, "reweighting between the rungs", "laying a surface through all rungs"]
     told.clear()
     (tmp_path / "study" / "study.toml").write_text(
         (tmp_path / "study" / "study.toml").read_text().replace("steps = 20000", "steps = 100")
