@@ -15,7 +15,7 @@ from canonry.allotment import protocols
 from canonry.beside import Rung, exactly, found, other_sizes
 from canonry.border import Border
 from canonry.errors import UserError
-from canonry.findings import Check, Curve, Cut, Finding, Findings
+from canonry.findings import Check, Curve, Cut, Finding, Findings, one_headline
 from canonry.frames import findings_of, inserted, scattered
 from canonry.health import Samples, judged, known, of_isochore, of_rung, wavelength
 from canonry.isochore import Isochore, assemble
@@ -23,7 +23,7 @@ from canonry.marking import marked
 from canonry.risks import doubt, guide
 from canonry.sampling import recorded
 from canonry.study import Study
-from canonry.surface import of_states, on_grid
+from canonry.surface import absolute, of_states, on_grid
 from canonry.units import Scale
 from estimators.canonical import kinetic_temperature, rung_properties
 from estimators.compiled import is_cached
@@ -73,9 +73,12 @@ class _Rung:
         density, edges = np.histogram(energies, bins=_BINS, density=True)
         return Curve(self.state, None, 0.5 * (edges[1:] + edges[:-1]), density)
 
-    def beyond(self) -> Iterator[Finding]:
-        """What its frames say beyond averages and fluctuations."""
-        for finding in findings_of(self.state, self.own, self.insertion, self.scattering):
+    def beyond(self, surface: Surface | None) -> Iterator[Finding]:
+        """What its frames say beyond averages and fluctuations, and what the surface says that these do not."""
+        found = [*findings_of(self.state, self.own, self.insertion, self.scattering)]
+        if surface is not None:
+            found += absolute(surface, self.state)
+        for finding in one_headline(found):
             yield replace(finding, temperature=self.temperature)
 
     @property
@@ -136,7 +139,9 @@ def findings(study: Study, directory: Path, border: Border, *, watch: Callable[[
             yield finding.doubted(doubt(finding.state, reference) if reference else "")
 
     return Findings(
-        properties=tuple(doubted([*(each.properties() for each in isochores), *(rung.beyond() for rung in rungs)])),
+        properties=tuple(
+            doubted([*(each.properties() for each in isochores), *(rung.beyond(between) for rung in rungs)])
+        ),
         curve=tuple(doubted(each.curve() for each in isochores)),
         structures={rung.state: rung.structure for rung in rungs if rung.structure is not None},
         cuts=tuple(cut for rung in rungs for cut in rung.cuts),

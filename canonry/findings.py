@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+import math
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass, field, replace
 
 import numpy as np
@@ -15,7 +16,7 @@ from estimators.structure import Structure
 from estimators.surface.helmholtz import HeldOut
 from sampler.fluid import State
 
-__all__ = ["TRUST", "Check", "Curve", "Cut", "Finding", "Findings", "Overlap"]
+__all__ = ["TRUST", "Check", "Curve", "Cut", "Finding", "Findings", "Overlap", "one_headline"]
 
 Floats = npt.NDArray[np.float64]
 
@@ -48,6 +49,24 @@ class Finding:
         least = max(self.trust, trust, key=TRUST.index)
         reasons = (self.reason, "" if reason in self.reason else reason)
         return replace(self, trust=least, reason="; ".join(filter(None, reasons)))
+
+
+def one_headline(findings: Sequence[Finding]) -> Iterator[Finding]:
+    """The same, where of those of one property and state only the most trusted stays the headline, or the most precise.
+
+    findings : of one state
+    """
+
+    def rank(finding: Finding) -> tuple[int, float]:
+        error = math.inf if finding.estimate is None else finding.estimate.standard_error
+        return TRUST.index(finding.trust), error
+
+    best: dict[str, Finding] = {}
+    for finding in findings:
+        if finding.headline:
+            best[finding.property] = min(best.get(finding.property, finding), finding, key=rank)
+    for finding in findings:
+        yield replace(finding, headline=best.get(finding.property) is finding)
 
 
 @dataclass(frozen=True)

@@ -11,9 +11,10 @@ from canonry.findings import Finding
 from estimators.estimate import Estimate
 from estimators.surface.answer import Answer
 from estimators.surface.helmholtz import Surface, surface
+from estimators.surface.properties import ABSOLUTE
 from sampler.fluid import Fluid, State
 
-__all__ = ["findings_of", "of_states", "on_grid"]
+__all__ = ["absolute", "findings_of", "of_states", "on_grid"]
 
 _TEMPERATURES, _DENSITIES = 9, 13  # of the grid on which a surface is written down
 _FAR = 1e6  # sigma; where a potential that is corrected for its long range may be taken to end
@@ -59,6 +60,12 @@ def on_grid(surface: Surface, states: Sequence[State]) -> Iterator[Finding]:
     for density in np.linspace(densities.min(), densities.max(), _DENSITIES):
         for temperature in along:
             yield from findings_of(surface.at(float(temperature), float(density)), states[0].particles)
+
+
+def absolute(surface: Surface, state: State) -> Iterator[Finding]:
+    """At a rung, what only a path from the ideal gas tells."""
+    answer = surface.at(state.temperature, state.density)
+    yield from (finding for finding in findings_of(answer, state.particles) if finding.property in ABSOLUTE)
 
 
 def findings_of(answer: Answer, particles: int) -> Iterator[Finding]:
