@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 from canonry.border import Border
 from canonry.study import Study
 from estimators.canonical import NEEDS
+from estimators.derived import PARTS
 from sampler.fluid import State
 from sampler.series import Series
 
@@ -28,6 +29,12 @@ _GIVEN_BY = {
 }
 """Column of a series, or what else a check needs -> columns or keys of a description that give it."""
 _RECORDED = ("energy", "sampled_energy", "virial", "hypervirial", "kinetic")
+_MADE_OF = {
+    **PARTS,
+    "enthalpy": (*PARTS["enthalpy"], "heat_capacity"),  # for its ideal part
+    "residual_helmholtz_energy": ("residual_chemical_potential", "compressibility_factor"),
+    "residual_entropy": ("residual_chemical_potential", "compressibility_factor", "residual_energy"),
+}
 _CHECKS = {
     "kinetic-law": ("kinetic",),
     "pair-slope": ("sampled_energy", "rungs"),
@@ -65,14 +72,20 @@ def _lacking(study: Study, state: State, series: Sequence[Series]) -> Iterator[t
     needs: dict[str, Any] = dict(NEEDS)
     flexible = "energy" not in given and all(each.freedom is not None for each in series)
     needs["heat_capacity"] = NEEDS["heat_capacity" if flexible else "residual_heat_capacity"]
+    found: dict[str, list[str]] = {}
     for name, columns in needs.items():
         lacking = [_GIVEN_BY[column] for column in columns if column not in given]
         if name == "heat_capacity" and study.ideal_heat_capacity is None and not flexible:
             lacking.append("fluid.ideal_heat_capacity")
         if name == "bulk_modulus" and fluid.has_pairs and fluid.surface_hypervirial(state.density):
             lacking += [] if "frames" in given else ["frames"]
-        if lacking:
-            yield name, "; ".join(lacking)
+        found[name] = lacking
+    if fluid.has_pairs:
+        found["residual_chemical_potential"] = [] if "frames" in given else ["frames"]
+    for name, parts in _MADE_OF.items():
+        if found.keys() >= {*parts}:
+            found[name] = list(dict.fromkeys(column for part in parts for column in found[part]))
+    yield from ((name, "; ".join(lacking)) for name, lacking in found.items() if lacking)
     if "frames" not in given:
         yield "g(r)", "frames"
     for check, columns in _CHECKS.items():

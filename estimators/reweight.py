@@ -109,10 +109,11 @@ class Pooled:
             ]
             best = int(np.argmax(support))
             if support[best] < FEWEST_SAMPLES:
-                yield Reweighted(temperature, support[best], {}, self._refusal(temperature, support[best]))
+                refused, properties = self._refusal(temperature, support[best]), {}
             else:
-                properties = self._groups[best].properties(temperature, moments[best], index)
-                yield Reweighted(temperature, support[best], properties)
+                refused, properties = "", self._groups[best].properties(temperature, moments[best], index)
+            surviving = self._groups[best].surviving(temperature)
+            yield Reweighted(temperature, support[best], properties, refused, surviving)
 
     def _refusal(self, temperature: float, samples: float) -> str:
         support = f"{samples:.0f} effective samples support temperature {self._spoken(temperature)}"

@@ -33,7 +33,7 @@ density = 0.8
 temperatures = [1.3, 1.4, 1.5]
 particles = 64
 [sampling]
-seed = 3
+seed = 5
 repeats = 2
 equilibration = 1000
 steps = 12000
@@ -137,6 +137,19 @@ def test_a_planted_heat_capacity_fails_the_heat_routes(sampled: Path, monkeypatc
     # half as much again in the variance of K, of which 1 - var(K)/(N T^2 3/2) = 1.5/c_v is left: c_v 2.3 becomes 5
     assert not rows(sampled, "heat-routes", "constant energy")["passed"].any()
     assert rows(sampled, "heat-routes", "slope of the energy")["passed"].all()
+
+
+def test_energies_beyond_the_reach_of_the_ladder_say_nothing(sampled: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Repeats as warm as 1.3 x 1.4 = 1.8 or more: of the samples at 1.5 less than a fifth counts there."""
+
+    def warmer(each: Series) -> Series:
+        return replace(each, kinetic=1.4 * each.column("kinetic"))
+
+    monkeypatch.setattr("canonry.sampling.recorded", in_place("constant-energy", warmer))
+    canonry.estimate(sampled)
+    assert rows(sampled, "heat-routes", "constant energy").empty
+    assert {*rows(sampled, "heat-routes", "slope of the energy")["temperature"]} >= ENDS
+    assert len(rows(sampled, "box", "differ from 128")) == len(ENDS)
 
 
 def test_too_few_samples_say_nothing(tmp_path: Path) -> None:

@@ -9,7 +9,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from canonry.axes import round_ticks
-from canonry.figures import Area, Axis, Band, Figure, Line, Note, Points, Span, draw
+from canonry.figures import Area, Axis, Band, Figure, Line, Map, Note, Points, Span, draw
 
 TEMPERATURE, PRESSURE = Axis("Temperature T", "K"), Axis("Pressure P", "MPa")
 
@@ -162,4 +162,69 @@ def test_axes_survive_empty_and_flat_data(values):
     svg = drawn(Line(np.arange(float(len(y))), y), Points(np.arange(float(len(y))), y))
     assert len(kinds(svg, "point")) == np.isfinite(y).sum()
     assert len(kinds(svg, "tick")) >= 4
+    assert "nan" not in ElementTree.tostring(svg, encoding="unicode")
+
+
+HEAT = Axis("c_v", "k_B")
+
+
+def mapped(values, *marks, steps=8):
+    x, y = np.linspace(1.0, 2.0, 9), np.linspace(0.6, 0.8, 5)
+    return drawn(Map(x, y, values(x, y[:, None]), HEAT, steps), *marks, y=Axis("Density", "σ⁻³"))
+
+
+def outline(path):
+    """All corners of a path, (n, 2)."""
+    return np.array([[float(v) for v in pair] for pair in re.findall(r"(-?[\d.]+),(-?[\d.]+)", path.get("d"))])
+
+
+def test_map_has_a_line_and_a_tone_for_each_step_of_its_scale():
+    svg = mapped(lambda x, rho: 2.0 + x + 0.0 * rho)
+    steps = [float(text(tick)) for tick in kinds(svg, "tick") if tick.get("text-anchor") == "start"]
+    assert steps == [3.0, 3.2, 3.4, 3.6, 3.8, 4.0]
+    shown = [mark for mark in kinds(svg, "shade") if mark.get("d")]
+    assert len(shown) == 7, "one below the first line"
+    ticks = {float(text(t)): float(t.get("x")) for t in kinds(svg, "tick") if t.get("text-anchor") == "middle"}
+    for step, level in list(zip(steps, kinds(svg, "level"), strict=True))[1:-1]:
+        assert np.allclose(outline(level)[:, 0], ticks[round(step - 2.0, 9)], atol=0.11), "c_v of 3.2 lies at x = 1.2"
+        assert outline(shown[1 + steps.index(step)])[:, 0].min() == pytest.approx(ticks[round(step - 2.0, 9)], abs=0.11)
+    labels = {float(text(note)) for note in kinds(svg, "note")}
+    assert labels >= set(steps[1:-1])
+    captions = [text(label).replace("\u200b", "") for label in kinds(svg, "axis-label")]
+    assert captions == ["cv, kB", "Density, σ⁻³", "Temperature T, K"]
+
+
+def test_map_is_blank_where_there_is_no_value():
+    whole, holed = (
+        mapped(lambda x, rho, edge=edge: np.where(x + 0.0 * rho > edge, np.nan, x + rho)) for edge in (9.0, 1.5)
+    )
+    right = [max(outline(mark)[:, 0].max() for mark in kinds(svg, "shade") if mark.get("d")) for svg in (whole, holed)]
+    left = min(outline(mark)[:, 0].min() for mark in kinds(whole, "shade") if mark.get("d"))
+    assert (right[1] - left) / (right[0] - left) == pytest.approx(0.5, abs=0.01)
+    empty = mapped(lambda x, rho: np.nan * (x + rho))
+    assert not kinds(empty, "shade")
+    assert not kinds(empty, "level")
+
+
+def test_labels_of_lines_are_clear_of_points_and_of_one_another():
+    """At least 20 pixels between their middles and from the frame of the data."""
+    states = np.array([1.0, 1.25, 1.5, 1.75, 2.0])
+    svg = mapped(
+        lambda x, rho: (x - 1.0) * (1.0 + 5.0 * (rho - 0.6)),
+        Points(states, np.full(5, 0.7), None, "sampled", "ring"),
+        Points(states, np.full(5, 0.75), None, "with caution", "dot"),
+        steps=12,
+    )
+    notes = np.array([[float(note.get("x")), float(note.get("y")) - 4.0] for note in kinds(svg, "note")])
+    rings = np.array([[float(ring.get("cx")), float(ring.get("cy"))] for ring in kinds(svg, "ring")])
+    assert len(notes) >= 4
+    between = np.linalg.norm(notes[:, None] - np.concatenate([notes, rings]), axis=2)
+    assert between[between > 0.0].min() > 19.8, "rounded to a tenth of a pixel"
+    assert {dot.get("r") for dot in kinds(svg, "point") if "dot" in dot.get("class")} == {"1.6"}
+
+
+@pytest.mark.parametrize("value", [0.0, 2.5, 1e-300])
+def test_map_of_one_value_survives(value):
+    svg = mapped(lambda x, rho: value + 0.0 * (x + rho))
+    assert kinds(svg, "shade")
     assert "nan" not in ElementTree.tostring(svg, encoding="unicode")

@@ -255,6 +255,27 @@ def invented(densities=(0.8,), rungs=6, units="reduced", samples=300, scheme="ba
     )
 
 
+def with_surface(results, refused=lambda t, rho: False, trust="ok"):
+    """The results with a surface over their states, of the same formulas."""
+    densities, temperatures = (results.properties[name].unique() for name in ("density", "temperature"))
+    first = results.properties.iloc[0]
+    rows = [
+        {**first, "temperature": t, "density": rho, "property": name, "value": formula(t, rho)}
+        | {"standard_error": error * (1.0 + t), "method": "surface", "headline": True, "trust": trust}
+        | {"reason": "" if trust == "ok" else "liquid and vapour coexist here"}
+        for rho in np.linspace(densities.min(), densities.max(), 13)
+        for t in 1.0 / np.linspace(1.0 / temperatures.min(), 1.0 / temperatures.max(), 9)
+        if not refused(t, rho)
+        for name, (formula, error) in PROPERTIES.items()
+    ]
+    held = {"temperature": 1.0, "density": 0.7, "property": "pressure", "value": 1.5, "combined_error": 0.1}
+    return replace(
+        results,
+        surface=pd.DataFrame(rows, columns=COLUMNS["surface"]),
+        held_out=pd.DataFrame([held | {"predicted": 1.5 - 0.1 * z, "z": z} for z in (0.3, -2.6, 1.1)]),
+    )
+
+
 def empty(name):
     return pd.DataFrame({column: [] for column in COLUMNS[name]})
 
@@ -272,7 +293,7 @@ def test_page_is_one_file_without_scripts_or_loads(tmp_path):
 
 def test_every_figure_speaks_and_has_labelled_axes():
     page = Page(html(invented()))
-    assert len(page.figures) == 4 + 2 + 6
+    assert len(page.figures) == 4 + 2 + 6 + 6
     titles = [figure.findtext("title") for figure in page.figures]
     assert len(set(titles)) == len(titles)
     for figure in page.figures:
@@ -422,7 +443,7 @@ def test_study_without_reference():
 
 
 def test_study_that_has_rung_values_only():
-    names = ("curve", "structure", "verdict", "histograms", "ledger", "overlap", "reference_curve")
+    names = ("curve", "structure", "structure_factor", "verdict", "histograms", "ledger", "overlap", "reference_curve")
     page = Page(html(replace(invented(scheme="velocity-verlet"), **{name: empty(name) for name in names})))
     assert [figure.findtext("title").split(",")[0] for figure in page.figures] == [
         "Heat capacity over temperature",
@@ -438,7 +459,7 @@ def test_states_without_neighbours_come_as_one_set():
     assert page.figures[0].findtext("title") == "Conserved quantity over time, single states"
     assert [figure.findtext("title").split(",")[1] for figure in page.figures[1:]] == [
         f" density {density}" for density in (0.6, 0.7, 0.8)
-    ]
+    ] * 2
 
 
 def test_unknown_ideal_part_leaves_the_residual_heat_capacity():
@@ -474,11 +495,11 @@ def test_hostile_texts_are_shown_not_obeyed():
 
 
 def test_forty_rungs_on_three_isochores_stay_small():
-    results = invented(densities=(0.6, 0.7, 0.8), rungs=14, samples=20_000)
+    results = with_surface(invented(densities=(0.6, 0.7, 0.8), rungs=14, samples=20_000))
     source = html(results)
     assert len(source.encode()) < 5e6
     page = Page(source)
-    assert len(page.figures) == 3 * (4 + 2 + 14)
+    assert len(page.figures) == 3 * (4 + 2 + 14 + 14) + 4
     drawn = [mark.get("d").count(",") for figure in page.figures for mark in figure if mark.get("d")]
     assert max(drawn) <= 2 * 402
 
@@ -679,3 +700,141 @@ def test_states_of_one_density_are_told_together():
     assert doubts(doubted(results, *cases)) == [
         "Do not use: pressure at T = 0.9 and 1.5 ε/k_B, density 0.8 σ⁻³. Reason: near 1.25 ε/k_B."
     ]
+
+
+TITLES = ("Heat capacity over temperature and", "Pressure over temperature and")
+
+
+def shades(figure):
+    return [mark for mark in figure if mark.get("class", "").startswith("shade") and mark.get("d")]
+
+
+def test_maps_between_isochores_mark_the_sampled_states():
+    page = Page(html(with_surface(invented(densities=(0.6, 0.7, 0.8)))))
+    for title in TITLES:
+        for figure in (page.figure(title), page.figure(f"Standard error of {title.lower()}")):
+            assert len(points(figure, "ring")) == 3 * 6
+            assert len(shades(figure)) >= 4
+            assert not points(figure, "dot")
+        captions = [mark for mark in page.figure(title) if mark.get("class") == "axis-label"]
+        assert {"".join(c.itertext()).split(",")[0] for c in captions} >= {"Temperature T", "Density ρ"}
+
+
+def test_section_between_isochores_says_what_it_rests_on_and_how_it_was_held_against_rungs():
+    """Root mean square of 0.3, -2.6 and 1.1: 1.64."""
+    results = with_surface(invented(densities=(0.6, 0.7, 0.8)))
+    text = Page(html(results)).text
+    assert text.count("Between the isochores") == 3, "contents, heading, and its first words"
+    assert "the ideal gas and the second virial coefficient are its exact limits" in text
+    assert "T from 0.9 to 1.5" in text
+    assert "ρ from 0.6 to 0.8" in text
+    assert "Up to the lowest density sampled, 0.6" in text
+    assert (
+        "3 values deviate by 1.64 combined standard errors (root mean square), by 2.6 at most: pressure at T = 1"
+        in text
+    )
+    assert "With caution at" not in text
+    doubtful = with_surface(invented(densities=(0.6, 0.7, 0.8)), trust="caution")
+    page = Page(html(doubtful))
+    assert "With caution at 117 of 117 points of the grid: all properties. Reason: liquid and vapour" in page.text
+    assert len(points(page.figure(TITLES[0]), "dot")) == 117
+    assert "Between the isochores" not in Page(html(invented(densities=(0.6, 0.7, 0.8)))).text
+
+
+def test_maps_are_blank_where_the_surface_refuses_or_must_not_be_trusted():
+    results = invented(densities=(0.6, 0.7, 0.8))
+    cut = with_surface(results, refused=lambda t, rho: t < 1.1)
+    whole, part = (
+        [
+            float(x)
+            for mark in shades(Page(html(each)).figure(TITLES[1]))
+            for x in re.findall(r"(-?[\d.]+),", mark.get("d"))
+        ]
+        for each in (with_surface(results), cut)
+    )
+    assert min(part) > min(whole) + 50
+    assert max(part) == max(whole)
+    assert not shades(Page(html(with_surface(results, trust="no"))).figure(TITLES[0]))
+
+
+def waves(results, shift, error=0.2):
+    """The results with bulk moduli from long waves, off by a shift in combined errors; 0.2 is that of the others."""
+    own = results.properties[
+        (results.properties["property"] == "bulk_modulus") & (results.properties["method"] == "fluctuation")
+    ]
+    moved = own["value"] + shift * np.hypot(error, own["standard_error"])
+    more = own.assign(method="structure", value=moved, standard_error=error)
+    return replace(results, properties=pd.concat([results.properties, more], ignore_index=True))
+
+
+def test_long_waves_are_held_against_fluctuations():
+    shift = np.array([0.5, -1.0, 0.0, 2.7, 1.0, -0.2])
+    results = waves(invented(), shift)
+    page = Page(html(results))
+    warmest = sorted(results.properties["temperature"].unique())[3]
+    assert "agrees within two combined standard errors at 5 of 6 states" in page.text
+    assert f"the largest deviation is 2.7, at T = {warmest:g}" in page.text
+    figure = page.figure("Structure factor at T = 0.9")
+    assert len(points(figure, "ring")) == len(points(figure, "cross")) == 1
+    silent = Page(html(waves(invented(), shift, error=np.nan)))
+    assert "combined standard errors at" not in silent.text
+    assert not points(silent.figure("Structure factor at T = 0.9"), "ring")
+
+
+@pytest.mark.parametrize("factor", [1.0, 41.9])
+def test_limit_of_long_waves_is_that_of_the_bulk_modulus_in_any_unit(factor):
+    """rho T/B_T at T 0.9, density 0.8 and B_T = 25 * 0.8^3 + 4 * 0.9 = 16.4: 0.0439; P and Z have noise of 1 %."""
+    results = waves(invented(), 0.0)
+    scaled = results.properties.copy()
+    scaled.loc[scaled["unit"] == "epsilon/sigma^3", ["value", "standard_error"]] *= factor
+    figure = Page(html(replace(results, properties=scaled))).figure("Structure factor at T = 0.9")
+    ticks = [mark for mark in figure if mark.get("class") == "tick" and mark.get("text-anchor") == "end"]
+    values, pixels = ([float(get(mark)) for mark in ticks] for get in (lambda m: m.text, lambda m: m.get("y")))
+    per_pixel = (values[-1] - values[0]) / (pixels[0] - pixels[-1])
+    (ring,) = points(figure, "ring")
+    shown = values[0] + (pixels[0] - 4.0 - float(ring.get("cy"))) * per_pixel
+    assert shown == pytest.approx(0.9 * 0.8 / 16.4, abs=0.1 * per_pixel + 0.002)
+
+
+def inserted(results, trusts):
+    """The results with a chemical potential by test insertion at every state, trusted as told."""
+    own = results.properties[(results.properties["property"] == "pressure") & results.properties["headline"]]
+    more = own.assign(property="residual_chemical_potential", method="insertion", trust=trusts, unit="epsilon")
+    change = own.assign(property="residual_helmholtz_change", unit="k_B")
+    return replace(results, properties=pd.concat([results.properties, more, change.iloc[1:]], ignore_index=True))
+
+
+def test_absolute_values_come_in_a_table_of_their_own_with_their_trust():
+    results = inserted(invented(), ["ok", "ok", "ok", "caution", "caution", "no"])
+    text = Page(html(results)).text
+    assert "Free energy and entropy T ε/k B μ res ε Δ(a res /T) k B" in text
+    told = "Of 6 values of μ res : to be trusted at 3, with caution (†) at 2, not to be trusted (‡) at 1."
+    assert told in text
+    assert "Changes along the ladder count from its coldest rung" in text
+    assert "Free energy and entropy" not in Page(html(invented())).text
+    assert "test insertion" not in Page(html(invented())).text
+
+
+def test_methods_name_what_was_used_and_nothing_else():
+    results = invented(densities=(0.6, 0.7, 0.8))
+    plain = replace(results, structure=results.structure.assign(g_forced=np.nan))
+    sources = {
+        "Widom": inserted(plain, "ok"),
+        "Borgis": results,
+        "Jay": waves(plain, 0.0),
+        "Rasmussen": with_surface(plain),
+        "Cressie": with_surface(plain),
+    }
+    for author, used in sources.items():
+        assert any(author in work for work in citations(used)), author
+        assert not any(author in work for work in citations(plain)), author
+        numbers = [int(number) for number in re.findall(r"\[(\d+)\]", paragraph(used))]
+        assert sorted(numbers) == list(range(1, len(citations(used)) + 1))
+
+
+def test_reach_of_reweighting_is_told_where_anything_was_reweighted():
+    told = "Of 500 pairs of short ladders and direct runs"
+    results = invented()
+    assert told in Page(html(results)).text
+    own = results.properties[results.properties["method"] != "reweighted"].assign(headline=True)
+    assert told not in Page(html(replace(results, properties=own, curve=empty("curve")))).text

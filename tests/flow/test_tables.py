@@ -358,6 +358,8 @@ def test_caution_does_not_hide_that_nothing_is_to_be_trusted() -> None:
     (own,) = pressures(known(10.0, samples=20), Reweighted(1.0, 31.0, {}, "31 effective samples"))
     assert own.trust == "no"
     assert own.reason == "too short to tell; 31 effective samples"
+    again = own.doubted("31 effective samples", "no")
+    assert (again.trust, again.reason) == ("no", own.reason), "a reason is told once"
 
 
 def test_a_text_file_is_written_whole_or_not_at_all(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:

@@ -40,6 +40,8 @@ steps = 30000
 frame_every = 500
 """
 SIZES = {"epsilon": "119.8 K", "sigma": "3.405 angstrom", "mass": "39.948 u"}
+INSERTED = {"residual_chemical_potential", "residual_helmholtz_energy", "residual_entropy"}
+"""What only frames say, which are adopted with few of the samples."""
 NAMES = {"time": "t", "potential": "U", "dynamical": "U_dyn", "kinetic": "K", "pressure": "P", "virial": "W"}
 
 

@@ -66,9 +66,9 @@ def test_times_that_are_uneven_here_and_there_leave_no_doubt_and_else_at_their_o
         found = results.properties["reason"].str.contains(doubted, regex=False)
         assert set(results.properties["temperature"][found]) == doubtful
         assert set(results.properties["trust"][found]) <= {"caution", "no"}
-        assert set(results.properties["property"][found]) == (
-            set(results.properties["property"]) if doubtful else set()
-        )
+        there = results.properties["temperature"].isin(doubtful)
+        assert set(results.properties["property"][found]) == set(results.properties["property"][there])
+        assert found[there].all()
         near = results.curve["temperature"] < 1.4
         marks = results.curve["reason"].str.contains(doubted, regex=False)
         assert (marks == near & bool(doubtful)).all()
