@@ -1,7 +1,7 @@
-"""Figures as inline SVG: points with bars, lines, bands and areas in a pair of axes, with a legend.
+"""Figures as inline SVG: points with bars, lines, bands, areas and maps in a pair of axes, with a legend.
 
-Colours are CSS classes of the page (`measured`, `reference`, `accent`, `quiet`); shape and dash carry the same
-distinction without them.
+Colours are CSS classes of the page (`measured`, `reference`, `accent`, `quiet`); shape, dash and labelled lines carry
+the same distinction without them.
 """
 
 from __future__ import annotations
@@ -15,13 +15,14 @@ import numpy as np
 import numpy.typing as npt
 
 from canonry.axes import Axis, Scale, scale
-from canonry.notation import as_svg
+from canonry.maps import MARGIN, Map, draw_map
+from canonry.paths import dashed, extremes, line, ring, text
+from canonry.paths import pixels as _n
 
-__all__ = ["Area", "Axis", "Band", "Figure", "Line", "Note", "Points", "Span", "draw"]
+__all__ = ["Area", "Axis", "Band", "Figure", "Line", "Map", "Note", "Points", "Span", "draw"]
 
 Floats = npt.NDArray[np.float64]
 Tone = Literal["measured", "reference", "accent", "quiet"]
-_MOST_POINTS = 400
 _LETTER = 6.9
 _ROW = 19
 
@@ -34,7 +35,7 @@ class Points:
     y: Floats
     error: Floats | None = None
     label: str = ""
-    shape: Literal["disc", "ring", "cross"] = "disc"
+    shape: Literal["disc", "ring", "cross", "dot"] = "disc"
     tone: Tone = "measured"
 
 
@@ -89,7 +90,7 @@ class Note:
     text: str
 
 
-Mark = Points | Line | Band | Area | Span | Note
+Mark = Points | Line | Band | Area | Span | Note | Map
 
 
 @dataclass(frozen=True)
@@ -109,19 +110,22 @@ class Figure:
 def draw(figure: Figure) -> str:
     """The figure as one SVG element, its texts escaped; axes span all finite data of the marks."""
     legend, rows = _legend(figure)
-    left, right, top, bottom = 50, figure.width - 10, 26 + rows * _ROW, figure.height - 40
+    maps = [mark for mark in figure.marks if isinstance(mark, Map)]
+    left, top, bottom = 50, 26 + rows * _ROW, figure.height - 40
+    right = figure.width - 10 - (MARGIN if maps else 0)
     x = scale(_extent(figure, 0), left, right, figure.ticks, margin=0.03)
     y = scale(_extent(figure, 1), bottom, top, max(2, figure.ticks * (bottom - top) // 250), margin=0.06)
     order = (Span, Band, Area, Line, Points, Note)
-    body = [_draw_mark(mark, x, y) for kind in order for mark in figure.marks if isinstance(mark, kind)]
+    body = [part for mark in maps for part in draw_map(mark, x, y, _places(figure, x, y), figure.width - 4)]
+    body += [_draw_mark(mark, x, y) for kind in order for mark in figure.marks if isinstance(mark, kind)]
     return "\n".join(
         [
             f'<svg role="img" viewBox="0 0 {figure.width} {figure.height}">',
             f"<title>{escape(figure.title)}</title><desc>{escape(figure.description)}</desc>",
             *_grid(x, y),
             *body,
-            _text(4, 14, y.caption(figure.y), "axis-label", "start"),
-            _text(right, figure.height - 6, x.caption(figure.x), "axis-label", "end"),
+            text(4, 14, y.caption(figure.y), "axis-label", "start"),
+            text(right, figure.height - 6, x.caption(figure.x), "axis-label", "end"),
             *legend,
             "</svg>",
         ]
@@ -135,6 +139,13 @@ def _extent(figure: Figure, axis: int) -> tuple[float, float]:
     return (float(values.min()), float(values.max())) if len(values) else (0.0, 1.0)
 
 
+def _places(figure: Figure, x: Scale, y: Scale) -> Floats:
+    """Of all points but dots, (n, 2), in pixels."""
+    shown = [mark for mark in figure.marks if isinstance(mark, Points) and mark.shape != "dot"]
+    points = [np.column_stack([x(mark.x), y(mark.y)]) for mark in shown]
+    return np.concatenate([np.zeros((0, 2)), *points])
+
+
 def _reach(mark: Mark) -> tuple[list[Floats], list[Floats]]:
     """All x and all y that a mark must have room for."""
     match mark:
@@ -142,6 +153,8 @@ def _reach(mark: Mark) -> tuple[list[Floats], list[Floats]]:
             return [np.array([start, end])], []
         case Note(x, y):
             return [np.array([x])], [np.array([y])]
+        case Map(x, y):
+            return [x], [y]
         case Band(x, low, high):
             return [x], [low, high]
         case Area(x, y):
@@ -156,37 +169,37 @@ def _reach(mark: Mark) -> tuple[list[Floats], list[Floats]]:
 def _grid(x: Scale, y: Scale) -> Iterable[str]:
     for at, label in y.labels():
         yield f'<path class="grid" d="M{_n(x.start)},{_n(at)}H{_n(x.end)}"/>'
-        yield _text(x.start - 6, at + 4, label, "tick", "end")
+        yield text(x.start - 6, at + 4, label, "tick", "end")
     yield f'<path class="frame" d="M{_n(x.start)},{_n(y.start)}H{_n(x.end)}"/>'
     for at, label in x.labels():
         yield f'<path class="frame" d="M{_n(at)},{_n(y.start)}v4"/>'
-        yield _text(at, y.start + 17, label, "tick", "middle")
+        yield text(at, y.start + 17, label, "tick", "middle")
 
 
-def _draw_mark(mark: Mark, x: Scale, y: Scale) -> str:
+def _draw_mark(mark: Points | Line | Band | Area | Span | Note, x: Scale, y: Scale) -> str:
     match mark:
         case Points():
             return _points(mark, x, y)
         case Line():
-            keep = _extremes(mark.y)
-            path = _path(x(mark.x[keep]), y(mark.y[keep]))
+            keep = extremes(mark.y)
+            path = line(x(mark.x[keep]), y(mark.y[keep]))
             weight = " thin" if mark.thin else ""
-            return f'<path class="line {mark.tone}{weight}"{_dash(mark.dash)} d="{path}"/>'
+            return f'<path class="line {mark.tone}{weight}"{dashed(mark.dash)} d="{path}"/>'
         case Band():
-            keep = _extremes(mark.high)
-            path = _ring(x(mark.x[keep]), y(mark.low[keep]), y(mark.high[keep]))
+            keep = extremes(mark.high)
+            path = ring(x(mark.x[keep]), y(mark.low[keep]), y(mark.high[keep]))
             return f'<path class="band {mark.tone}" d="{path}"/>'
         case Area():
-            keep = _extremes(mark.y)
+            keep = extremes(mark.y)
             across, height = x(mark.x[keep]), y(mark.y[keep])
-            fill = f'<path class="band {mark.tone}" d="{_ring(across, y(np.zeros(len(keep))), height)}"/>'
-            return f'{fill}<path class="line {mark.tone}"{_dash(mark.dash)} d="{_path(across, height)}"/>'
+            fill = f'<path class="band {mark.tone}" d="{ring(across, y(np.zeros(len(keep))), height)}"/>'
+            return f'{fill}<path class="line {mark.tone}"{dashed(mark.dash)} d="{line(across, height)}"/>'
         case Span():
             start, end = float(x(mark.start)), float(x(mark.end))
             size = f'width="{_n(max(end - start, 2.0))}" height="{_n(y.start - y.end)}"'
             return f'<rect class="span" x="{_n(start)}" y="{_n(y.end)}" {size}/>'
         case Note():
-            return _text(float(x(mark.x)), float(y(mark.y)) - 6, mark.text, "note", "middle")
+            return text(float(x(mark.x)), float(y(mark.y)) - 6, mark.text, "note", "middle")
 
 
 def _points(mark: Points, x: Scale, y: Scale) -> str:
@@ -203,7 +216,8 @@ def _points(mark: Points, x: Scale, y: Scale) -> str:
 def _symbol(x: float, y: float, mark: Points, kind: str) -> str:
     if mark.shape == "cross":
         return f'<path class="{kind} cross {mark.tone}" d="M{_n(x - 4)},{_n(y - 4)}l8,8m0,-8l-8,8"/>'
-    return f'<circle class="{kind} {mark.shape} {mark.tone}" cx="{_n(x)}" cy="{_n(y)}" r="3.6"/>'
+    radius = "1.6" if mark.shape == "dot" else "3.6"
+    return f'<circle class="{kind} {mark.shape} {mark.tone}" cx="{_n(x)}" cy="{_n(y)}" r="{radius}"/>'
 
 
 def _legend(figure: Figure) -> tuple[list[str], int]:
@@ -211,13 +225,13 @@ def _legend(figure: Figure) -> tuple[list[str], int]:
     parts: list[str] = []
     x, row = 8.0, 0
     for mark in figure.marks:
-        if isinstance(mark, (Area, Note)) or not mark.label:
+        if isinstance(mark, (Area, Note, Map)) or not mark.label:
             continue
         width = 32 + _LETTER * len(mark.label)
         if parts and x + width > figure.width:
             x, row = 8.0, row + 1
         y = 31.0 + row * _ROW
-        parts += [_sample(mark, x, y), _text(x + 26, y + 4, mark.label, "legend", "start")]
+        parts += [_sample(mark, x, y), text(x + 26, y + 4, mark.label, "legend", "start")]
         x += width + 8
     return parts, row + 1 if parts else 0
 
@@ -227,55 +241,8 @@ def _sample(mark: Points | Line | Band | Span, x: float, y: float) -> str:
         case Points():
             return _symbol(x + 10, y, mark, "sample")
         case Line():
-            return f'<path class="line {mark.tone}"{_dash(mark.dash)} d="M{_n(x)},{_n(y)}h20"/>'
+            return f'<path class="line {mark.tone}"{dashed(mark.dash)} d="M{_n(x)},{_n(y)}h20"/>'
         case Band():
             return f'<rect class="band {mark.tone}" x="{_n(x)}" y="{_n(y - 5)}" width="20" height="10"/>'
         case Span():
             return f'<rect class="span" x="{_n(x)}" y="{_n(y - 5)}" width="20" height="10"/>'
-
-
-def _extremes(values: Floats) -> npt.NDArray[np.intp]:
-    """Indices that keep the outline of a long curve: lowest and highest of each stretch, and every break."""
-    n = len(values)
-    if n <= _MOST_POINTS:
-        return np.arange(n)
-    keep = {0, n - 1}
-    for stretch in np.array_split(np.arange(n), _MOST_POINTS // 2):
-        finite = np.isfinite(values[stretch])
-        if finite.any():
-            keep |= {stretch[np.nanargmin(values[stretch])], stretch[np.nanargmax(values[stretch])]}
-        if not finite.all():
-            keep.add(stretch[np.argmin(finite)])
-    return np.array(sorted(keep))
-
-
-def _runs(*columns: Floats) -> Iterable[slice]:
-    """The unbroken stretches in which every column is finite."""
-    finite = np.all(np.isfinite(np.vstack(columns)), axis=0)
-    edges = np.flatnonzero(np.diff(np.concatenate([[False], finite, [False]])))
-    return (slice(start, end) for start, end in zip(edges[::2], edges[1::2], strict=True))
-
-
-def _pairs(x: Floats, y: Floats) -> str:
-    return "L".join(f"{_n(a)},{_n(b)}" for a, b in zip(x, y, strict=True))
-
-
-def _path(x: Floats, y: Floats) -> str:
-    return "".join(f"M{_pairs(x[run], y[run])}h0" for run in _runs(x, y))
-
-
-def _ring(x: Floats, low: Floats, high: Floats) -> str:
-    there_and_back = ((run, np.concatenate([x[run], x[run][::-1]])) for run in _runs(x, low, high))
-    return "".join(f"M{_pairs(way, np.concatenate([high[run], low[run][::-1]]))}Z" for run, way in there_and_back)
-
-
-def _dash(dash: str) -> str:
-    return f' stroke-dasharray="{dash}"' if dash else ""
-
-
-def _n(pixels: float) -> str:
-    return f"{pixels:.1f}".removesuffix(".0")
-
-
-def _text(x: float, y: float, text: str, kind: str, anchor: str) -> str:
-    return f'<text class="{kind}" x="{_n(x)}" y="{_n(y)}" text-anchor="{anchor}">{as_svg(text)}</text>'

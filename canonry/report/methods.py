@@ -2,31 +2,37 @@
 
 from __future__ import annotations
 
-import tomllib
-from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
-from typing import Any
-
 from canonry.notation import name_of, unit_text
-from canonry.numbers import plain
+from canonry.report.setup import Setup, quantity
+from canonry.report.works import cited
 from canonry.results import Results
 from canonry.units import unit_label
-from reference import find
 from reference import names as references
 
-__all__ = ["Setup", "citations", "paragraph", "standing_caveats"]
+__all__ = ["citations", "paragraph", "standing_caveats", "support"]
 
-_WORKS = {
-    "baoab": "B. Leimkuhler, C. Matthews, J. Chem. Phys. 138, 174102 (2013)",
-    "metropolised": "A. M. Horowitz, Phys. Lett. B 268, 247 (1991)",
-    "obabo": "G. Bussi, M. Parrinello, Phys. Rev. E 75, 056707 (2007)",
-    "velocity-verlet": "W. C. Swope, H. C. Andersen, P. H. Berens, K. R. Wilson, J. Chem. Phys. 76, 637 (1982)",
-    "constant-energy": "J. L. Lebowitz, J. K. Percus, L. Verlet, Phys. Rev. 153, 250 (1967)",
-    "phase-volume": "E. M. Pearson, T. Halicioglu, W. A. Tiller, Phys. Rev. A 32, 3030 (1985)",
-    "gamma": "U. Wolff, Comput. Phys. Commun. 156, 143 (2004); erratum 176, 383 (2007)",
-    "skewness": "P. Hall, Ann. Probab. 15, 920 (1987)",
-    "reweighting": "M. R. Shirts, J. D. Chodera, J. Chem. Phys. 129, 124105 (2008)",
-}
+_INSERTED = (
+    "The residual chemical potential is by test insertion into stored configurations [insertion]; residual Helmholtz "
+    "energy and entropy follow from it with compressibility factor and energy."
+)
+_FORCED = "The pair distribution was counted, and is from the forces on the particles as well [forces]."
+_SCATTERED = (
+    "A second bulk modulus is from the limit of the structure factor at long waves: 1/S as polynomials in k², averaged "
+    "over their order and range [averaged-fits]."
+)
+_BETWEEN = (
+    "Values between the isochores are derivatives of one residual Helmholtz energy, a Gaussian process with a trend of "
+    "second degree [trends], in 1/T and density, that was regressed on all measured derivatives with the covariance of "
+    "their errors [process]; the ideal gas and the second virial coefficient are its exact limits."
+)
+_SUPPORT = (
+    "How far reweighting reaches was measured. A state is refused with fewer than 50 effective samples behind it; "
+    "beyond the outermost rungs and at another density only rungs count of whose samples at least a fifth survives, "
+    "and with less than half the answer bears a caution. Of 500 pairs of short ladders and direct runs (108 particles, "
+    "density 0.8 σ⁻³) both agreed within 1.96 combined standard errors, by property, in 93.6 to 95.8 % at T +5 %, 93.8 "
+    "to 95.0 % at ε +2 %, 93.2 to 94.8 % at density +0.5 %, and 92.0 to 95.8 % at σ +0.3 %; where 20 to 65 % of the "
+    "samples survive, in 86 to 95 %."
+)
 _SCHEMES = {
     "baoab": "with Langevin dynamics in the BAOAB splitting [baoab]",
     "metropolised": "with Langevin dynamics in the OBABO splitting whose velocity Verlet part has to pass a Metropolis "
@@ -39,13 +45,6 @@ _MIXED = (
     "Forces between recorded steps were evaluated in single precision; positions, velocities, the thermostat and every "
     "recorded quantity were kept in double precision."
 )
-_TRUNCATIONS = {
-    "corrected": "truncated at {cutoff}, with a homogeneous long-range correction to energy, pressure and their "
-    "derivatives",
-    "plain": "truncated at {cutoff} without correction",
-    "shifted": "truncated and shifted at {cutoff}",
-    "force-shifted": "truncated at {cutoff} with energy and force shifted to zero there",
-}
 _TRUNCATION_CAVEATS = {
     "corrected": "Beyond the cutoff of {cutoff} the fluid is taken as homogeneous (g = 1). That is poor in a dilute or "
     "near-critical fluid, where a larger cutoff is needed.",
@@ -58,69 +57,22 @@ _TRUNCATION_CAVEATS = {
 }
 
 
-@dataclass(frozen=True)
-class Setup:
-    """What the text needs of a study file; quantities as text with their unit.
-
-    adopted : the file that described the samples, where they were taken elsewhere; there is then no scheme
-    """
-
-    potential: str
-    truncation: str
-    cutoff: str
-    particles: str
-    scheme: str
-    adopted: str
-    sampling: Mapping[str, Any]
-    against: Sequence[str]
-    tolerance: Mapping[str, float | str]
-    until: Mapping[str, float | str]
-    ideal_heat_capacity: float | str
-
-    @classmethod
-    def of(cls, results: Results) -> Setup:
-        """Read the study of these results, complete with defaults; KeyError where it is not."""
-        study = tomllib.loads(results.study_toml)
-        fluid, sampling, compare = study["fluid"], study.get("sampling", {}), study.get("compare", {})
-        counts = study["state"]["particles"]
-        return cls(
-            potential=fluid["potential"].replace("lennard-jones", "Lennard-Jones"),
-            truncation=fluid.get("truncation", ""),
-            cutoff=_quantity(fluid["cutoff"], "σ") if "cutoff" in fluid else "",
-            particles=f"{min(counts)} to {max(counts)}" if isinstance(counts, list) else str(counts),
-            scheme=sampling.get("scheme", ""),
-            adopted=study.get("adopted", {}).get("source", ""),
-            sampling=sampling,
-            against=compare.get("against", []),
-            tolerance=compare.get("tolerance", {}),
-            until=study.get("until", {}),
-            ideal_heat_capacity=fluid["ideal_heat_capacity"],
-        )
-
-    @property
-    def bath(self) -> bool:
-        """Whether a thermostat acted."""
-        return self.scheme != "velocity-verlet"
-
-    @property
-    def fluid(self) -> str:
-        """The fluid and what is done at the cutoff, in words."""
-        if not self.truncation:
-            return "fluid whose potential is not known here"
-        return f"{self.potential} fluid, {_TRUNCATIONS[self.truncation].format(cutoff=self.cutoff)}"
-
-
 def paragraph(results: Results) -> str:
     """One paragraph; works in brackets are numbered as `citations` lists them."""
     text = " ".join(_sentences(results, Setup.of(results)))
-    for number, key in enumerate(_cited(text), start=1):
+    for number, key in enumerate(cited(text), start=1):
         text = text.replace(f"[{key}]", f"[{number}]")
     return text
 
 
 def citations(results: Results) -> list[str]:
     """The works that `paragraph` cites, in its order."""
-    return list(_cited(" ".join(_sentences(results, Setup.of(results)))).values())
+    return list(cited(" ".join(_sentences(results, Setup.of(results)))).values())
+
+
+def support(results: Results) -> str:
+    """Where reweighting is refused, and how often its error bars hold; empty where nothing was reweighted."""
+    return _SUPPORT if _reweighted(results) else ""
 
 
 def standing_caveats(results: Results) -> list[str]:
@@ -170,14 +122,14 @@ def _origin(results: Results, setup: Setup) -> list[str]:
 
 def _dynamics(results: Results, setup: Setup) -> list[str]:
     sampling = setup.sampling
-    friction = f", friction {_quantity(sampling['friction'], '√(ε/m)/σ')}" if setup.bath else ""
+    friction = f", friction {quantity(sampling['friction'], '√(ε/m)/σ')}" if setup.bath else ""
     repeats = _counted(max(sampling["repeats"], results.equilibration["repeat"].nunique()), "independent repeat")
     lengths = f"{sampling['equilibration']} steps of equilibration and {_steps(results, setup)} steps"
     states = len(results.properties[["temperature", "density"]].drop_duplicates())
     ensemble = "The canonical ensemble was sampled" if setup.bath else "Trajectories were run"
     return [
         f"{ensemble} at {_counted(states, 'state')} {_SCHEMES[setup.scheme]} "
-        f"(time step {_quantity(sampling['time_step'], 'σ √(m/ε)')}{friction}; {repeats} a state of {lengths}, "
+        f"(time step {quantity(sampling['time_step'], 'σ √(m/ε)')}{friction}; {repeats} a state of {lengths}, "
         f"recorded every {sampling['record_every']} steps).",
         *_rounds(setup),
         *([_MIXED] if setup.scheme in ("baoab", "obabo") and sampling["precision"] == "mixed" else []),
@@ -197,7 +149,7 @@ def _rounds(setup: Setup) -> list[str]:
     if not setup.until:
         return []
     limits = [
-        f"{name_of(name)} {_quantity(limit, unit_text(unit_label(name, 'reduced')))}".strip()
+        f"{name_of(name)} {quantity(limit, unit_text(unit_label(name, 'reduced')))}".strip()
         for name, limit in setup.until.items()
         if name != "steps_at_most"
     ]
@@ -224,12 +176,23 @@ def _estimates(results: Results, setup: Setup) -> list[str]:
         "an automatic summation window and pooled over repeats (Gamma method) [gamma], widened for their own noise "
         "(Student's t) and for the skewness of the estimate [skewness]."
     )
-    reweighted = (results.curve["trust"] != "no").any() or (results.properties["method"] == "reweighted").any()
     pooled = (
         "Values between the sampled temperatures are from multistate reweighting over all temperatures of an isochore "
         "[reweighting]; states with fewer than 50 effective samples behind them are refused."
     )
-    return [fluctuations, errors, *([pooled] if reweighted else [])]
+    methods = set(results.properties["method"])
+    further = {
+        pooled: _reweighted(results),
+        _INSERTED: "insertion" in methods,
+        _FORCED: results.structure["g_forced"].notna().any(),
+        _SCATTERED: "structure" in methods,
+        _BETWEEN: len(results.surface) > 0,
+    }
+    return [fluctuations, errors, *(sentence for sentence, applies in further.items() if applies)]
+
+
+def _reweighted(results: Results) -> bool:
+    return bool((results.curve["trust"] != "no").any() or (results.properties["method"] == "reweighted").any())
 
 
 def _comparison(results: Results) -> list[str]:
@@ -241,17 +204,6 @@ def _comparison(results: Results) -> list[str]:
         f"Results were held against {cited} in combined standard errors; the stated accuracy of a reference was read "
         "as 95 %."
     ]
-
-
-def _cited(text: str) -> dict[str, str]:
-    """Key and full citation of every work that the text names in brackets, in the order of the text."""
-    works = _WORKS | {name: str(find(name).source) for name in references()}
-    found = sorted((text.index(f"[{key}]"), key) for key in works if f"[{key}]" in text)
-    return {key: works[key] for _, key in found}
-
-
-def _quantity(value: float | str, unit: str) -> str:
-    return unit_text(value) if isinstance(value, str) else f"{plain(value)} {unit}"
 
 
 def _counted(number: int, noun: str) -> str:

@@ -9,8 +9,9 @@ from pathlib import Path
 from canonry.figures import Figure, draw
 from canonry.notation import as_html, unit_text
 from canonry.numbers import plain
-from canonry.report import health, methods, plots, tables, words
+from canonry.report import between, frames, health, methods, plots, tables, words
 from canonry.report.rows import at_densities, headline
+from canonry.report.setup import Setup
 from canonry.report.style import CSS
 from canonry.results import Results
 from canonry.units import unit_label
@@ -43,6 +44,15 @@ _CURVES = (
     "Points are the rungs' own values, which the curve does not pass through by construction; where no curve is drawn, "
     "too few samples support it. A reference is dashed."
 )
+_SCATTERED = (
+    "Each rung with its 95 % band; dashed: the coldest rung of its density. At k = 0: ρT/B_T from the limit of S(k) at "
+    "long waves, the long-range part of the pressure added (ring), and from fluctuations (cross, a little to the "
+    "left), with 95 % intervals, where B_T is clear of zero."
+)
+_MAPS = (
+    "Lines of equal value are drawn between the points of the grid; darker is more, as the scale beside each map says. "
+    "Where a map is blank the surface refuses to answer."
+)
 _NO_CURVES = "Points are the rungs' own values; rungs of constant energy are not reweighted. A reference is dashed."
 
 
@@ -62,8 +72,9 @@ def html(results: Results) -> str:
             f"<title>{title}</title><style>{CSS}</style></head><body><main>",
             f'<header><p class="kind">Canonical sampling of a model fluid</p><h1>{title}</h1></header>',
             *_verdict(results),
-            *_contents(sets),
+            *_contents(results, sets),
             *(part for number, (where, own) in enumerate(sets) for part in _set(number, where, own)),
+            *_between(results),
             *_health(results, sets),
             *_caveats(results),
             *_methods(results),
@@ -97,8 +108,9 @@ def _verdict(results: Results) -> Iterator[str]:
     yield "</section>"
 
 
-def _contents(sets: list[tuple[str, Results]]) -> Iterator[str]:
+def _contents(results: Results, sets: list[tuple[str, Results]]) -> Iterator[str]:
     links = [(f"set-{number}", where.capitalize()) for number, (where, _) in enumerate(sets)]
+    links += [("between", "Between the isochores")] if len(results.surface) else []
     links += [("health", "Health"), ("caveats", "Caveats"), ("methods", "Methods"), ("provenance", "Provenance")]
     items = "".join(f'<li><a href="#{to}">{as_html(text)}</a></li>' for to, text in links)
     yield f"<nav><ul>{items}</ul></nav>"
@@ -118,8 +130,10 @@ def _set(number: int, where: str, results: Results) -> Iterator[str]:
         figures = [plots.curves(results, where, name) for name in names]
         figures += [plots.deviations(results, where, names)] if len(results.verdict) else []
         yield _plots(figures)
-        yield f'<p class="fine">{escape(_CURVES if methods.Setup.of(results).bath else _NO_CURVES)}</p>'
+        yield f'<p class="fine">{escape(_CURVES if Setup.of(results).bath else _NO_CURVES)}</p>'
     yield from _tabled("Further properties", tables.derived(results, with_density=several))
+    yield from _tabled("Free energy and entropy", tables.absolute(results, with_density=several))
+    yield from (f'<p class="fine">{as_html(note)}</p>' for note in frames.absolute(results))
     yield from _tabled("Comparison, value by value", "".join(tables.comparison(results)), f"{side} comparison")
     further = tables.comparison(results, further=True)
     if further:
@@ -134,7 +148,7 @@ def _set(number: int, where: str, results: Results) -> Iterator[str]:
 
 
 def _sampled(where: str, results: Results, isochore: bool) -> Iterator[str]:
-    bath = methods.Setup.of(results).bath
+    bath = Setup.of(results).bath
     figures = [plots.histograms(results, where)] if isochore and len(results.histograms) else []
     figures += [plots.ledger(results, where, bath)] if len(results.ledger) else []
     yield from _tabled("How it was sampled", tables.sampling(results), "wide")
@@ -146,6 +160,18 @@ def _sampled(where: str, results: Results, isochore: bool) -> Iterator[str]:
         )
         yield f'<p class="fine">{escape(caption.strip())}</p>'
         yield _plots(plots.structure(results, where), "small plots", captions=False)
+    if len(results.structure_factor):
+        yield "<h3>Long waves: structure factor S(k)</h3>"
+        yield f'<p class="fine">{as_html(" ".join([_SCATTERED, *frames.long_waves(results)]))}</p>'
+        yield _plots(plots.structure_factor(results, where), "small plots", captions=False)
+
+
+def _between(results: Results) -> Iterator[str]:
+    if len(results.surface):
+        yield '<section id="between"><h2>Between the isochores</h2>'
+        yield from _paragraphs(between.sentences(results))
+        yield _plots(between.maps(results, [words.heat_capacity_name(results), "pressure"]))
+        yield f'<p class="fine">{escape(_MAPS)}</p></section>'
 
 
 def _health(results: Results, sets: list[tuple[str, Results]]) -> Iterator[str]:
@@ -168,7 +194,10 @@ def _caveats(results: Results) -> Iterator[str]:
 def _methods(results: Results) -> Iterator[str]:
     yield '<section id="methods"><h2>Methods, ready to paste</h2>'
     yield from _paragraphs([methods.paragraph(results)])
-    yield f"<ol>{''.join(f'<li>{as_html(work)}.</li>' for work in methods.citations(results))}</ol></section>"
+    yield f"<ol>{''.join(f'<li>{as_html(work)}.</li>' for work in methods.citations(results))}</ol>"
+    if methods.support(results):
+        yield f'<p class="fine">{as_html(methods.support(results))}</p>'
+    yield "</section>"
 
 
 def _provenance(results: Results) -> Iterator[str]:
@@ -186,7 +215,7 @@ def _notes(results: Results) -> Iterator[str]:
     shown = [text for trust, text in texts.items() if trust in set(rows["trust"])]
     notes += [f"{'; '.join(shown)}; reasons above."] if shown else []
     if {"heat_capacity", "residual_heat_capacity"} <= set(rows["property"]):
-        ideal = methods.Setup.of(results).ideal_heat_capacity
+        ideal = Setup.of(results).ideal_heat_capacity
         notes.append(f"c_v holds the ideal part of {ideal} k_B a particle; c_v,res is c_v less that.")
     if "set_temperature" in results.summary:
         notes.append("T is the temperature measured, from the mean kinetic energy; T as set is that of the study file.")

@@ -19,9 +19,10 @@ if TYPE_CHECKING:
 
     from canonry.figures import Mark
 
-__all__ = ["curves", "deviations", "gain", "histograms", "ledger", "structure"]
+__all__ = ["curves", "deviations", "gain", "histograms", "ledger", "structure", "structure_factor"]
 
 _DASHES = ("7 4", "2 3", "9 3 2 3")
+_CLEAR = 4.0  # standard errors from zero, for an error bar of 1/x
 _SHAPES = {"ok": "disc", "caution": "ring", "no": "cross"}
 _TRUST = {"ok": "rungs", "caution": "rungs, with caution", "no": "rungs, not to be trusted"}
 
@@ -107,6 +108,48 @@ def structure(results: Results, where: str) -> Iterator[Figure]:
             height=168,
             ticks=4,
         )
+
+
+def structure_factor(results: Results, where: str) -> Iterator[Figure]:
+    """One small figure a rung, with both routes to the limit at long waves; the coldest of its density is dashed."""
+    table = results.structure_factor
+    highest = float(table["s"].max())
+    for (density, temperature), rows in grouped(table, "density", "temperature"):
+        alike = table[table["density"] == density]
+        coldest = alike[alike["temperature"] == alike["temperature"].min()]
+        k, s, error = (floats(rows, column) for column in ("k", "s", "standard_error"))
+        at = _state(results, temperature, density)
+        yield Figure(
+            title=f"Structure factor at {at}, {where}",
+            description="S(k) with its 95 % band; dashed: the coldest rung. At k = 0: ρT/B_T from its limit at long "
+            "waves (ring) and from fluctuations (cross).",
+            x=Axis("k", unit_text(str(rows["k_unit"].iloc[0])), reach=(0.0,)),
+            y=Axis(f"S(k), {at}", reach=(0.0, highest)),
+            marks=[
+                Band(k, s - 2.0 * error, s + 2.0 * error),
+                Line(k, s),
+                Line(floats(coldest, "k"), floats(coldest, "s"), dash="3 3", tone="quiet", thin=True),
+                *_limits(results, temperature, density, aside=-0.04 * float(k.max())),
+            ],
+            width=236,
+            height=168,
+            ticks=4,
+        )
+
+
+def _limits(results: Results, temperature: float, density: float, *, aside: float) -> Iterator[Points]:
+    """rho T/B_T by both routes, that from fluctuations set aside; rho T is P/Z, whatever the units."""
+    table = results.properties
+    rows = table[(table["temperature"] == temperature) & (table["density"] == density)]
+    counted = rows[rows["headline"].astype(bool)].set_index("property")["value"]
+    if not {"pressure", "compressibility_factor"} <= set(counted.index):
+        return
+    ideal = float(counted["pressure"] / counted["compressibility_factor"])
+    moduli = rows[rows["property"] == "bulk_modulus"]
+    for method, k, shape, tone in (("structure", 0.0, "ring", "measured"), ("fluctuation", aside, "cross", "accent")):
+        own = moduli[(moduli["method"] == method) & (moduli["value"] > _CLEAR * moduli["standard_error"])]
+        value, error = floats(own, "value"), floats(own, "standard_error")
+        yield Points(np.full(len(own), k), ideal / value, 2.0 * ideal * error / value**2, "", shape, tone)  # type: ignore[arg-type]
 
 
 def gain(rows: pd.DataFrame) -> str:

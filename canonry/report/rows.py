@@ -61,6 +61,7 @@ def at_densities(results: Results, densities: list[float]) -> Results:
         properties=own(results.properties),
         curve=own(results.curve),
         structure=own(results.structure),
+        structure_factor=own(results.structure_factor),
         verdict=own(results.verdict),
         summary=own(results.summary),
         histograms=own(results.histograms),

@@ -63,11 +63,14 @@ svg .note{font-size:11px;fill:var(--ink);paint-order:stroke;stroke:var(--paper);
 .line{fill:none;stroke-width:1.7;stroke-linejoin:round;stroke-linecap:round}
 .line.thin{stroke-width:.9}
 .band{fill-opacity:.17;stroke:none}
+.shade{fill-opacity:.11;stroke:none}.shade.measured{fill:var(--measured)}.shade.accent{fill:var(--accent)}
+.level{fill:none;stroke-width:.9}.level.measured{stroke:var(--measured)}.level.accent{stroke:var(--accent)}
+.dot{fill:var(--ink)}
 .bar{stroke-width:1.4;fill:none}
 .span{fill:var(--wash);stroke:var(--quiet);stroke-width:.8;stroke-dasharray:2 2}
 .line.measured,.bar.measured,.cross.measured{stroke:var(--measured)}
 .line.reference,.bar.reference,.cross.reference{stroke:var(--reference)}
-.line.accent,.bar.accent{stroke:var(--accent)}.line.quiet{stroke:var(--quiet)}
+.line.accent,.bar.accent,.cross.accent{stroke:var(--accent)}.line.quiet{stroke:var(--quiet)}
 .band.measured,.disc.measured{fill:var(--measured)}.band.reference,.disc.reference{fill:var(--reference)}
 .band.accent,.disc.accent{fill:var(--accent)}.band.quiet{fill:var(--quiet);fill-opacity:.25}
 .ring{fill:var(--paper);stroke-width:1.8}.ring.measured{stroke:var(--measured)}.ring.accent{stroke:var(--accent)}

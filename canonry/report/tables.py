@@ -18,7 +18,7 @@ from canonry.units import PROPERTIES, unit_label
 if TYPE_CHECKING:
     import pandas as pd
 
-__all__ = ["MARKS", "budget", "checks", "comparison", "derived", "sampling", "values"]
+__all__ = ["MARKS", "absolute", "budget", "checks", "comparison", "derived", "sampling", "values"]
 
 MARKS = {"ok": "", "caution": "†", "no": "‡"}
 _FIRST = (
@@ -29,6 +29,13 @@ _FIRST = (
     "compressibility_factor",
     "thermal_pressure",
     "bulk_modulus",
+)
+_ABSOLUTE = (
+    "residual_chemical_potential",
+    "residual_helmholtz_energy",
+    "residual_entropy",
+    "residual_helmholtz_change",
+    "residual_entropy_change",
 )
 _OUTCOMES = {"agrees": "✓ agrees", "disagrees": "✗ disagrees", "undecided": "? undecided"}
 _SOURCES = {
@@ -50,16 +57,23 @@ def values(results: Results, *, with_density: bool = False) -> str:
 
 
 def derived(results: Results, *, with_density: bool = False) -> str:
-    """Headline values of every other property; empty if there is none."""
+    """Headline values of every property that follows from the main ones; empty if there is none."""
     known = set(results.properties["property"])
-    names = [name for name in PROPERTIES if name in known and name not in _FIRST]
+    names = [name for name in PROPERTIES if name in known and name not in (*_FIRST, *_ABSOLUTE)]
+    return _states(results, names, with_density) if names else ""
+
+
+def absolute(results: Results, *, with_density: bool = False) -> str:
+    """Headline values of chemical potential, free energy and entropy, and how these change; empty if there is none."""
+    known = set(results.properties["property"])
+    names = [name for name in _ABSOLUTE if name in known]
     return _states(results, names, with_density) if names else ""
 
 
 def comparison(results: Results, *, further: bool = False) -> list[str]:
     """One table a reference and property: each value beside its reference, with a strip that shows the deviation.
 
-    further : the properties that `derived` shows, rather than the main ones
+    further : the properties that `derived` and `absolute` show, rather than the main ones
     """
     rows = trusted(results)
     rows = rows[rows["property"].isin(_FIRST) != further]

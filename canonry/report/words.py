@@ -11,8 +11,8 @@ import numpy as np
 
 from canonry.notation import name_of, symbol_of, unit_text
 from canonry.numbers import plain, with_error
-from canonry.report.methods import Setup
 from canonry.report.rows import grouped, headline, independent, trusted
+from canonry.report.setup import Setup
 from canonry.results import Results
 from canonry.units import unit_label
 
