@@ -166,7 +166,7 @@ def _surface(study: Study, rungs: Sequence[_Rung], border: Border) -> tuple[Surf
     try:
         own = {rung.state: rung.measured for rung in rungs}
         ideal = study.ideal_heat_capacity
-        return of_states(own, study.fluid, ideal_heat_capacity=ideal, spoken=border.state), ""
+        return of_states(own, study.fluid, ideal_heat_capacity=ideal, spoken=border.text), ""
     except (BadSeries, NotSolved) as problem:
         return None, str(problem)
 

@@ -176,7 +176,7 @@ class _Sources:
             {state: rung_properties(own) for state, own in by_state.items()},
             self.study.fluid,
             ideal_heat_capacity=self.study.ideal_heat_capacity,
-            spoken=self.border.state,
+            spoken=self.border.text,
         )
 
     @cached_property

@@ -27,7 +27,7 @@ def of_states(
     fluid: Fluid,
     *,
     ideal_heat_capacity: float | None,
-    spoken: Callable[[State], str],
+    spoken: Callable[[str, float], str],
 ) -> Surface | None:
     """The surface through what each rung says alone; None where rungs span no area or B2 is not known.
 
@@ -40,7 +40,7 @@ def of_states(
         {(state.temperature, state.density): properties for state, properties in own.items()},
         second_virial=lambda temperature: (1.0 - 1.0 / particles) * _second_virial(fluid, temperature),
         ideal_heat_capacity=ideal_heat_capacity,
-        spoken=lambda temperature, density: spoken(State(temperature, density, particles)),
+        spoken=spoken,
     )
 
 

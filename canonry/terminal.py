@@ -189,7 +189,11 @@ def verdict_text(verdicts: Sequence[Row], border: Border) -> str:
 def reweighted_text(rows: Sequence[Row], border: Border) -> str:
     """One row a state: heat capacity, pressure and energy; then why there is none at the others."""
     answered = [row for row in rows if math.isfinite(_number(row["value"]))]
-    refused = {(row["temperature"], row["density"]): row["reason"] for row in rows if row not in answered}
+    refused = {
+        (row["temperature"], None if math.isnan(row["density"]) else row["density"]): row["reason"]
+        for row in rows
+        if not math.isfinite(_number(row["value"]))
+    }
     known = list(dict.fromkeys(row["property"] for row in answered))
     heat = "heat_capacity" if "heat_capacity" in known else "residual_heat_capacity"
     names = [name for name in (heat, "pressure", "residual_energy") if name in known]
@@ -198,7 +202,8 @@ def reweighted_text(rows: Sequence[Row], border: Border) -> str:
     shown += [", ".join(legend)] if legend else []
     labels = [unit_text(border.label(name)) for name in ("temperature", "density")]
     for (temperature, density), reason in refused.items():
-        at = f"T = {plain(temperature)} {labels[0]}, density {plain(density)} {labels[1]}"
+        at = f"T = {plain(temperature)} {labels[0]}"
+        at += "" if density is None else f", density {plain(density)} {labels[1]}"
         shown.append(wrapped(f"Refused at {at}: {reason}."))
     return "\n\n".join(shown)
 

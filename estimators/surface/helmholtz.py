@@ -57,7 +57,7 @@ class Surface:
     _virial: VirialCurve
     _regression: Regression
     _hull: Hull
-    _spoken: Callable[[float, float], str]
+    _spoken: Callable[[str, float], str]
 
     def expected(self, temperatures: npt.ArrayLike, densities: npt.ArrayLike) -> Floats:
         """(..., 6), alpha, A10, A01, A20, A11, A02 over the broadcast shape of both, anywhere, without error bars."""
@@ -122,17 +122,20 @@ class Surface:
             return ""
         points = np.array([(1.0 / t, rho) for t, rho in self._measured.points])
         away = np.sum(((points - [1.0 / temperature, density]) / np.ptp(points, axis=0)) ** 2, axis=1)
-        nearest = self._spoken(*self._measured.points[int(np.argmin(away))])
+        nearest = self._state(*self._measured.points[int(np.argmin(away))])
         return (
-            f"{self._spoken(temperature, density)} lies outside the sampled states, where a surface tells nothing; "
+            f"{self._state(temperature, density)} lies outside the sampled states, where a surface tells nothing; "
             f"the nearest of them is {nearest}, sample one beyond"
         )
 
+    def _state(self, temperature: float, density: float) -> str:
+        return f"T = {self._spoken('temperature', temperature)} at density {self._spoken('density', density)}"
+
     def _path(self, temperature: float, density: float) -> str:
         sampled = sorted({rho for _, rho in self._measured.points if rho <= density * (1.0 + NEARBY)})
-        passed = ", ".join(f"{rho:.4g}" for rho in sampled)
+        passed = ", ".join(self._spoken("density", rho) for rho in sampled)
         return (
-            f"from the ideal gas along the isotherm T {temperature:.5g} up to density {density:.5g}: at no density the "
+            f"from the ideal gas along the isotherm up to {self._state(temperature, density)}: at no density the "
             f"second virial coefficient is exact, sampled densities on the way are {passed}"
         )
 
@@ -169,16 +172,16 @@ class Surface:
 
         span = self._hull.densities(1.0 / temperature) if math.isfinite(temperature) and temperature > 0.0 else None
         if span is None:
-            return f"temperature {temperature:.5g} epsilon/k_B lies outside the sampled states"
+            return f"T = {self._spoken('temperature', temperature)} lies outside the sampled states"
         grid = np.linspace(*span, GRID)
         pressures = self._pressures(temperature, grid)
         rises = np.flatnonzero((pressures[:-1] <= pressure) & (pressure < pressures[1:]))
-        at = f"at temperature {temperature:.5g} epsilon/k_B"
+        at = f"at T = {self._spoken('temperature', temperature)}"
         if not len(rises) and pressures[-1] == pressure:
             return float(grid[-1])
         if not len(rises):
-            low, high = float(np.min(pressures)), float(np.max(pressures))
-            return f"sampled densities {at} hold pressures from {low:.5g} to {high:.5g} epsilon/sigma^3"
+            low, high = (self._spoken("pressure", float(end)) for end in (np.min(pressures), np.max(pressures)))
+            return f"sampled densities {at} hold pressures from {low} to {high}"
         if len(rises) > 1:
             return f"more than one stable density has this pressure {at}: the fluid is in two phases there"
         ends = grid[rises[0]], grid[rises[0] + 1]
@@ -188,8 +191,11 @@ class Surface:
         return densities * temperature * (1.0 + self.expected(temperature, densities)[:, 2])
 
 
-def _in_reduced_units(temperature: float, density: float) -> str:
-    return f"T {temperature:.5g} epsilon/k_B at density {density:.5g} sigma^-3"
+_UNITS = {"temperature": "epsilon/k_B", "density": "sigma^-3", "pressure": "epsilon/sigma^3"}
+
+
+def _in_reduced_units(quantity: str, value: float) -> str:
+    return f"{value:.5g} {_UNITS[quantity]}"
 
 
 def surface(
@@ -198,7 +204,7 @@ def surface(
     second_virial: Callable[[float], float],
     changes: Sequence[Change] = (),
     ideal_heat_capacity: float | None = None,
-    spoken: Callable[[float, float], str] = _in_reduced_units,
+    spoken: Callable[[str, float], str] = _in_reduced_units,
 ) -> Surface | None:
     """The surface through what was measured at (temperature, density); None where these states span no area.
 
@@ -207,7 +213,7 @@ def surface(
         many
     changes : of alpha along isochores
     ideal_heat_capacity : c_v of the ideal gas, k_B per particle; without it there are no totals
-    spoken : writes temperature and density in the words of a refusal, with their units
+    spoken : writes a temperature, density or pressure (its name comes first) in words, with its unit
 
     Raises BadSeries where values, errors or B2 are no finite numbers, or fewer than the surface needs; NotSolved if no
     smooth surface is found.

@@ -234,7 +234,7 @@ def test_absolute_values_need_dilute_isochores():
         assert abs(wide.value - true(name, *state)) < 4.5 * wide.standard_error
         assert wide.trust == "caution"
         assert "between the samples" in wide.reason
-    assert "0.03, 0.15, 0.3, 0.45, 0.6" in near.path
+    assert "0.03 sigma^-3, 0.15 sigma^-3, 0.3 sigma^-3, 0.45 sigma^-3, 0.6 sigma^-3" in near.path
     assert "from the ideal gas along the isotherm" in near.path
 
 
