@@ -270,6 +270,8 @@ def test_temperatures_that_samples_do_not_support_are_refused() -> None:
     assert near.refused == ""
     assert set(near.properties) == set(EXACT)
     assert far.effective_samples < 50.0
+    assert (near.surviving, far.surviving) == pytest.approx((0.32, 0.005), rel=0.1)
+    assert pooled.at(1.0).surviving == 1.0
     assert far.properties == {}
     assert "50 are needed" in far.refused
     assert "nearest rung is at 1 epsilon/k_B," in far.refused
