@@ -14,22 +14,28 @@ from canonry.units import unit_label
 
 __all__ = ["absolute", "long_waves"]
 
-_TRUST = {"ok": "to be trusted at {}", "caution": "with caution (†) at {}", "no": "not to be trusted (‡) at {}"}
+_TRUST = {"ok": "to be trusted at {}", "caution": "with caution at {}", "no": "not to be trusted at {}"}
 
 
 def absolute(results: Results) -> Iterator[str]:
     """How absolute values were found and how many can be trusted, and what changes are counted from."""
-    rows = headline(results)
-    inserted = rows[(rows["property"] == "residual_chemical_potential") & (rows["method"] == "insertion")]
+    rows = results.properties[results.properties["property"] == "residual_chemical_potential"]
+    inserted, shown = rows[rows["method"] == "insertion"], headline(results)
     if len(inserted):
         counts = inserted["trust"].value_counts()
         shares = ", ".join(told.format(counts[trust]) for trust, told in _TRUST.items() if trust in counts)
         yield (
-            "μ_res is by test insertion, which rests on rare cavities in a dense liquid; a_res and s_res follow from "
-            f"it with Z and u. Of {len(inserted)} values of μ_res: {shares}."
+            "Test insertion rests on rare cavities in a dense liquid: of its "
+            f"{_counted(len(inserted), 'value')} of μ_res, {shares}. a_res and s_res follow from μ_res with Z and u."
         )
-    if "residual_helmholtz_change" in set(rows["property"]):
-        yield "Changes along the ladder count from its coldest rung and need no insertion."
+    laid = int(np.sum((shown["method"] == "surface") & (shown["property"] == "residual_chemical_potential")))
+    if laid:
+        yield (
+            f"At {_counted(laid, 'state')} the μ_res shown is that of the surface between the isochores, as it is "
+            "more trusted or more precise."
+        )
+    if "residual_helmholtz_change" in set(shown["property"]):
+        yield "Changes along the ladder count from its coldest rung; they are from reweighting."
 
 
 def long_waves(results: Results) -> Iterator[str]:
@@ -47,3 +53,7 @@ def long_waves(results: Results) -> Iterator[str]:
             f"B_T by both routes agrees within two combined standard errors at {int((z <= 2.0).sum())} of {len(z)} "
             f"states; the largest deviation is {z.max():.1f}, at T = {at} {unit}."
         )
+
+
+def _counted(number: int, noun: str) -> str:
+    return f"{number} {noun if number == 1 else noun + 's'}"

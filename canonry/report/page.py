@@ -10,6 +10,7 @@ from canonry.figures import Figure, draw
 from canonry.notation import as_html, unit_text
 from canonry.numbers import plain
 from canonry.report import between, frames, health, methods, plots, tables, words
+from canonry.report.prose import prose
 from canonry.report.rows import at_densities, headline
 from canonry.report.setup import Setup
 from canonry.report.style import CSS
@@ -114,7 +115,7 @@ def _contents(results: Results, sets: list[tuple[str, Results]]) -> Iterator[str
     links += [("health", "Health"), ("caveats", "Caveats"), ("methods", "Methods"), ("provenance", "Provenance")]
     items = "".join(f'<li><a href="#{to}">{as_html(text)}</a></li>' for to, text in links)
     yield f"<nav><ul>{items}</ul></nav>"
-    yield f'<p class="fine">{as_html(_UNCERTAINTY)}</p>'
+    yield f'<p class="fine">{prose(_UNCERTAINTY)}</p>'
 
 
 def _set(number: int, where: str, results: Results) -> Iterator[str]:
@@ -130,10 +131,10 @@ def _set(number: int, where: str, results: Results) -> Iterator[str]:
         figures = [plots.curves(results, where, name) for name in names]
         figures += [plots.deviations(results, where, names)] if len(results.verdict) else []
         yield _plots(figures)
-        yield f'<p class="fine">{escape(_CURVES if Setup.of(results).bath else _NO_CURVES)}</p>'
+        yield f'<p class="fine">{prose(_CURVES if Setup.of(results).bath else _NO_CURVES)}</p>'
     yield from _tabled("Further properties", tables.derived(results, with_density=several))
     yield from _tabled("Free energy and entropy", tables.absolute(results, with_density=several))
-    yield from (f'<p class="fine">{as_html(note)}</p>' for note in frames.absolute(results))
+    yield from (f'<p class="fine">{prose(note)}</p>' for note in frames.absolute(results))
     yield from _tabled("Comparison, value by value", "".join(tables.comparison(results)), f"{side} comparison")
     further = tables.comparison(results, further=True)
     if further:
@@ -142,7 +143,7 @@ def _set(number: int, where: str, results: Results) -> Iterator[str]:
     budget = tables.budget(results, [words.heat_capacity_name(results), "pressure"])
     if budget:
         yield f"<details><summary>Uncertainty budget</summary>{budget}"
-        yield f'<p class="fine">{escape(_BUDGET)}</p></details>'
+        yield f'<p class="fine">{prose(_BUDGET)}</p></details>'
     yield from _sampled(where, results, isochore)
     yield "</section>"
 
@@ -158,11 +159,11 @@ def _sampled(where: str, results: Results, isochore: bool) -> Iterator[str]:
         caption = (
             f"Each rung with its 95 % band; dashed: the coldest rung of its density. {plots.gain(results.structure)}"
         )
-        yield f'<p class="fine">{escape(caption.strip())}</p>'
+        yield f'<p class="fine">{prose(caption.strip())}</p>'
         yield _plots(plots.structure(results, where), "small plots", captions=False)
     if len(results.structure_factor):
         yield "<h3>Long waves: structure factor S(k)</h3>"
-        yield f'<p class="fine">{as_html(" ".join([_SCATTERED, *frames.long_waves(results)]))}</p>'
+        yield f'<p class="fine">{prose(" ".join([_SCATTERED, *frames.long_waves(results)]))}</p>'
         yield _plots(plots.structure_factor(results, where), "small plots", captions=False)
 
 
@@ -171,7 +172,7 @@ def _between(results: Results) -> Iterator[str]:
         yield '<section id="between"><h2>Between the isochores</h2>'
         yield from _paragraphs(between.sentences(results))
         yield _plots(between.maps(results, [words.heat_capacity_name(results), "pressure"]))
-        yield f'<p class="fine">{escape(_MAPS)}</p></section>'
+        yield f'<p class="fine">{prose(_MAPS)}</p></section>'
 
 
 def _health(results: Results, sets: list[tuple[str, Results]]) -> Iterator[str]:
@@ -182,7 +183,7 @@ def _health(results: Results, sets: list[tuple[str, Results]]) -> Iterator[str]:
     if len(results.health):
         yield f'<div class="health">{tables.checks(results, sets)}</div>'
     reduced = " Figures within those sentences are in reduced units." if results.units == "SI" else ""
-    yield f'<p class="fine">{escape(_HEALTH + reduced)}</p></section>'
+    yield f'<p class="fine">{prose(_HEALTH + reduced)}</p></section>'
 
 
 def _caveats(results: Results) -> Iterator[str]:
@@ -196,7 +197,7 @@ def _methods(results: Results) -> Iterator[str]:
     yield from _paragraphs([methods.paragraph(results)])
     yield f"<ol>{''.join(f'<li>{as_html(work)}.</li>' for work in methods.citations(results))}</ol>"
     if methods.support(results):
-        yield f'<p class="fine">{as_html(methods.support(results))}</p>'
+        yield f'<p class="fine">{prose(methods.support(results))}</p>'
     yield "</section>"
 
 
@@ -219,7 +220,7 @@ def _notes(results: Results) -> Iterator[str]:
         notes.append(f"c_v holds the ideal part of {ideal} k_B a particle; c_v,res is c_v less that.")
     if "set_temperature" in results.summary:
         notes.append("T is the temperature measured, from the mean kinetic energy; T as set is that of the study file.")
-    yield from (f'<p class="fine">{as_html(note)}</p>' for note in notes)
+    yield from (f'<p class="fine">{prose(note)}</p>' for note in notes)
 
 
 def _tabled(title: str, table: str, kind: str = "") -> Iterator[str]:
@@ -238,8 +239,8 @@ def _figure(figure: Figure, caption: bool) -> str:
 
 
 def _paragraphs(texts: Iterable[str]) -> Iterator[str]:
-    return (f"<p>{as_html(text)}</p>" for text in texts)
+    return (f"<p>{prose(text)}</p>" for text in texts)
 
 
 def _list(texts: Iterable[str]) -> str:
-    return f"<ul>{''.join(f'<li>{as_html(text)}</li>' for text in texts)}</ul>"
+    return f"<ul>{''.join(f'<li>{prose(text)}</li>' for text in texts)}</ul>"

@@ -43,7 +43,8 @@ caption{text-align:left;font-weight:600;padding:.2rem 0}
 .comparison td:last-child{text-align:left}.comparison .scroll{margin:0 0 .8rem}
 .comparison th,.comparison td{padding-right:.8rem}
 .health th,.health td{text-align:left;white-space:normal;vertical-align:top;padding-right:1.6rem}
-.health td:first-child{white-space:nowrap}.health td:nth-child(2){min-width:13rem;color:var(--soft)}
+.health td:first-child{white-space:nowrap}.health td:nth-child(n+3){min-width:7rem}
+.health td:nth-child(2){min-width:13rem;color:var(--soft)}
 .z{display:inline-block;min-width:2.6em}
 .strip{width:60px;height:12px;vertical-align:-1px;margin-right:.2rem}
 .strip .axis{stroke:var(--quiet);stroke-width:1}.strip .within{stroke:var(--rule);stroke-width:6}
@@ -75,6 +76,7 @@ svg .note{font-size:11px;fill:var(--ink);paint-order:stroke;stroke:var(--paper);
 .band.accent,.disc.accent{fill:var(--accent)}.band.quiet{fill:var(--quiet);fill-opacity:.25}
 .ring{fill:var(--paper);stroke-width:1.8}.ring.measured{stroke:var(--measured)}.ring.accent{stroke:var(--accent)}
 .cross{fill:none;stroke-width:1.9}
+code{font:.86em ui-monospace,"SF Mono",Menlo,Consolas,"Liberation Mono",monospace;white-space:nowrap}
 pre{background:var(--wash);padding:1rem;overflow-x:auto;font:.8rem/1.5 ui-monospace,"SF Mono",Menlo,Consolas,
 "Liberation Mono",monospace}
 dl{display:grid;grid-template-columns:max-content 1fr;gap:.25rem 1.5rem;font-size:.88rem}

@@ -13,6 +13,7 @@ import pytest
 from canonry.health import CHECKS
 from canonry.report.methods import citations, paragraph
 from canonry.report.page import html, write
+from canonry.report.prose import prose
 from canonry.report.words import doubts, outcome
 from canonry.results import COLUMNS, Results
 from canonry.units import unit_label
@@ -808,9 +809,16 @@ def test_absolute_values_come_in_a_table_of_their_own_with_their_trust():
     results = inserted(invented(), ["ok", "ok", "ok", "caution", "caution", "no"])
     text = Page(html(results)).text
     assert "Free energy and entropy T ε/k B μ res ε Δ(a res /T) k B" in text
-    told = "Of 6 values of μ res : to be trusted at 3, with caution (†) at 2, not to be trusted (‡) at 1."
+    told = "of its 6 values of μ res , to be trusted at 3, with caution at 2, not to be trusted at 1."
     assert told in text
     assert "Changes along the ladder count from its coldest rung" in text
+    assert "surface between" not in text
+    rows = results.properties.copy()
+    rows.loc[(rows["method"] == "insertion") & (rows["trust"] == "no"), "headline"] = False
+    laid = rows[rows["method"] == "insertion"].tail(1).assign(method="surface", headline=True, trust="ok")
+    text = Page(html(replace(results, properties=pd.concat([rows, laid], ignore_index=True)))).text
+    assert told in text
+    assert "At 1 state the μ res shown is that of the surface between the isochores" in text
     assert "Free energy and entropy" not in Page(html(invented())).text
     assert "test insertion" not in Page(html(invented())).text
 
@@ -838,3 +846,15 @@ def test_reach_of_reweighting_is_told_where_anything_was_reweighted():
     assert told in Page(html(results)).text
     own = results.properties[results.properties["method"] != "reweighted"].assign(headline=True)
     assert told not in Page(html(replace(results, properties=own, curve=empty("curve")))).text
+
+
+@pytest.mark.parametrize(
+    ("text", "shown"),
+    [
+        ("at T = 1.2 ε/k_B or 95 %", "at T\u00a0=\u00a01.2\u00a0ε/k<sub>B</sub> or 95\u00a0%"),
+        ("P -0.067(55) to (-1), thol-2016, 1e-3", "P −0.067(55) to (−1), thol-2016, 1e-3"),
+        ("`canonry run --step-bias` <tells>", "<code>canonry run --step-bias</code> &lt;tells&gt;"),
+    ],
+)
+def test_sentences_keep_quantities_together_and_set_commands(text, shown):
+    assert prose(text) == shown
