@@ -269,6 +269,9 @@ def test_temperatures_that_samples_do_not_support_are_refused() -> None:
     assert near.effective_samples == pytest.approx(1300.0, rel=0.1)
     assert near.refused == ""
     assert set(near.properties) == set(EXACT)
+    thin = pooled.at(1.4)  # 12 %, 500 samples, but of one end only
+    assert thin.effective_samples == 0.0
+    assert thin.refused
     assert far.effective_samples < 50.0
     assert (near.surviving, far.surviving) == pytest.approx((0.32, 0.005), rel=0.1)
     assert pooled.at(1.0).surviving == 1.0
