@@ -52,7 +52,7 @@ _SCATTERED = (
 )
 _MAPS = (
     "Lines of equal value are drawn between the points of the grid; darker is more, as the scale beside each map says. "
-    "Where a map is blank the surface refuses to answer."
+    "Where a map is blank the surface refuses to answer, or is not to be trusted."
 )
 _NO_CURVES = "Points are the rungs' own values; rungs of constant energy are not reweighted. A reference is dashed."
 
