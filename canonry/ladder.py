@@ -46,7 +46,7 @@ Floats = npt.NDArray[np.float64]
 
 BEYOND = 0.4  # widths of the energy: a fifth of the spacing at overlap 0.2
 MOST = 200  # rungs of one density
-TRIAL = 10_000_000  # particle-steps of a pilot: about a second, and as much to settle
+TRIAL = 10_000_000  # particle-steps of a pilot, about a second, and more where the fluid forgets slowly
 _CLOSEST, _FARTHEST = 1.3, 4.0  # widths: closer neighbours share less, as others do too; farther ones hardly share
 _POINTS = 2000
 

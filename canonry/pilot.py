@@ -20,9 +20,11 @@ if TYPE_CHECKING:
     from sampler.series import Series
     from sampler.store import Chain, Segment
 
-__all__ = ["WIDEST", "Pilot", "pilot"]
+__all__ = ["ENOUGH", "WIDEST", "Pilot", "pilot"]
 
+ENOUGH = 200  # effective samples of the energy: its autocorrelation time is then known to about a sixth
 WIDEST = 100  # steps from record to record, at most: short runs need samples
+_SETTLING = 5  # a stretch is as many times as long as what is left to settle
 
 
 @dataclass(frozen=True, eq=False)
@@ -38,13 +40,20 @@ class Pilot:
 
 
 def pilot(
-    study: Study, states: Sequence[State], *, particle_steps: int, workers: int | None = None
+    study: Study,
+    states: Sequence[State],
+    *,
+    particle_steps: int,
+    most: int | None = None,
+    workers: int | None = None,
 ) -> Mapping[State, Pilot]:
     """A short run at each state as the study would sample it, by state; writes nothing.
 
     states : any, of the study or not
-    particle_steps : sampled at each state, in whole record intervals, after as many to settle; what the energy says is
-        not settled even then is left out of the series, half of it at most
+    particle_steps : sampled at each state, in whole multiples of five record intervals, after a fifth of that to
+        settle; what the energy says is not settled even then is left out of the series, half of it at most
+    most : particle-steps up to which a run goes on, by as much again each time, as long as its energy has fewer than
+        200 effective samples; by default none goes on
     workers : threads, by default one for every core; the series do not depend on it. With fewer states than workers,
         some states are run more than once, so that a step is timed with all workers busy
     Seeded from the study's seed and the state, as the first repeat of a rung is; recorded as often, but at least every
@@ -60,37 +69,71 @@ def pilot(
     ]
     if not runs:
         return {}
+    stretches = max((most or 0) // particle_steps, 1)
     load = [runs[k % len(runs)] for k in range(len(runs), workers)]
     with ThreadPoolExecutor(workers) as threads:
-        segments = list(threads.map(_timed, [*runs, *load]))
-    return {
-        chain.state: Pilot(_series(chain, segment), seconds / chain.protocol.steps)
-        for chain, (segment, seconds) in zip(runs, segments, strict=False)
-    }
+        made = list(threads.map(lambda chain: _run(chain, stretches), [*runs, *load]))
+    return {chain.state: each for chain, each in zip(runs, made, strict=False)}
 
 
 def _short(protocol: Protocol, particles: int, particle_steps: int) -> Protocol:
-    """The protocol cut down to two segments of equal length, one to settle and one to sample."""
+    """The protocol cut down to one stretch, after a fifth of it to settle."""
     record_every = min(protocol.record_every, WIDEST)
-    steps = record_every * max(1, round(particle_steps / (particles * record_every)))
-    return replace(protocol, record_every=record_every, frame_every=steps, equilibration=steps, steps=steps, repeats=1)
+    settling = record_every * max(1, round(particle_steps / (particles * record_every * _SETTLING)))
+    return replace(
+        protocol,
+        record_every=record_every,
+        frame_every=settling,
+        equilibration=settling,
+        steps=_SETTLING * settling,
+        repeats=1,
+    )
 
 
-def _timed(chain: Chain) -> tuple[Segment | None, float]:
-    """The second of two segments, and its wall time, s."""
+def _run(chain: Chain, stretches: int) -> Pilot:
+    """Settled, then sampled a stretch at a time until there are enough independent samples, or so many stretches.
+
+    A step is timed in the first stretch: later others may be idle.
+    """
+    from estimators.gamma import scatter
+    from sampler.rung import advance
+
+    protocol = chain.protocol
+    settled = advance(chain, 0, None, np.zeros(1, np.uint8))
+    started = time.perf_counter()
+    sampled = _advanced(chain, settled)
+    seconds = (time.perf_counter() - started) / protocol.steps
+    series = _series(chain, sampled)
+    for number in range(1, stretches):
+        if scatter([series.column("sampled_energy")]).steady_samples >= ENOUGH:
+            break
+        further = replace(protocol, equilibration=protocol.settling + number * protocol.steps)
+        sampled += _advanced(replace(chain, protocol=further), sampled[-1])
+        longer = replace(protocol, steps=(number + 1) * protocol.steps)
+        series = _series(replace(chain, protocol=longer), sampled)
+    return Pilot(series, seconds)
+
+
+def _advanced(chain: Chain, last: Segment | None) -> list[Segment]:
+    """The segments of a chain after its settling.
+
+    last : what was sampled before
+    """
     from sampler.rung import advance
 
     stop = np.zeros(1, np.uint8)
-    before = advance(chain, 0, None, stop)
-    started = time.perf_counter()
-    segment = advance(chain, 1, before, stop)
-    return segment, time.perf_counter() - started
+    made: list[Segment] = []
+    for index, (first, _) in enumerate(chain.segments):
+        if first >= chain.protocol.settling:
+            last = advance(chain, index, last, stop)
+            made += [] if last is None else [last]
+    return made
 
 
-def _series(chain: Chain, segment: Segment | None) -> Series:
+def _series(chain: Chain, segments: Sequence[Segment]) -> Series:
     from estimators.settle import settled_start
     from sampler.rung import assemble
 
-    series = assemble(chain, [] if segment is None else [segment])
+    series = assemble(chain, segments)
     series = replace(series, frames=series.frames[:0])
     return series.after(settled_start(series.column("sampled_energy")))

@@ -32,6 +32,7 @@ _STEP = 0.2  # in ln T, from pilot to pilot
 _FEWEST, _MOST = 3, 7  # pilots of an isochore of as many rungs or more
 _TOGETHER = 12  # pilots of full length; more are shorter
 _SHORTEST = 1_000_000  # particle-steps
+_LONGEST = 4  # times as long a pilot may become where the fluid forgets slowly
 _SAMPLES = 32  # at least, so that there is anything to tell
 _FEW = 500  # particles
 _DEGREE = 3  # of the energy in 1/T, at most
@@ -84,7 +85,8 @@ class Trend:
 def trends(study: Study, *, particle_steps: int, workers: int | None = None) -> Mapping[float, Trend]:
     """The trend of every isochore, by density, from pilots over the range of its ladder or of its rungs.
 
-    particle_steps : of each pilot, fewer where there are many
+    particle_steps : of each pilot, fewer where there are many; up to four times as many where the energy forgets
+        slowly, though no more than a listed rung is to have
     Pilots are of some hundred particles where the study has more: what they tell does not depend on the size. Asked
     again for the same, the answer is the one there was. Raises as `canonry.pilot` does.
     """
@@ -100,7 +102,13 @@ def trends(study: Study, *, particle_steps: int, workers: int | None = None) -> 
     )
     fewest = _SAMPLES * min(study.sampling.record_every, WIDEST) * max(state.particles for state in states)
     effort = max(particle_steps * min(_TOGETHER / len(states), 1.0), min(_SHORTEST, particle_steps), fewest)
-    return _sampled(_Asked(study.fluid, study.sampling, states, round(effort), workers, study))
+    most = _LONGEST * effort if ladder else max(min(_LONGEST * effort, _rung(study)), effort)
+    return _sampled(_Asked(study.fluid, study.sampling, states, round(effort), round(most), workers, study))
+
+
+def _rung(study: Study) -> int:
+    """Particle-steps of a rung, repeats together."""
+    return study.sampling.steps * study.sampling.repeats * study.states[0].particles
 
 
 @dataclass(frozen=True)
@@ -111,13 +119,14 @@ class _Asked:
     sampling: Protocol
     states: tuple[State, ...]
     particle_steps: int
+    most: int
     workers: int | None
     study: Study = field(compare=False)
 
 
 @lru_cache(maxsize=4)
 def _sampled(asked: _Asked) -> Mapping[float, Trend]:
-    runs = pilot(asked.study, asked.states, particle_steps=asked.particle_steps, workers=asked.workers)
+    runs = pilot(asked.study, asked.states, particle_steps=asked.particle_steps, most=asked.most, workers=asked.workers)
     densities = dict.fromkeys(state.density for state in runs)
     return {rho: _fitted([run for state, run in runs.items() if state.density == rho]) for rho in densities}
 

@@ -7,13 +7,15 @@ import numpy as np
 import pytest
 
 import canonry.pilot
-from canonry.pilot import Pilot, pilot
+from canonry.pilot import ENOUGH, Pilot, pilot
 from canonry.study import Study, load
+from estimators.gamma import scatter
 from sampler.errors import BadRequest, DivergedRun
 from sampler.fluid import State
 from sampler.ladder import chains, sample
 from sampler.ladder import load as load_series
 from sampler.protocol import Protocol
+from sampler.series import Series
 
 STUDY = """
 [fluid]
@@ -53,27 +55,56 @@ def test_pilots_are_the_same_for_any_number_of_workers(study: Study) -> None:
 
 
 def test_a_pilot_is_sampled_as_the_study_would_be(study: Study, tmp_path: Path) -> None:
-    """The same samples as from a study of these few steps, settled as long, by way of files."""
+    """The same samples as from a study of these few steps, settled a fifth of them, by way of files."""
     state = STATES[1]
     found = pilot(study, STATES, particle_steps=PARTICLE_STEPS, workers=2)[state].series
-    steps = PARTICLE_STEPS // state.particles
-    protocol = Protocol(
-        seed=5, time_step=0.004, friction=3.0, scheme="obabo", record_every=20, equilibration=steps, steps=steps,
-        frame_every=steps,
-    )  # fmt: skip
-    (chain,) = chains(tmp_path / "kept", study.fluid, [state], protocol)
-    sample([(chain, [0, 1])])
-    kept = load_series(chain)
+    kept = by_way_of_files(study, state, tmp_path / "kept", steps=PARTICLE_STEPS // state.particles)
     assert found.interval == kept.interval == pytest.approx(0.08)
     assert (found.fluid, found.state, found.bath) == (kept.fluid, kept.state, True)
     assert 200 <= len(found) <= len(kept) == 400
     assert np.array_equal(found.column("energy"), kept.column("energy")[-len(found) :])
 
 
+def by_way_of_files(study: Study, state: State, directory: Path, *, steps: int) -> Series:
+    settling = PARTICLE_STEPS // state.particles // 5
+    protocol = Protocol(
+        seed=5, time_step=0.004, friction=3.0, scheme="obabo", record_every=20, equilibration=settling, steps=steps,
+        frame_every=settling,
+    )  # fmt: skip
+    (chain,) = chains(directory, study.fluid, [state], protocol)
+    sample([(chain, list(range(len(chain.segments))))])
+    return load_series(chain)
+
+
+def test_a_pilot_goes_on_as_one_run(study: Study, monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
+    """The lists are made afresh between stretches, not so in a file's segment: rounding differs then, and grows."""
+    monkeypatch.setattr(canonry.pilot, "ENOUGH", 10_000)
+    most = 5 * PARTICLE_STEPS // 2
+    found = pilot(study, STATES, particle_steps=PARTICLE_STEPS, most=most, workers=2)[STATES[1]].series
+    kept = by_way_of_files(study, STATES[1], tmp_path / "kept", steps=2 * PARTICLE_STEPS // 80)
+    assert 400 < len(found) <= len(kept) == 800
+    first = len(kept) - len(found)
+    for samples, tolerance in ((slice(first, 400), 0.0), (slice(400, 405), 1e-3)):
+        own = found.column("energy")[samples.start - first : samples.stop - first]
+        assert own == pytest.approx(kept.column("energy")[samples], abs=tolerance, rel=0.0)
+
+
+@pytest.mark.parametrize("workers", [1, 3])
+def test_a_pilot_goes_on_until_it_has_enough_independent_samples(study: Study, workers: int) -> None:
+    """Each by its own: the dilute fluid forgets slowly, the liquid does so fast."""
+    slow, fast = State(1.6, 0.3, 64), STATES[0]
+    found = pilot(study, [slow, fast], particle_steps=PARTICLE_STEPS, most=20 * PARTICLE_STEPS, workers=workers)
+    assert len(found[fast].series) <= 500
+    energies = found[slow].series.column("sampled_energy")
+    assert 500 < len(energies) < 10_000
+    assert scatter([energies]).steady_samples >= ENOUGH
+    assert scatter([energies[:-500]]).steady_samples < ENOUGH
+
+
 def test_a_pilot_writes_nothing_and_knows_its_cost(study: Study) -> None:
     found = pilot(study, STATES[:1], particle_steps=1, workers=2)[STATES[0]]
     assert [path.name for path in Path().iterdir()] == ["study.toml"]
-    assert len(found.series) == 1  # a whole record interval, however little is asked for
+    assert len(found.series) == 5  # to settle one record interval, however little is asked for
     assert 0.0 < found.seconds_per_step < 1.0
 
 
@@ -81,8 +112,8 @@ def test_a_pilot_writes_nothing_and_knows_its_cost(study: Study) -> None:
 def test_a_step_is_timed_with_all_workers_busy(
     study: Study, monkeypatch: pytest.MonkeyPatch, workers: int, runs: int
 ) -> None:
-    timed, made = canonry.pilot._timed, []
-    monkeypatch.setattr(canonry.pilot, "_timed", lambda chain: made.append(chain) or timed(chain))
+    run, made = canonry.pilot._run, []
+    monkeypatch.setattr(canonry.pilot, "_run", lambda chain, most: made.append(chain) or run(chain, most))
     assert len(pilot(study, STATES, particle_steps=6400, workers=workers)) == 2
     assert len(made) == runs
 
