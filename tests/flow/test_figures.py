@@ -206,20 +206,25 @@ def test_map_is_blank_where_there_is_no_value():
     assert not kinds(empty, "level")
 
 
-def test_labels_of_lines_are_clear_of_points_and_of_one_another():
-    """At least 20 pixels between their middles and from the frame of the data."""
-    states = np.array([1.0, 1.25, 1.5, 1.75, 2.0])
-    svg = mapped(
-        lambda x, rho: (x - 1.0) * (1.0 + 5.0 * (rho - 0.6)),
-        Points(states, np.full(5, 0.7), None, "sampled", "ring"),
-        Points(states, np.full(5, 0.75), None, "with caution", "dot"),
-        steps=12,
+@pytest.mark.parametrize(("steps", "across", "up", "fewest"), [(12, 5, 1, 4), (30, 5, 1, 8), (12, 14, 12, 0)])
+def test_labels_of_lines_are_clear_of_points_and_of_one_another(steps, across, up, fewest):
+    """At least 20 pixels between their middles, also where 30 lines are 10 pixels apart or points stand close."""
+    x, y = (
+        each.ravel()
+        for each in np.meshgrid(np.linspace(1.0, 2.0, across), np.linspace(0.6 if up > 1 else 0.7, 0.8, up))
     )
-    notes = np.array([[float(note.get("x")), float(note.get("y")) - 4.0] for note in kinds(svg, "note")])
+    svg = mapped(
+        lambda x, rho: (x - 1.0) * (1.0 + 0.5 * (rho - 0.6)),
+        Points(x, y, None, "", "ring"),
+        Points(x, y - 0.05, None, "with caution", "dot"),
+        steps=steps,
+    )
+    places = [[float(note.get("x")), float(note.get("y")) - 4.0] for note in kinds(svg, "note")]
+    notes = np.array(places).reshape(-1, 2)
     rings = np.array([[float(ring.get("cx")), float(ring.get("cy"))] for ring in kinds(svg, "ring")])
-    assert len(notes) >= 4
+    assert len(notes) >= fewest
     between = np.linalg.norm(notes[:, None] - np.concatenate([notes, rings]), axis=2)
-    assert between[between > 0.0].min() > 19.8, "rounded to a tenth of a pixel"
+    assert between[between > 0.0].min(initial=np.inf) > 19.8, "rounded to a tenth of a pixel"
     assert {dot.get("r") for dot in kinds(svg, "point") if "dot" in dot.get("class")} == {"1.6"}
 
 
