@@ -14,7 +14,7 @@ from canonry.units import unit_label
 
 __all__ = ["absolute", "long_waves"]
 
-_TRUST = {"ok": "to be trusted at {}", "caution": "with caution at {}", "no": "not to be trusted at {}"}
+_TRUST = {"ok": "{} can be trusted", "caution": "{} with caution", "no": "{} cannot"}
 
 
 def absolute(results: Results) -> Iterator[str]:
@@ -26,7 +26,7 @@ def absolute(results: Results) -> Iterator[str]:
         shares = ", ".join(told.format(counts[trust]) for trust, told in _TRUST.items() if trust in counts)
         yield (
             "Test insertion rests on rare cavities in a dense liquid: of its "
-            f"{_counted(len(inserted), 'value')} of μ_res, {shares}. a_res and s_res follow from μ_res with Z and u."
+            f"{_counted(len(inserted), 'value')} of μ_res {shares}. a_res and s_res follow from μ_res with Z and u."
         )
     laid = int(np.sum((shown["method"] == "surface") & (shown["property"] == "residual_chemical_potential")))
     if laid:

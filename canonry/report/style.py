@@ -83,7 +83,8 @@ dl{display:grid;grid-template-columns:max-content 1fr;gap:.25rem 1.5rem;font-siz
 dt{color:var(--soft)}dd{margin:0;overflow-wrap:anywhere}
 summary{cursor:pointer;font-size:.9rem;color:var(--measured)}
 @media (max-width:40rem){body{font-size:16px}main{padding:1.4rem 1rem 3rem}h1{font-size:1.6rem}
-.health td:nth-child(2){min-width:8rem}.verdict{padding-left:.9rem}th,td{padding-right:.8rem}.small.plots{grid-template-columns:repeat(2,1fr)}
+.health td:nth-child(2){min-width:8rem}
+.verdict{padding-left:.9rem}th,td{padding-right:.8rem}.small.plots{grid-template-columns:repeat(2,1fr)}
 dl{grid-template-columns:1fr}dd{margin-bottom:.4rem}}
 @media print{@page{margin:16mm 15mm}:root{--paper:#fff}body{font-size:10.5pt;background:none}
 main{max-width:none;padding:0}nav,details{display:none}a{color:inherit;text-decoration:none}

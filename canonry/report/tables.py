@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Sequence, Set
 from html import escape
 from typing import TYPE_CHECKING
 
@@ -50,10 +50,7 @@ _STRIP = 4.0
 
 def values(results: Results, *, with_density: bool = False) -> str:
     """Headline values of the main properties, one row a state; residual heat capacity only without a full one."""
-    known = set(results.properties["property"])
-    spare = "residual_heat_capacity" if "heat_capacity" in known else ""
-    names = [name for name in _FIRST if name in known and name != spare]
-    return _states(results, names, with_density)
+    return _states(results, _main(set(results.properties["property"])), with_density)
 
 
 def derived(results: Results, *, with_density: bool = False) -> str:
@@ -76,7 +73,11 @@ def comparison(results: Results, *, further: bool = False) -> list[str]:
     further : the properties that `derived` and `absolute` show, rather than the main ones
     """
     rows = trusted(results)
-    rows = rows[rows["property"].isin(_FIRST) != further]
+    known = set(rows["property"])
+    order = [name for name in PROPERTIES if name in known - {*_FIRST}] if further else _main(known)
+    rows = rows[rows["property"].isin(order)].sort_values(
+        "property", key=lambda each: each.map(order.index), kind="stable"
+    )
     several = rows["density"].nunique() > 1
     found = []
     for (reference, name), own in grouped(rows, "reference", "property", sort=False):
@@ -126,6 +127,12 @@ def budget(results: Results, names: Sequence[str]) -> str:
         for _, row in rows.iterrows()
     ]
     return _table([*_state_heads(results, several), *heads], body) if body else ""
+
+
+def _main(known: Set[str]) -> list[str]:
+    """Of these, the main properties in their order; residual heat capacity only without a full one."""
+    spare = "residual_heat_capacity" if "heat_capacity" in known else ""
+    return [name for name in _FIRST if name in known and name != spare]
 
 
 def _source(size: float | str) -> str:

@@ -809,7 +809,7 @@ def test_absolute_values_come_in_a_table_of_their_own_with_their_trust():
     results = inserted(invented(), ["ok", "ok", "ok", "caution", "caution", "no"])
     text = Page(html(results)).text
     assert "Free energy and entropy T ε/k B μ res ε Δ(a res /T) k B" in text
-    told = "of its 6 values of μ res , to be trusted at 3, with caution at 2, not to be trusted at 1."
+    told = "of its 6 values of μ res 3 can be trusted, 2 with caution, 1 cannot."
     assert told in text
     assert "Changes along the ladder count from its coldest rung" in text
     assert "surface between" not in text
@@ -858,3 +858,13 @@ def test_reach_of_reweighting_is_told_where_anything_was_reweighted():
 )
 def test_sentences_keep_quantities_together_and_set_commands(text, shown):
     assert prose(text) == shown
+
+
+def test_comparisons_come_in_the_order_of_the_tables_and_heat_capacity_once():
+    results = invented()
+    twin = results.verdict[results.verdict["property"] == "heat_capacity"].assign(property="residual_heat_capacity")
+    mixed = pd.concat([twin, results.verdict.iloc[::-1]], ignore_index=True)
+    titles = re.findall(r"<caption>(.*?)</caption>", html(replace(results, verdict=mixed)))
+    assert titles == ["Heat capacity", "Pressure", "Residual energy"]
+    alone = mixed[mixed["property"] != "heat_capacity"]
+    assert "<caption>Residual heat capacity" in html(replace(results, verdict=alone))
