@@ -29,6 +29,7 @@ from estimators.canonical import rung_properties
 from estimators.derived import derived
 from estimators.estimate import Estimate
 from estimators.field import Field, field
+from estimators.reweight import Reweighted
 from estimators.surface.helmholtz import Surface
 from estimators.trust import FEWEST_SAMPLES
 from sampler.errors import BadRequest
@@ -43,7 +44,7 @@ __all__ = ["Answer", "answers", "reweight"]
 Floats = npt.NDArray[np.float64]
 
 _THINNED = 20_000  # samples of a rung that are enough to see where support ends
-_FEW = 0.5  # share that survives; 95 % intervals then hold in 86 to 94 % of cases (benchmarks/transfer.py)
+_FEW = 0.5  # share that survives; 95 % intervals then hold in 86 to 95 % of cases (benchmarks/transfer.py)
 _HALVINGS = 10  # of the way to a state without support
 _REFUSED = ("residual_energy", "residual_heat_capacity", "pressure", "compressibility_factor", "thermal_pressure")
 
@@ -82,7 +83,7 @@ def reweight(
     temperatures, densities : numbers in reduced units, or texts with a unit
     pressure : in place of densities, which are then found, and their error is part of all error bars
     epsilon, sigma : of another fluid: multiples of the study's, or texts with a unit; its cutoff is as many sigma
-    Returns rows as in curve.csv, with epsilon and sigma (over the study's) before them. Where samples do not support a
+    Returns rows as in curve.csv, with epsilon and sigma (over the study's) before them. Where samples hardly support a
     state, the surface through all isochores answers between them (method); elsewhere value is empty, and reason says
     how far the samples reach and what sampling the state would cost.
     Raises UserError for what cannot be asked, BadSeries or NotSolved where samples cannot be used.
@@ -204,6 +205,9 @@ def _answer(directory: Path, sources: _Sources, target: Target) -> Answer:
         found = sources.at(state.density).at(state.temperature, state.density)
     except BadRequest as problem:
         return _between(sources, target, state) or Answer(target, "reweighted", {}, refused=str(problem))
+    between = _between(sources, target, state) if found.refused or found.surviving < _FEW else None
+    if between is not None:
+        return between
     if not found.refused:
         more = derived(
             found.properties,
@@ -213,23 +217,23 @@ def _answer(directory: Path, sources: _Sources, target: Target) -> Answer:
         )
         properties = {**found.properties, **more}
         return Answer(target, "reweighted", properties, found.effective_samples, surviving=found.surviving)
-    between = _between(sources, target, state)
-    if between is not None:
-        return between
+    return Answer(target, "reweighted", {}, found.effective_samples, _refusal(directory, sources, target, found))
+
+
+def _refusal(directory: Path, sources: _Sources, target: Target, found: Reweighted) -> str:
+    """How little supports a target, how far the samples reach, and what sampling it would cost."""
+    study = sources.study
+    state = target.corresponding(study.states[0].particles)
+    words = [f"{found.effective_samples:.2g} effective samples support this state, {FEWEST_SAMPLES:.0f} are needed"]
     reached = _reached(sources, state)
-    price = state.particles * (study.sampling.settling + study.sampling.steps) * study.sampling.repeats
-    speed = rate(directory)
-    time = f", about {duration(max(price / speed, 1.0))} here" if speed else ""
-    words = [
-        f"{found.effective_samples:.2g} effective samples support this state, {FEWEST_SAMPLES:.0f} are needed",
-        *([f"the nearest supported state is {_told(reached, target, sources.border)}"] if reached else []),
-        *(
-            []
-            if study.adopted
-            else [f"sampling it as the study samples its rungs costs {price:.2g} particle-steps{time}"]
-        ),
-    ]
-    return Answer(target, "reweighted", {}, found.effective_samples, "; ".join(words))
+    if reached is not None:
+        words.append(f"the nearest supported state is {_told(reached, target, sources.border)}")
+    if study.adopted is None:
+        price = state.particles * (study.sampling.settling + study.sampling.steps) * study.sampling.repeats
+        speed = rate(directory)
+        time = f", about {duration(max(price / speed, 1.0))} here" if speed else ""
+        words.append(f"sampling it as the study samples its rungs costs {price:.2g} particle-steps{time}")
+    return "; ".join(words)
 
 
 def _between(sources: _Sources, target: Target, state: State) -> Answer | None:
@@ -304,7 +308,7 @@ def _findings(study: Study, answer: Answer) -> Iterator[Finding]:
     if answer.surviving < _FEW:
         thin = (
             f"only {answer.surviving:.0%} of the samples of the nearest rung still count here; of 95 % intervals "
-            "at such states 86 to 94 % hold"
+            "at such states 86 to 95 % hold"
         )
     for name, estimate in answer.properties.items():
         value = estimate * target.factor(name)
