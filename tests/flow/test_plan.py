@@ -117,7 +117,7 @@ def test_steps_are_those_of_the_study() -> None:
 def test_cost_is_shared_among_workers(
     monkeypatch: pytest.MonkeyPatch, workers: int, repeats: int, expected: float
 ) -> None:
-    def costs(study: Study, states: list[State], *, particle_steps: int, workers: int | None) -> dict[State, Pilot]:
+    def costs(study: Study, states: list[State], **_: int | None) -> dict[State, Pilot]:
         """A step takes time in proportion to the density, and grows with the 1.03rd power of the particles."""
         return {
             state: Pilot(
