@@ -77,16 +77,25 @@ def by_way_of_files(study: Study, state: State, directory: Path, *, steps: int) 
 
 
 def test_a_pilot_goes_on_as_one_run(study: Study, monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
-    """The lists are made afresh between stretches, not so in a file's segment: rounding differs then, and grows."""
+    """The lists are made afresh between stretches, not so in a file's segment: rounding differs then, and grows.
+
+    The noise is the same throughout, and what is conserved goes on from stretch to stretch.
+    """
     monkeypatch.setattr(canonry.pilot, "ENOUGH", 10_000)
-    most = 5 * PARTICLE_STEPS // 2
+    most = 7 * PARTICLE_STEPS // 2
     found = pilot(study, STATES, particle_steps=PARTICLE_STEPS, most=most, workers=2)[STATES[1]].series
-    kept = by_way_of_files(study, STATES[1], tmp_path / "kept", steps=2 * PARTICLE_STEPS // 80)
-    assert 400 < len(found) <= len(kept) == 800
+    kept = by_way_of_files(study, STATES[1], tmp_path / "kept", steps=3 * PARTICLE_STEPS // 80)
+    assert 400 < len(found) <= len(kept) == 1200
     first = len(kept) - len(found)
     for samples, tolerance in ((slice(first, 400), 0.0), (slice(400, 405), 1e-3)):
         own = found.column("energy")[samples.start - first : samples.stop - first]
         assert own == pytest.approx(kept.column("energy")[samples], abs=tolerance, rel=0.0)
+    assert found.bath_temperature is not None
+    assert kept.bath_temperature is not None
+    assert found.bath_temperature == pytest.approx(kept.bath_temperature[first:], rel=1e-6)
+    conserved = found.column("sampled_energy") + found.column("kinetic") + found.column("ledger")
+    # it scatters by rounding and the time step alone; a start from elsewhere would show as tens of these
+    assert np.max(np.abs(np.diff(conserved))) < 10.0 * np.std(np.diff(conserved)[: 399 - first])
 
 
 @pytest.mark.parametrize("workers", [1, 3])
