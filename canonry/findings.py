@@ -30,6 +30,7 @@ class Finding:
 
     estimate : None where it was refused
     temperature : measured, where no bath acts; the state's is then its value
+    since : temperature of the rung that a change along the isochore is counted from
     """
 
     state: State
@@ -41,6 +42,7 @@ class Finding:
     reason: str
     headline: bool
     temperature: Estimate | None = None
+    since: float | None = None
 
     def doubted(self, reason: str, trust: str = "caution") -> Finding:
         """The same with this trust at most, for one more reason, told once; itself where the reason is empty."""

@@ -78,9 +78,8 @@ class Isochore:
         )
         for name in ("helmholtz", "entropy"):
             value = getattr(change, name)
-            yield _reweighted(state, f"residual_{name}_change", value, value.effective_samples, headline=True).doubted(
-                start
-            )
+            found = _reweighted(state, f"residual_{name}_change", value, value.effective_samples, headline=True)
+            yield replace(found, since=change.start).doubted(start)
 
     def slopes(self) -> Iterator[tuple[State, Estimate, Estimate]]:
         """Of every rung with both, its own residual heat capacity and the slope of the reweighted energy."""

@@ -53,10 +53,15 @@ FOLLOWS: Mapping[str, tuple[str, ...]] = {
     "residual_heat_capacity": ("heat_capacity",),
     "compressibility_factor": ("pressure",),
     **PARTS,
+    **dict.fromkeys(("residual_helmholtz_change", "residual_entropy_change"), ("residual_energy",)),
     "residual_helmholtz_energy": ("residual_chemical_potential", "pressure"),
     "residual_entropy": ("residual_chemical_potential", "pressure", "residual_energy"),
 }
 """Properties that say nothing but what others do at the same state: these."""
+_ABSOLUTE = {
+    "residual_helmholtz_change": "residual_helmholtz_energy",
+    "residual_entropy_change": "residual_entropy",
+}
 
 
 @dataclass(frozen=True, eq=False)
@@ -173,7 +178,7 @@ def compare(
                 0.0 if finding.temperature is None else _slope(reference, finding, ideal),
             )
             for finding in findings
-            if finding.headline and finding.property in COMPARED
+            if finding.headline and (finding.property in COMPARED or finding.since is not None)
         ),
     )
 
@@ -210,8 +215,33 @@ def _known(
     density = finding.state.density
     if reference.covers(temperature, density):
         return None
+    if finding.since is not None:
+        return _known_change(reference, finding.property, density, (finding.since, temperature))
     ideal = {} if ideal_heat_capacity is None else {"ideal_heat_capacity": ideal_heat_capacity}
     return reference.value(finding.property, temperature=temperature, density=density, **ideal)
+
+
+def _known_change(reference: Reference, name: str, density: float, ends: tuple[float, float]) -> ReferenceValue | None:
+    """Change of A_res/(NT) or of S_res/N from one temperature to another.
+
+    d(A_res/NT)/d(1/T) = u: what is known of u between the ends tells how uncertain both are.
+    """
+    from reference.equation_of_state import ReferenceValue
+
+    if any(reference.covers(temperature, density) for temperature in ends):
+        return None
+    start, end = (
+        {each: reference.value(each, temperature=t, density=density) for each in ("residual_energy", _ABSOLUTE[name])}
+        for t in ends
+    )
+    low, high = ends
+    energies = [each["residual_energy"].uncertainty for each in (start, end)]
+    uncertainty = abs(1.0 / high - 1.0 / low) * max(energies)
+    first, last = (each[_ABSOLUTE[name]].value for each in (start, end))
+    note = "propagated from the accuracy of residual_energy between the two temperatures"
+    if name == "residual_entropy_change":
+        return ReferenceValue(last - first, uncertainty + energies[0] / low + energies[1] / high, note)
+    return ReferenceValue(last / high - first / low, uncertainty, note)
 
 
 def _slope(reference: Reference, finding: Finding, ideal_heat_capacity: float | None) -> float:
