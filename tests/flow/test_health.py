@@ -223,4 +223,4 @@ def test_a_failed_check_is_named_at_the_end_and_in_the_report(studied: tuple[Pat
     assert "Failed check: kinetic-law at T = 1.6 ε/k_B, density 0.7 σ⁻³: the bath is 2 % too warm; repair it." in text
     assert "1 of 2 failed, kinetic-law (1 state)" in page
     assert "✗ 1 of 3 fail: T = 1.6" in page
-    assert page.index("<li>kinetic-law at T = 1.6") < page.index("✓ all 3 pass")
+    assert page.index("<li>kinetic-law at T\u00a0=\u00a01.6") < page.index("✓ all 3 pass")
