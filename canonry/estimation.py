@@ -83,11 +83,10 @@ class _Rung:
 
     @property
     def measured(self) -> dict[str, Estimate]:
-        """What it says alone and can be trusted, chemical potential included."""
-        found = {name: each for name, each in self.own.items() if each.trust != "no"}
-        if self.insertion is not None and self.insertion.trust == "ok":
-            found["residual_chemical_potential"] = self.insertion.chemical_potential
-        return found
+        """What it says alone, with the chemical potential where that can be trusted."""
+        if self.insertion is None or self.insertion.trust != "ok":
+            return self.own
+        return {**self.own, "residual_chemical_potential": self.insertion.chemical_potential}
 
     def is_finished(self, sampling: Protocol) -> bool:
         asked = sampling.steps // sampling.record_every

@@ -2,12 +2,20 @@
 
 from __future__ import annotations
 
+import csv
 import math
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
-from typing import Any
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
 
-__all__ = ["Failure", "failures", "passed"]
+from canonry.border import Border
+
+if TYPE_CHECKING:
+    from canonry.study import Study
+    from sampler.fluid import State
+
+__all__ = ["Failure", "failed_at", "failures", "passed"]
 
 Row = Mapping[Any, Any]
 
@@ -43,6 +51,29 @@ def failures(rows: Iterable[Row]) -> list[Failure]:
         )
         for check, own in by_check.items()
     ]
+
+
+def failed_at(study: Study, directory: Path) -> list[tuple[str, State]]:
+    """Checks that failed by the health.csv of a study directory, and where; none where there is no such table yet.
+
+    The table may be in either kind of units.
+    """
+    path = directory / "health.csv"
+    if not path.exists():
+        return []
+    borders = [Border("reduced", None), *([Border("SI", study.scale)] if study.scale else [])]
+    states = {
+        (border.coordinate("temperature", state.temperature), border.coordinate("density", state.density)): state
+        for border in borders
+        for state in study.states
+    }
+    with path.open(encoding="utf-8", newline="") as file:
+        found = [
+            (row["check"], states.get((float(row["temperature"]), float(row["density"]))))
+            for row in csv.DictReader(file)
+            if not passed(row)
+        ]
+    return list(dict.fromkeys((check, state) for check, state in found if state is not None))
 
 
 def _excess(row: Row) -> float:

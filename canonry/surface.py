@@ -29,15 +29,19 @@ def of_states(
     ideal_heat_capacity: float | None,
     spoken: Callable[[str, float], str],
 ) -> Surface | None:
-    """The surface through what each rung says alone; None where rungs span no area or B2 is not known.
+    """The surface through what rungs say alone and can be trusted; None where they span no area or B2 is not known.
 
     Raises BadSeries or NotSolved where no surface is found.
     """
     if not fluid.has_pairs or len({state.density for state in own}) < 2:
         return None
     particles = next(iter(own)).particles
+    trusted = {
+        (state.temperature, state.density): {name: each for name, each in properties.items() if each.trust != "no"}
+        for state, properties in own.items()
+    }
     return surface(
-        {(state.temperature, state.density): properties for state, properties in own.items()},
+        trusted,
         second_virial=lambda temperature: (1.0 - 1.0 / particles) * _second_virial(fluid, temperature),
         ideal_heat_capacity=ideal_heat_capacity,
         spoken=spoken,

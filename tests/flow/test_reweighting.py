@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import shutil
 from pathlib import Path
 
 import numpy as np
@@ -175,3 +176,17 @@ def test_json_holds_every_row(directory: Path) -> None:
     rows = json.loads(result.output)
     assert {row["property"] for row in rows} >= {"pressure", "isobaric_heat_capacity", "bulk_modulus"}
     assert all(row["method"] == "reweighted" for row in rows)
+
+
+def test_a_failed_check_beside_the_answer_lowers_its_trust(directory: Path, tmp_path: Path) -> None:
+    """The coldest rung's ledger fails: what lies beside it is not to be trusted, what lies between others may be."""
+    study = tmp_path / "study"
+    shutil.copytree(directory, study)
+    health = pd.read_csv(study / "health.csv")
+    health.loc[(health["check"] == "ledger") & (health["temperature"] == 1.2), "passed"] = False
+    health.to_csv(study / "health.csv", index=False)
+    table = canonry.reweight(study, temperatures=[1.25, 1.35])
+    beside, beyond = (table[table["temperature"] == temperature] for temperature in (1.25, 1.35))
+    assert beside["reason"].str.contains("(check ledger)", regex=False).all()
+    assert set(beside["trust"]) == {"no"}
+    assert not beyond["reason"].str.contains("check ledger").any()
