@@ -40,7 +40,7 @@ from sampler.series import FrameSums, Series
 if TYPE_CHECKING:
     from reference import Reference
 
-__all__ = ["CHECKS", "LEVEL", "Kind", "Samples", "judged", "known", "of_isochore", "of_rung", "wavelength"]
+__all__ = ["CHECKS", "LEVEL", "Kind", "Samples", "blame", "judged", "known", "of_isochore", "of_rung", "wavelength"]
 
 LEVEL = 0.01  # of a check that stands alone
 _STUDY_LEVEL = 0.05  # of all statistical readings of a study together
@@ -208,6 +208,11 @@ _OF_SLOPES: tuple[Callable[[Estimate, Estimate], Found], ...] = (
 _OF_PAIRS: tuple[Callable[[Sequence[Series], Sequence[Series]], Found], ...] = (
     lambda colder, warmer: pair_slope(colder, warmer, level=LEVEL),
 )
+
+
+def blame(check: str) -> str:
+    """Why values that a failed check touches are in doubt, as a reason says it."""
+    return f"{CHECKS[check].doubt} (check {check})"
 
 
 def of_rung(samples: Samples) -> list[Reading]:

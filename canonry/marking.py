@@ -6,7 +6,7 @@ from collections.abc import Collection, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 
 from canonry.findings import Check, Finding
-from canonry.health import CHECKS
+from canonry.health import CHECKS, blame
 from canonry.notes import DOUBTS
 from sampler.fluid import State
 
@@ -55,7 +55,7 @@ def _failed(check: Check, states: Sequence[State]) -> _Blame:
     kind, name = CHECKS[check.reading.check], check.reading.check
     at = (check.state, check.warmer) if check.warmer else (check.state,)
     between = (at[0].temperature, at[1].temperature) if len(at) == 2 else _beside(check.state, states)
-    return _Blame(f"{kind.doubt} (check {name})", kind.trust, kind.touches, at, between)
+    return _Blame(blame(name), kind.trust, kind.touches, at, between)
 
 
 def _noticed(name: str, state: State, states: Sequence[State]) -> _Blame:

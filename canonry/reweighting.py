@@ -16,7 +16,7 @@ from canonry.errors import UserError
 from canonry.estimation import settled
 from canonry.failures import failed_at
 from canonry.findings import Finding
-from canonry.health import CHECKS
+from canonry.health import CHECKS, blame
 from canonry.provenance import duration, rate
 from canonry.risks import doubt, guide
 from canonry.sampling import recorded
@@ -217,7 +217,7 @@ def _findings(study: Study, answer: Answer, failed: Sequence[tuple[str, State]])
         finding = finding.doubted(doubtful).doubted(thin)
         for check in dict.fromkeys(check for check, state in failed if state in behind):
             if name in CHECKS[check].touches:
-                finding = finding.doubted(f"{CHECKS[check].doubt} (check {check})", CHECKS[check].trust)
+                finding = finding.doubted(blame(check), CHECKS[check].trust)
         yield finding
 
 

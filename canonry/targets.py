@@ -37,14 +37,9 @@ class Target:
     sigma: float = 1.0
     pressure: float | None = None
 
-    def corresponding(self, particles: int, density: float | None = None) -> State:
-        """The state of the study's own fluid.
-
-        density : of the study's own fluid, where the target has none
-        """
-        if density is None:
-            density = (self.density or 0.0) * self.sigma**3
-        return State(self.temperature / self.epsilon, density, particles)
+    def corresponding(self, particles: int) -> State:
+        """The state of the study's own fluid; the target must have a density."""
+        return State(self.temperature / self.epsilon, (self.density or 0.0) * self.sigma**3, particles)
 
     def at_density(self, corresponding: float) -> Target:
         """The same at the density that corresponds to one of the study's own fluid."""

@@ -18,7 +18,7 @@ from estimators.covariance import covariance_matrix
 from estimators.estimate import Estimate, State, combine, exact
 from estimators.gamma import coarsened
 
-__all__ = ["PARTS", "RULES", "Rule", "derived", "enthalpy", "helmholtz_derivatives", "in_blocks", "unclear"]
+__all__ = ["CLEAR", "PARTS", "RULES", "Rule", "derived", "enthalpy", "helmholtz_derivatives", "in_blocks", "unclear"]
 
 BLOCKS = 2**12  # of a state: an error bar's own error, about 1/sqrt(2 BLOCKS), is no concern then
 FEWEST_BLOCKS = 128  # of a chain, however many there are

@@ -15,6 +15,7 @@ from estimators.canonical import kinetic_temperature
 from estimators.errors import BadSeries
 from estimators.estimate import Chain, Estimate, exact, mean
 from estimators.force_sampling import Forced, force_sampling
+from estimators.frames import with_frames
 from estimators.pairs import Bins, pair_counts
 from sampler.fluid import Fluid, State
 from sampler.series import Series
@@ -92,11 +93,11 @@ def pair_structure(
     r^2 exp(-u/T) does: binning leaves 1e-4 of the pressure at most.
     Raises BadSeries if the series are not repeats of one state or a position is not finite.
     """
-    series = [each for each in series if len(each.frames)]
+    series = with_frames(series)
     if not series:
         return None
-    _check(series, bin_width)
     first = series[0]
+    _check_bins(first, bin_width)
     bins = Bins.of(first.fluid, first.state, bin_width)
     weights = _route_weights(first, bins.parted(PARTS))
     counted = {each.chain: _counted(each, bins, weights) for each in series}
@@ -132,18 +133,10 @@ def _counted(each: Series, bins: Bins, weights: Floats) -> tuple[Floats, Floats]
     return np.concatenate(counts), np.concatenate(sums)
 
 
-def _check(series: Sequence[Series], bin_width: float) -> None:
-    first = series[0]
+def _check_bins(first: Series, bin_width: float) -> None:
     reach = first.fluid.cutoff if first.fluid.has_pairs else 0.5 * first.state.box
     if not 0.0 < bin_width <= 0.5 * reach:
         raise BadSeries(f"bin_width must be positive and at most half the cutoff, found {bin_width!r}")
-    if any((each.fluid, each.state, each.bath) != (first.fluid, first.state, first.bath) for each in series):
-        raise BadSeries("series of different fluids, states or baths given; repeats of one rung share all three")
-    if len({each.repeat for each in series}) < len(series):
-        raise BadSeries("two series carry the same repeat number; give each repeat once")
-    for each in series:
-        if not np.all(np.isfinite(each.frames)):
-            raise BadSeries(f"a frame at {each.state}, repeat {each.repeat}, holds positions that are not finite")
 
 
 @dataclass(frozen=True, eq=False)

@@ -13,6 +13,7 @@ from canonry.numbers import plain
 from canonry.report.rows import floats, grouped
 from canonry.results import Results
 from canonry.units import unit_label
+from estimators.derived import CLEAR
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -22,7 +23,6 @@ if TYPE_CHECKING:
 __all__ = ["curves", "deviations", "gain", "histograms", "ledger", "structure", "structure_factor"]
 
 _DASHES = ("7 4", "2 3", "9 3 2 3")
-_CLEAR = 4.0  # standard errors from zero, for an error bar of 1/x
 _SHAPES = {"ok": "disc", "caution": "ring", "no": "cross"}
 _TRUST = {"ok": "rungs", "caution": "rungs, with caution", "no": "rungs, not to be trusted"}
 
@@ -147,7 +147,7 @@ def _limits(results: Results, temperature: float, density: float, *, aside: floa
     ideal = float(counted["pressure"] / counted["compressibility_factor"])
     moduli = rows[rows["property"] == "bulk_modulus"]
     for method, k, shape, tone in (("structure", 0.0, "ring", "measured"), ("fluctuation", aside, "cross", "accent")):
-        own = moduli[(moduli["method"] == method) & (moduli["value"] > _CLEAR * moduli["standard_error"])]
+        own = moduli[(moduli["method"] == method) & (moduli["value"] > CLEAR * moduli["standard_error"])]
         value, error = floats(own, "value"), floats(own, "standard_error")
         yield Points(np.full(len(own), k), ideal / value, 2.0 * ideal * error / value**2, "", shape, tone)  # type: ignore[arg-type]
 

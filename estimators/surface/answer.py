@@ -8,6 +8,7 @@ from dataclasses import dataclass, field
 import numpy as np
 import numpy.typing as npt
 
+from estimators.derived import CLEAR
 from estimators.estimate import Estimate
 from estimators.surface.measured import Measured
 from estimators.surface.properties import ABSOLUTE, DIRECT, Formula, derived_properties, linear
@@ -18,7 +19,6 @@ __all__ = ["METHOD", "Answer", "clear_formulas", "estimate", "gradient"]
 Floats = npt.NDArray[np.float64]
 
 METHOD = "surface"
-CLEAR = 4.0  # standard errors from zero: the error bar of 1/x is good to a few per cent from there on
 STEP = 1e-20
 
 
